@@ -1,0 +1,1 @@
+"""Assignable: the statistics of process control as a stateless HTTP service."""

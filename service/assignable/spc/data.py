@@ -1,0 +1,160 @@
+"""What a caller measured, as frozen and validated arrays.
+
+Missing pieces are NaN inside these objects and nowhere else. Construction validates: an object that
+exists can be calculated with, at least in shape.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .errors import UnusableData
+
+Floats = NDArray[np.float64]
+Integers = NDArray[np.int64]
+Booleans = NDArray[np.bool_]
+
+
+def _frozen(array: NDArray) -> NDArray:
+    array = array.view()
+    array.flags.writeable = False
+    return array
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class SubgroupStatistics:
+    """Each subgroup's own figures; what a chart of subgroups is computed from.
+
+    size: (m,) values present in each subgroup, 0 for a gap.
+    mean: (m,) mean of the values present, NaN where size is 0.
+    range: (m,) largest less smallest, NaN where size < 2; ``None`` where only deviations were kept.
+    sd: (m,) standard deviation (divisor size - 1), NaN where size < 2; ``None`` where only ranges
+        were kept.
+    """
+
+    size: Integers
+    mean: Floats
+    range: Floats | None
+    sd: Floats | None
+
+    @property
+    def common_size(self) -> int | None:
+        """The one size of all subgroups that are not gaps, or ``None`` when sizes differ."""
+        first = int(self.size.max(initial=0))
+        return first if first and bool(((self.size == first) | (self.size == 0)).all()) else None
+
+    def keep(self, kept: Booleans) -> SubgroupStatistics:
+        """The same with the subgroups not kept, (m,) bool, turned into gaps."""
+        if bool(kept.all()):
+            return self
+        return SubgroupStatistics(
+            np.where(kept, self.size, 0),
+            np.where(kept, self.mean, np.nan),
+            None if self.range is None else np.where(kept, self.range, np.nan),
+            None if self.sd is None else np.where(kept, self.sd, np.nan),
+        )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Subgroups:
+    """Rational subgroups: values (m, n), a row each, NaN where a piece is missing."""
+
+    values: Floats
+
+    def __post_init__(self) -> None:
+        if self.values.ndim != 2 or self.values.size == 0:
+            raise UnusableData.of("empty", "There are no subgroups in the data.", "data", "values")
+        object.__setattr__(self, "values", _frozen(self.values))
+
+    def statistics(self) -> SubgroupStatistics:
+        """Size, mean, range and standard deviation of each row, two-pass (shift-safe)."""
+        x = self.values
+        present = ~np.isnan(x)
+        size = present.sum(axis=1)
+        m, n = x.shape
+        if bool(present.all()):
+            mean = x.mean(axis=1)
+            # A second pass over the residuals restores the digits the first one lost.
+            residual = x - mean[:, None]
+            mean = mean + residual.mean(axis=1)
+            if n < 2:
+                nothing = np.full(m, np.nan)
+                return SubgroupStatistics(size, mean, nothing, nothing)
+            spread = x.max(axis=1) - x.min(axis=1)
+            square = np.einsum("ij,ij->i", residual, residual)
+            square -= residual.sum(axis=1) ** 2 / n
+            sd = np.sqrt(np.maximum(square, 0.0) / (n - 1))
+            return SubgroupStatistics(size, mean, spread, np.where(spread > 0, sd, 0.0))
+        filled = np.where(present, x, 0.0)
+        some = np.maximum(size, 1)
+        mean = filled.sum(axis=1) / some
+        residual = np.where(present, x - mean[:, None], 0.0)
+        correction = residual.sum(axis=1)
+        mean = np.where(size > 0, mean + correction / some, np.nan)
+        spread = np.where(present, x, -np.inf).max(axis=1) - np.where(present, x, np.inf).min(axis=1)
+        spread = np.where(size > 1, spread, np.nan)
+        square = np.einsum("ij,ij->i", residual, residual) - correction**2 / some
+        sd = np.sqrt(np.maximum(square, 0.0) / np.maximum(size - 1, 1))
+        sd = np.where(size > 1, np.where(spread > 0, sd, 0.0), np.nan)
+        return SubgroupStatistics(size, mean, spread, sd)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class SubgroupSummary:
+    """Subgroups of which only the summary was kept.
+
+    means: (m,), NaN for a gap; sizes: (m,) int; and one of ranges (m,) or sds (m,), NaN where a
+    subgroup has fewer than two values.
+    """
+
+    means: Floats
+    sizes: Integers
+    ranges: Floats | None = None
+    sds: Floats | None = None
+
+    def statistics(self) -> SubgroupStatistics:
+        """The summary in the form the charts compute from."""
+        gap = np.isnan(self.means) | (self.sizes == 0)
+        lonely = gap | (self.sizes < 2)
+
+        def spread(values: Floats | None) -> Floats | None:
+            return None if values is None else np.where(lonely, np.nan, values)
+
+        return SubgroupStatistics(
+            np.where(gap, 0, self.sizes),
+            np.where(gap, np.nan, self.means),
+            spread(self.ranges),
+            spread(self.sds),
+        )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Individuals:
+    """Single values in time order: values (m,), NaN for a gap."""
+
+    values: Floats
+
+    def __post_init__(self) -> None:
+        if self.values.ndim != 1 or self.values.size == 0:
+            raise UnusableData.of("empty", "There are no values in the data.", "data", "values")
+        object.__setattr__(self, "values", _frozen(self.values))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Counts:
+    """Counts in time order.
+
+    counts: (m,), NaN for a gap: nonconforming units, or nonconformities.
+    inspected: (m,) or ``None``: units inspected, or the area of opportunity, of each sample.
+    """
+
+    counts: Floats
+    inspected: Floats | None = None
+
+    def __post_init__(self) -> None:
+        if self.counts.ndim != 1 or self.counts.size == 0:
+            raise UnusableData.of("empty", "There are no counts in the data.", "data", "counts")
+        object.__setattr__(self, "counts", _frozen(self.counts))
