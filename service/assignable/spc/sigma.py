@@ -256,7 +256,7 @@ def moving_range(values: Floats, *, span: int = 2, statistic: MovingStatistic = 
     if not m:
         raise UnusableData.of(
             "no-spread-information",
-            f"No {span} values follow one another without a gap, so there is no moving range.",
+            f"A moving range needs {span} values in a row without a gap, and there are none.",
             "data",
         )
     if m == len(values) - span + 1:
