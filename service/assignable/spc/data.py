@@ -70,7 +70,11 @@ class Subgroups:
         object.__setattr__(self, "values", _frozen(self.values))
 
     def statistics(self) -> SubgroupStatistics:
-        """Size, mean, range and standard deviation of each row, two-pass (shift-safe)."""
+        """Size, mean, range and standard deviation of each row.
+
+        Two-pass, so that values like 10000000.2 keep their digits; deviations are squared in units
+        of the largest range, so that values near 1e300 or 1e-300 neither overflow nor vanish.
+        """
         x = self.values
         present = ~np.isnan(x)
         size = present.sum(axis=1)
@@ -84,20 +88,23 @@ class Subgroups:
                 nothing = np.full(m, np.nan)
                 return SubgroupStatistics(size, mean, nothing, nothing)
             spread = x.max(axis=1) - x.min(axis=1)
+            unit = float(spread.max()) or 1.0
+            residual /= unit
             square = np.einsum("ij,ij->i", residual, residual)
             square -= residual.sum(axis=1) ** 2 / n
-            sd = np.sqrt(np.maximum(square, 0.0) / (n - 1))
+            sd = np.sqrt(np.maximum(square, 0.0) / (n - 1)) * unit
             return SubgroupStatistics(size, mean, spread, np.where(spread > 0, sd, 0.0))
         filled = np.where(present, x, 0.0)
         some = np.maximum(size, 1)
         mean = filled.sum(axis=1) / some
         residual = np.where(present, x - mean[:, None], 0.0)
-        correction = residual.sum(axis=1)
-        mean = np.where(size > 0, mean + correction / some, np.nan)
-        spread = np.where(present, x, -np.inf).max(axis=1) - np.where(present, x, np.inf).min(axis=1)
-        spread = np.where(size > 1, spread, np.nan)
-        square = np.einsum("ij,ij->i", residual, residual) - correction**2 / some
-        sd = np.sqrt(np.maximum(square, 0.0) / np.maximum(size - 1, 1))
+        mean = np.where(size > 0, mean + residual.sum(axis=1) / some, np.nan)
+        top = np.where(present, x, -np.inf).max(axis=1)
+        spread = np.where(size > 1, top - np.where(present, x, np.inf).min(axis=1), np.nan)
+        unit = float(np.where(size > 1, spread, 0.0).max()) or 1.0
+        residual /= unit
+        square = np.einsum("ij,ij->i", residual, residual) - residual.sum(axis=1) ** 2 / some
+        sd = np.sqrt(np.maximum(square, 0.0) / np.maximum(size - 1, 1)) * unit
         sd = np.where(size > 1, np.where(spread > 0, sd, 0.0), np.nan)
         return SubgroupStatistics(size, mean, spread, sd)
 

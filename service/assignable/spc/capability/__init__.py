@@ -1,0 +1,1 @@
+"""Capability: how a process's spread compares with what the specification allows."""

@@ -1,0 +1,1 @@
+"""Chart design: how large a sample, how often, and what it buys."""

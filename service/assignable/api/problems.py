@@ -1,0 +1,355 @@
+"""Every failure, from any layer, as a problem of RFC 9457: one table, one place.
+
+A layer raises what is natural to it; :func:`of` looks the exception's class up in one table. The same
+table of types titles the answers, describes them in the OpenAPI document, and is served as pages under
+``/problems/``.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Iterator, Mapping
+from dataclasses import dataclass
+from urllib.parse import quote
+
+import orjson
+from marshmallow import ValidationError
+from werkzeug.exceptions import HTTPException
+
+from ..spc.errors import DocumentMismatch, SpcError, UnusableData, UnusableParameter
+from .strict_json import BadJson
+
+MEDIA_TYPE = "application/problem+json"
+MAX_ERRORS = 100
+HERE = "_schema"  # marshmallow's name for what is wrong with an object as a whole
+
+Headers = tuple[tuple[str, str], ...]
+
+
+@dataclass(frozen=True, slots=True)
+class ProblemType:
+    """One kind of failure: ``meaning`` says what happened, ``remedy`` what the caller can do."""
+
+    code: str
+    status: int
+    title: str
+    meaning: str
+    remedy: str
+
+    @property
+    def uri(self) -> str:
+        return f"/problems/{self.code}"
+
+
+NOT_JSON = ProblemType(
+    "not-json",
+    400,
+    "Not JSON",
+    "The body cannot be read as JSON.",
+    "Mend the text at the line and column given. NaN, Infinity, keys given twice and byte order marks are "
+    "not JSON here; a missing value is null.",
+)
+BAD_REQUEST = ProblemType(
+    "bad-request",
+    400,
+    "Bad request",
+    "The request itself cannot be understood.",
+    "Check how the request is put together and sent.",
+)
+NOT_FOUND = ProblemType(
+    "not-found",
+    404,
+    "Not found",
+    "There is nothing at this path.",
+    "Check the path against the operations listed at /docs.",
+)
+METHOD_NOT_ALLOWED = ProblemType(
+    "method-not-allowed",
+    405,
+    "Method not allowed",
+    "The path exists and does not take this method.",
+    "Use one of the methods named in the Allow header.",
+)
+NOT_ACCEPTABLE = ProblemType(
+    "not-acceptable",
+    406,
+    "Not acceptable",
+    "The operation answers in one media type, and the Accept header rules it out.",
+    "Accept the media type the detail names; a picture has a path of its own.",
+)
+CONTENT_TOO_LARGE = ProblemType(
+    "content-too-large",
+    413,
+    "Content too large",
+    "The body is larger than this server takes.",
+    "Send fewer values at once; the detail names the limit.",
+)
+UNSUPPORTED_MEDIA_TYPE = ProblemType(
+    "unsupported-media-type",
+    415,
+    "Unsupported media type",
+    "The operation does not read this media type.",
+    "Send the body as JSON with Content-Type: application/json.",
+)
+UNSUPPORTED_CONTENT_ENCODING = ProblemType(
+    "unsupported-content-encoding",
+    415,
+    "Unsupported content encoding",
+    "The body is compressed in a way the server does not read.",
+    "Send the body as it is, or compressed with gzip.",
+)
+CONTRACT_VIOLATION = ProblemType(
+    "contract-violation",
+    422,
+    "The request breaks the contract",
+    "The request can be read, and does not have the shape that the contract states.",
+    "Mend each place listed under errors; the contract is at /openapi.json.",
+)
+NOT_COMPUTABLE = ProblemType(
+    "not-computable",
+    422,
+    "Not computable",
+    "The request has the right shape, and the calculation cannot be done with what it holds.",
+    "Each entry under errors says what stands in the way and where.",
+)
+DOCUMENT_MISMATCH = ProblemType(
+    "document-mismatch",
+    422,
+    "The document does not belong here",
+    "A limits document or a carry is not of the kind, or not of the origin, that the operation needs.",
+    "Send the limits document of this chart unchanged, and the carry that was last returned for it.",
+)
+INTERNAL = ProblemType(
+    "internal",
+    500,
+    "Internal error",
+    "The fault is in the service, not in the request.",
+    "Report the request id to whoever runs the service; its log has the particulars.",
+)
+BUSY = ProblemType(
+    "busy",
+    503,
+    "Busy",
+    "All places for calculations are taken.",
+    "Send the same request again after the seconds in Retry-After; repeating it is safe.",
+)
+NOT_READY = ProblemType(
+    "not-ready",
+    503,
+    "Not ready",
+    "The service does not pass its own test and takes no work.",
+    "Ask whoever runs the service to look into its log.",
+)
+
+TYPES: dict[str, ProblemType] = {
+    kind.code: kind
+    for kind in (
+        NOT_JSON,
+        BAD_REQUEST,
+        NOT_FOUND,
+        METHOD_NOT_ALLOWED,
+        NOT_ACCEPTABLE,
+        CONTENT_TOO_LARGE,
+        UNSUPPORTED_MEDIA_TYPE,
+        UNSUPPORTED_CONTENT_ENCODING,
+        CONTRACT_VIOLATION,
+        NOT_COMPUTABLE,
+        DOCUMENT_MISMATCH,
+        INTERNAL,
+        BUSY,
+        NOT_READY,
+    )
+}
+
+OF_CLASS: dict[type[Exception], ProblemType] = {
+    BadJson: NOT_JSON,
+    ValidationError: CONTRACT_VIOLATION,
+    UnusableData: NOT_COMPUTABLE,
+    UnusableParameter: NOT_COMPUTABLE,
+    DocumentMismatch: DOCUMENT_MISMATCH,
+}
+
+_OF_STATUS = {
+    400: BAD_REQUEST,
+    404: NOT_FOUND,
+    405: METHOD_NOT_ALLOWED,
+    406: NOT_ACCEPTABLE,
+    413: CONTENT_TOO_LARGE,
+    415: UNSUPPORTED_MEDIA_TYPE,
+    503: BUSY,
+}
+
+
+class Coded(str):
+    """The text of a fault, with its stable code; goes through marshmallow as any message does."""
+
+    __slots__ = ("code",)
+    code: str
+
+    def __new__(cls, code: str, text: str) -> Coded:
+        self = super().__new__(cls, text)
+        self.code = code
+        return self
+
+    def format(self, *args: object, **kwargs: object) -> Coded:
+        return Coded(self.code, super().format(*args, **kwargs))
+
+
+class More(Coded):
+    """Stands for ``count`` further faults of one field, which are not listed."""
+
+    __slots__ = ("count",)
+    count: int
+
+    @classmethod
+    def of(cls, count: int) -> More:
+        self = cls("more", f"{count} more.")
+        self.count = count
+        return self
+
+
+@dataclass(frozen=True, slots=True)
+class Entry:
+    """One fault of a request: in its body (``pointer``) or in its query (``parameter``)."""
+
+    code: str
+    detail: str
+    pointer: str | None = None
+    parameter: str | None = None
+
+
+class Problem(Exception):
+    """A failure ready to be answered; the edge's own layers raise it."""
+
+    def __init__(
+        self,
+        kind: ProblemType,
+        detail: str | None = None,
+        *,
+        errors: Iterable[Entry] = (),
+        more: int = 0,
+        headers: Headers = (),
+    ) -> None:
+        super().__init__(kind.code)
+        self.kind = kind
+        self.detail = detail or kind.meaning
+        self.errors = tuple(errors)
+        self.more = more
+        self.headers = headers
+
+    def members(self, request_id: str) -> dict[str, object]:
+        """The problem as an object: in a line of a bulk answer, or as a whole body."""
+        members: dict[str, object] = {
+            "type": self.kind.uri,
+            "title": self.kind.title,
+            "status": self.kind.status,
+            "detail": _encodable(self.detail),
+            "instance": _instance(request_id),
+            "request_id": request_id,
+        }
+        if self.errors:
+            members["errors"] = [_members(entry) for entry in self.errors]
+        return members
+
+    def body(self, request_id: str) -> bytes:
+        return orjson.dumps(self.members(request_id))
+
+
+def of(error: Exception) -> Problem:
+    """The problem an exception means; one that no table knows is the service's own fault."""
+    if isinstance(error, Problem):
+        return error
+    if isinstance(error, BadJson):
+        return Problem(NOT_JSON, error.detail, errors=(Entry(error.code, error.detail, "#"),))
+    if isinstance(error, ValidationError):
+        return _listed(CONTRACT_VIOLATION, pointers(error.messages))
+    if isinstance(error, SpcError):
+        kind = next((OF_CLASS[cls] for cls in type(error).__mro__ if cls in OF_CLASS), NOT_COMPUTABLE)
+        return _listed(
+            kind, (Entry(fault.code, fault.detail, pointer(fault.where)) for fault in error.faults)
+        )
+    if isinstance(error, HTTPException):
+        return _of_http(error)
+    return Problem(INTERNAL)
+
+
+def pointer(path: Iterable[str | int]) -> str:
+    """A path as a JSON Pointer (RFC 6901) in a URI fragment: ``#/data/values/3/1``."""
+    steps = (str(step).replace("~", "~0").replace("/", "~1") for step in path)
+    return "#" + "".join("/" + quote(step, safe="!$&'()*+,;=:@-._~", errors="replace") for step in steps)
+
+
+def pointers(messages: object) -> Iterator[Entry | int]:
+    """Marshmallow's nested messages as entries, in order; an integer stands for so many not listed."""
+    todo: list[tuple[tuple[str | int, ...], object]] = [((), messages)]
+    while todo:
+        path, here = todo.pop()
+        if isinstance(here, Mapping):
+            todo.extend(
+                (path if step == HERE else (*path, step), found) for step, found in reversed(here.items())
+            )
+        elif isinstance(here, (list, tuple)):
+            todo.extend((path, found) for found in reversed(here))
+        elif isinstance(here, More):
+            yield here.count
+        else:
+            yield Entry(getattr(here, "code", "invalid"), str(here), pointer(path))
+
+
+def _listed(kind: ProblemType, found: Iterable[Entry | int]) -> Problem:
+    entries: list[Entry] = []
+    more = 0
+    for entry in found:
+        if isinstance(entry, int):
+            more += entry
+        elif len(entries) < MAX_ERRORS:
+            entries.append(entry)
+        else:
+            more += 1
+    count = len(entries) + more
+    if count == 1:
+        detail = entries[0].detail
+    elif more:
+        detail = f"{kind.meaning} {count} faults; the first {len(entries)} are listed, {more} more are not."
+    else:
+        detail = f"{kind.meaning} {count} faults are listed."
+    return Problem(kind, detail, errors=entries, more=more)
+
+
+def _of_http(error: HTTPException) -> Problem:
+    status = error.code or 500
+    kind = _OF_STATUS.get(status, BAD_REQUEST if 400 <= status < 500 else INTERNAL)
+    headers = tuple(
+        (name, value)
+        for name, value in error.get_headers()
+        if name.lower() not in ("content-type", "content-length")
+    )
+    detail = None
+    if status == 405:
+        allowed = next((value for name, value in headers if name == "Allow"), "")
+        detail = f"This path takes {allowed}." if allowed else None
+    return Problem(kind, detail, headers=headers)
+
+
+def _members(entry: Entry) -> dict[str, str]:
+    where = (
+        {"pointer": entry.pointer} if entry.parameter is None else {"parameter": _encodable(entry.parameter)}
+    )
+    return {**where, "code": entry.code, "detail": _encodable(entry.detail)}  # type: ignore[dict-item]
+
+
+def _encodable(text: str) -> str:
+    """A key of the request may be quoted in a sentence, and may hold half a character."""
+    return text.encode("utf-8", "replace").decode("utf-8")
+
+
+def _instance(request_id: str) -> str:
+    return f"urn:uuid:{request_id}" if _is_uuid(request_id) else request_id
+
+
+def _is_uuid(text: str) -> bool:
+    return (
+        len(text) == 36
+        and text[8] == text[13] == text[18] == text[23] == "-"
+        and all(letter in "0123456789abcdefABCDEF-" for letter in text)
+        and text.count("-") == 4
+    )

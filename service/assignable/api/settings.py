@@ -1,0 +1,147 @@
+"""What an installation may choose, read once from the environment and checked there.
+
+Each field carries the sentence that README's table and a start-up error show.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Mapping
+from dataclasses import MISSING, dataclass, field, fields
+from typing import Any
+
+PREFIX = "ASSIGNABLE_"
+MIB = 1024 * 1024
+
+
+class BadSettings(Exception):
+    """Settings that cannot be used; one line a fault."""
+
+
+def _whole(least: int, most: int) -> Callable[[str], int]:
+    def read(text: str) -> int:
+        number = int(text) if text.isascii() and text.isdigit() else -1
+        if not least <= number <= most:
+            raise ValueError(f"a whole number from {least} to {most}")
+        return number
+
+    return read
+
+
+def _seconds(most: float) -> Callable[[str], float]:
+    def read(text: str) -> float:
+        try:
+            number = float(text)
+        except ValueError:
+            number = -1.0
+        if not 0 <= number <= most:
+            raise ValueError(f"seconds from 0 to {most:g}")
+        return number
+
+    return read
+
+
+def _one_of(*choices: str) -> Callable[[str], str]:
+    def read(text: str) -> str:
+        if text not in choices:
+            raise ValueError("one of " + ", ".join(choices))
+        return text
+
+    return read
+
+
+def _host(text: str) -> str:
+    if not text or text != text.strip() or any(letter.isspace() or letter == "/" for letter in text):
+        raise ValueError("a host name or an address")
+    return text
+
+
+def _origins(text: str) -> tuple[str, ...]:
+    origins = tuple(part.strip() for part in text.split(",") if part.strip())
+    for origin in origins:
+        scheme, mark, rest = origin.partition("://")
+        if scheme not in ("http", "https") or not mark or not rest or "/" in rest or "*" in rest:
+            raise ValueError("origins such as https://line3.example, separated by commas; no wildcard")
+    return origins
+
+
+def _setting(default: Any, description: str, read: Callable[[str], Any]) -> Any:
+    return field(default=default, metadata={"description": description, "read": read})
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Settings:
+    """Everything that may differ between installations; the defaults suit one machine and loopback."""
+
+    host: str = _setting("127.0.0.1", "Address the server listens on.", _host)
+    port: int = _setting(8000, "Port the server listens on.", _whole(1, 65535))
+    workers: int = _setting(
+        os.cpu_count() or 1, "Worker processes; as many as processors unless set.", _whole(1, 256)
+    )
+    threads: int = _setting(8, "Threads of a worker, which wait on clients.", _whole(1, 256))
+    compute_slots: int = _setting(1, "Calculations a worker does at once.", _whole(1, 64))
+    slot_wait_seconds: float = _setting(
+        0.5, "Seconds a request waits for a calculation to end before it is answered 503.", _seconds(60)
+    )
+    max_body_bytes: int = _setting(
+        32 * MIB, "Largest request body, as it is sent, in bytes.", _whole(1024, 1024 * MIB)
+    )
+    max_inflated_bytes: int = _setting(
+        32 * MIB, "Largest request body after gzip is undone, in bytes.", _whole(1024, 1024 * MIB)
+    )
+    log: str = _setting(
+        "requests",
+        "What is logged, one JSON object a line on standard error: requests, errors or off.",
+        _one_of("requests", "errors", "off"),
+    )
+    cors_origins: tuple[str, ...] = _setting(
+        (), "Origins whose pages may call the service from a browser, separated by commas.", _origins
+    )
+
+    @classmethod
+    def from_environment(cls, environment: Mapping[str, str] | None = None) -> Settings:
+        """The settings that ``ASSIGNABLE_*`` variables give; an unknown one is an error too.
+
+        Raises :class:`BadSettings` that names every variable at fault.
+        """
+        given = os.environ if environment is None else environment
+        known = {PREFIX + entry.name.upper(): entry for entry in fields(cls)}
+        faults: list[str] = []
+        values: dict[str, Any] = {}
+        for name in sorted(name for name in given if name.startswith(PREFIX)):
+            entry = known.get(name)
+            if entry is None:
+                faults.append(f"{name}: there is no such setting{_nearest(name, known)}.")
+                continue
+            try:
+                values[entry.name] = entry.metadata["read"](given[name])
+            except ValueError as error:
+                faults.append(f"{name}: {error} is expected. {entry.metadata['description']}")
+        if faults:
+            raise BadSettings("\n".join(faults))
+        return cls(**values)
+
+
+@dataclass(frozen=True, slots=True)
+class Described:
+    """One row of the settings' table."""
+
+    variable: str
+    default: object
+    description: str
+
+
+def described() -> tuple[Described, ...]:
+    """Every setting with its variable, default and sentence, in order."""
+    return tuple(
+        Described(PREFIX + entry.name.upper(), entry.default, entry.metadata["description"])
+        for entry in fields(Settings)
+        if entry.default is not MISSING
+    )
+
+
+def _nearest(name: str, known: Mapping[str, object]) -> str:
+    from difflib import get_close_matches
+
+    near = get_close_matches(name, known, n=1)
+    return f"; did you mean {near[0]}?" if near else ""

@@ -1,0 +1,33 @@
+"""A bound on the calculations a worker does at once; more than that is refused at once, not queued.
+
+The wait for a place is the only queue there is, and it is short: under load the accepted requests stay
+quick, the refused ones hear so early, and the health probes need no place at all.
+"""
+
+from __future__ import annotations
+
+from threading import BoundedSemaphore
+from types import TracebackType
+
+from .problems import BUSY, Problem
+
+
+class Slots:
+    """``count`` places; entering waits up to ``wait_seconds``, then raises the problem ``busy``."""
+
+    __slots__ = ("_places", "_wait_seconds")
+
+    def __init__(self, count: int, wait_seconds: float) -> None:
+        self._places = BoundedSemaphore(count)
+        self._wait_seconds = wait_seconds
+
+    def __enter__(self) -> None:
+        if self._places.acquire(blocking=False):
+            return
+        if not self._wait_seconds or not self._places.acquire(timeout=self._wait_seconds):
+            raise Problem(BUSY, headers=(("Retry-After", "1"),))
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self._places.release()

@@ -1,0 +1,79 @@
+"""Limits documents, and the carry that belongs to one."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from ..spc.errors import DocumentMismatch
+from .canonical import digest, plain
+
+FORMAT = 1
+"""The format of limits documents; a document of a later one is refused."""
+
+
+def limits_document(chart: str, limits: object, characteristic: Mapping[str, Any] | None) -> dict[str, Any]:
+    """The document that freezes some limits: their parameters, what they are of, and the digest."""
+    document = {"chart": chart, "format": FORMAT, "characteristic": dict(characteristic or {}), **plain(limits)}
+    document["digest"] = digest(document)
+    document["seal"] = None
+    return document
+
+
+def check_limits(chart: str, document: Mapping[str, Any]) -> None:
+    """Refuse a document of another chart or format, or one that was edited.
+
+    Raises DocumentMismatch with ``limits-of-another-chart``, ``unknown-format`` or ``digest-mismatch``.
+    """
+    if document.get("chart") != chart:
+        raise DocumentMismatch.of(
+            "limits-of-another-chart",
+            f"These limits belong to the {document.get('chart')} chart; this operation judges by {chart} limits.",
+            "limits",
+            "chart",
+        )
+    if document.get("format") != FORMAT:
+        raise DocumentMismatch.of(
+            "unknown-format",
+            f"This service reads limits documents of format {FORMAT}; this one states {document.get('format')}.",
+            "limits",
+            "format",
+        )
+    if document.get("digest") != digest(document):
+        raise DocumentMismatch.of(
+            "digest-mismatch",
+            "The limits document was changed after it was issued: its digest does not match its content. Send "
+            "the document exactly as it was received, or fit new limits.",
+            "limits",
+            "digest",
+        )
+
+
+def carry_document(chart: str, limits_digest: str, carry: object) -> dict[str, Any]:
+    """The carry as the caller keeps it, bound to its limits by their digest."""
+    document = {"chart": chart, "limits": limits_digest, **plain(carry)}
+    document["digest"] = digest(document)
+    return document
+
+
+def check_carry(chart: str, limits_digest: str, document: Mapping[str, Any]) -> None:
+    """Refuse a carry of other limits, or one that was edited.
+
+    Raises DocumentMismatch with ``carry-of-other-limits`` or ``carry-edited``.
+    """
+    if document.get("chart") != chart or document.get("limits") != limits_digest:
+        raise DocumentMismatch.of(
+            "carry-of-other-limits",
+            "This carry belongs to other limits. Send the carry that came with the last answer under these "
+            "limits, or leave it out to start afresh.",
+            "carry",
+            "limits",
+        )
+    if document.get("digest") != digest(document):
+        raise DocumentMismatch.of(
+            "carry-edited",
+            "The carry was changed after it was issued: its digest does not match its content. Send it exactly "
+            "as it was received, or leave it out to start afresh.",
+            "carry",
+            "digest",
+        )

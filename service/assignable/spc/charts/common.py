@@ -1,0 +1,293 @@
+"""What every chart shares: options, panels, signals in order, what is frozen and what is carried.
+
+A chart turns its data into one :class:`Plot` a panel. From a plot come the panel of the answer and the
+track that the rules look at, so that a fit and a judgement walk the same road.
+
+Docstrings of the fields stand in ``Annotated``: the contract takes its descriptions from here.
+"""
+
+from __future__ import annotations
+
+import functools
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Annotated, Generic, Literal, TypeVar
+
+import numpy as np
+import scipy
+
+from ..cautions import Caution
+from ..data import Booleans, Floats, Integers
+from ..errors import Fault, UnusableParameter
+from ..rules import Rule, Signal, Tail, Track, detect
+from ..rules import signals as in_words
+
+MOST_SIGNALS = 10_000
+"""Signals told one by one in an answer; beyond it they are counted."""
+
+Verdict = Literal["in-control", "signal"]
+Q = TypeVar("Q")
+
+
+@dataclass(frozen=True, slots=True)
+class Exclusion:
+    """A baseline point that is left out of the estimates for a stated reason."""
+
+    index: Annotated[int, "Position of the point in the baseline, from 0."]
+    reason: Annotated[str, "Why it is left out."]
+
+
+@dataclass(frozen=True, slots=True)
+class BaselineRecord:
+    """What the limits were computed from; it stays with them."""
+
+    points: Annotated[int, "Points the estimates rest on."]
+    values: Annotated[int, "Values, or inspected samples, the estimates rest on."]
+    excluded: Annotated[tuple[Exclusion, ...], "Points left out, each with its reason."]
+
+
+@dataclass(frozen=True, slots=True)
+class LimitBasis:
+    """How far from the centre the limits lie."""
+
+    limit_basis: Annotated[
+        Literal["sigma", "probability"],
+        "`sigma`: a multiple of the standard deviation of the plotted statistic. `probability`: equal tails "
+        "of its exact distribution.",
+    ] = "sigma"
+    sigma_multiple: Annotated[float | None, "The multiple, under `sigma`."] = 3.0
+    false_alarm_probability: Annotated[
+        float | None, "Probability that a point in control lies outside the limits, under `probability`."
+    ] = None
+
+    @property
+    def multiple(self) -> float:
+        """The multiple for a normal statistic."""
+        if self.sigma_multiple is not None:
+            return self.sigma_multiple
+        return normal_multiple(self.tail)
+
+    @property
+    def tail(self) -> float:
+        """The probability beyond each limit, under ``probability``."""
+        return (self.false_alarm_probability or 0.0) / 2
+
+
+@functools.lru_cache(256)
+def normal_multiple(tail: float) -> float:
+    """The standard normal quantile with ``tail`` above it."""
+    return -float(scipy.special.ndtri(tail))
+
+
+@dataclass(frozen=True, slots=True)
+class PanelLimits:
+    """The frozen lines of a panel; all ``None`` where they follow each point's own size."""
+
+    centre: Annotated[float | None, "Centre line."]
+    lower: Annotated[float | None, "Lower limit; null where there is none, or where it follows each point's size."]
+    upper: Annotated[float | None, "Upper limit; null where there is none, or where it follows each point's size."]
+
+
+FOLLOWING = PanelLimits(None, None, None)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class PointLimits:
+    """The lines at each point of a panel whose limits vary.
+
+    A limit that does not exist is the natural bound here: nothing can lie beyond it.
+    """
+
+    centre: Annotated[Floats, "Centre line at each point."]
+    lower: Annotated[Floats, "Lower limit at each point; the natural bound where there is none."]
+    upper: Annotated[Floats, "Upper limit at each point; the natural bound where there is none."]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Panel:
+    """The plotted points of one statistic. Gaps are left out: ``index`` says which points are here."""
+
+    index: Annotated[Integers, "Position of each point in the request, from 0."]
+    value: Annotated[Floats, "The plotted statistic."]
+    centre: Annotated[float | None, "Centre line, where it is one for all points."]
+    lower: Annotated[float | None, "Lower limit, where there is one and it is the same for all points."]
+    upper: Annotated[float | None, "Upper limit, where there is one and it is the same for all points."]
+    by_point: Annotated[PointLimits | None, "The lines at each point, where they vary; else null."]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Plot:
+    """A panel before it is judged: (m,) arrays with NaN at gaps; lines are scalars, or (m,) where they vary.
+
+    ``lower`` and ``upper`` are ``None`` where no limit exists, or arrays that hold ``floor`` and
+    ``ceiling`` at such points. ``sigma`` is the standard deviation of each plotted value.
+    """
+
+    value: Floats
+    centre: float | Floats
+    sigma: float | Floats
+    lower: float | Floats | None
+    upper: float | Floats | None
+    floor: float = -np.inf
+    ceiling: float = np.inf
+
+    @property
+    def varies(self) -> bool:
+        """Whether the lines differ from point to point."""
+        return isinstance(self.lower, np.ndarray) or isinstance(self.upper, np.ndarray)
+
+    def limits(self) -> PanelLimits:
+        """The frozen lines."""
+        if self.varies or isinstance(self.centre, np.ndarray):
+            return FOLLOWING
+        return PanelLimits(self.centre, self.lower, self.upper)  # type: ignore[arg-type]
+
+    def track(self, kept: Booleans | None = None) -> Track:
+        """What the rules look at; points not ``kept`` are gaps to them."""
+        value = self.value if kept is None else np.where(kept, self.value, np.nan)
+        return Track(
+            value=value,
+            z=(value - self.centre) / self.sigma,
+            sigma=np.asarray(self.sigma),
+            lower=np.asarray(self.floor if self.lower is None else self.lower),
+            upper=np.asarray(self.ceiling if self.upper is None else self.upper),
+        )
+
+    def panel(self) -> Panel:
+        """The panel of the answer."""
+        present = ~np.isnan(self.value)
+        index = present.nonzero()[0]
+        whole = len(index) == len(self.value)
+        value = self.value if whole else self.value[index]
+        if not self.varies:
+            return Panel(index, value, self.centre, self.lower, self.upper, None)  # type: ignore[arg-type]
+
+        def line(at: float | Floats | None, bound: float) -> Floats:
+            full = np.broadcast_to(np.asarray(bound if at is None else at, dtype=float), self.value.shape)
+            return np.ascontiguousarray(full[index])
+
+        by_point = PointLimits(
+            line(self.centre, np.nan), line(self.lower, self.floor), line(self.upper, self.ceiling)
+        )
+        return Panel(index, value, None, None, None, by_point)
+
+
+@dataclass(frozen=True, slots=True)
+class Watched:
+    """Signals of some panels, in the order of the points, and how many there are in all."""
+
+    signals: tuple[Signal, ...] = ()
+    found: int = 0
+
+    @property
+    def verdict(self) -> Verdict:
+        """``signal`` where any signal asks for action."""
+        return "signal" if any(signal.severity == "action" for signal in self.signals) else "in-control"
+
+    def with_(self, other: Watched) -> Watched:
+        """Both together, in the order of the points."""
+        if not other.found:
+            return self
+        if not self.found:
+            return other
+        both = sorted((*self.signals, *other.signals), key=lambda signal: signal.index)
+        return Watched(tuple(both[:MOST_SIGNALS]), self.found + other.found)
+
+
+def watch(
+    name: str, plot: Plot, rules: Sequence[Rule] = (), *, tail: Tail | None = None, kept: Booleans | None = None
+) -> tuple[Watched, Tail]:
+    """The signals of one panel under its limits and ``rules``, and the tail that the next call needs."""
+    detection = detect(rules, plot.track(kept), tail)
+    if not len(detection):
+        return Watched(), detection.tail
+    return Watched(in_words(detection, panel=name, most=MOST_SIGNALS), len(detection)), detection.tail
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Baseline(Generic[Q]):
+    """The baseline judged by its own limits."""
+
+    verdict: Annotated[Verdict, "`signal` where any signal asks for action."]
+    panels: Annotated[Q, "The plotted points."]
+    signals: Annotated[tuple[Signal, ...], "In the order of the points."]
+    signals_found: Annotated[int, "How many signals there are, told or not."]
+
+
+@dataclass(frozen=True, slots=True)
+class Standards:
+    """Values known in advance, which replace the estimates (the "standard given" case)."""
+
+    mean: Annotated[float | None, "Known process mean, in the unit of the characteristic."] = None
+    sigma: Annotated[float | None, "Known within-subgroup standard deviation, in the same unit."] = None
+
+
+@dataclass(frozen=True, slots=True)
+class ShiftPerformance:
+    """How soon the chart signals after a shift."""
+
+    shift: Annotated[float, "Size of the shift, in the unit that `shift_unit` names."]
+    arl: Annotated[float | None, "Average number of points until the signal; null where it is beyond 1e15."]
+
+
+@dataclass(frozen=True, slots=True)
+class Performance:
+    """What the limits and rules cost and buy, were the estimates exact."""
+
+    panel: Annotated[str, "The panel these figures speak of: run rules watch this one alone."]
+    in_control_arl: Annotated[
+        float | None, "Average number of points between false alarms of this panel; null where it is beyond 1e15."
+    ]
+    spread_false_alarm_probability: Annotated[
+        float | None,
+        "Probability that a point in control lies outside the limits of the spread panel; null where the chart "
+        "has none, or where it is not known exactly.",
+    ]
+    shifts: Annotated[tuple[ShiftPerformance, ...], "Run lengths after a lasting shift of the location."]
+    shift_unit: Annotated[str, "What a shift of 1 means."]
+    subgroup_size: Annotated[float | None, "The size these figures are for."]
+    method: Annotated[str, "How the run lengths were computed."]
+
+
+def exclusion_mask(points: int, exclude: Sequence[Exclusion]) -> Booleans | None:
+    """(m,) bool, False at excluded points; ``None`` where nothing is excluded.
+
+    Raises UnusableParameter for a position outside the data or named twice.
+    """
+    if not exclude:
+        return None
+    faults = []
+    seen: set[int] = set()
+    for at, exclusion in enumerate(exclude):
+        if not 0 <= exclusion.index < points:
+            faults.append(
+                Fault(
+                    "no-such-point",
+                    f"There is no point {exclusion.index}: the data has points 0 to {points - 1}.",
+                    ("exclude", at, "index"),
+                )
+            )
+        elif exclusion.index in seen:
+            faults.append(
+                Fault("excluded-twice", f"Point {exclusion.index} is excluded twice.", ("exclude", at, "index"))
+            )
+        seen.add(exclusion.index)
+    if faults:
+        raise UnusableParameter(*faults)
+    kept = np.ones(points, dtype=bool)
+    kept[list(seen)] = False
+    return kept
+
+
+def too_many_signals(watched: Watched) -> tuple[Caution, ...]:
+    """The caution that not every signal is told, where that is so."""
+    if watched.found <= MOST_SIGNALS:
+        return ()
+    return (
+        Caution(
+            "signals-cut",
+            f"{watched.found} signals were found; the first {MOST_SIGNALS} are told one by one.",
+            ("data",),
+            "common practice",
+        ),
+    )

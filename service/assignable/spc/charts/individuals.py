@@ -1,0 +1,312 @@
+"""Single values with their moving ranges: ``individuals`` ([iso-7870-2], [astm-e2587])."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Annotated, Generic, Literal, TypeVar
+
+import numpy as np
+
+from .. import cautions as caution
+from .. import diagnostics
+from ..cautions import Caution
+from ..data import Booleans, Floats, Individuals
+from ..errors import Fault, UnusableData, UnusableParameter
+from ..rules import Rule, Signal, Tail, watched
+from ..sigma import moving_range, moving_ranges
+from .common import (
+    Baseline,
+    BaselineRecord,
+    Exclusion,
+    LimitBasis,
+    Panel,
+    PanelLimits,
+    Performance,
+    Plot,
+    Standards,
+    Verdict,
+    Watched,
+    exclusion_mask,
+    too_many_signals,
+    watch,
+)
+from .lines import spread_lines
+from .price import mean_performance
+from .registry import Chart
+
+T = TypeVar("T")
+
+
+@dataclass(frozen=True, slots=True)
+class ValueMovingRange(Generic[T]):
+    """The panels of an ``individuals`` chart."""
+
+    value: Annotated[T, "The single values."]
+    moving_range: Annotated[T, "Ranges of successive values."]
+
+
+@dataclass(frozen=True, slots=True)
+class IndividualsOptions:
+    """How the limits of a chart of single values are to be computed."""
+
+    sigma_estimator: Literal["mean-moving-range", "median-moving-range"] = "mean-moving-range"
+    span: int = 2
+    basis: LimitBasis = LimitBasis()
+    rules: tuple[Rule, ...] = ()
+    standards: Standards = Standards()
+    exclude: tuple[Exclusion, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class IndividualsLimits:
+    """The frozen parameters of a chart of single values."""
+
+    centre: Annotated[float, "Centre line of the values, in the unit of the characteristic."]
+    sigma: Annotated[float, "Standard deviation of single values, from successive differences."]
+    sigma_estimator: Annotated[str, "How sigma was estimated; `given` where it was a standard."]
+    degrees_of_freedom: Annotated[
+        float | None, "Effective degrees of freedom of sigma; null where it was a standard."
+    ]
+    span: Annotated[int, "How many successive values a moving range spans."]
+    limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
+    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
+    false_alarm_probability: Annotated[float | None, "Of each panel and point; null under `sigma`."]
+    panels: Annotated[ValueMovingRange[PanelLimits], "The lines of each panel."]
+    rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
+    baseline: Annotated[BaselineRecord | None, "What the limits were computed from; null for standards alone."]
+
+    @property
+    def basis(self) -> LimitBasis:
+        """How far out the limits lie."""
+        return LimitBasis(self.limit_basis, self.sigma_multiple, self.false_alarm_probability)
+
+
+@dataclass(frozen=True, slots=True)
+class IndividualsCarry:
+    """What judging needs to remember of the values before."""
+
+    points: Annotated[int, "Values judged so far under these limits."]
+    value: Annotated[Tail, "The last points of the value panel, for the run rules."]
+    recent: Annotated[tuple[float, ...], "The last values since a gap, for the next moving range."]
+
+
+NEW = IndividualsCarry(0, Tail(), ())
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class IndividualsDiagnostics:
+    """What the baseline itself shows."""
+
+    autocorrelation: Annotated[
+        diagnostics.Autocorrelation | None, "Of the values in time order; null where too few."
+    ]
+    normality: Annotated[diagnostics.Normality | None, "Of the values; null where too few."]
+    resolution: Annotated[diagnostics.Resolution | None, "Of the measurement."]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class IndividualsFit:
+    """Limits of a chart of single values with the evidence for them."""
+
+    limits: IndividualsLimits
+    baseline: Baseline[ValueMovingRange[Panel]] | None
+    diagnostics: IndividualsDiagnostics | None
+    performance: Performance
+    cautions: tuple[Caution, ...]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class IndividualsJudgement:
+    """New values judged by frozen limits."""
+
+    verdict: Verdict
+    panels: ValueMovingRange[Panel]
+    signals: tuple[Signal, ...]
+    signals_found: int
+    carry: IndividualsCarry
+    cautions: tuple[Caution, ...]
+
+
+def _plots(
+    values: Floats, ranges: Floats, centre: float, sigma: float, span: int, basis: LimitBasis
+) -> tuple[Plot, Plot]:
+    far = basis.multiple * sigma
+    lines = spread_lines("range", span, basis.sigma_multiple, basis.tail)
+    return (
+        Plot(values, centre, sigma, centre - far, centre + far),
+        Plot(
+            ranges,
+            lines.centre * sigma,
+            lines.sd * sigma,
+            None if lines.lower is None else lines.lower * sigma,
+            lines.upper * sigma,
+            floor=0.0,
+        ),
+    )
+
+
+def _watch(
+    plots: tuple[Plot, Plot], rules: tuple[Rule, ...], tail: Tail | None, kept: Booleans | None
+) -> tuple[Watched, Tail]:
+    """Run rules watch the values; neighbouring moving ranges share values, so runs of them mean nothing."""
+    values, after = watch("value", plots[0], rules, tail=tail, kept=kept)
+    spreads, _ = watch("moving_range", plots[1])
+    return values.with_(spreads), after
+
+
+def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit:
+    """Limits of an ``individuals`` chart from a baseline, or from standards.
+
+    ``σ̂ = MR̄/d2(w)`` over moving ranges of span w, or the median moving range over the median of W. A
+    gap, and an excluded value, breaks the moving range: no range spans it.
+
+    Raises UnusableData for fewer than two values or no variation; UnusableParameter for options that
+    do not fit. Source: [iso-7870-2], [astm-e2587].
+    """
+    rules = watched(options.rules)
+    given, basis = options.standards, options.basis
+    if data is None:
+        faults = [
+            Fault(
+                "data-missing",
+                "Without baseline data both standards must be given: the mean and the sigma.",
+                ("standards", name),
+            )
+            for name, value in (("mean", given.mean), ("sigma", given.sigma))
+            if value is None
+        ]
+        if options.exclude:
+            faults.append(Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",)))
+        if faults:
+            raise UnusableParameter(*faults)
+        assert given.mean is not None and given.sigma is not None
+        limits = _limits(options, rules, given.mean, given.sigma, "given", None, None)
+        return IndividualsFit(limits, None, None, mean_performance(rules, basis, 1.0, None), ())
+
+    values = data.values
+    kept = exclusion_mask(len(values), options.exclude)
+    used = values if kept is None else np.where(kept, values, np.nan)
+    filled = int(np.count_nonzero(~np.isnan(used)))
+    if filled < 2 and (given.mean is None or given.sigma is None):
+        raise UnusableData.of(
+            "too-few-values",
+            f"Limits need at least two values, and 25 or more to deserve trust; there "
+            f"{'is one' if filled == 1 else 'are none'}.",
+            "data",
+            "values",
+        )
+    mean = given.mean if given.mean is not None else _centre(used, filled)
+    if given.sigma is not None:
+        sigma, estimator, freedom = given.sigma, "given", None
+    else:
+        statistic: Literal["mean", "median"] = (
+            "median" if options.sigma_estimator == "median-moving-range" else "mean"
+        )
+        estimate = moving_range(used, span=options.span, statistic=statistic)
+        sigma, estimator, freedom = estimate.sigma, estimate.estimator, estimate.degrees_of_freedom
+    limits = _limits(
+        options, rules, mean, sigma, estimator, freedom, BaselineRecord(filled, filled, options.exclude)
+    )
+    plots = _plots(values, moving_ranges(used, options.span), mean, sigma, options.span, basis)
+    seen, _ = _watch(plots, rules, None, kept)
+    found = IndividualsDiagnostics(
+        diagnostics.autocorrelation(used), diagnostics.normality(used), diagnostics.resolution(used, None)
+    )
+    return IndividualsFit(
+        limits,
+        Baseline(
+            seen.verdict, ValueMovingRange(plots[0].panel(), plots[1].panel()), seen.signals, seen.found
+        ),
+        found,
+        mean_performance(rules, basis, 1.0, None),
+        caution.collect(
+            caution.few_individuals(filled),
+            caution.autocorrelated(found.autocorrelation),
+            caution.not_normal(found.normality),
+            caution.coarse_resolution(found.resolution),
+            *too_many_signals(seen),
+        ),
+    )
+
+
+def _centre(values: Floats, filled: int) -> float:
+    present = values if filled == len(values) else values[~np.isnan(values)]
+    first = float(present.mean())
+    return first + float((present - first).mean())
+
+
+def _limits(
+    options: IndividualsOptions,
+    rules: tuple[Rule, ...],
+    centre: float,
+    sigma: float,
+    estimator: str,
+    freedom: float | None,
+    record: BaselineRecord | None,
+) -> IndividualsLimits:
+    if not (math.isfinite(centre) and math.isfinite(sigma) and sigma > 0):
+        raise UnusableData.of("out-of-scale", "The spread of the values cannot be represented.", "data")
+    basis, nothing = options.basis, np.empty(0)
+    plots = _plots(nothing, nothing, centre, sigma, options.span, basis)
+    return IndividualsLimits(
+        centre,
+        sigma,
+        estimator,
+        freedom,
+        options.span,
+        basis.limit_basis,
+        basis.sigma_multiple,
+        basis.false_alarm_probability,
+        ValueMovingRange(plots[0].limits(), plots[1].limits()),
+        rules,
+        record,
+    )
+
+
+def judge(
+    limits: IndividualsLimits, data: Individuals, carry: IndividualsCarry | None
+) -> IndividualsJudgement:
+    """New values under frozen limits: points, signals, and the carry for the next call.
+
+    Judging in one call or in any split with the carry passed on gives identical signals.
+    """
+    before = carry or NEW
+    values, recent = data.values, before.recent
+    series = np.concatenate((recent, values)) if recent else values
+    ranges = moving_ranges(series, limits.span)[len(recent) :]
+    plots = _plots(values, ranges, limits.centre, limits.sigma, limits.span, limits.basis)
+    seen, tail = _watch(plots, limits.rules, before.value, None)
+    return IndividualsJudgement(
+        seen.verdict,
+        ValueMovingRange(plots[0].panel(), plots[1].panel()),
+        seen.signals,
+        seen.found,
+        IndividualsCarry(before.points + len(values), tail, _since_gap(series, limits.span - 1)),
+        too_many_signals(seen),
+    )
+
+
+def _since_gap(series: Floats, most: int) -> tuple[float, ...]:
+    last = series[-most:]
+    gaps = np.isnan(last).nonzero()[0]
+    return tuple((last if not len(gaps) else last[gaps[-1] + 1 :]).tolist())
+
+
+CHARTS = (
+    Chart(
+        name="individuals",
+        title="Single values and moving ranges",
+        purpose="Watches a measured characteristic of which only one value comes at a time.",
+        takes="Single values in time order.",
+        beware="Values that depend on their neighbours, or are far from normal, give wrong limits: heed the cautions.",
+        panels=("value", "moving_range"),
+        references=("iso-7870-2", "astm-e2587"),
+        fit=fit,
+        judge=judge,
+        limits=IndividualsLimits,
+        plotted=ValueMovingRange[Panel],
+        carry=IndividualsCarry,
+        diagnostics=IndividualsDiagnostics,
+    ),
+)

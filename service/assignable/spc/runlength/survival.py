@@ -1,0 +1,140 @@
+"""The law of a run length, from the mass that survives each point.
+
+A process that forgets loses, in the long run, the same share of its survivors at every point. The
+survivors are therefore followed point by point until that share stands still; from there on the
+law is geometric, and its moments and percentiles are sums of what was followed and that tail.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..data import Floats
+from ..errors import UnusableParameter
+
+PERCENTILES = (0.05, 0.25, 0.50, 0.75, 0.95)
+SETTLED = 1e-12
+"""The share lost stands still when it varies by less than this, relatively, over a whole memory."""
+
+_GONE = 1e-30
+_LONGEST_ARL = 1e100
+_MOST_STEPS = 100_000
+_MOST_WORK = 1_000_000_000
+
+
+@dataclass(frozen=True, slots=True)
+class RunLength:
+    """Points until the first signal that calls for action, that point included.
+
+    arl, sd: mean and standard deviation; percentiles: (probability, the fewest points within which
+    a signal comes with at least that probability); method: how it was computed; accuracy: of the
+    mean, relative, in words.
+    """
+
+    arl: float
+    sd: float
+    percentiles: tuple[tuple[float, int], ...]
+    method: str
+    accuracy: str
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Decay:
+    """survival: (T + 1,), the probability of no signal among the first t points, t = 0..T; hazard:
+    of a signal at each point after T, given none before; method, accuracy: as in ``RunLength``.
+    """
+
+    survival: Floats
+    hazard: float
+    method: str
+    accuracy: str
+
+    def run_length(self) -> RunLength:
+        """Mean, standard deviation and percentiles.
+
+        Raises ``UnusableParameter`` (``never-signals``) when the mean is beyond any use.
+        """
+        s, h = self.survival, self.hazard
+        last = len(s) - 1
+        left = float(s[-1])
+        if left > 0.0 and h * _LONGEST_ARL < left:
+            raise UnusableParameter.of(
+                "never-signals", "With these limits and rules a signal practically never comes.", "rules"
+            )
+        arl = float(s[:-1].sum())
+        # The variance is E[N(N - 1)] + E[N] - E[N]^2, and E[N(N - 1)] = 2 sum of t S(t).
+        pairs = 2.0 * float(np.dot(np.arange(last), s[:-1]))
+        if left > 0.0:
+            arl += left / h
+            pairs += 2.0 * left * (last / h + (1.0 - h) / h**2)
+        sd = math.sqrt(max(pairs + arl - arl * arl, 0.0))
+        return RunLength(
+            arl, sd, tuple((q, self._percentile(q)) for q in PERCENTILES), self.method, self.accuracy
+        )
+
+    def _percentile(self, q: float) -> int:
+        # A survival that equals 1 - q but for rounding has reached it.
+        target = (1.0 - q) * (1.0 + 1e-12)
+        s = self.survival
+        if s[-1] <= target:
+            return int(np.argmax(s <= target))
+        return len(s) - 1 + math.ceil(math.log(target / float(s[-1])) / math.log1p(-self.hazard))
+
+    def probability(self, points: Floats) -> Floats:
+        """P(run length <= t) for an array of t, each rounded down to a whole number of points."""
+        t = np.floor(np.maximum(points, 0.0))
+        last = len(self.survival) - 1
+        followed = self.survival[np.minimum(t, last).astype(np.int64)]
+        beyond = np.maximum(t - last, 0.0)
+        if self.hazard < 1.0:
+            gone = -np.expm1(beyond * math.log1p(-self.hazard))
+        else:
+            gone = (beyond > 0).astype(np.float64)
+        # 1 - S + S * gone, without losing a small probability of an early signal.
+        early = (1.0 - self.survival)[np.minimum(t, last).astype(np.int64)]
+        probability: Floats = early + followed * gone
+        return probability
+
+
+def follow(advance: Callable[[], tuple[float, float]], *, memory: int, work: int, method: str) -> Decay:
+    """Follow the survivors until the share lost stands still.
+
+    advance: goes on by one point, gives the probability that the signal comes at it and the
+    probability that none has come yet; memory: the points that a rule can look back on; work:
+    operations of one step, which bounds the steps. When the cap is met first, the tail is taken
+    from the last share, and the accuracy says how far it still varied.
+    Raises ``UnusableParameter`` (``not-settled``) when it varied by more than 1e-6.
+    """
+    survival = [1.0]
+    hazards: list[float] = []
+    alive = 1.0
+    span = max(memory, 4)
+    most = min(_MOST_STEPS, max(_MOST_WORK // max(work, 1), 4 * span))
+    varied = math.inf
+    while len(hazards) < most:
+        signal, left = advance()
+        hazards.append(signal / alive)
+        alive = left
+        survival.append(alive)
+        if alive < _GONE:
+            return Decay(np.array(survival), 1.0, method, "relative 1e-12")
+        if len(hazards) > span + 1:
+            recent = hazards[-span:]
+            high, low = max(recent), min(recent)
+            if high - low <= SETTLED * high:
+                return Decay(np.array(survival), hazards[-1], method, "relative 1e-12")
+            varied = (high - low) / high
+    if varied > 1e-6:
+        raise UnusableParameter.of(
+            "not-settled", "The run length of these rules takes longer to compute than is allowed.", "rules"
+        )
+    return Decay(np.array(survival), hazards[-1], method, f"relative {10 * varied:.0e}")
+
+
+def geometric(p: float) -> Decay:
+    """The law when each point signals with probability p, whatever came before."""
+    return Decay(np.ones(1), p, "closed form (geometric)", "exact")

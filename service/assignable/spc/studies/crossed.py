@@ -1,0 +1,264 @@
+"""Crossed measurement study: every appraiser measures every part, several times."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+
+from ..data import Floats
+from ..errors import UnusableData, UnusableParameter
+from .variance_components import (
+    AnovaRow,
+    CapabilityEffect,
+    ChartEffect,
+    Discrimination,
+    GaugeComponents,
+    Model,
+    OneSidedTolerance,
+    StudyNote,
+    anova_row,
+    assemble,
+    complete,
+    ratio_interval,
+    rounding_sum_of_squares,
+    terms,
+    total_row,
+)
+
+StudyModel = Literal["with-interaction", "without-interaction", "one-appraiser"]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class CrossedStudy:
+    """The analysis of a crossed study.
+
+    model: the model the components come from.
+    interaction_pooled: whether the interaction was pooled into repeatability, because its p-value is
+        above ``pooling_alpha``.
+    table: the analysis of variance used; table_with_interaction: the one with the interaction kept,
+        ``None`` when the design cannot estimate it (one trial, or one appraiser).
+    part_means (parts,), appraiser_means (appraisers,), cell_means and cell_ranges (parts, appraisers):
+        what pictures of the study show; ranges are zero with one trial.
+    chart: ``None`` when there is no variation at all.
+    """
+
+    parts: int
+    appraisers: int
+    trials: int
+    grand_mean: float
+    model: StudyModel
+    pooling_alpha: float | None
+    interaction_p_value: float | None
+    interaction_pooled: bool
+    table: tuple[AnovaRow, ...]
+    table_with_interaction: tuple[AnovaRow, ...] | None
+    confidence: float
+    study_multiple: float
+    components: GaugeComponents
+    discrimination: Discrimination
+    capability: CapabilityEffect
+    chart: ChartEffect | None
+    part_means: Floats
+    appraiser_means: Floats
+    cell_means: Floats
+    cell_ranges: Floats
+    notes: tuple[StudyNote, ...]
+
+
+def crossed(
+    measurements: Floats,
+    *,
+    tolerance: float | OneSidedTolerance | None = None,
+    study_multiple: float = 6.0,
+    pooling_alpha: float | None = 0.05,
+    process_sd: float | None = None,
+    confidence: float = 0.95,
+    chart_shift: float = 1.0,
+    chart_subgroup_size: int = 5,
+) -> CrossedStudy:
+    """Balanced two-way random analysis of variance of a gauge study, with components and intervals.
+
+    measurements: (parts, appraisers, trials), no cell missing.
+    tolerance: width of the specification in the unit of measurement, or its only limit.
+    study_multiple: standard deviations that make up the study variation (6; 5.15 in older practice).
+    pooling_alpha: the interaction is pooled into repeatability when its p-value exceeds this; ``None``
+        keeps it always.
+    process_sd: standard deviation seen in production (gauge included); shares, categories and effects
+        then refer to it and not to the parts of the study.
+    chart_shift, chart_subgroup_size: the case the effect on a chart of means is stated for; the shift
+        in product sigmas.
+
+    One trial: the interaction cannot be told from repeatability, and the model without it is used. One
+    appraiser: one-way analysis, the gauge being repeatability alone. Sums of squares that the rounding
+    of the measurements could have made count as zero.
+
+    Raises :class:`UnusableData` (missing cells, each one named; fewer than two parts; nothing repeated)
+    and :class:`UnusableParameter`. Sources: [aiag-msa-2010] ch. III B for the analysis and the number of
+    distinct categories, [burdick-borror-montgomery-2005] ch. 3 for the intervals.
+    """
+    asked = terms(
+        tolerance=tolerance,
+        study_multiple=study_multiple,
+        process_sd=process_sd,
+        confidence=confidence,
+        chart_shift=chart_shift,
+        chart_subgroup_size=chart_subgroup_size,
+    )
+    if pooling_alpha is not None and not 0 <= pooling_alpha <= 1:
+        raise UnusableParameter.of(
+            "out-of-range", "The p-value above which the interaction is pooled lies between 0 and 1.", "pooling_alpha"
+        )
+    complete(measurements, axes="part, appraiser, trial")
+    p, o, r = measurements.shape
+    if p < 2:
+        raise UnusableData.of(
+            "too-few-parts", "A study of the gauge needs at least two parts; ten are usual.", "data", "measurements"
+        )
+    if o * r < 2:
+        raise UnusableData.of(
+            "nothing-repeated",
+            "Each part was measured once by one appraiser, which says nothing about the gauge.",
+            "data",
+            "measurements",
+        )
+    centre = float(measurements.mean())
+    x = measurements - centre
+    rest = float(x.mean())
+    x = x - rest
+    grand_mean = centre + rest
+    cells = x.mean(axis=2)
+    part_means, appraiser_means = cells.mean(axis=1), cells.mean(axis=0)
+    interaction = cells - part_means[:, None] - appraiser_means
+    floor = rounding_sum_of_squares(measurements)
+
+    def square(values: Floats, copies: int) -> float:
+        total = copies * float(np.sum(values**2))
+        return total if total > floor else 0.0
+
+    ss_part = square(part_means, o * r)
+    ss_appraiser = square(appraiser_means, p * r)
+    ss_interaction = square(interaction, r)
+    ss_error = square(x - cells[:, :, None], 1)
+    df_part, df_appraiser, df_interaction, df_error = p - 1, o - 1, (p - 1) * (o - 1), p * o * (r - 1)
+
+    notes: list[StudyNote] = []
+    p_interaction: float | None = None
+    full: tuple[AnovaRow, ...] | None = None
+    if o > 1 and r > 1:
+        ms_interaction = ss_interaction / df_interaction
+        rows = (
+            anova_row("part", ss_part, df_part, "part-by-appraiser", ms_interaction, df_interaction),
+            anova_row("appraiser", ss_appraiser, df_appraiser, "part-by-appraiser", ms_interaction, df_interaction),
+            anova_row(
+                "part-by-appraiser", ss_interaction, df_interaction, "repeatability", ss_error / df_error, df_error
+            ),
+            anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
+        )
+        full = (*rows, total_row(rows))
+        p_interaction = rows[2].p_value
+    pooled = full is not None and pooling_alpha is not None and (p_interaction is None or p_interaction > pooling_alpha)
+
+    model_name: StudyModel
+    if o == 1:
+        model_name = "one-appraiser"
+        notes.append(
+            StudyNote(
+                "one-appraiser",
+                "One appraiser took part, so reproducibility is unknown and the gauge variation is repeatability alone.",
+            )
+        )
+        ms_error = ss_error / df_error
+        rows = (
+            anova_row("part", ss_part, df_part, "repeatability", ms_error, df_error),
+            anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
+        )
+        table = (*rows, total_row(rows))
+        model = Model(
+            np.array([ss_part / df_part, ms_error]), (df_part, df_error), (0.0, 1.0), (1 / r, -1 / r)
+        )
+        second, scale, denominator = 1, 1 / r, (0.0, 1.0)
+    elif full is not None and not pooled:
+        model_name = "with-interaction"
+        table = full
+        model = Model(
+            np.array([ss_part / df_part, ss_appraiser / df_appraiser, ms_interaction, ss_error / df_error]),
+            (df_part, df_appraiser, df_interaction, df_error),
+            (0.0, 0.0, 0.0, 1.0),
+            (1 / (o * r), 0.0, -1 / (o * r), 0.0),
+            (0.0, 1 / (p * r), -1 / (p * r), 0.0),
+            (0.0, 0.0, 1 / r, -1 / r),
+        )
+        second, scale = 2, 1 / (o * r)
+        denominator = (0.0, 1 / (p * r), (p - 1) / (p * r), (r - 1) / r)
+    else:
+        model_name = "without-interaction"
+        if pooled:
+            notes.append(
+                StudyNote(
+                    "interaction-pooled",
+                    "The interaction of part and appraiser was pooled into repeatability: "
+                    + (
+                        "neither shows any variation."
+                        if p_interaction is None
+                        else f"its p-value, {p_interaction:.3g}, is above {pooling_alpha:g}."
+                    ),
+                )
+            )
+        else:
+            notes.append(
+                StudyNote(
+                    "interaction-not-estimable",
+                    "Each appraiser measured each part once, so the interaction of part and appraiser cannot be told "
+                    "from repeatability and is contained in it.",
+                )
+            )
+        ss_rest, df_rest = ss_interaction + ss_error, df_interaction + df_error
+        ms_rest = ss_rest / df_rest
+        rows = (
+            anova_row("part", ss_part, df_part, "repeatability", ms_rest, df_rest),
+            anova_row("appraiser", ss_appraiser, df_appraiser, "repeatability", ms_rest, df_rest),
+            anova_row("repeatability", ss_rest, df_rest, None, 0.0, 0),
+        )
+        table = (*rows, total_row(rows))
+        model = Model(
+            np.array([ss_part / df_part, ss_appraiser / df_appraiser, ms_rest]),
+            (df_part, df_appraiser, df_rest),
+            (0.0, 0.0, 1.0),
+            (1 / (o * r), 0.0, -1 / (o * r)),
+            (0.0, 1 / (p * r), -1 / (p * r)),
+        )
+        second, scale = 2, 1 / (o * r)
+        denominator = (0.0, 1 / (p * r), (p * r - 1) / (p * r))
+
+    ratio = None
+    if any(d > 0 and s > 0 for d, s in zip(denominator, model.mean_squares.tolist(), strict=True)):
+        low, high = ratio_interval(
+            denominator, model.mean_squares, model.df, confidence, second=second, scale=scale
+        )
+        ratio = float(low), float(high)
+    made = assemble(model, asked, grand_mean, ratio=ratio)
+    return CrossedStudy(
+        p,
+        o,
+        r,
+        grand_mean,
+        model_name,
+        pooling_alpha,
+        p_interaction,
+        pooled,
+        table,
+        full,
+        confidence,
+        study_multiple,
+        made.components,
+        made.discrimination,
+        made.capability,
+        made.chart,
+        part_means + grand_mean,
+        appraiser_means + grand_mean,
+        cells + grand_mean,
+        np.ptp(measurements, axis=2),
+        (*notes, *made.notes),
+    )

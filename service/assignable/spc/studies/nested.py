@@ -1,0 +1,166 @@
+"""Nested measurement study: each appraiser has parts of their own, as when measuring destroys them."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..data import Floats
+from ..errors import UnusableData
+from .variance_components import (
+    AnovaRow,
+    CapabilityEffect,
+    ChartEffect,
+    Discrimination,
+    GaugeComponents,
+    Model,
+    OneSidedTolerance,
+    StudyNote,
+    anova_row,
+    assemble,
+    complete,
+    ratio_interval,
+    rounding_sum_of_squares,
+    terms,
+    total_row,
+)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class NestedStudy:
+    """The analysis of a nested study.
+
+    components: ``appraiser`` and ``reproducibility`` are one and the same, ``None`` with one appraiser;
+        there is no interaction.
+    appraiser_means (appraisers,), part_means and part_ranges (appraisers, parts).
+    chart: ``None`` when there is no variation at all.
+    """
+
+    appraisers: int
+    parts: int
+    trials: int
+    grand_mean: float
+    table: tuple[AnovaRow, ...]
+    confidence: float
+    study_multiple: float
+    components: GaugeComponents
+    discrimination: Discrimination
+    capability: CapabilityEffect
+    chart: ChartEffect | None
+    appraiser_means: Floats
+    part_means: Floats
+    part_ranges: Floats
+    notes: tuple[StudyNote, ...]
+
+
+def nested(
+    measurements: Floats,
+    *,
+    tolerance: float | OneSidedTolerance | None = None,
+    study_multiple: float = 6.0,
+    process_sd: float | None = None,
+    confidence: float = 0.95,
+    chart_shift: float = 1.0,
+    chart_subgroup_size: int = 5,
+) -> NestedStudy:
+    """Balanced two-stage nested random analysis of variance, with components and intervals.
+
+    measurements: (appraisers, parts within appraiser, trials), no cell missing. In a destructive study
+    a "part" is a batch so uniform that its pieces may stand for repeated trials; what differs between
+    them counts as repeatability. Options as in :func:`~assignable.spc.studies.crossed.crossed`.
+
+    One appraiser: one-way analysis. Bounds of the shares exist with one appraiser only.
+
+    Raises :class:`UnusableData` (missing cells, each one named; fewer than two parts an appraiser, or
+    one trial, with which part and gauge cannot be told apart) and :class:`UnusableParameter`. Sources:
+    [searle-casella-mcculloch-1992] ch. 4, [burdick-borror-montgomery-2005].
+    """
+    asked = terms(
+        tolerance=tolerance,
+        study_multiple=study_multiple,
+        process_sd=process_sd,
+        confidence=confidence,
+        chart_shift=chart_shift,
+        chart_subgroup_size=chart_subgroup_size,
+    )
+    complete(measurements, axes="appraiser, part, trial")
+    a, b, r = measurements.shape
+    if b < 2:
+        raise UnusableData.of(
+            "too-few-parts",
+            "Each appraiser needs at least two parts, or parts and appraisers cannot be told apart.",
+            "data",
+            "measurements",
+        )
+    if r < 2:
+        raise UnusableData.of(
+            "nothing-repeated",
+            "Each part was measured once, so the spread of the parts and of the gauge cannot be told apart.",
+            "data",
+            "measurements",
+        )
+    centre = float(measurements.mean())
+    x = measurements - centre
+    rest = float(x.mean())
+    x = x - rest
+    grand_mean = centre + rest
+    parts = x.mean(axis=2)
+    appraisers = parts.mean(axis=1)
+    floor = rounding_sum_of_squares(measurements)
+
+    def square(values: Floats, copies: int) -> float:
+        total = copies * float(np.sum(values**2))
+        return total if total > floor else 0.0
+
+    ss_appraiser = square(appraisers, b * r)
+    ss_part = square(parts - appraisers[:, None], r)
+    ss_error = square(x - parts[:, :, None], 1)
+    df_appraiser, df_part, df_error = a - 1, a * (b - 1), a * b * (r - 1)
+    ms_part, ms_error = ss_part / df_part, ss_error / df_error
+    rows: tuple[AnovaRow, ...] = (
+        anova_row("part", ss_part, df_part, "repeatability", ms_error, df_error),
+        anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
+    )
+    notes: list[StudyNote] = []
+    ratio = None
+    if a == 1:
+        notes.append(
+            StudyNote(
+                "one-appraiser",
+                "One appraiser took part, so reproducibility is unknown and the gauge variation is repeatability alone.",
+            )
+        )
+        model = Model(np.array([ms_part, ms_error]), (df_part, df_error), (0.0, 1.0), (1 / r, -1 / r))
+        if ms_error > 0:
+            low, high = ratio_interval(
+                (0.0, 1.0), model.mean_squares, model.df, confidence, second=1, scale=1 / r
+            )
+            ratio = float(low), float(high)
+    else:
+        rows = (anova_row("appraiser", ss_appraiser, df_appraiser, "part", ms_part, df_part), *rows)
+        model = Model(
+            np.array([ss_appraiser / df_appraiser, ms_part, ms_error]),
+            (df_appraiser, df_part, df_error),
+            (0.0, 0.0, 1.0),
+            (0.0, 1 / r, -1 / r),
+            (1 / (b * r), -1 / (b * r), 0.0),
+        )
+    made = assemble(model, asked, grand_mean, ratio=ratio)
+    return NestedStudy(
+        a,
+        b,
+        r,
+        grand_mean,
+        (*rows, total_row(rows)),
+        confidence,
+        study_multiple,
+        made.components,
+        made.discrimination,
+        made.capability,
+        made.chart,
+        appraisers + grand_mean,
+        parts + grand_mean,
+        np.ptp(measurements, axis=2),
+        (*notes, *made.notes),
+    )

@@ -1,0 +1,598 @@
+"""Variance components of balanced random models: what the measurement studies have in common.
+
+Every component here is a linear combination of independent mean squares, ``γ = Σ c_q θ_q`` with
+``ν_q S_q² / θ_q`` chi-square. Estimates put ``S_q²`` for ``θ_q`` and may be negative; both they and
+the values set to zero are reported.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+import scipy
+
+from ..data import Floats
+from ..errors import Fault, UnusableData, UnusableParameter
+
+# A few hundred sentences help nobody; the edge stops at the same number.
+_MOST_FAULTS = 100
+# Beyond this a square leaves the range of double precision.
+_LARGEST = 1e140
+_SMALLEST_SPREAD = 1e-140
+# The rule of the AIAG manual counts with 1.41 where the derivation says √2.
+_CATEGORIES_RULE = 1.41
+
+
+@dataclass(frozen=True, slots=True)
+class StudyNote:
+    """Something a reader of the study must know: a stable code and a plain sentence."""
+
+    code: str
+    detail: str
+
+
+@dataclass(frozen=True, slots=True)
+class OneSidedTolerance:
+    """A specification with one limit only: its value in the unit of measurement, and its side."""
+
+    limit: float
+    side: Literal["lower", "upper"]
+
+
+@dataclass(frozen=True, slots=True)
+class AnovaRow:
+    """One source of variation.
+
+    source: ``part``, ``appraiser``, ``part-by-appraiser``, ``repeatability`` or ``total``.
+    mean_square: ``None`` in the total row.
+    f_ratio: against the mean square of ``tested_against``; ``None`` in rows without a test, and when
+        that mean square is zero.
+    p_value: upper tail of F; 0 when only the denominator is zero, ``None`` when both are, and in
+        rows without a test.
+    """
+
+    source: str
+    sum_of_squares: float
+    degrees_of_freedom: int
+    mean_square: float | None
+    tested_against: str | None
+    f_ratio: float | None
+    p_value: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class VarianceComponent:
+    """One component of the variation, with everything said about it.
+
+    estimate: as the analysis of variance gives it, in squared units; may be negative.
+    variance: the estimate with negative components set to zero (a sum adds the parts so treated).
+    variance_lower, variance_upper: confidence bounds of the variance, not below zero.
+    sd, sd_lower, sd_upper: their square roots, in the unit of measurement.
+    contribution_percent: share of the total variance; ``None`` when there is no variation at all.
+    study_variation: the study multiple times sd.
+    study_variation_percent: sd over the total sd; these shares do not add up to 100. ``None`` as above.
+    tolerance_percent: study variation over the width of the tolerance, or half of it over the distance
+        from the mean to the only limit; ``None`` without a tolerance, or with the mean beyond that limit.
+    """
+
+    estimate: float
+    variance: float
+    variance_lower: float
+    variance_upper: float
+    sd: float
+    sd_lower: float
+    sd_upper: float
+    contribution_percent: float | None
+    study_variation: float
+    study_variation_percent: float | None
+    tolerance_percent: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class GaugeComponents:
+    """The components of a gauge study; ``None`` for one that the design or the model has not got.
+
+    gauge = repeatability + reproducibility; reproducibility = appraiser + part_by_appraiser;
+    total = gauge + part.
+    """
+
+    repeatability: VarianceComponent
+    appraiser: VarianceComponent | None
+    part_by_appraiser: VarianceComponent | None
+    reproducibility: VarianceComponent | None
+    gauge: VarianceComponent
+    part: VarianceComponent
+    total: VarianceComponent
+
+
+@dataclass(frozen=True, slots=True)
+class Discrimination:
+    """How finely the gauge tells parts apart.
+
+    basis: ``study`` when the spread of the parts is the study's own, ``process`` when it comes from the
+        process standard deviation given.
+    distinct_categories: 1.41 times part sd over gauge sd, cut to a whole number (AIAG manual, 4th ed.);
+        ``None`` when the gauge shows no variation (there is no bound).
+    distinct_categories_ratio: √2 times that ratio, not cut; with confidence bounds.
+    gauge_contribution_percent: gauge variance over total variance; with confidence bounds.
+    part_contribution_percent: its complement to 100 (the intraclass correlation); with confidence bounds.
+    Bounds are ``None`` where the design has none in closed form, and with basis ``process``.
+    """
+
+    basis: Literal["study", "process"]
+    distinct_categories: int | None
+    distinct_categories_ratio: float | None
+    distinct_categories_ratio_lower: float | None
+    distinct_categories_ratio_upper: float | None
+    gauge_contribution_percent: float | None
+    gauge_contribution_percent_lower: float | None
+    gauge_contribution_percent_upper: float | None
+    part_contribution_percent: float | None
+    part_contribution_percent_lower: float | None
+    part_contribution_percent_upper: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class CapabilityEffect:
+    """What the gauge does to a capability index.
+
+    index: ``cp``, or ``cpu``/``cpl`` (from the mean of the study) with one limit; ``None`` without tolerance.
+    observed: with the variance of part and gauge together; ``true``: with that of the parts alone.
+    ratio: observed over true, √(part variance / total variance); needs no tolerance.
+    ``None`` where a variance that divides is zero, or the mean is beyond the only limit.
+    """
+
+    index: Literal["cp", "cpu", "cpl"] | None
+    observed: float | None
+    true: float | None
+    ratio: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class ChartEffect:
+    """What the gauge does to a three-sigma chart of means, each piece measured once.
+
+    The gauge's errors count as independent from piece to piece, and the limits as made with them in.
+
+    shift_factor: a shift of one product sigma looks like this many observed sigmas.
+    shift: the shift looked at, in product sigmas; subgroup_size: pieces a subgroup.
+    arl_perfect_gauge, arl_with_gauge: average number of subgroups to the first point beyond a limit.
+    subgroup_size_factor: how many times larger a subgroup restores the lost power; ``None`` when
+        the parts show no variation.
+    """
+
+    shift_factor: float
+    shift: float
+    subgroup_size: int
+    arl_perfect_gauge: float
+    arl_with_gauge: float
+    subgroup_size_factor: float | None
+
+
+# -- what is asked -----------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Terms:
+    """The options the studies share, validated by :func:`terms`."""
+
+    tolerance: float | OneSidedTolerance | None
+    study_multiple: float
+    process_sd: float | None
+    confidence: float
+    chart_shift: float
+    chart_subgroup_size: int
+
+
+def terms(
+    *,
+    tolerance: float | OneSidedTolerance | None,
+    study_multiple: float,
+    process_sd: float | None,
+    confidence: float,
+    chart_shift: float,
+    chart_subgroup_size: int,
+) -> Terms:
+    """The shared options, or :class:`UnusableParameter` with a fault for each that is out of range."""
+    faults: list[Fault] = []
+
+    def positive(value: float, name: str, what: str) -> None:
+        if not (0 < value < _LARGEST):
+            faults.append(Fault("out-of-range", f"{what} must be greater than zero.", (name,)))
+
+    if isinstance(tolerance, OneSidedTolerance):
+        if not abs(tolerance.limit) < _LARGEST:
+            faults.append(
+                Fault("out-of-range", "The specification limit must be a finite number.", ("tolerance", "limit"))
+            )
+    elif tolerance is not None:
+        positive(tolerance, "tolerance", "The width of the tolerance")
+    positive(study_multiple, "study_multiple", "The study multiple")
+    if process_sd is not None:
+        positive(process_sd, "process_sd", "The standard deviation of the process")
+    positive(chart_shift, "chart_shift", "The shift of the process")
+    if chart_subgroup_size < 1:
+        faults.append(Fault("out-of-range", "A subgroup has at least one piece.", ("chart_subgroup_size",)))
+    if not 0 < confidence < 1:
+        faults.append(
+            Fault("out-of-range", "The confidence level must lie between 0 and 1, for example 0.95.", ("confidence",))
+        )
+    if faults:
+        raise UnusableParameter(*faults)
+    return Terms(tolerance, study_multiple, process_sd, confidence, chart_shift, chart_subgroup_size)
+
+
+def complete(measurements: Floats, *, axes: str) -> None:
+    """Refuse a table that is not a full one of usable numbers, naming each missing cell.
+
+    measurements: (a, b, c); axes: how a reader calls them, for the sentences.
+    Raises :class:`UnusableData`.
+    """
+    if measurements.ndim != 3 or measurements.size == 0:
+        raise UnusableData.of(
+            "empty", f"The measurements must form a full table of {axes}.", "data", "measurements"
+        )
+    bad = np.argwhere(~np.isfinite(measurements))
+    if bad.size:
+        raise UnusableData(
+            *(
+                Fault(
+                    "missing-measurement",
+                    f"The measurement at {axes} {i + 1}, {j + 1}, {k + 1} is missing; this analysis needs every "
+                    "cell filled. Measure it again, or leave that part out of the study.",
+                    ("data", "measurements", i, j, k),
+                )
+                for i, j, k in bad[:_MOST_FAULTS].tolist()
+            )
+        )
+    spread = float(measurements.max() - measurements.min())
+    if float(np.abs(measurements).max()) > _LARGEST or 0 < spread < _SMALLEST_SPREAD:
+        raise UnusableData.of(
+            "out-of-range",
+            "The measurements are too large, or differ too little, for their squares to be computed; "
+            "use another unit.",
+            "data",
+            "measurements",
+        )
+
+
+def rounding_sum_of_squares(measurements: Floats) -> float:
+    """The sum of squares below which a difference is the rounding of the numbers sent, not variation."""
+    return measurements.size * (4.0 * np.finfo(np.float64).eps * float(np.abs(measurements).max())) ** 2
+
+
+# -- distributions -----------------------------------------------------------------------------------
+
+
+def f_upper_quantile(tail: float, df1: int, df2: int) -> float:
+    """The value F(df1, df2) exceeds with probability ``tail``."""
+    beta = scipy.special.betainccinv(df1 / 2, df2 / 2, tail)
+    # Both ends of the beta variate by their own inverse: 1 - beta loses its digits near 1.
+    rest = scipy.special.betaincinv(df2 / 2, df1 / 2, tail)
+    return float(beta / rest * (df2 / df1))
+
+
+def anova_row(
+    source: str, square: float, df: int, against: str | None, denominator: float, denominator_df: int
+) -> AnovaRow:
+    """A row with its F test against a denominator mean square; ``against`` is ``None`` for no test."""
+    mean_square = square / df
+    f_ratio = p_value = None
+    if against is not None:
+        if denominator > 0:
+            f_ratio = mean_square / denominator
+            if math.isinf(f_ratio):
+                f_ratio, p_value = None, 0.0
+            else:
+                p_value = float(scipy.special.fdtrc(df, denominator_df, f_ratio))
+        elif mean_square > 0:
+            p_value = 0.0
+    return AnovaRow(source, square, df, mean_square, against, f_ratio, p_value)
+
+
+def total_row(rows: Sequence[AnovaRow]) -> AnovaRow:
+    """The row of sums."""
+    return AnovaRow(
+        "total",
+        sum(row.sum_of_squares for row in rows),
+        sum(row.degrees_of_freedom for row in rows),
+        None,
+        None,
+        None,
+        None,
+    )
+
+
+# -- intervals ---------------------------------------------------------------------------------------
+
+
+def _lower_bound(coefficients: Sequence[float], mean_squares: Floats, df: Sequence[int], tail: float) -> Floats:
+    """The lower bound of [ting-1990]; with positive coefficients alone that of [graybill-wang-1980]."""
+    up = [q for q, c in enumerate(coefficients) if c > 0]
+    down = [q for q, c in enumerate(coefficients) if c < 0]
+    size = {q: abs(coefficients[q]) * mean_squares[q] for q in (*up, *down)}
+    G = {q: 1 - df[q] / (2 * scipy.special.gammainccinv(df[q] / 2, tail)) for q in up}
+    H = {q: df[q] / (2 * scipy.special.gammaincinv(df[q] / 2, tail)) - 1 for q in down}
+    square = np.zeros(mean_squares.shape[1:])
+    for q in up:
+        square = square + (G[q] * size[q]) ** 2
+    for r in down:
+        square = square + (H[r] * size[r]) ** 2
+        for q in up:
+            F = f_upper_quantile(tail, df[q], df[r])
+            square = square + ((F - 1) ** 2 - (G[q] * F) ** 2 - H[r] ** 2) / F * size[q] * size[r]
+    if down and len(up) > 1:
+        for i, q in enumerate(up):
+            for t in up[i + 1 :]:
+                both = df[q] + df[t]
+                g = 1 - both / (2 * scipy.special.gammainccinv(both / 2, tail))
+                cross = (
+                    g**2 * both**2 / (df[q] * df[t]) - G[q] ** 2 * df[q] / df[t] - G[t] ** 2 * df[t] / df[q]
+                ) / (len(up) - 1)
+                square = square + cross * size[q] * size[t]
+    estimate = combination(coefficients, mean_squares)
+    return np.asarray(estimate - np.sqrt(np.maximum(square, 0.0)))
+
+
+def combination(coefficients: Sequence[float], mean_squares: Floats) -> Floats:
+    """``Σ c_q S_q²`` for mean squares (q, ...); shape (...)."""
+    return np.asarray(np.tensordot(np.asarray(coefficients), mean_squares, axes=1))
+
+
+def combination_interval(
+    coefficients: Sequence[float], mean_squares: Floats, df: Sequence[int], confidence: float
+) -> tuple[Floats, Floats]:
+    """Modified large-sample interval of ``Σ c_q θ_q``, each bound at (1 - confidence)/2.
+
+    coefficients: (q,), of either sign, zero to leave one out; mean_squares: (q, ...), df: (q,).
+    Returns the bounds, shape (...), which may be negative. Exact (chi-square) for a single mean square.
+    [burdick-borror-montgomery-2005] ch. 3 and app. B; [graybill-wang-1980] for sums, [ting-1990] for
+    combinations with negative coefficients.
+    """
+    tail = (1 - confidence) / 2
+    lower = _lower_bound(coefficients, mean_squares, df, tail)
+    # The upper bound of γ is the lower bound of -γ, mirrored.
+    upper = -_lower_bound([-c for c in coefficients], mean_squares, df, tail)
+    return lower, upper
+
+
+def ratio_interval(
+    denominator: Sequence[float],
+    mean_squares: Floats,
+    df: Sequence[int],
+    confidence: float,
+    *,
+    first: int = 0,
+    second: int,
+    scale: float,
+) -> tuple[Floats, Floats]:
+    """Interval of ``scale (θ_first - θ_second) / Σ d_q θ_q``, all ``d_q`` at least zero.
+
+    mean_squares: (q, ...); the denominator must not vanish. Returns the bounds, shape (...), not below
+    zero. Exact when one mean square makes up the denominator and is the second.
+    [burdick-borror-montgomery-2003], after [leiva-graybill-1986].
+    """
+    bounds = []
+    for tail in ((1 - confidence) / 2, (1 + confidence) / 2):
+        F = [f_upper_quantile(tail, df[first], df[q]) if q != first else 1.0 for q in range(len(df))]
+        bottom = combination([d * f for d, f in zip(denominator, F, strict=True)], mean_squares)
+        top = mean_squares[first] - F[second] * mean_squares[second]
+        bounds.append(np.maximum(scale * top / bottom, 0.0))
+    return bounds[0], bounds[1]
+
+
+# -- assembly ----------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Model:
+    """A fitted balanced random model.
+
+    mean_squares: (q,); df: (q,). Of each component, the coefficients over the mean squares; ``None``
+    for one the model has not got. ratio: the interval of part over gauge variance, where there is one.
+    """
+
+    mean_squares: Floats
+    df: tuple[int, ...]
+    repeatability: tuple[float, ...]
+    part: tuple[float, ...]
+    appraiser: tuple[float, ...] | None = None
+    part_by_appraiser: tuple[float, ...] | None = None
+
+    def added(self, *names: tuple[float, ...] | None) -> tuple[float, ...]:
+        """The coefficients of a sum of components."""
+        present = [name for name in names if name is not None]
+        # Sums such as 1/r - 1/(or) - 1/(pr) must not turn into a negative of the last digit.
+        return tuple(0.0 if abs(c) < 1e-14 else c for c in map(math.fsum, zip(*present, strict=True)))
+
+
+@dataclass(frozen=True, slots=True)
+class Assembled:
+    """What :func:`assemble` makes of a model."""
+
+    components: GaugeComponents
+    discrimination: Discrimination
+    capability: CapabilityEffect
+    chart: ChartEffect | None
+    notes: tuple[StudyNote, ...]
+
+
+def assemble(
+    model: Model, asked: Terms, grand_mean: float, *, ratio: tuple[float, float] | None
+) -> Assembled:
+    """Components with intervals and shares, and what they mean for categories, capability and charts.
+
+    ratio: bounds of part over gauge variance, or ``None``. Raises :class:`UnusableParameter` when the
+    process standard deviation given is not larger than the gauge's.
+    """
+    notes: list[StudyNote] = []
+    own = {
+        "repeatability": model.repeatability,
+        "appraiser": model.appraiser,
+        "part_by_appraiser": model.part_by_appraiser,
+        "part": model.part,
+    }
+    estimates = {
+        name: float(combination(c, model.mean_squares)) for name, c in own.items() if c is not None
+    }
+    values = {name: max(estimate, 0.0) for name, estimate in estimates.items()}
+    for name, estimate in estimates.items():
+        if estimate < 0:
+            notes.append(
+                StudyNote(
+                    "negative-component",
+                    f"The estimated variance of {name.replace('_', ' ')} is negative ({estimate:.6g}); it counts "
+                    "as zero. This happens by chance when the component is small.",
+                )
+            )
+    gauge_variance = (
+        values["repeatability"] + values.get("appraiser", 0.0) + values.get("part_by_appraiser", 0.0)
+    )
+    if asked.process_sd is None:
+        part_variance = values["part"]
+        total_variance = gauge_variance + part_variance
+    else:
+        total_variance = asked.process_sd**2
+        part_variance = total_variance - gauge_variance
+        if part_variance <= 0:
+            raise UnusableParameter.of(
+                "process-below-gauge",
+                f"The standard deviation of the process, {asked.process_sd:g}, is not larger than that of the gauge "
+                f"in this study, {math.sqrt(gauge_variance):.6g}. It must be the one seen in production, which "
+                "includes the gauge.",
+                "process_sd",
+            )
+    distance = _distance(asked.tolerance, grand_mean, notes)
+
+    def component(*names: str) -> VarianceComponent:
+        coefficients = model.added(*(own[name] for name in names))
+        estimate = float(combination(coefficients, model.mean_squares))
+        variance = sum(values.get(name, 0.0) for name in names)
+        low, high = combination_interval(coefficients, model.mean_squares, model.df, asked.confidence)
+        lower, upper = max(float(low), 0.0), max(float(high), 0.0)
+        if len(names) > 1:
+            # A sum is never smaller than what it adds; this only ever widens an interval.
+            for name in names:
+                if (single := own[name]) is not None:
+                    _, high = combination_interval(single, model.mean_squares, model.df, asked.confidence)
+                    upper = max(upper, float(high))
+        sd = math.sqrt(variance)
+        return VarianceComponent(
+            estimate,
+            variance,
+            lower,
+            upper,
+            sd,
+            math.sqrt(lower),
+            math.sqrt(upper),
+            100 * variance / total_variance if total_variance > 0 else None,
+            asked.study_multiple * sd,
+            100 * math.sqrt(variance / total_variance) if total_variance > 0 else None,
+            None if distance is None else 100 * asked.study_multiple * sd / distance,
+        )
+
+    several = model.appraiser is not None
+    components = GaugeComponents(
+        component("repeatability"),
+        component("appraiser") if several else None,
+        component("part_by_appraiser") if model.part_by_appraiser is not None else None,
+        component("appraiser", "part_by_appraiser") if several else None,
+        component("repeatability", "appraiser", "part_by_appraiser"),
+        component("part"),
+        component("repeatability", "appraiser", "part_by_appraiser", "part"),
+    )
+    if total_variance == 0:
+        notes.append(
+            StudyNote("no-variation", "All measurements are equal, so no share of the variation can be stated.")
+        )
+    elif gauge_variance == 0:
+        notes.append(
+            StudyNote(
+                "no-gauge-variation",
+                "Repeated measurements agree to the last digit; check the resolution of the gauge, and that the "
+                "values were measured and not copied.",
+            )
+        )
+    return Assembled(
+        components,
+        _discrimination(part_variance, gauge_variance, total_variance, asked, ratio),
+        _capability(part_variance, total_variance, asked, distance),
+        _chart(part_variance, total_variance, asked),
+        tuple(notes),
+    )
+
+
+def _distance(
+    tolerance: float | OneSidedTolerance | None, grand_mean: float, notes: list[StudyNote]
+) -> float | None:
+    """The width of the tolerance, or twice the room between the mean and the only limit."""
+    if not isinstance(tolerance, OneSidedTolerance):
+        return tolerance
+    room = tolerance.limit - grand_mean if tolerance.side == "upper" else grand_mean - tolerance.limit
+    if room > 0:
+        return 2 * room
+    notes.append(
+        StudyNote(
+            "mean-beyond-limit",
+            f"The mean of the measurements, {grand_mean:.6g}, is not inside the {tolerance.side} limit "
+            f"{tolerance.limit:g}, so there is no tolerance to take a share of.",
+        )
+    )
+    return None
+
+
+def _discrimination(
+    part: float, gauge: float, total: float, asked: Terms, ratio: tuple[float, float] | None
+) -> Discrimination:
+    lower, upper = ratio if ratio is not None and asked.process_sd is None else (None, None)
+    times = math.sqrt(part / gauge) if gauge > 0 else None
+    return Discrimination(
+        "study" if asked.process_sd is None else "process",
+        None if times is None else int(_CATEGORIES_RULE * times),
+        None if times is None else math.sqrt(2) * times,
+        None if lower is None else math.sqrt(2 * lower),
+        None if upper is None else math.sqrt(2 * upper),
+        100 * gauge / total if total > 0 else None,
+        None if upper is None else 100 / (1 + upper),
+        None if lower is None else 100 / (1 + lower),
+        100 * part / total if total > 0 else None,
+        None if lower is None else 100 * lower / (1 + lower),
+        None if upper is None else 100 * upper / (1 + upper),
+    )
+
+
+def _capability(part: float, total: float, asked: Terms, distance: float | None) -> CapabilityEffect:
+    index: Literal["cp", "cpu", "cpl"] | None = None
+    if isinstance(asked.tolerance, OneSidedTolerance):
+        index = "cpu" if asked.tolerance.side == "upper" else "cpl"
+    elif asked.tolerance is not None:
+        index = "cp"
+    return CapabilityEffect(
+        index,
+        distance / (6 * math.sqrt(total)) if distance is not None and total > 0 else None,
+        distance / (6 * math.sqrt(part)) if distance is not None and part > 0 else None,
+        math.sqrt(part / total) if total > 0 else None,
+    )
+
+
+def _chart(part: float, total: float, asked: Terms) -> ChartEffect | None:
+    if total == 0:
+        return None
+    factor = math.sqrt(part / total)
+
+    def run_length(shift: float) -> float:
+        away = shift * math.sqrt(asked.chart_subgroup_size)
+        return float(1 / (scipy.special.ndtr(away - 3) + scipy.special.ndtr(-away - 3)))
+
+    return ChartEffect(
+        factor,
+        asked.chart_shift,
+        asked.chart_subgroup_size,
+        run_length(asked.chart_shift),
+        run_length(asked.chart_shift * factor),
+        total / part if part > 0 else None,
+    )
