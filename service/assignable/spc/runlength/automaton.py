@@ -8,7 +8,7 @@ Method: Champ & Woodall 1987 [champ-woodall-1987].
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 
@@ -20,6 +20,7 @@ from ..rules import TOLERANCE, Rule
 
 MOST_STATES = 20_000
 _MOST_STATES_OF_ONE = 4_000
+_MOST_EDGES = 240_000
 _RADIX = 2**62
 
 
@@ -174,17 +175,29 @@ def _product(parts: list[Integers]) -> Integers:
         total[dead] = -1
         return total
 
-    front = np.zeros(1, dtype=np.int64)
-    known = front
+    most = min(MOST_STATES, _MOST_EDGES // parts[0].shape[1])
+    return explore(np.zeros(1, dtype=np.int64), after, most=most)[1]
+
+
+def explore(
+    start: Integers, after: Callable[[Integers], Integers], *, most: int
+) -> tuple[Integers, Integers]:
+    """What can be reached, in layers of equally many letters.
+
+    start: distinct codes; after: gives the codes that follow, (n, k) for n codes, negative for
+    what is no state. Returns the codes reached (the start first), and (n, k) what follows each as
+    places among them, negatives kept. Raises ``UnusableParameter`` past ``most`` codes.
+    """
+    front = start
+    known = np.sort(start)
     layers, rows = [front], [after(front)]
     while len(front):
         reached = np.unique(rows[-1])
-        if len(reached) and reached[0] < 0:
-            reached = reached[1:]
+        reached = reached[np.searchsorted(reached, 0) :]
         place = np.minimum(np.searchsorted(known, reached), len(known) - 1)
         front = reached[known[place] != reached]
         if len(front):
-            if len(known) + len(front) > MOST_STATES:
+            if len(known) + len(front) > most:
                 raise too_many_states()
             known = np.sort(np.concatenate((known, front)), kind="stable")
             layers.append(front)
@@ -193,4 +206,4 @@ def _product(parts: list[Integers]) -> Integers:
     order = np.argsort(codes)
     table = np.concatenate(rows)
     place = np.minimum(np.searchsorted(codes, table, sorter=order), len(codes) - 1)
-    return np.where(table < 0, -1, order[place])
+    return codes, np.where(table < 0, table, order[place])

@@ -23,14 +23,16 @@ def chain_law(automaton: Automaton, probability: Floats, beyond: float, *, memor
     n = automaton.states
     letters = len(probability)
     target = automaton.follow.ravel()
-    mass = np.zeros(n)
+    mass: Floats = np.zeros(n)
     mass[0] = 1.0
 
     def advance() -> tuple[float, float]:
         nonlocal mass
         alive = float(mass.sum())
-        reached = np.bincount(target, np.multiply.outer(mass, probability).ravel(), n + 1)
+        reached = np.bincount(target, np.multiply.outer(mass, probability).ravel(), n + 1).astype(
+            np.float64, copy=False
+        )
         mass = reached[:n]
         return beyond * alive + float(reached[n]), float(mass.sum())
 
-    return follow(advance, memory=memory, work=8 * n * letters, method=METHOD)
+    return follow(advance, memory=memory, work=4 * n * letters, method=METHOD)

@@ -8,28 +8,18 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
 import scipy
 
-from ..data import Floats
+from ..data import Booleans, Floats
 from ..errors import UnusableParameter
 from ..rules import LIMIT, TOLERANCE, Rule, longest_window, watched
 from .automaton import Watch, compile_watches, watches
 from .integral import Order, lattice_law, order_law
 from .markov import chain_law
 from .survival import Decay, RunLength, geometric
-
-
-@dataclass(frozen=True, slots=True)
-class _Reading:
-    """A law of points cut into regions: what the rules see of it."""
-
-    probability: Floats  # (regions,)
-    beyond: float  # of a point that signals by itself
-    watches: tuple[Watch, ...]
 
 
 def _acting(rules: Sequence[Rule]) -> tuple[Rule, ...]:
@@ -95,7 +85,7 @@ def _between(a: Floats, b: Floats) -> Floats:
     return between
 
 
-def _once(rules: Sequence[Rule], z: Floats) -> Floats:
+def _once(rules: Sequence[Rule], z: Floats) -> Booleans:
     """Which values signal by a rule that needs one point only."""
     alone = np.zeros(len(z), dtype=bool)
     for watch in watches(rules, z):
@@ -108,22 +98,18 @@ def _once(rules: Sequence[Rule], z: Floats) -> Floats:
 def _normal_law(rules: tuple[Rule, ...], lower: float, upper: float, shift: float, scale: float) -> Decay:
     _check(lower, upper, shift, scale)
     acting = _acting(rules)
+    outside = scipy.special.ndtr(np.array([(lower - shift) / scale, (shift - upper) / scale]))
     if len(acting) == 1:
-        ends = scipy.special.ndtr(np.array([(lower - shift) / scale, (shift - upper) / scale]))
-        return geometric(float(ends.sum()))
+        return geometric(float(outside.sum()))
     lines = {sign * rule.distance for rule in acting[1:] if rule.distance is not None for sign in (-1.0, 1.0)}
     inner = sorted(line for line in lines if lower < line < upper)
     cuts = np.array([lower, *inner, upper])
-    z = (cuts[1:] + cuts[:-1]) / 2.0
-    # The middle of a region without an end is anywhere beyond its one line.
-    z[0] = cuts[1] - 1.0 if math.isinf(lower) else z[0]
-    z[-1] = cuts[-2] + 1.0 if math.isinf(upper) else z[-1]
-    if math.isinf(lower) and math.isinf(upper) and not inner:
-        z[:] = 0.0
+    # A value inside each region; where a region has no end, any beyond its one line.
+    ends = np.clip(cuts, cuts[1] - 2.0, cuts[-2] + 2.0) if inner else np.clip(cuts, -1e9, 1e9)
+    z = (ends[1:] + ends[:-1]) / 2.0
     probability = _between((cuts[:-1] - shift) / scale, (cuts[1:] - shift) / scale)
-    ends = scipy.special.ndtr(np.array([(lower - shift) / scale, (shift - upper) / scale]))
     alone = _once(acting, z)
-    beyond = float(ends.sum() + probability[alone].sum())
+    beyond = float(outside.sum() + probability[alone].sum())
     probability, z = probability[~alone], z[~alone]
     seen = tuple(watch for watch in watches(acting, z) if watch.k > 1) if len(z) else ()
     order = Order.of(acting)
@@ -200,16 +186,18 @@ def discrete_law(
     opens = np.concatenate(([True], (marks[:, 1:] != marks[:, :-1]).any(axis=0)))
     first = np.flatnonzero(opens)
     letter = np.cumsum(opens) - 1
-    folded = tuple(
-        Watch(watch.k, watch.m, tuple(np.array(watch.marked)[first].tolist())) for watch in seen
-    )
+    folded = tuple(Watch(watch.k, watch.m, tuple(np.array(watch.marked)[first].tolist())) for watch in seen)
     automaton = compile_watches(folded, len(first))
     memory = longest_window(acting)
     if order is None:
-        return chain_law(automaton, np.bincount(letter, p, len(first)), beyond, memory=memory)
+        return chain_law(
+            automaton, np.bincount(letter, p, len(first)).astype(np.float64), beyond, memory=memory
+        )
     ties = np.diff(x) <= slack
     if bool(ties.any()):
         raise UnusableParameter.of(
-            "not-a-distribution", "The values lie too close together, against sigma, to be told apart.", "support"
+            "not-a-distribution",
+            "The values lie too close together, against sigma, to be told apart.",
+            "support",
         )
     return lattice_law(automaton, order, p, letter, beyond, memory=memory)

@@ -82,6 +82,8 @@ class Decay:
         s = self.survival
         if s[-1] <= target:
             return int(np.argmax(s <= target))
+        if self.hazard >= 1.0:
+            return len(s)
         return len(s) - 1 + math.ceil(math.log(target / float(s[-1])) / math.log1p(-self.hazard))
 
     def probability(self, points: Floats) -> Floats:
@@ -100,7 +102,14 @@ class Decay:
         return probability
 
 
-def follow(advance: Callable[[], tuple[float, float]], *, memory: int, work: int, method: str) -> Decay:
+def follow(
+    advance: Callable[[], tuple[float, float]],
+    *,
+    memory: int,
+    work: int,
+    method: str,
+    accuracy: str = "relative 1e-12",
+) -> Decay:
     """Follow the survivors until the share lost stands still.
 
     advance: goes on by one point, gives the probability that the signal comes at it and the
@@ -121,12 +130,12 @@ def follow(advance: Callable[[], tuple[float, float]], *, memory: int, work: int
         alive = left
         survival.append(alive)
         if alive < _GONE:
-            return Decay(np.array(survival), 1.0, method, "relative 1e-12")
+            return Decay(np.array(survival), 1.0, method, accuracy)
         if len(hazards) > span + 1:
             recent = hazards[-span:]
             high, low = max(recent), min(recent)
             if high - low <= SETTLED * high:
-                return Decay(np.array(survival), hazards[-1], method, "relative 1e-12")
+                return Decay(np.array(survival), hazards[-1], method, accuracy)
             varied = (high - low) / high
     if varied > 1e-6:
         raise UnusableParameter.of(
@@ -137,4 +146,4 @@ def follow(advance: Callable[[], tuple[float, float]], *, memory: int, work: int
 
 def geometric(p: float) -> Decay:
     """The law when each point signals with probability p, whatever came before."""
-    return Decay(np.ones(1), p, "closed form (geometric)", "exact")
+    return Decay(np.ones(1), min(p, 1.0), "closed form (geometric)", "exact")
