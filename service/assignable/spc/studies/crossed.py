@@ -10,6 +10,7 @@ import numpy as np
 from ..data import Floats
 from ..errors import UnusableData, UnusableParameter
 from .variance_components import (
+    ONE_APPRAISER,
     AnovaRow,
     CapabilityEffect,
     ChartEffect,
@@ -21,13 +22,31 @@ from .variance_components import (
     anova_row,
     assemble,
     complete,
-    ratio_interval,
     rounding_sum_of_squares,
     terms,
     total_row,
 )
 
 StudyModel = Literal["with-interaction", "without-interaction", "one-appraiser"]
+
+
+_NOT_ESTIMABLE = StudyNote(
+    "interaction-not-estimable",
+    "Each appraiser measured each part once, so the interaction of part and appraiser cannot be told from "
+    "repeatability and is contained in it.",
+)
+
+
+def _pooled(p_value: float | None, alpha: float | None) -> StudyNote:
+    why = (
+        "neither shows any variation."
+        if p_value is None
+        else f"its p-value, {p_value:.3g}, is above {alpha:g}."
+    )
+    return StudyNote(
+        "interaction-pooled",
+        f"The interaction of part and appraiser was pooled into repeatability: {why}",
+    )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -108,13 +127,18 @@ def crossed(
     )
     if pooling_alpha is not None and not 0 <= pooling_alpha <= 1:
         raise UnusableParameter.of(
-            "out-of-range", "The p-value above which the interaction is pooled lies between 0 and 1.", "pooling_alpha"
+            "out-of-range",
+            "The p-value above which the interaction is pooled lies between 0 and 1.",
+            "pooling_alpha",
         )
     complete(measurements, axes="part, appraiser, trial")
     p, o, r = measurements.shape
     if p < 2:
         raise UnusableData.of(
-            "too-few-parts", "A study of the gauge needs at least two parts; ten are usual.", "data", "measurements"
+            "too-few-parts",
+            "A study of the gauge needs at least two parts; ten are usual.",
+            "data",
+            "measurements",
         )
     if o * r < 2:
         raise UnusableData.of(
@@ -125,9 +149,10 @@ def crossed(
         )
     centre = float(measurements.mean())
     x = measurements - centre
-    rest = float(x.mean())
-    x = x - rest
-    grand_mean = centre + rest
+    # The second pass restores the digits that the mean of large values lost.
+    lost = float(x.mean())
+    x = x - lost
+    grand_mean = centre + lost
     cells = x.mean(axis=2)
     part_means, appraiser_means = cells.mean(axis=1), cells.mean(axis=0)
     interaction = cells - part_means[:, None] - appraiser_means
@@ -137,114 +162,77 @@ def crossed(
         total = copies * float(np.sum(values**2))
         return total if total > floor else 0.0
 
-    ss_part = square(part_means, o * r)
-    ss_appraiser = square(appraiser_means, p * r)
-    ss_interaction = square(interaction, r)
-    ss_error = square(x - cells[:, :, None], 1)
-    df_part, df_appraiser, df_interaction, df_error = p - 1, o - 1, (p - 1) * (o - 1), p * o * (r - 1)
+    ss_part, df_part = square(part_means, o * r), p - 1
+    ss_appraiser, df_appraiser = square(appraiser_means, p * r), o - 1
+    ss_interaction, df_interaction = square(interaction, r), (p - 1) * (o - 1)
+    ss_error, df_error = square(x - cells[:, :, None], 1), p * o * (r - 1)
 
-    notes: list[StudyNote] = []
-    p_interaction: float | None = None
-    full: tuple[AnovaRow, ...] | None = None
-    if o > 1 and r > 1:
-        ms_interaction = ss_interaction / df_interaction
-        rows = (
-            anova_row("part", ss_part, df_part, "part-by-appraiser", ms_interaction, df_interaction),
-            anova_row("appraiser", ss_appraiser, df_appraiser, "part-by-appraiser", ms_interaction, df_interaction),
-            anova_row(
-                "part-by-appraiser", ss_interaction, df_interaction, "repeatability", ss_error / df_error, df_error
-            ),
-            anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
-        )
-        full = (*rows, total_row(rows))
-        p_interaction = rows[2].p_value
-    pooled = full is not None and pooling_alpha is not None and (p_interaction is None or p_interaction > pooling_alpha)
-
-    model_name: StudyModel
-    if o == 1:
-        model_name = "one-appraiser"
-        notes.append(
-            StudyNote(
-                "one-appraiser",
-                "One appraiser took part, so reproducibility is unknown and the gauge variation is repeatability alone.",
-            )
-        )
-        ms_error = ss_error / df_error
-        rows = (
-            anova_row("part", ss_part, df_part, "repeatability", ms_error, df_error),
-            anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
-        )
-        table = (*rows, total_row(rows))
-        model = Model(
-            np.array([ss_part / df_part, ms_error]), (df_part, df_error), (0.0, 1.0), (1 / r, -1 / r)
-        )
-        second, scale, denominator = 1, 1 / r, (0.0, 1.0)
-    elif full is not None and not pooled:
-        model_name = "with-interaction"
-        table = full
-        model = Model(
-            np.array([ss_part / df_part, ss_appraiser / df_appraiser, ms_interaction, ss_error / df_error]),
-            (df_part, df_appraiser, df_interaction, df_error),
-            (0.0, 0.0, 0.0, 1.0),
-            (1 / (o * r), 0.0, -1 / (o * r), 0.0),
-            (0.0, 1 / (p * r), -1 / (p * r), 0.0),
-            (0.0, 0.0, 1 / r, -1 / r),
-        )
-        second, scale = 2, 1 / (o * r)
-        denominator = (0.0, 1 / (p * r), (p - 1) / (p * r), (r - 1) / r)
-    else:
-        model_name = "without-interaction"
-        if pooled:
-            notes.append(
-                StudyNote(
-                    "interaction-pooled",
-                    "The interaction of part and appraiser was pooled into repeatability: "
-                    + (
-                        "neither shows any variation."
-                        if p_interaction is None
-                        else f"its p-value, {p_interaction:.3g}, is above {pooling_alpha:g}."
-                    ),
-                )
-            )
-        else:
-            notes.append(
-                StudyNote(
-                    "interaction-not-estimable",
-                    "Each appraiser measured each part once, so the interaction of part and appraiser cannot be told "
-                    "from repeatability and is contained in it.",
-                )
-            )
-        ss_rest, df_rest = ss_interaction + ss_error, df_interaction + df_error
+    def additive(ss_rest: float, df_rest: int) -> tuple[tuple[AnovaRow, ...], Model]:
+        """Everything but the main effects is repeatability."""
         ms_rest = ss_rest / df_rest
-        rows = (
-            anova_row("part", ss_part, df_part, "repeatability", ms_rest, df_rest),
-            anova_row("appraiser", ss_appraiser, df_appraiser, "repeatability", ms_rest, df_rest),
-            anova_row("repeatability", ss_rest, df_rest, None, 0.0, 0),
-        )
-        table = (*rows, total_row(rows))
-        model = Model(
+        part = anova_row("part", ss_part, df_part, "repeatability", ms_rest, df_rest)
+        rest = anova_row("repeatability", ss_rest, df_rest, None, 0.0, 0)
+        if o == 1:
+            return (part, rest, total_row((part, rest))), Model(
+                np.array([ss_part / df_part, ms_rest]), (df_part, df_rest), (0.0, 1.0), (1 / r, -1 / r)
+            )
+        appraiser = anova_row("appraiser", ss_appraiser, df_appraiser, "repeatability", ms_rest, df_rest)
+        rows = (part, appraiser, rest)
+        return (*rows, total_row(rows)), Model(
             np.array([ss_part / df_part, ss_appraiser / df_appraiser, ms_rest]),
             (df_part, df_appraiser, df_rest),
             (0.0, 0.0, 1.0),
             (1 / (o * r), 0.0, -1 / (o * r)),
             (0.0, 1 / (p * r), -1 / (p * r)),
         )
-        second, scale = 2, 1 / (o * r)
-        denominator = (0.0, 1 / (p * r), (p * r - 1) / (p * r))
 
-    ratio = None
-    if any(d > 0 and s > 0 for d, s in zip(denominator, model.mean_squares.tolist(), strict=True)):
-        low, high = ratio_interval(
-            denominator, model.mean_squares, model.df, confidence, second=second, scale=scale
+    def interactive() -> tuple[tuple[AnovaRow, ...], Model]:
+        between, within = ss_interaction / df_interaction, ss_error / df_error
+        against = ("part-by-appraiser", between, df_interaction)
+        rows = (
+            anova_row("part", ss_part, df_part, *against),
+            anova_row("appraiser", ss_appraiser, df_appraiser, *against),
+            anova_row("part-by-appraiser", ss_interaction, df_interaction, "repeatability", within, df_error),
+            anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
         )
-        ratio = float(low), float(high)
-    made = assemble(model, asked, grand_mean, ratio=ratio)
+        return (*rows, total_row(rows)), Model(
+            np.array([ss_part / df_part, ss_appraiser / df_appraiser, between, within]),
+            (df_part, df_appraiser, df_interaction, df_error),
+            (0.0, 0.0, 0.0, 1.0),
+            (1 / (o * r), 0.0, -1 / (o * r), 0.0),
+            (0.0, 1 / (p * r), -1 / (p * r), 0.0),
+            (0.0, 0.0, 1 / r, -1 / r),
+        )
+
+    notes: list[StudyNote] = []
+    full: tuple[AnovaRow, ...] | None = None
+    p_interaction: float | None = None
+    pooled = False
+    name: StudyModel = "without-interaction"
+    if o == 1:
+        name = "one-appraiser"
+        notes.append(ONE_APPRAISER)
+        table, model = additive(ss_error, df_error)
+    elif r == 1:
+        notes.append(_NOT_ESTIMABLE)
+        table, model = additive(ss_interaction, df_interaction)
+    else:
+        full, model = interactive()
+        p_interaction = full[2].p_value
+        pooled = pooling_alpha is not None and (p_interaction is None or p_interaction > pooling_alpha)
+        if pooled:
+            notes.append(_pooled(p_interaction, pooling_alpha))
+            table, model = additive(ss_interaction + ss_error, df_interaction + df_error)
+        else:
+            name, table = "with-interaction", full
+
+    made = assemble(model, asked, grand_mean)
     return CrossedStudy(
         p,
         o,
         r,
         grand_mean,
-        model_name,
+        name,
         pooling_alpha,
         p_interaction,
         pooled,

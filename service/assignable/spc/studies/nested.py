@@ -9,6 +9,7 @@ import numpy as np
 from ..data import Floats
 from ..errors import UnusableData
 from .variance_components import (
+    ONE_APPRAISER,
     AnovaRow,
     CapabilityEffect,
     ChartEffect,
@@ -20,7 +21,6 @@ from .variance_components import (
     anova_row,
     assemble,
     complete,
-    ratio_interval,
     rounding_sum_of_squares,
     terms,
     total_row,
@@ -102,9 +102,10 @@ def nested(
         )
     centre = float(measurements.mean())
     x = measurements - centre
-    rest = float(x.mean())
-    x = x - rest
-    grand_mean = centre + rest
+    # The second pass restores the digits that the mean of large values lost.
+    lost = float(x.mean())
+    x = x - lost
+    grand_mean = centre + lost
     parts = x.mean(axis=2)
     appraisers = parts.mean(axis=1)
     floor = rounding_sum_of_squares(measurements)
@@ -123,20 +124,9 @@ def nested(
         anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
     )
     notes: list[StudyNote] = []
-    ratio = None
     if a == 1:
-        notes.append(
-            StudyNote(
-                "one-appraiser",
-                "One appraiser took part, so reproducibility is unknown and the gauge variation is repeatability alone.",
-            )
-        )
+        notes.append(ONE_APPRAISER)
         model = Model(np.array([ms_part, ms_error]), (df_part, df_error), (0.0, 1.0), (1 / r, -1 / r))
-        if ms_error > 0:
-            low, high = ratio_interval(
-                (0.0, 1.0), model.mean_squares, model.df, confidence, second=1, scale=1 / r
-            )
-            ratio = float(low), float(high)
     else:
         rows = (anova_row("appraiser", ss_appraiser, df_appraiser, "part", ms_part, df_part), *rows)
         model = Model(
@@ -146,7 +136,7 @@ def nested(
             (0.0, 1 / r, -1 / r),
             (1 / (b * r), -1 / (b * r), 0.0),
         )
-    made = assemble(model, asked, grand_mean, ratio=ratio)
+    made = assemble(model, asked, grand_mean)
     return NestedStudy(
         a,
         b,

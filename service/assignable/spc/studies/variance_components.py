@@ -188,6 +188,14 @@ class Terms:
     chart_subgroup_size: int
 
 
+def confidence_faults(confidence: float) -> list[Fault]:
+    """What is wrong with a confidence level, if anything."""
+    if 0 < confidence < 1:
+        return []
+    detail = "The confidence level must lie between 0 and 1, for example 0.95."
+    return [Fault("out-of-range", detail, ("confidence",))]
+
+
 def terms(
     *,
     tolerance: float | OneSidedTolerance | None,
@@ -206,9 +214,8 @@ def terms(
 
     if isinstance(tolerance, OneSidedTolerance):
         if not abs(tolerance.limit) < _LARGEST:
-            faults.append(
-                Fault("out-of-range", "The specification limit must be a finite number.", ("tolerance", "limit"))
-            )
+            detail = "The specification limit must be a finite number."
+            faults.append(Fault("out-of-range", detail, ("tolerance", "limit")))
     elif tolerance is not None:
         positive(tolerance, "tolerance", "The width of the tolerance")
     positive(study_multiple, "study_multiple", "The study multiple")
@@ -217,10 +224,7 @@ def terms(
     positive(chart_shift, "chart_shift", "The shift of the process")
     if chart_subgroup_size < 1:
         faults.append(Fault("out-of-range", "A subgroup has at least one piece.", ("chart_subgroup_size",)))
-    if not 0 < confidence < 1:
-        faults.append(
-            Fault("out-of-range", "The confidence level must lie between 0 and 1, for example 0.95.", ("confidence",))
-        )
+    faults += confidence_faults(confidence)
     if faults:
         raise UnusableParameter(*faults)
     return Terms(tolerance, study_multiple, process_sd, confidence, chart_shift, chart_subgroup_size)
@@ -242,8 +246,8 @@ def complete(measurements: Floats, *, axes: str) -> None:
             *(
                 Fault(
                     "missing-measurement",
-                    f"The measurement at {axes} {i + 1}, {j + 1}, {k + 1} is missing; this analysis needs every "
-                    "cell filled. Measure it again, or leave that part out of the study.",
+                    f"The measurement at {axes} {i + 1}, {j + 1}, {k + 1} is missing; this analysis needs "
+                    "every cell filled. Measure it again, or leave that part out of the study.",
                     ("data", "measurements", i, j, k),
                 )
                 for i, j, k in bad[:_MOST_FAULTS].tolist()
@@ -310,7 +314,9 @@ def total_row(rows: Sequence[AnovaRow]) -> AnovaRow:
 # -- intervals ---------------------------------------------------------------------------------------
 
 
-def _lower_bound(coefficients: Sequence[float], mean_squares: Floats, df: Sequence[int], tail: float) -> Floats:
+def _lower_bound(
+    coefficients: Sequence[float], mean_squares: Floats, df: Sequence[int], tail: float
+) -> Floats:
     """The lower bound of [ting-1990]; with positive coefficients alone that of [graybill-wang-1980]."""
     up = [q for q, c in enumerate(coefficients) if c > 0]
     down = [q for q, c in enumerate(coefficients) if c < 0]
@@ -366,7 +372,7 @@ def ratio_interval(
     df: Sequence[int],
     confidence: float,
     *,
-    first: int = 0,
+    first: int,
     second: int,
     scale: float,
 ) -> tuple[Floats, Floats]:
@@ -385,6 +391,11 @@ def ratio_interval(
     return bounds[0], bounds[1]
 
 
+ONE_APPRAISER = StudyNote(
+    "one-appraiser",
+    "One appraiser took part, so reproducibility is unknown and the gauge variation is repeatability alone.",
+)
+
 # -- assembly ----------------------------------------------------------------------------------------
 
 
@@ -393,7 +404,7 @@ class Model:
     """A fitted balanced random model.
 
     mean_squares: (q,); df: (q,). Of each component, the coefficients over the mean squares; ``None``
-    for one the model has not got. ratio: the interval of part over gauge variance, where there is one.
+    for one the model has not got.
     """
 
     mean_squares: Floats
@@ -421,13 +432,24 @@ class Assembled:
     notes: tuple[StudyNote, ...]
 
 
-def assemble(
-    model: Model, asked: Terms, grand_mean: float, *, ratio: tuple[float, float] | None
-) -> Assembled:
+def _part_over_gauge(model: Model, confidence: float) -> tuple[float, float] | None:
+    """Bounds of part over gauge variance, where the gauge is a sum of mean squares and not all zero."""
+    gauge = model.added(model.repeatability, model.appraiser, model.part_by_appraiser)
+    if min(gauge) < 0 or float(combination(gauge, model.mean_squares)) <= 0:
+        return None
+    first = next(q for q, c in enumerate(model.part) if c > 0)
+    second = next(q for q, c in enumerate(model.part) if c < 0)
+    lower, upper = ratio_interval(
+        gauge, model.mean_squares, model.df, confidence, first=first, second=second, scale=model.part[first]
+    )
+    return float(lower), float(upper)
+
+
+def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
     """Components with intervals and shares, and what they mean for categories, capability and charts.
 
-    ratio: bounds of part over gauge variance, or ``None``. Raises :class:`UnusableParameter` when the
-    process standard deviation given is not larger than the gauge's.
+    Raises :class:`UnusableParameter` when the process standard deviation given is not larger than the
+    gauge's.
     """
     notes: list[StudyNote] = []
     own = {
@@ -436,17 +458,15 @@ def assemble(
         "part_by_appraiser": model.part_by_appraiser,
         "part": model.part,
     }
-    estimates = {
-        name: float(combination(c, model.mean_squares)) for name, c in own.items() if c is not None
-    }
+    estimates = {name: float(combination(c, model.mean_squares)) for name, c in own.items() if c is not None}
     values = {name: max(estimate, 0.0) for name, estimate in estimates.items()}
     for name, estimate in estimates.items():
         if estimate < 0:
             notes.append(
                 StudyNote(
                     "negative-component",
-                    f"The estimated variance of {name.replace('_', ' ')} is negative ({estimate:.6g}); it counts "
-                    "as zero. This happens by chance when the component is small.",
+                    f"The estimated variance of {name.replace('_', ' ')} is negative ({estimate:.6g}); it "
+                    "counts as zero. This happens by chance when the component is small.",
                 )
             )
     gauge_variance = (
@@ -461,9 +481,9 @@ def assemble(
         if part_variance <= 0:
             raise UnusableParameter.of(
                 "process-below-gauge",
-                f"The standard deviation of the process, {asked.process_sd:g}, is not larger than that of the gauge "
-                f"in this study, {math.sqrt(gauge_variance):.6g}. It must be the one seen in production, which "
-                "includes the gauge.",
+                f"The standard deviation of the process, {asked.process_sd:g}, is not larger than that of "
+                f"the gauge in this study, {math.sqrt(gauge_variance):.6g}. It must be the one seen in "
+                "production, which includes the gauge.",
                 "process_sd",
             )
     distance = _distance(asked.tolerance, grand_mean, notes)
@@ -507,19 +527,23 @@ def assemble(
     )
     if total_variance == 0:
         notes.append(
-            StudyNote("no-variation", "All measurements are equal, so no share of the variation can be stated.")
+            StudyNote(
+                "no-variation", "All measurements are equal, so no share of the variation can be stated."
+            )
         )
     elif gauge_variance == 0:
         notes.append(
             StudyNote(
                 "no-gauge-variation",
-                "Repeated measurements agree to the last digit; check the resolution of the gauge, and that the "
-                "values were measured and not copied.",
+                "Repeated measurements agree to the last digit; check the resolution of the gauge, and that "
+                "the values were measured and not copied.",
             )
         )
     return Assembled(
         components,
-        _discrimination(part_variance, gauge_variance, total_variance, asked, ratio),
+        _discrimination(
+            part_variance, gauge_variance, total_variance, asked, _part_over_gauge(model, asked.confidence)
+        ),
         _capability(part_variance, total_variance, asked, distance),
         _chart(part_variance, total_variance, asked),
         tuple(notes),
