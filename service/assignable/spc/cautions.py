@@ -121,8 +121,8 @@ def autocorrelated(found: Autocorrelation | None) -> Caution | None:
         "autocorrelated",
         f"Points depend on those before them (correlation of successive points {found.lag1:.2f}; Ljung–Box "
         f"test over {_things(found.lags, 'lag', 'lags')}: {_probability(found.p_value)}). Limits and "
-        "run lengths suppose independent points, so the rate of false alarms is not the one stated. Look for a "
-        "drift or a cycle, sample less often, or use the `residual` chart.",
+        "run lengths suppose independent points, so the rate of false alarms is not the one stated. Look "
+        "for a drift or a cycle, sample less often, or use the `residual` chart.",
         ("data",),
         "ljung-box-1978",
     )
@@ -186,8 +186,8 @@ def unstable_spread(found: SpreadStability | None) -> Caution | None:
     return Caution(
         "unstable-spread",
         f"The spread within the {found.degrees_of_freedom + 1} subgroups differs by more than chance "
-        f"(Bartlett's test: {_probability(found.p_value)}), so no single sigma stands behind the limits. Look "
-        "at the spread panel and at single outlying values before the limits are used.",
+        f"(Bartlett's test: {_probability(found.p_value)}), so no single sigma stands behind the limits. "
+        "Look at the spread panel and at single outlying values before the limits are used.",
         ("data",),
         "bartlett-1937",
     )
