@@ -190,20 +190,23 @@ class Coded(str):
         self.code = code
         return self
 
+    def __reduce__(self) -> tuple[type[Coded], tuple[str, str]]:
+        return Coded, (self.code, str(self))
+
     def format(self, *args: object, **kwargs: object) -> Coded:
         return Coded(self.code, super().format(*args, **kwargs))
 
 
 class More(Coded):
-    """Stands for ``count`` further faults of one field, which are not listed."""
+    """Stands for ``further`` faults of one field, which are not listed."""
 
-    __slots__ = ("count",)
-    count: int
+    __slots__ = ("further",)
+    further: int
 
     @classmethod
-    def of(cls, count: int) -> More:
-        self = cls("more", f"{count} more.")
-        self.count = count
+    def of(cls, further: int) -> More:
+        self = cls("more", f"{further} more.")
+        self.further = further
         return self
 
 
@@ -217,7 +220,7 @@ class Entry:
     parameter: str | None = None
 
 
-class Problem(Exception):
+class Problem(Exception):  # noqa: N818
     """A failure ready to be answered; the edge's own layers raise it."""
 
     def __init__(
@@ -285,12 +288,13 @@ def pointers(messages: object) -> Iterator[Entry | int]:
         path, here = todo.pop()
         if isinstance(here, Mapping):
             todo.extend(
-                (path if step == HERE else (*path, step), found) for step, found in reversed(here.items())
+                (path if step == HERE else (*path, step), found)
+                for step, found in reversed(list(here.items()))
             )
         elif isinstance(here, (list, tuple)):
             todo.extend((path, found) for found in reversed(here))
         elif isinstance(here, More):
-            yield here.count
+            yield here.further
         else:
             yield Entry(getattr(here, "code", "invalid"), str(here), pointer(path))
 

@@ -28,7 +28,7 @@ _NUMBER = re.compile(rf"{_STRING}|(-?\d+(?:\.\d+)?(?:[eE][+-]?\d+)?)", re.DOTALL
 _LONGEST_INTEGER = 310  # digits; longer than any double can hold
 
 
-class BadJson(Exception):
+class BadJson(Exception):  # noqa: N818
     """A body that is not JSON; ``detail`` is a sentence, ``line`` and ``column`` count from 1."""
 
     def __init__(self, code: str, detail: str, line: int = 1, column: int = 1) -> None:
@@ -76,7 +76,7 @@ def _keys_of(document: object) -> int:
     return keys
 
 
-class _Refused(Exception):
+class _Refused(Exception):  # noqa: N818
     """Raised inside the decoder, which alone knows that something is wrong but not where."""
 
 
@@ -146,7 +146,9 @@ def _read_slowly(body: bytes) -> Any:
         return _DECODER.decode(text)
     except _Repeated:
         key, position = _find_repeated(text)
-        raise _at("repeated-key", f"The key {key} is given twice in the same object.", text, position) from None
+        raise _at(
+            "repeated-key", f"The key {key} is given twice in the same object.", text, position
+        ) from None
     except _Literal as error:
         position = next(found.start(1) for found in _LITERAL.finditer(text) if found[1])
         raise _at(
@@ -156,7 +158,9 @@ def _read_slowly(body: bytes) -> Any:
             position,
         ) from None
     except _TooLarge:
-        position = next(found.start(1) for found in _NUMBER.finditer(text) if found[1] and _overflows(found[1]))
+        position = next(
+            found.start(1) for found in _NUMBER.finditer(text) if found[1] and _overflows(found[1])
+        )
         raise _at("number-too-large", "This number is too large for a double.", text, position) from None
     except json.JSONDecodeError as error:
         raise _at("not-json", _plainly(error, text), text, error.pos) from None

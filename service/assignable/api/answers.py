@@ -1,0 +1,123 @@
+"""From a result to bytes: the same result always gives the same ones."""
+
+from __future__ import annotations
+
+from base64 import b64encode
+from collections.abc import Iterator
+from dataclasses import fields, is_dataclass
+from functools import cache
+from hashlib import sha256
+from math import isfinite
+from typing import Any
+
+import numpy as np
+import orjson
+
+JSON = "application/json"
+CONTRACT_VERSION = "1.0.0"
+
+_OPTIONS = orjson.OPT_SERIALIZE_NUMPY
+
+
+class NotFinite(Exception):  # noqa: N818
+    """A result holds NaN or infinity at ``path``: a fault of the service, never an answer."""
+
+    def __init__(self, path: str) -> None:
+        super().__init__(f"not finite: {path}")
+        self.path = path
+
+
+def dumps(result: Any) -> bytes:
+    """A result of plain values, arrays and dataclasses as JSON.
+
+    The writer turns NaN and infinity into null without a word, and nothing else but ``None`` becomes
+    null: so an answer without the word holds neither, and only one with it is looked through.
+    Raises :class:`NotFinite`.
+    """
+    written = orjson.dumps(result, _plainer, _OPTIONS)
+    if b"null" in written:
+        refuse_not_finite(result)
+    return written
+
+
+def refuse_not_finite(result: Any) -> None:
+    """Raises :class:`NotFinite` where NaN or infinity stands anywhere in a result."""
+    for path in _not_finite(result, "$"):
+        raise NotFinite(path)
+
+
+def _plainer(value: object) -> object:
+    """What the writer does not take as it is: strided arrays, arrays of texts or objects."""
+    if isinstance(value, np.ndarray):
+        return value.tolist() if value.dtype.kind in "OUS" else np.ascontiguousarray(value)
+    raise TypeError(f"no JSON for {type(value).__name__}")
+
+
+def _not_finite(value: Any, path: str) -> Iterator[str]:
+    kind = type(value)
+    if kind is str or kind is int or kind is bool or value is None:
+        return
+    if isinstance(value, float):
+        if not isfinite(value):
+            yield path
+    elif isinstance(value, np.ndarray):
+        if value.dtype.kind == "f":
+            if not np.isfinite(value).all():
+                yield path
+        elif value.dtype.kind == "O":
+            yield from _not_finite(value.tolist(), path)
+    elif kind is dict:
+        for name, inner in value.items():
+            yield from _not_finite(inner, f"{path}.{name}")
+    elif kind is list or kind is tuple:
+        for i, inner in enumerate(value):
+            yield from _not_finite(inner, f"{path}[{i}]")
+    elif isinstance(value, np.floating):
+        if not np.isfinite(value):
+            yield path
+    elif is_dataclass(value):
+        for entry in fields(value):
+            yield from _not_finite(getattr(value, entry.name), f"{path}.{entry.name}")
+
+
+@cache
+def service_version() -> str:
+    from importlib.metadata import version
+
+    return version("assignable")
+
+
+def digest_of(body: bytes) -> str:
+    """The digest under which an answer names the request it is of."""
+    return "sha-256:" + sha256(body).hexdigest()
+
+
+@cache
+def _provenance_of(method: str) -> bytes:
+    known = {"service": "assignable", "version": service_version(), "contract": CONTRACT_VERSION}
+    return orjson.dumps({**known, "method": method})[:-1] + b',"request_digest":"'
+
+
+def with_provenance(answer: bytes, method: str, request: bytes) -> bytes:
+    """The JSON object ``answer`` with a last member that says what it is and of which request."""
+    comma = b"" if answer == b"{}" else b","
+    digest = digest_of(request).encode()
+    return b"".join((answer[:-1], comma, b'"provenance":', _provenance_of(method), digest, b'"}}'))
+
+
+def content_digest(body: bytes) -> str:
+    """The value of the Content-Digest header (RFC 9530)."""
+    return f"sha-256=:{b64encode(sha256(body).digest()).decode()}:"
+
+
+def etag(body: bytes) -> str:
+    """A strong entity tag: the same bytes, the same tag."""
+    return f'"{sha256(body).hexdigest()[:32]}"'
+
+
+def matches(if_none_match: str | None, tag: str) -> bool:
+    """Whether an If-None-Match header names the tag (RFC 9110, 13.1.2: compared weakly)."""
+    if not if_none_match:
+        return False
+    named = (part.strip().removeprefix("W/") for part in if_none_match.split(","))
+    return any(part in ("*", tag) for part in named)

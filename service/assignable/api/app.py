@@ -1,0 +1,50 @@
+"""The one place where the parts are joined."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+from flask import Flask, Response, request
+
+from . import problems
+from .contract import Contract
+from .cors import Cors
+from .observability import REQUEST_ID, Edge, Log
+from .operations import documentation, health
+from .settings import Settings
+
+Register = Callable[[Contract], None]
+
+OPERATIONS: tuple[Register, ...] = (health.register, documentation.register)
+
+
+def create_app(
+    settings: Settings | None = None, *, operations: tuple[Register, ...] = OPERATIONS, log: Log | None = None
+) -> Flask:
+    """The application with all its operations; nothing is read from the environment but the settings.
+
+    Raises :class:`assignable.api.settings.BadSettings`.
+    """
+    settings = Settings.from_environment() if settings is None else settings
+    log = Log(settings.log) if log is None else log
+    app = Flask("assignable", static_folder=None, template_folder=None)
+    app.json.sort_keys = False  # type: ignore[attr-defined]
+    contract = Contract(app, settings)
+    app.extensions["assignable.contract"] = contract
+
+    def failed(error: Exception) -> Response:
+        problem = problems.of(error)
+        if problem.kind in (problems.INTERNAL, problems.NOT_READY):
+            log.failure(error.__cause__ or error, request.environ)
+        return Response(
+            problem.body(request.environ[REQUEST_ID]),
+            status=problem.kind.status,
+            headers=[("Cache-Control", "no-store"), *problem.headers],
+            content_type=problems.MEDIA_TYPE,
+        )
+
+    app.register_error_handler(Exception, failed)
+    for register in operations:
+        register(contract)
+    app.wsgi_app = Edge(app.wsgi_app, log, Cors(settings.cors_origins))  # type: ignore[method-assign]
+    return app

@@ -1,0 +1,342 @@
+"""One call binds an operation: its route, its road from bytes to bytes, and its entry in the contract.
+
+The road: media types, body, a place to compute, strict JSON, the request's shape, the view, an answer
+in bytes. A view is a pure function of what its request's shape loads; it knows no HTTP. The OpenAPI
+document is made from the same calls, when it is first asked for.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+import orjson
+from flask import Flask, Response, request
+from marshmallow import Schema, ValidationError
+
+from . import answers, bodies, problems, strict_json
+from .fields import AnswerShape, ObjectList, StrictInteger, StrictString, known_names
+from .problems import Entry, Problem, ProblemType
+from .settings import Settings
+from .shedding import Slots
+
+View = Callable[..., Any]
+Link = Mapping[str, Any]
+
+OPERATION = "assignable.operation"  # the environ's key for the id of the operation that answers
+
+_CAMEL = re.compile(r"[a-z][A-Za-z0-9]*")
+_PARAMETER = re.compile(r"\{([a-z_]+)\}")
+
+
+class ProblemEntry(AnswerShape):
+    """One fault of a request."""
+
+    pointer = StrictString(
+        metadata={"description": "Where in the body, as a JSON Pointer (RFC 6901): #/data/values/3/1."}
+    )
+    parameter = StrictString(metadata={"description": "Which parameter of the query."})
+    code = StrictString(required=True, metadata={"description": "Stable; for programs."})
+    detail = StrictString(required=True, metadata={"description": "A sentence; for people."})
+
+
+class ProblemDetails(AnswerShape):
+    """A failure, as RFC 9457 has it."""
+
+    type = StrictString(
+        required=True, metadata={"description": "Which kind of problem; resolves on this service."}
+    )
+    title = StrictString(required=True)
+    status = StrictInteger(required=True, metadata={"description": "The HTTP status."})
+    detail = StrictString(required=True, metadata={"description": "What happened, this time."})
+    instance = StrictString(required=True, metadata={"description": "This occurrence."})
+    request_id = StrictString(required=True, metadata={"description": "As in the X-Request-ID header."})
+    errors = ObjectList(
+        ProblemEntry,
+        metadata={"description": f"Each fault with its place; the first {problems.MAX_ERRORS}."},
+    )
+
+
+class Provenance(AnswerShape):
+    """What an answer was computed with, and of what."""
+
+    service = StrictString(required=True)
+    version = StrictString(required=True, metadata={"description": "Of the program."})
+    contract = StrictString(required=True, metadata={"description": "Of this document."})
+    method = StrictString(required=True, metadata={"description": "The method's name in this service."})
+    request_digest = StrictString(
+        required=True,
+        metadata={"description": "Of the request's body, gzip undone: sha-256: and hexadecimal digits."},
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Operation:
+    """One operation as it was bound; :meth:`execute` walks its road without HTTP."""
+
+    method: str
+    path: str
+    operation_id: str
+    tag: str
+    summary: str
+    description: str
+    view: View
+    request: Schema | None = None
+    query: Schema | None = None
+    response: Schema | None = None
+    media_type: str = answers.JSON
+    problems: tuple[ProblemType, ...] = ()
+    examples: tuple[str, ...] = ()
+    links: Mapping[str, Link] = field(default_factory=dict)
+    provenance: str | None = None
+    computes: bool = True
+    cache_seconds: int | None = 300
+
+    def execute(self, body: bytes) -> bytes:
+        """The answer to a JSON body; raises what :func:`assignable.api.problems.of` understands."""
+        return self.answer_to(strict_json.loads(body), body)
+
+    def answer_to(self, document: Any, body: bytes) -> bytes:
+        """The answer to a body that is parsed already; ``body`` is what the provenance's digest is of."""
+        assert self.request is not None
+        return self.write(self.view(self.request.load(document)), body)
+
+    def write(self, result: Any, body: bytes = b"") -> bytes:
+        """A view's result as the bytes of the answer."""
+        if self.media_type != answers.JSON:
+            return result.encode() if isinstance(result, str) else bytes(result)
+        written = answers.dumps(result)
+        return written if self.provenance is None else answers.with_provenance(written, self.provenance, body)
+
+
+class Contract:
+    """All operations of an application, in the order in which they were bound."""
+
+    def __init__(self, app: Flask, settings: Settings) -> None:
+        self._app = app
+        self._settings = settings
+        self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds)
+        self._tags: dict[str, str] = {}
+        self._constant: dict[str, tuple[bytes, str]] = {}
+        self.operations: dict[str, Operation] = {}
+
+    @property
+    def app(self) -> Flask:
+        return self._app
+
+    def tag(self, name: str, description: str) -> None:
+        """Describes a group of operations."""
+        self._tags[name] = description
+
+    def operation(
+        self,
+        method: str,
+        path: str,
+        *,
+        operation_id: str,
+        tag: str,
+        summary: str,
+        description: str,
+        response: Schema | None,
+        request: Schema | None = None,
+        query: Schema | None = None,
+        media_type: str = answers.JSON,
+        problems: tuple[ProblemType, ...] = (),
+        example: str | tuple[str, ...] = (),
+        links: Mapping[str, Link] | None = None,
+        provenance: str | None = None,
+        computes: bool = True,
+        cache_seconds: int | None = 300,
+    ) -> Callable[[View], View]:
+        """Binds the view it decorates, or is called with.
+
+        ``request``, ``query`` and ``response`` are instances of shapes. A view is called with what its
+        request's or its query's shape loads (or nothing), and with the path's parameters by name; it
+        returns plain values, arrays or dataclasses, or text for another ``media_type``. ``problems`` are
+        those beyond the ones every such operation can answer. ``example`` names files of
+        ``openapi/examples``. ``provenance`` is the method's name; with it the answer gets that member.
+        ``computes`` takes a compute slot. ``cache_seconds`` is how long a GET may be kept, None not at all.
+        """
+        _check(method, path, operation_id, self.operations, self._tags, tag, links)
+
+        def bind(view: View) -> View:
+            operation = Operation(
+                method=method,
+                path=path,
+                operation_id=operation_id,
+                tag=tag,
+                summary=summary,
+                description=description,
+                view=view,
+                request=request,
+                query=query,
+                response=response,
+                media_type=media_type,
+                problems=problems,
+                examples=(example,) if isinstance(example, str) else example,
+                links=links or {},
+                provenance=provenance,
+                computes=computes,
+                cache_seconds=cache_seconds if method == "GET" else None,
+            )
+            self.operations[operation_id] = operation
+            self._app.add_url_rule(
+                _PARAMETER.sub(r"<\1>", path), operation_id, self._endpoint(operation), methods=[method]
+            )
+            return view
+
+        return bind
+
+    def _endpoint(self, operation: Operation) -> Callable[..., Response]:
+        if operation.request is not None:
+            return self._taking_body(operation)
+        return self._taking_none(operation)
+
+    def _taking_body(self, operation: Operation) -> Callable[..., Response]:
+        content_type = operation.media_type
+        operation_id, shape, view = operation.operation_id, operation.request, operation.view
+        assert shape is not None
+
+        def answer(**path: str) -> Response:
+            environ = request.environ
+            environ[OPERATION] = operation_id
+            bodies.require_acceptable(environ, content_type)
+            bodies.require_json(environ)
+            packed = bodies.encoding_of(environ)
+            body = bodies.read(environ, self._settings.max_body_bytes)
+            # The place is taken before parsing: objects weigh many times what the text does.
+            with self._slots:
+                if packed:
+                    body = bodies.inflate(body, self._settings.max_inflated_bytes)
+                written = operation.write(view(shape.load(strict_json.loads(body)), **path), body)
+            return _response(written, content_type, (("Cache-Control", "no-store"),))
+
+        return answer
+
+    def _taking_none(self, operation: Operation) -> Callable[..., Response]:
+        takes_nothing = operation.query is None and "{" not in operation.path
+        constant = takes_nothing and operation.cache_seconds is not None
+
+        def answer(**path: str) -> Response:
+            environ = request.environ
+            environ[OPERATION] = operation.operation_id
+            bodies.require_acceptable(environ, operation.media_type)
+            if constant:
+                if operation.operation_id not in self._constant:
+                    self._constant[operation.operation_id] = self._tagged(operation, (), path)
+                written, tag = self._constant[operation.operation_id]
+            else:
+                loaded = () if operation.query is None else (_load_query(operation.query),)
+                written, tag = self._tagged(operation, loaded, path)
+            if operation.cache_seconds is None:
+                return _response(written, operation.media_type, (("Cache-Control", "no-store"),))
+            return cacheable(written, operation.media_type, operation.cache_seconds, tag)
+
+        return answer
+
+    def _tagged(
+        self, operation: Operation, loaded: tuple[Any, ...], path: dict[str, str]
+    ) -> tuple[bytes, str]:
+        asked = request.query_string if operation.provenance is not None else b""
+        if operation.computes:
+            with self._slots:
+                written = operation.write(operation.view(*loaded, **path), asked)
+        else:
+            written = operation.write(operation.view(*loaded, **path), asked)
+        return written, answers.etag(written)
+
+    def document(self) -> bytes:
+        """The OpenAPI document, the same bytes at every call."""
+        return self._document
+
+    @cached_property
+    def _document(self) -> bytes:
+        from .openapi import describe
+
+        return describe(tuple(self.operations.values()), self._tags)
+
+
+def cacheable(body: bytes, content_type: str, seconds: int, tag: str | None = None) -> Response:
+    """A GET's answer with its entity tag; 304 and no body for who has it already."""
+    tag = answers.etag(body) if tag is None else tag
+    headers = (("Cache-Control", f"public, max-age={seconds}"), ("ETag", tag))
+    if answers.matches(request.environ.get("HTTP_IF_NONE_MATCH"), tag):
+        return Response(status=304, headers=headers)
+    return _response(body, content_type, headers)
+
+
+def _response(body: bytes, content_type: str, headers: tuple[tuple[str, str], ...]) -> Response:
+    return Response(
+        body,
+        headers=[("Content-Digest", answers.content_digest(body)), *headers],
+        content_type=content_type,
+    )
+
+
+def _load_query(shape: Schema) -> Any:
+    """The query's parameters, through the strict fields that bodies go through."""
+    known = known_names(shape)
+    faults: list[Entry] = []
+    given: dict[str, Any] = {}
+    for name, texts in request.args.lists():
+        if len(texts) > 1:
+            faults.append(Entry("repeated-parameter", "This parameter is given twice.", parameter=name))
+        given[name] = _from_text(texts[0]) if name in known and _reads_json(known[name]) else texts[0]
+    try:
+        loaded = shape.load(given)
+    except ValidationError as error:
+        for entry in problems.pointers(error.messages):
+            if isinstance(entry, Entry):
+                parameter = (entry.pointer or "#").removeprefix("#").removeprefix("/").split("/")[0]
+                faults.append(Entry(entry.code, entry.detail, parameter=parameter))
+    if faults:
+        detail = faults[0].detail if len(faults) == 1 else f"{len(faults)} parameters are at fault."
+        raise Problem(problems.CONTRACT_VIOLATION, detail, errors=faults[: problems.MAX_ERRORS])
+    return loaded
+
+
+def _reads_json(parameter: Any) -> bool:
+    return parameter.json_schema()["type"] in ("number", "integer", "boolean")
+
+
+def _from_text(text: str) -> Any:
+    try:
+        return orjson.loads(text)
+    except orjson.JSONDecodeError:
+        return text
+
+
+def _check(
+    method: str,
+    path: str,
+    operation_id: str,
+    known: Mapping[str, Operation],
+    tags: Mapping[str, str],
+    tag: str,
+    links: Mapping[str, Link] | None,
+) -> None:
+    """What a clean contract needs of every operation, told to whoever binds one."""
+    if method not in ("GET", "POST"):
+        raise ValueError(f"{operation_id}: {method} is not a method of this contract")
+    if not path.startswith("/"):
+        raise ValueError(f"{operation_id}: {path} is not a path")
+    if not _CAMEL.fullmatch(operation_id):
+        raise ValueError(f"{operation_id}: an operation id is lowerCamel")
+    if operation_id in known:
+        raise ValueError(f"{operation_id}: bound twice")
+    if tag not in tags:
+        raise ValueError(f"{operation_id}: the tag {tag} is not described")
+    for name, link in (links or {}).items():
+        if not isinstance(link.get("requestBody", ""), str):
+            raise ValueError(f"{operation_id}: the link {name} takes its body from a runtime expression only")
+
+
+def examples_directory() -> Path:
+    """Where the executed examples are: inside an installed package, or at the root of the repository."""
+    package = Path(__file__).resolve().parent.parent
+    installed = package / "openapi" / "examples"
+    return installed if installed.is_dir() else package.parent.parent / "openapi" / "examples"

@@ -1,0 +1,161 @@
+"""The operations that were bound, as an OpenAPI 3.1.1 document.
+
+Imported when the document is first asked for: apispec is no part of a start.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from typing import Any
+
+import orjson
+from apispec import APISpec
+from apispec.ext.marshmallow import MarshmallowPlugin
+
+from . import answers, problems
+from .contract import _PARAMETER, Operation, ProblemDetails, examples_directory
+from .fields import json_schema_of, list_bounds_of
+from .problems import ProblemType
+
+_HEADERS = {
+    "X-Request-ID": "The request's id: the one that was sent, or one made for it.",
+    "Content-Digest": "The SHA-256 digest of the body (RFC 9530).",
+    "ETag": "A strong entity tag, for If-None-Match.",
+    "Cache-Control": "Whether, and for how long, the answer may be kept.",
+    "Retry-After": "Seconds after which to send the same request again.",
+}
+
+_OF_EVERY_OPERATION = (problems.NOT_ACCEPTABLE, problems.INTERNAL)
+_OF_A_BODY = (
+    problems.NOT_JSON,
+    problems.BAD_REQUEST,
+    problems.CONTENT_TOO_LARGE,
+    problems.UNSUPPORTED_MEDIA_TYPE,
+    problems.UNSUPPORTED_CONTENT_ENCODING,
+    problems.CONTRACT_VIOLATION,
+)
+
+_INTRODUCTION = (
+    "The statistics of process control as a stateless HTTP service: the same request always gives the "
+    "same answer. Repeating a request is safe. Failures are problems of RFC 9457."
+)
+
+
+def problems_of(operation: Operation) -> tuple[ProblemType, ...]:
+    """Every problem an operation can answer, by status and in the order of the table."""
+    possible = set(operation.problems) | set(_OF_EVERY_OPERATION)
+    if operation.request is not None:
+        possible |= set(_OF_A_BODY)
+    if operation.query is not None:
+        possible.add(problems.CONTRACT_VIOLATION)
+    if "{" in operation.path:
+        possible.add(problems.NOT_FOUND)
+    if operation.computes:
+        possible.add(problems.BUSY)
+    return tuple(kind for kind in problems.TYPES.values() if kind in possible)
+
+
+def describe(operations: Iterable[Operation], tags: Mapping[str, str]) -> bytes:
+    """The document of these operations; equal calls give equal bytes."""
+    plugin = MarshmallowPlugin(schema_name_resolver=lambda shape: _name_of(shape))
+    operations = tuple(operations)
+    used = {operation.tag for operation in operations}
+    spec = APISpec(
+        title="Assignable",
+        version=answers.CONTRACT_VERSION,
+        openapi_version="3.1.1",
+        plugins=[plugin],
+        info={
+            "description": _INTRODUCTION,
+            "license": {"name": "Apache-2.0", "identifier": "Apache-2.0"},
+        },
+        servers=[{"url": "/"}],
+        tags=[{"name": name, "description": text} for name, text in tags.items() if name in used],
+    )
+    assert plugin.converter is not None
+    add = plugin.converter.add_attribute_function
+    add(lambda _, field, ret, **__: json_schema_of(field, ret))  # type: ignore[no-untyped-call]
+    add(lambda _, field, ret, **__: list_bounds_of(field, ret))  # type: ignore[no-untyped-call]
+    for name, text in _HEADERS.items():
+        spec.components.header(name, {"description": text, "schema": {"type": "string"}})
+    spec.components.schema("Problem", schema=ProblemDetails)
+    for operation in operations:
+        spec.path(path=operation.path, operations={operation.method.lower(): _operation(operation)})
+    return orjson.dumps(spec.to_dict(), option=orjson.OPT_INDENT_2 | orjson.OPT_NON_STR_KEYS)
+
+
+def _name_of(shape: Any) -> str:
+    cls = shape if isinstance(shape, type) else type(shape)
+    return "Problem" if cls is ProblemDetails else cls.__name__
+
+
+def _operation(operation: Operation) -> dict[str, Any]:
+    described: dict[str, Any] = {
+        "operationId": operation.operation_id,
+        "tags": [operation.tag],
+        "summary": operation.summary,
+        "description": operation.description,
+    }
+    parameters = [
+        {"in": "path", "name": name, "required": True, "schema": {"type": "string"}}
+        for name in _PARAMETER.findall(operation.path)
+    ]
+    if operation.query is not None:
+        parameters.append({"in": "query", "schema": operation.query})
+    if parameters:
+        described["parameters"] = parameters
+    if operation.request is not None:
+        content: dict[str, Any] = {"schema": operation.request}
+        if examples := _examples(operation, "request", required=True):
+            content["examples"] = examples
+        described["requestBody"] = {"required": True, "content": {answers.JSON: content}}
+    described["responses"] = {"200": _success(operation), **_failures(operation)}
+    return described
+
+
+def _success(operation: Operation) -> dict[str, Any]:
+    content: dict[str, Any] = {
+        "schema": {"type": "string"} if operation.response is None else operation.response
+    }
+    if operation.media_type == answers.JSON and (
+        examples := _examples(operation, "response", required=False)
+    ):
+        content["examples"] = examples
+    headers = ["X-Request-ID", "Content-Digest", "Cache-Control"]
+    if operation.cache_seconds is not None:
+        headers.append("ETag")
+    success: dict[str, Any] = {
+        "description": "The answer.",
+        "headers": _header_references(headers),
+        "content": {operation.media_type: content},
+    }
+    if operation.links:
+        success["links"] = {name: dict(link) for name, link in operation.links.items()}
+    return success
+
+
+def _failures(operation: Operation) -> dict[str, Any]:
+    by_status: dict[int, list[ProblemType]] = {}
+    for kind in problems_of(operation):
+        by_status.setdefault(kind.status, []).append(kind)
+    return {
+        str(status): {
+            "description": " ".join(f"{kind.code}: {kind.meaning}" for kind in kinds),
+            "headers": _header_references(["X-Request-ID", *(["Retry-After"] if status == 503 else [])]),
+            "content": {problems.MEDIA_TYPE: {"schema": ProblemDetails}},
+        }
+        for status, kinds in sorted(by_status.items())
+    }
+
+
+def _header_references(names: Iterable[str]) -> dict[str, Any]:
+    return {name: {"$ref": f"#/components/headers/{name}"} for name in names}
+
+
+def _examples(operation: Operation, part: str, *, required: bool) -> dict[str, Any]:
+    found: dict[str, Any] = {}
+    for name in operation.examples:
+        file = examples_directory() / f"{name}.{part}.json"
+        if required or file.exists():
+            found[name] = {"value": orjson.loads(file.read_bytes())}
+    return found
