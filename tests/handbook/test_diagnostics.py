@@ -30,6 +30,8 @@ def test_weights_of_men() -> None:
     assert p == pytest.approx(0.0067038, abs=5e-8)  # recomputed
     # 0.946771879598887294… from the definition with mpmath at 30 digits.
     assert t.anderson_darling(WEIGHTS).statistic == pytest.approx(0.946771879598887294, rel=1e-13)
+    adjusted = 0.946771879598887294 * (1 + 0.75 / 11 + 2.25 / 121)
+    assert t.anderson_darling(WEIGHTS).adjusted == pytest.approx(adjusted, rel=1e-13)
     # 0.752 adjusted is the 5 % point, 1.035 the 1 % point (Stephens 1974; from memory).
     assert t._stephens(0.752) == pytest.approx(0.05, abs=0.0005)
     assert t._stephens(1.035) == pytest.approx(0.01, abs=0.0002)

@@ -153,7 +153,12 @@ def test_moving_ranges_stop_at_gaps() -> None:
     assert np.isnan(s.moving_ranges(values, 3)).tolist() == [True] * 5 + [False]
     assert s.moving_ranges(values, 3)[-1] == 3
     assert s.moving_range(values).sigma == pytest.approx((2 + 3 + 1) / 3 / f.d2(2))
-    # Three ranges, of which two overlap: less is known than without a gap between four values.
+    # Three ranges, of which two overlap: Var = (3 γ0 + 2 γ1)/9.
+    own, shared = s._range_covariances(2)
+    variance = (3 * own + 2 * shared) / 9 / f.d2(2) ** 2
+    freedom = s.moving_range(values).degrees_of_freedom
+    assert 1 / f.c4_of_freedom(freedom) ** 2 - 1 == pytest.approx(variance, rel=1e-11)
+    # Three ranges of four values without a gap overlap more, and so tell less.
     gapless = s.moving_range(np.array([5.0, 7.0, 4.0, 2.0]))
     assert s.moving_range(values).degrees_of_freedom > gapless.degrees_of_freedom
     assert np.isnan(s.moving_ranges(values[:2], 5)).all()
