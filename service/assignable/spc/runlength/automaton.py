@@ -18,9 +18,9 @@ from ..data import Booleans, Floats, Integers
 from ..errors import UnusableParameter
 from ..rules import TOLERANCE, Rule
 
-MOST_STATES = 20_000
-_MOST_STATES_OF_ONE = 4_000
-_MOST_EDGES = 240_000
+MOST_STATES = 60_000
+_MOST_STATES_OF_ONE = 10_000
+_MOST_EDGES = 500_000
 _RADIX = 2**62
 
 
