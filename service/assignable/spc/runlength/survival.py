@@ -23,7 +23,7 @@ SETTLED = 1e-12
 _GONE = 1e-30
 _LONGEST_ARL = 1e100
 _MOST_STEPS = 100_000
-_MOST_WORK = 1_500_000_000
+_MOST_WORK = 1_000_000_000
 
 
 @dataclass(frozen=True, slots=True)
