@@ -27,8 +27,7 @@ from .nonconforming import (
     Nonconforming,
     ObservedNonconforming,
     observed,
-    sum_limits,
-    tail_correlation,
+    total_area_limits,
 )
 from .specification import Specification
 
@@ -332,8 +331,13 @@ def _side(
     least = min(distances) / 3.0
     half, bound = bissell_halfwidths(least, count, freedom, confidence)
     cpk = Index(least, least - half, least + half, least - bound, "bissell-1990")
-    correlation = tail_correlation(np.array(distances[:1]), np.array(distances[1:]), float(count), freedom)
-    return _Side(both, cpk, above, below, _two_tails(np.array(distances), limits, correlation))
+    return _Side(
+        both,
+        cpk,
+        above,
+        below,
+        _two_tails(distances[0], distances[1], limits, scale, count, freedom, confidence),
+    )
 
 
 def distance_limits(distances: Floats, scale: float, count: int, freedom: float, confidence: float) -> Floats:
@@ -390,23 +394,38 @@ def _one_tail(below: Index | None, above: Index | None) -> Nonconforming:
     )
 
 
-def _two_tails(distances: Floats, limits: Floats, correlation: Floats) -> Nonconforming:
-    below, above = scipy.special.ndtr(-distances)[:, None]
+def _two_tails(
+    to_lower: float,
+    to_upper: float,
+    limits: Floats,
+    scale: float,
+    count: int,
+    freedom: float,
+    confidence: float,
+) -> Nonconforming:
+    below, above = scipy.special.ndtr([-to_lower, -to_upper]).tolist()
+    tail = 0.5 * (1.0 - confidence)
     # A short distance is a large tail: the lower limit of one is the upper limit of the other.
-    areas = scipy.special.ndtr(-limits)[:, :, None]
-    upper, lower, bound = (
-        float(sum_limits(below, above, area[0], area[1], correlation, side=side)[0])
-        for area, side in zip(areas, (1, -1, 1), strict=True)
-    )
-    total = float(below[0] + above[0])
+    area = scipy.special.ndtr(-limits)
+    upper, lower, bound = total_area_limits(
+        to_lower / scale,
+        to_upper / scale,
+        area[:, 0],
+        area[:, 1],
+        count,
+        freedom,
+        np.array([1.0 - tail, tail, confidence]),
+    ).tolist()
+    total = below + above
     return Nonconforming(
-        1e6 * float(below[0]),
-        1e6 * float(above[0]),
+        1e6 * below,
+        1e6 * above,
         1e6 * total,
-        1e6 * lower,
-        1e6 * upper,
+        # A mean in the middle gives the least area its sigma allows, which a true one may hardly reach.
+        1e6 * min(lower, total),
+        1e6 * max(upper, total),
         1e6 * bound,
-        "mover-non-central-t",
+        "weerahandi-1993",
     )
 
 
