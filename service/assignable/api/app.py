@@ -10,12 +10,16 @@ from . import problems
 from .contract import Contract
 from .cors import Cors
 from .observability import REQUEST_ID, Edge, Log
-from .operations import documentation, health
+from .operations import charts, documentation, health
 from .settings import Settings
 
 Register = Callable[[Contract], None]
 
-OPERATIONS: tuple[Register, ...] = (health.register, documentation.register)
+OPERATIONS: tuple[Register, ...] = (
+    charts.register,
+    health.register,
+    documentation.register,
+)
 
 
 def create_app(

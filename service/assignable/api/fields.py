@@ -698,3 +698,26 @@ class AnswerShape(_Shape):
 def known_names(shape: ma.Schema) -> Mapping[str, ma.fields.Field[Any]]:
     """The fields of a request by the names callers use."""
     return {field.data_key or name: field for name, field in shape.load_fields.items()}
+
+
+class OneOrMany(_Array):
+    """A number for all points, or a list with one for each; an array (1,) or (n,)."""
+
+    def __init__(self, many: NumberList, **kwargs: Any) -> None:
+        super().__init__(min_items=1, max_items=many._max_items, **kwargs)
+        self._many = many
+
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> np.ndarray:
+        if type(value) is list:
+            return self._many._deserialize(value, attr, data, **kwargs)
+        if type(value) not in _NUMERIC:
+            raise ValidationError(_wrong_type("not-a-number", "a number, or a list of numbers", value))
+        if fault := self._many._number_fault(value):
+            raise ValidationError(fault)
+        return np.array([value], dtype=np.int64 if self._many._integral else np.float64)
+
+    def json_schema(self) -> Json:
+        one = self._many._number_schema()
+        if isinstance(one["type"], list):
+            one["type"] = one["type"][0]
+        return {"anyOf": [one, self._many.json_schema()]}

@@ -1,16 +1,23 @@
-"""The charts there are. Adding one: a module with ``fit`` and ``judge``, and an entry in its ``CHARTS``."""
+"""The charts there are.
+
+Adding one: a module here with ``fit``, ``judge`` and ``CHARTS``; a module of the same name beside the
+shapes of the requests; its examples and its published cases. Its name below is all the joining.
+"""
 
 from __future__ import annotations
 
 from collections.abc import Mapping
+from importlib import import_module
 from types import MappingProxyType
 
-from . import attributes, individuals, subgroups
 from .registry import Chart
 
-CHARTS: Mapping[str, Chart] = MappingProxyType(
-    {chart.name: chart for module in (subgroups, individuals, attributes) for chart in module.CHARTS}
-)
-"""Every chart by its name, in the order in which they are listed."""
+MODULES = ("subgroups", "individuals", "attributes")
+"""The modules, in the order in which their charts are listed."""
 
-__all__ = ["CHARTS", "Chart"]
+CHARTS: Mapping[str, Chart] = MappingProxyType(
+    {chart.name: chart for module in MODULES for chart in import_module(f"{__name__}.{module}").CHARTS}
+)
+"""Every chart by its name."""
+
+__all__ = ["CHARTS", "MODULES", "Chart"]

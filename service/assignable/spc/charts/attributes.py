@@ -18,7 +18,7 @@ import numpy as np
 from .. import cautions as caution
 from .. import diagnostics
 from ..cautions import Caution
-from ..data import Booleans, Counts, Floats
+from ..data import Counts, Floats
 from ..errors import Fault, UnusableData, UnusableParameter
 from ..rules import Rule, Signal, Tail, watched
 from .common import (
@@ -66,6 +66,7 @@ class Rates(Generic[T]):
     rate: Annotated[T, "Nonconformities over the area of opportunity."]
 
 
+SMALL_COUNT = 5
 _PANELS = {"p": Proportions, "np": CountsPlotted, "c": CountsPlotted, "u": Rates}
 PANEL_NAMES = {"p": "proportion", "np": "count", "c": "count", "u": "rate"}
 
@@ -107,7 +108,9 @@ class AttributeLimits(Generic[P]):
     ]
     panels: Annotated[P, "The lines of the panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
-    baseline: Annotated[BaselineRecord | None, "What the limits were computed from; null for a standard alone."]
+    baseline: Annotated[
+        BaselineRecord | None, "What the limits were computed from; null for a standard alone."
+    ]
 
     @property
     def basis(self) -> LimitBasis:
@@ -283,17 +286,25 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
             )
         if options.sample_size is None and _plots_count(chart):
             faults.append(
-                Fault("size-missing", "Without baseline data the sample size must be given.", ("sample_size",))
+                Fault(
+                    "size-missing", "Without baseline data the sample size must be given.", ("sample_size",)
+                )
             )
         if options.exclude:
-            faults.append(Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",)))
+            faults.append(
+                Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",))
+            )
         if faults:
             raise UnusableParameter(*faults)
         assert options.standard is not None
         limits = _limits(chart, options, rules, options.standard, "given", options.sample_size, None)
         size = options.sample_size
         return AttributeFit(
-            limits, None, None, count_performance(rules, binomial, options.standard, size, basis), ()
+            limits,
+            None,
+            None,
+            count_performance(PANEL_NAMES[chart], rules, binomial, options.standard, size, basis),
+            (),
         )
     if options.sample_size is not None:
         raise UnusableParameter.of(
@@ -343,7 +354,11 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
     seen, _ = watch(PANEL_NAMES[chart], plot, rules, kept=kept)
     z = (plot.value - plot.centre) / plot.sigma
     found = AttributeDiagnostics(
-        diagnostics.dispersion(counts, sizes, binomial=binomial),
+        diagnostics.dispersion(
+            counts,
+            np.broadcast_to(sizes, counts.shape),
+            distribution="binomial" if binomial else "poisson",
+        ),
         diagnostics.autocorrelation(z if kept is None else np.where(kept, z, np.nan)),
     )
     typical = total / filled
@@ -351,14 +366,29 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
         limits,
         Baseline(seen.verdict, _PANELS[chart](plot.panel()), seen.signals, seen.found),
         found,
-        count_performance(rules, binomial, mean, size if size is not None else typical, basis),
+        count_performance(
+            PANEL_NAMES[chart], rules, binomial, mean, size if size is not None else typical, basis
+        ),
         caution.collect(
             caution.few_samples(filled),
-            caution.dispersed(found.dispersion, binomial=binomial),
+            caution.dispersed(found.dispersion),
             caution.autocorrelated(found.autocorrelation),
-            caution.small_counts(mean * typical) if basis.sigma_multiple is not None else None,
+            _small_counts(mean * typical, basis),
             *too_many_signals(seen),
         ),
+    )
+
+
+def _small_counts(expected: float, basis: LimitBasis) -> Caution | None:
+    if basis.sigma_multiple is None or expected >= SMALL_COUNT:
+        return None
+    return Caution(
+        "small-counts",
+        f"A sample holds {expected:.3g} events on average; counts below {SMALL_COUNT} are skewed, so limits at "
+        f"{basis.sigma_multiple:g} sigma alarm at another rate than usual (`performance` states it exactly) and "
+        "there is no lower limit. Take larger samples, or use probability limits.",
+        ("limit_basis",),
+        "common practice",
     )
 
 

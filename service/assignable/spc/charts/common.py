@@ -84,35 +84,29 @@ class PanelLimits:
     """The frozen lines of a panel; all ``None`` where they follow each point's own size."""
 
     centre: Annotated[float | None, "Centre line."]
-    lower: Annotated[float | None, "Lower limit; null where there is none, or where it follows each point's size."]
-    upper: Annotated[float | None, "Upper limit; null where there is none, or where it follows each point's size."]
+    lower: Annotated[
+        float | None, "Lower limit; null where there is none, or where it follows each point's size."
+    ]
+    upper: Annotated[
+        float | None, "Upper limit; null where there is none, or where it follows each point's size."
+    ]
 
 
 FOLLOWING = PanelLimits(None, None, None)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class PointLimits:
-    """The lines at each point of a panel whose limits vary.
+class Panel:
+    """The plotted points of one statistic with their lines. Gaps are left out: ``index`` says which are here.
 
     A limit that does not exist is the natural bound here: nothing can lie beyond it.
     """
 
+    index: Annotated[Integers, "Position of each point in the request, from 0."]
+    value: Annotated[Floats, "The plotted statistic."]
     centre: Annotated[Floats, "Centre line at each point."]
     lower: Annotated[Floats, "Lower limit at each point; the natural bound where there is none."]
     upper: Annotated[Floats, "Upper limit at each point; the natural bound where there is none."]
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Panel:
-    """The plotted points of one statistic. Gaps are left out: ``index`` says which points are here."""
-
-    index: Annotated[Integers, "Position of each point in the request, from 0."]
-    value: Annotated[Floats, "The plotted statistic."]
-    centre: Annotated[float | None, "Centre line, where it is one for all points."]
-    lower: Annotated[float | None, "Lower limit, where there is one and it is the same for all points."]
-    upper: Annotated[float | None, "Upper limit, where there is one and it is the same for all points."]
-    by_point: Annotated[PointLimits | None, "The lines at each point, where they vary; else null."]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -154,22 +148,23 @@ class Plot:
         )
 
     def panel(self) -> Panel:
-        """The panel of the answer."""
-        present = ~np.isnan(self.value)
-        index = present.nonzero()[0]
+        """The panel of the answer; lines that do not vary are one number seen at every point."""
+        index = (self.value == self.value).nonzero()[0]
         whole = len(index) == len(self.value)
-        value = self.value if whole else self.value[index]
-        if not self.varies:
-            return Panel(index, value, self.centre, self.lower, self.upper, None)  # type: ignore[arg-type]
+        shape = index.shape
 
         def line(at: float | Floats | None, bound: float) -> Floats:
-            full = np.broadcast_to(np.asarray(bound if at is None else at, dtype=float), self.value.shape)
-            return np.ascontiguousarray(full[index])
+            if isinstance(at, np.ndarray):
+                return at if whole else at[index]
+            return np.broadcast_to(np.float64(bound if at is None else at), shape)
 
-        by_point = PointLimits(
-            line(self.centre, np.nan), line(self.lower, self.floor), line(self.upper, self.ceiling)
+        return Panel(
+            index,
+            self.value if whole else self.value[index],
+            line(self.centre, np.nan),
+            line(self.lower, self.floor),
+            line(self.upper, self.ceiling),
         )
-        return Panel(index, value, None, None, None, by_point)
 
 
 @dataclass(frozen=True, slots=True)
@@ -195,7 +190,12 @@ class Watched:
 
 
 def watch(
-    name: str, plot: Plot, rules: Sequence[Rule] = (), *, tail: Tail | None = None, kept: Booleans | None = None
+    name: str,
+    plot: Plot,
+    rules: Sequence[Rule] = (),
+    *,
+    tail: Tail | None = None,
+    kept: Booleans | None = None,
 ) -> tuple[Watched, Tail]:
     """The signals of one panel under its limits and ``rules``, and the tail that the next call needs."""
     detection = detect(rules, plot.track(kept), tail)
@@ -236,7 +236,8 @@ class Performance:
 
     panel: Annotated[str, "The panel these figures speak of: run rules watch this one alone."]
     in_control_arl: Annotated[
-        float | None, "Average number of points between false alarms of this panel; null where it is beyond 1e15."
+        float | None,
+        "Average number of points between false alarms of this panel; null where it is beyond 1e15.",
     ]
     spread_false_alarm_probability: Annotated[
         float | None,
@@ -269,7 +270,9 @@ def exclusion_mask(points: int, exclude: Sequence[Exclusion]) -> Booleans | None
             )
         elif exclusion.index in seen:
             faults.append(
-                Fault("excluded-twice", f"Point {exclusion.index} is excluded twice.", ("exclude", at, "index"))
+                Fault(
+                    "excluded-twice", f"Point {exclusion.index} is excluded twice.", ("exclude", at, "index")
+                )
             )
         seen.add(exclusion.index)
     if faults:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -89,3 +90,24 @@ def _largest_undercut(binomial: bool, mean: float, sizes: Floats, tail: float) -
         low = np.where(move & enough, middle, low)
         high = np.where(move & ~enough, middle, high)
     return low
+
+
+def count_law(binomial: bool, mean: float, size: float) -> tuple[Floats, Floats]:
+    """Whole counts that can occur in one sample, (s,) rising, and the probability of each, (s,).
+
+    Counts further than 12 standard deviations and 50 from the mean are left out: together they weigh less
+    than 1e-20. Probabilities are differences of the nearer tail, which keep their digits.
+    """
+    expected = mean * size
+    reach = 12.0 * math.sqrt(expected) + 50.0
+    low = max(math.floor(expected - reach), 0)
+    high = math.ceil(expected + reach)
+    if binomial:
+        high = min(high, int(size))
+    edges = np.arange(low - 1, high + 1, dtype=np.float64)
+    sizes = np.full(edges.shape, size)
+    known = np.maximum(edges, 0.0)
+    below = count_cdf(binomial, edges, mean, sizes)
+    above = np.where(edges < 0, 1.0, count_sf(binomial, known, mean, sizes))
+    probability = np.where(edges[1:] <= expected, below[1:] - below[:-1], above[:-1] - above[1:])
+    return edges[1:], np.maximum(probability, 0.0)

@@ -74,7 +74,9 @@ class IndividualsLimits:
     false_alarm_probability: Annotated[float | None, "Of each panel and point; null under `sigma`."]
     panels: Annotated[ValueMovingRange[PanelLimits], "The lines of each panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
-    baseline: Annotated[BaselineRecord | None, "What the limits were computed from; null for standards alone."]
+    baseline: Annotated[
+        BaselineRecord | None, "What the limits were computed from; null for standards alone."
+    ]
 
     @property
     def basis(self) -> LimitBasis:
@@ -177,7 +179,9 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
             if value is None
         ]
         if options.exclude:
-            faults.append(Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",)))
+            faults.append(
+                Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",))
+            )
         if faults:
             raise UnusableParameter(*faults)
         assert given.mean is not None and given.sigma is not None

@@ -6,6 +6,8 @@ import functools
 from dataclasses import dataclass
 from typing import Literal
 
+import scipy
+
 from .. import factors
 
 Spread = Literal["range", "sd"]
@@ -49,5 +51,6 @@ def beyond_spread_lines(spread: Spread, n: int, multiple: float | None, tail: fl
     if spread == "range":
         below = 0.0 if lines.lower is None else factors.range_cdf(lines.lower, n)
         return below + factors.range_sf(lines.upper, n)
-    below = 0.0 if lines.lower is None else factors.sd_cdf(lines.lower, n)
-    return below + factors.sd_sf(lines.upper, n)
+    half = 0.5 * (n - 1)
+    below = 0.0 if lines.lower is None else float(scipy.special.gammainc(half, half * lines.lower**2))
+    return below + float(scipy.special.gammaincc(half, half * lines.upper**2))

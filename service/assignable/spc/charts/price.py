@@ -10,7 +10,7 @@ import numpy as np
 from .. import runlength
 from ..rules import Rule
 from .common import LimitBasis, Performance, ShiftPerformance
-from .counts import count_cdf, count_lines, count_sf
+from .counts import count_law, count_lines
 from .lines import Spread, beyond_spread_lines
 
 SHIFTS = (0.5, 1.0, 1.5, 2.0, 3.0)
@@ -56,13 +56,12 @@ def mean_performance(
 
 @functools.lru_cache(1024)
 def count_performance(
-    rules: tuple[Rule, ...], binomial: bool, mean: float, size: float | None, basis: LimitBasis
+    panel: str, rules: tuple[Rule, ...], binomial: bool, mean: float, size: float | None, basis: LimitBasis
 ) -> Performance:
     """Run lengths of a panel of counts, exact under the binomial or Poisson law; for whole sizes only if binomial.
 
     ``size`` is the units or area of a sample (the rounded average where sizes vary, ``None`` where unknown).
     """
-    panel = ("proportion" if binomial else "rate")
     unit = "factors on the proportion" if binomial else "factors on the rate"
     if size is None:
         return Performance(panel, None, None, (), unit, None, "not computed: the sample size is not known")
@@ -74,9 +73,11 @@ def count_performance(
         shifted = mean * factor
         if binomial and shifted >= 1.0:
             return None
+        support, probability = count_law(binomial, shifted, float(at))
         return runlength.discrete(
             rules,
-            *_support(binomial, shifted, float(at)),
+            support=support,
+            probability=probability,
             centre=float(lines.centre[0]),
             sigma=float(lines.sd[0]),
             lower=lower,
@@ -90,23 +91,4 @@ def count_performance(
         found = run_length(factor)
         if found is not None:
             told.append(ShiftPerformance(factor, _told(found.arl)))
-    return Performance(
-        panel, _told(in_control.arl), None, tuple(told), unit, float(at), in_control.method
-    )
-
-
-def _support(binomial: bool, mean: float, size: float) -> tuple[np.ndarray, np.ndarray]:
-    """Whole counts that can occur, and their probabilities; what is left out weighs below 1e-20."""
-    expected = mean * size
-    reach = 12.0 * math.sqrt(expected) + 50.0
-    low = max(math.floor(expected - reach), 0)
-    high = math.ceil(expected + reach)
-    if binomial:
-        high = min(high, int(size))
-    counts = np.arange(low, high + 1, dtype=np.float64)
-    # Differences of the nearer tail keep their digits on both sides of the mean.
-    below = count_cdf(binomial, counts, mean, np.full(counts.shape, size))
-    above = count_sf(binomial, counts, mean, np.full(counts.shape, size))
-    upper = np.concatenate(([1.0 if low == 0 else float(count_sf(binomial, counts[:1] - 1, mean, np.array([size]))[0])], above[:-1]))
-    lower = np.concatenate(([0.0 if low == 0 else float(count_cdf(binomial, counts[:1] - 1, mean, np.array([size]))[0])], below[:-1]))
-    return counts, np.where(counts <= expected, below - lower, upper - above)
+    return Performance(panel, _told(in_control.arl), None, tuple(told), unit, float(at), in_control.method)

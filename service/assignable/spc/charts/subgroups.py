@@ -96,7 +96,9 @@ class SubgroupLimits(Generic[P]):
     false_alarm_probability: Annotated[float | None, "Of each panel and point; null under `sigma`."]
     panels: Annotated[P, "The lines of each panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
-    baseline: Annotated[BaselineRecord | None, "What the limits were computed from; null for standards alone."]
+    baseline: Annotated[
+        BaselineRecord | None, "What the limits were computed from; null for standards alone."
+    ]
 
     @property
     def basis(self) -> LimitBasis:
@@ -123,7 +125,8 @@ class SubgroupDiagnostics:
         diagnostics.Autocorrelation | None, "Of the subgroup means in time order; null where too few."
     ]
     normality: Annotated[
-        diagnostics.Normality | None, "Of the single values; null where only summaries were given, or too few."
+        diagnostics.Normality | None,
+        "Of the single values; null where only summaries were given, or too few.",
     ]
     resolution: Annotated[
         diagnostics.Resolution | None, "Of the measurement; null where only summaries were given."
@@ -228,13 +231,17 @@ def _check(options: SubgroupOptions, statistics: SubgroupStatistics | None, spre
                 )
             )
         if options.exclude:
-            faults.append(Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",)))
+            faults.append(
+                Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",))
+            )
         if faults:
             raise UnusableParameter(*faults)
         return
     if options.subgroup_size is not None:
         raise UnusableParameter.of(
-            "size-with-data", "The subgroup size comes from the data; give it only without data.", "subgroup_size"
+            "size-with-data",
+            "The subgroup size comes from the data; give it only without data.",
+            "subgroup_size",
         )
     values = statistics.range if spread == "range" else statistics.sd
     if values is None:
@@ -247,9 +254,7 @@ def _check(options: SubgroupOptions, statistics: SubgroupStatistics | None, spre
         )
 
 
-def fit(
-    data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, spread: Spread
-) -> SubgroupFit:
+def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, spread: Spread) -> SubgroupFit:
     """Limits of an ``xbar-r`` (spread ``range``) or ``xbar-s`` (spread ``sd``) chart.
 
     Centre ``Σnᵢx̄ᵢ/N``; mean limits ``centre ± k·σ̂/√nᵢ``; range ``d2σ̂ ± k·d3σ̂``, deviation
@@ -345,7 +350,11 @@ def _limits(
 
 
 def _watch(
-    plots: tuple[Plot, Plot], spread: Spread, rules: tuple[Rule, ...], tail: Tail | None, kept: Booleans | None
+    plots: tuple[Plot, Plot],
+    spread: Spread,
+    rules: tuple[Rule, ...],
+    tail: Tail | None,
+    kept: Booleans | None,
 ) -> tuple[Watched, Tail]:
     """Run rules watch the means; the spread panel is watched by its limits alone, being skewed."""
     means, after = watch("mean", plots[0], rules, tail=tail, kept=kept)

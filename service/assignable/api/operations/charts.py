@@ -1,0 +1,388 @@
+"""The operations of the charts: all of them follow from the registry."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from functools import lru_cache, partial
+from typing import Any
+
+import orjson
+
+from ...documents.limits import carry_document, check_carry, check_limits, limits_document
+from ...spc.charts import CHARTS, Chart
+from ...spc.charts.common import Performance
+from ...spc.errors import DocumentMismatch
+from ...spc.rules import Signal
+from .. import fields as f
+from .. import problems
+from ..contract import Contract, Provenance
+from ..schemas import derive
+from ..schemas.charts import REQUESTS, ChartRequest
+from ..schemas.common import CAUTIONS, CautionAnswer, Characteristic, cautions, labels_of
+
+TAG = "Charts"
+PROVENANCE = f.Object(
+    Provenance, required=True, metadata={"description": "What computed this answer, and of which request."}
+)
+LARGEST_KEPT = 16_384  # bytes of a limits document that is kept parsed
+
+VERDICT_NOTE = (
+    "The verdict informs a qualified person's decision and never replaces the site's approved procedure."
+)
+
+
+# ---------------------------------------------------------------------------------------------------
+# Documents as callers send them back
+
+
+class Seal(f.RequestShape):
+    """A signature over the document."""
+
+    key_id = f.StrictString(required=True, metadata={"description": "Which key made it."})
+    jws = f.StrictString(required=True, max_length=2000, metadata={"description": "Detached JWS (RFC 7515)."})
+
+
+class SealAnswer(f.AnswerShape):
+    """A signature over the document."""
+
+    key_id = f.StrictString(required=True, metadata={"description": "Which key made it."})
+    jws = f.StrictString(required=True, metadata={"description": "Detached JWS (RFC 7515)."})
+
+
+class CharacteristicAnswer(f.AnswerShape):
+    """What was measured."""
+
+    name = f.StrictString(metadata={"description": "Name of the characteristic."})
+    unit = f.StrictString(metadata={"description": "Unit of the values, as it is written."})
+
+
+def _envelope(chart: Chart, characteristic: type, seal: type, *, kept: bool) -> dict[str, Any]:
+    digest = {"description": "SHA-256 of the document's canonical form (RFC 8785) without digest and seal."}
+    return {
+        "chart": f.Choice(
+            chart.name, required=True, metadata={"description": "The chart these limits are of."}
+        ),
+        "format": f.StrictInteger(
+            required=True,
+            metadata={"description": "Format of the document."},
+            **({"least": 1} if kept else {}),
+        ),
+        "characteristic": f.Object(
+            characteristic, required=True, metadata={"description": "What was measured."}
+        ),
+        "digest": f.StrictString(required=True, metadata=digest),
+        "seal": f.Object(
+            seal,
+            required=True,
+            allow_none=True,
+            metadata={"description": "Null where the service has no key."},
+        ),
+    }
+
+
+def _carry_frame(chart: Chart) -> dict[str, Any]:
+    return {
+        "chart": f.Choice(chart.name, required=True, metadata={"description": "The chart it belongs to."}),
+        "limits": f.StrictString(
+            required=True, metadata={"description": "Digest of the limits it belongs to."}
+        ),
+        "digest": f.StrictString(
+            required=True, metadata={"description": "SHA-256 over the rest of the carry."}
+        ),
+    }
+
+
+def _extend(base: Any, name: str, text: str, members: Mapping[str, Any]) -> Any:
+    """A named shape of these members."""
+    return type(name, (base,), {**members, "Meta": derive.meta(base, text)})
+
+
+class LimitsField(f.Object):
+    """A limits document, checked against its digest; documents seen lately are kept parsed."""
+
+    def __init__(self, chart: Chart, shape: type[f.RequestShape], **kwargs: Any) -> None:
+        super().__init__(shape, **kwargs)
+
+        @lru_cache(1024)
+        def opened(blob: bytes) -> tuple[str, Any]:
+            document = orjson.loads(blob)
+            loaded = super(LimitsField, self)._deserialize(document, None, None)
+            check_limits(chart.name, document)
+            if document["seal"] is not None:
+                raise DocumentMismatch.of(
+                    "seal-not-known",
+                    "This server has no key to check the seal of these limits with.",
+                    "limits",
+                    "seal",
+                )
+            return document["digest"], loaded
+
+        self._opened = opened
+        self._chart = chart
+
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> tuple[str, Any]:
+        if type(value) is dict:
+            named = value.get("chart")
+            if type(named) is str and named in CHARTS and named != self._chart.name:
+                check_limits(self._chart.name, value)
+            blob = orjson.dumps(value)
+            return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._opened.__wrapped__(blob)
+        loaded: tuple[str, Any] = super()._deserialize(value, attr, data, **kwargs)
+        return loaded
+
+
+class CarryField(f.Object):
+    """A carry as it came with the last answer; loads to the document and the object of ``spc``."""
+
+    def _deserialize(
+        self, value: Any, attr: str | None, data: Any, **kwargs: Any
+    ) -> tuple[dict[str, Any], Any]:
+        return value, super()._deserialize(value, attr, data, **kwargs)
+
+
+# ---------------------------------------------------------------------------------------------------
+# Shapes
+
+
+class SignalAnswer(derive.answer(Signal)):  # type: ignore[misc]
+    """A rule that is met: at which point, and what it says."""
+
+    id = f.StrictString(
+        allow_none=True, required=True, metadata={"description": "Your name for the point, if any."}
+    )
+    time = f.StrictString(
+        allow_none=True, required=True, metadata={"description": "Its time, if you gave one."}
+    )
+
+
+def _judged(panels: type) -> dict[str, Any]:
+    return {
+        "verdict": f.Choice(
+            "in-control",
+            "signal",
+            required=True,
+            metadata={"description": f"`signal` where any signal asks for action. {VERDICT_NOTE}"},
+        ),
+        "panels": f.Object(
+            panels, required=True, metadata={"description": "The plotted points, panel by panel."}
+        ),
+        "signals": f.ObjectList(
+            SignalAnswer, required=True, metadata={"description": "In the order of the points."}
+        ),
+        "signals_found": f.StrictInteger(
+            required=True, metadata={"description": "How many signals there are; the first 10000 are told."}
+        ),
+        "ids": f.StringList(min_items=0, metadata={"description": "Your names for the points, where given."}),
+        "times": f.StringList(min_items=0, metadata={"description": "Their times, where given."}),
+    }
+
+
+def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
+    """The shapes of both operations: fit request and answer, judge request and answer."""
+    stem = chart.stem
+    limits_answer = derive.answer(
+        chart.limits,
+        f"{stem}Limits",
+        "Frozen limits. Keep the document beside the characteristic, and send it back as it is.",
+        _envelope(chart, CharacteristicAnswer, SealAnswer, kept=False),
+    )
+    kept = derive.document(
+        chart.limits,
+        f"{stem}LimitsDocument",
+        "A limits document exactly as it was received.",
+        _envelope(chart, Characteristic, Seal, kept=True),
+    )
+    panels = derive.answer(chart.plotted)
+    baseline = _extend(
+        f.AnswerShape, f"{stem}Baseline", "The baseline judged by its own limits.", _judged(panels)
+    )
+    fit_answer = _extend(
+        f.AnswerShape,
+        f"{stem}Fit",
+        "Limits to freeze, with the evidence for them.",
+        {
+            "limits": f.Object(
+                limits_answer, required=True, metadata={"description": "The limits document."}
+            ),
+            "baseline": f.Object(
+                baseline,
+                required=True,
+                allow_none=True,
+                metadata={"description": "Null where limits come from standards alone."},
+            ),
+            "diagnostics": f.Object(
+                derive.answer(chart.diagnostics),
+                required=True,
+                allow_none=True,
+                metadata={"description": "What the baseline shows about itself; null without one."},
+            ),
+            "performance": f.Object(
+                derive.answer(Performance),
+                required=True,
+                metadata={"description": "What limits and rules cost and buy."},
+            ),
+            "cautions": f.ObjectList(CautionAnswer, **CAUTIONS),
+            "provenance": PROVENANCE,
+        },
+    )
+    carry_kept = derive.document(
+        chart.carry, f"{stem}CarryDocument", "A carry exactly as it was received.", _carry_frame(chart)
+    )
+    carry_answer = derive.answer(
+        chart.carry,
+        f"{stem}Carry",
+        "What the next call needs to remember. Send it back as it is, with the next data.",
+        _carry_frame(chart),
+    )
+    judge_request = _extend(
+        f.RequestShape,
+        f"{stem}Judge",
+        "New data under frozen limits.",
+        {
+            "limits": LimitsField(
+                chart,
+                kept,
+                required=True,
+                metadata={"description": "The limits document, exactly as received."},
+            ),
+            "data": f.Object(
+                takes.data, required=True, metadata={"description": "The new data, in time order."}
+            ),
+            "carry": CarryField(
+                carry_kept,
+                allow_none=True,
+                load_default=None,
+                metadata={"description": "As it came with the last answer; null or absent to start afresh."},
+            ),
+        },
+    )
+    judge_answer = _extend(
+        f.AnswerShape,
+        f"{stem}Judgement",
+        "New data judged by frozen limits.",
+        {
+            **_judged(panels),
+            "carry": f.Object(
+                carry_answer, required=True, metadata={"description": "Send it with the next data."}
+            ),
+            "cautions": f.ObjectList(CautionAnswer, **CAUTIONS),
+            "provenance": PROVENANCE,
+        },
+    )
+    return takes.fit(), fit_answer(), judge_request(), judge_answer()
+
+
+# ---------------------------------------------------------------------------------------------------
+# Views
+
+
+def _labelled(found: Sequence[Signal], labels: Mapping[str, Sequence[str]]) -> list[dict[str, Any]]:
+    """Signals with the caller's own name and time of their point."""
+    ids, times = labels.get("ids"), labels.get("times")
+    return [
+        {
+            "rule": signal.rule,
+            "form": signal.form,
+            "panel": signal.panel,
+            "index": signal.index,
+            "side": signal.side,
+            "points": signal.points,
+            "severity": signal.severity,
+            "sentence": signal.sentence,
+            "id": None if ids is None else ids[signal.index],
+            "time": None if times is None else times[signal.index],
+        }
+        for signal in found
+    ]
+
+
+def fit(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, Any]:
+    """Limits from a baseline, or from standards."""
+    posted = loaded.get("data")
+    result = chart.fit(None if posted is None else takes.read(posted), takes.options(loaded))
+    baseline = result.baseline
+    labels = {} if posted is None else labels_of(posted)
+    return {
+        "limits": limits_document(chart.name, result.limits, loaded.get("characteristic")),
+        "baseline": None
+        if baseline is None
+        else {
+            "verdict": baseline.verdict,
+            "panels": baseline.panels,
+            "signals": _labelled(baseline.signals, labels),
+            "signals_found": baseline.signals_found,
+            **labels,
+        },
+        "diagnostics": result.diagnostics,
+        "performance": result.performance,
+        "cautions": cautions(result.cautions),
+    }
+
+
+def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, Any]:
+    """New data under frozen limits."""
+    digest, limits = loaded["limits"]
+    carry = None
+    if loaded["carry"] is not None:
+        document, carry = loaded["carry"]
+        check_carry(chart.name, digest, document)
+    result = chart.judge(limits, takes.read(loaded["data"]), carry)
+    labels = labels_of(loaded["data"])
+    return {
+        "verdict": result.verdict,
+        "panels": result.panels,
+        "signals": _labelled(result.signals, labels),
+        "signals_found": result.signals_found,
+        **labels,
+        "carry": carry_document(chart.name, digest, result.carry),
+        "cautions": cautions(result.cautions),
+    }
+
+
+# ---------------------------------------------------------------------------------------------------
+# Routes
+
+
+def register(contract: Contract) -> None:
+    """Binds both operations of every chart in the registry."""
+    contract.tag(TAG, "Limits from a baseline, and signals on new data under frozen limits. " + VERDICT_NOTE)
+    for chart in CHARTS.values():
+        takes = REQUESTS[chart.name]
+        fit_request, fit_answer, judge_request, judge_answer = _shapes(chart, takes)
+        contract.operation(
+            "POST",
+            f"/v1/charts/{chart.name}/limits",
+            operation_id=f"fit{chart.stem}Limits",
+            tag=TAG,
+            summary=f"Limits: {chart.title[0].lower()}{chart.title[1:]} ({chart.name})",
+            description=f"{chart.purpose} Takes: {chart.takes} Beware: {chart.beware} The answer holds a limits "
+            "document to freeze, the baseline judged by its own limits, diagnostics, the run lengths of the "
+            f"rules chosen, and cautions. Sources: {', '.join(chart.references)}.",
+            request=fit_request,
+            response=fit_answer,
+            problems=(problems.NOT_COMPUTABLE,),
+            example=f"{chart.name}-limits",
+            links={
+                f"judge{chart.stem}": {
+                    "operationId": f"judge{chart.stem}",
+                    "description": "The limits document goes, as it is, into the member `limits`.",
+                    "x-request-body": {"limits": "$response.body#/limits"},
+                }
+            },
+            provenance=chart.name,
+        )(partial(fit, chart, takes))
+        contract.operation(
+            "POST",
+            f"/v1/charts/{chart.name}/signals",
+            operation_id=f"judge{chart.stem}",
+            tag=TAG,
+            summary=f"Signals: {chart.title[0].lower()}{chart.title[1:]} ({chart.name})",
+            description="Judges new data by a limits document, continuing where the carry left off: judging in "
+            "one call, or in any split with the carry passed on, gives the same signals. A signal's points "
+            f"below 0 lie in earlier calls. {VERDICT_NOTE}",
+            request=judge_request,
+            response=judge_answer,
+            problems=(problems.NOT_COMPUTABLE, problems.DOCUMENT_MISMATCH),
+            example=f"{chart.name}-signals",
+            provenance=chart.name,
+        )(partial(judge, chart, takes))

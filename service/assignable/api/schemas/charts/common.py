@@ -1,0 +1,84 @@
+"""What the requests of all charts share."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any, Literal
+
+from ....spc.charts.common import Exclusion, LimitBasis
+from ....spc.errors import UnusableParameter
+from ... import fields as f
+from ..common import Characteristic, ExclusionRequest, RulesRequest
+
+USUAL_FALSE_ALARM = 0.0027
+"""About what limits at three sigma give a normal statistic."""
+
+
+@dataclass(frozen=True, slots=True)
+class ChartRequest:
+    """The shapes of a chart's requests, and how what they load becomes objects of ``spc``."""
+
+    fit: type[f.RequestShape]
+    data: type[f.RequestShape]
+    read: Callable[[dict[str, Any]], Any]
+    options: Callable[[dict[str, Any]], Any]
+
+
+class FitRequest(f.RequestShape):
+    """What every fit takes."""
+
+    characteristic = f.Object(Characteristic, metadata={"description": "What was measured."})
+    limit_basis = f.Choice(
+        "sigma",
+        "probability",
+        load_default="sigma",
+        metadata={
+            "description": "`sigma`: limits a multiple of the standard deviation out. `probability`: equal tails "
+            "of the exact distribution."
+        },
+    )
+    sigma_multiple = f.StrictNumber(
+        above=0, most=10, metadata={"description": "How many sigma out the limits lie; 3 unless given."}
+    )
+    false_alarm_probability = f.StrictNumber(
+        least=1e-12,
+        most=0.5,
+        metadata={
+            "description": "Under `probability`: that a point in control lies outside, half beyond each limit; "
+            f"{USUAL_FALSE_ALARM} unless given."
+        },
+    )
+    rules = f.Object(RulesRequest, metadata={"description": "Run rules; without them the limits alone."})
+    exclude = f.ObjectList(
+        ExclusionRequest, metadata={"description": "Baseline points with a known assignable cause."}
+    )
+
+
+def limit_basis(loaded: dict[str, Any]) -> LimitBasis:
+    """How far out the limits are to lie. Raises UnusableParameter for a figure of the other basis."""
+    multiple, probability = loaded.get("sigma_multiple"), loaded.get("false_alarm_probability")
+    basis: Literal["sigma", "probability"] = loaded["limit_basis"]
+    other = "false_alarm_probability" if basis == "sigma" else "sigma_multiple"
+    if loaded.get(other) is not None:
+        raise UnusableParameter.of(
+            "not-of-this-basis",
+            f"`{other}` has no meaning where limit_basis is `{basis}`; leave one of them out.",
+            other,
+        )
+    if basis == "sigma":
+        return LimitBasis("sigma", 3.0 if multiple is None else multiple, None)
+    return LimitBasis("probability", None, USUAL_FALSE_ALARM if probability is None else probability)
+
+
+def exclusions(loaded: dict[str, Any]) -> tuple[Exclusion, ...]:
+    return tuple(Exclusion(**one) for one in loaded.get("exclude", ()))
+
+
+class StandardsRequest(f.RequestShape):
+    """Values known in advance; each replaces its estimate."""
+
+    mean = f.StrictNumber(metadata={"description": "Process mean, in the unit of the characteristic."})
+    sigma = f.StrictNumber(
+        least=1e-300, metadata={"description": "Standard deviation of single values, in the same unit."}
+    )
