@@ -47,7 +47,7 @@ def cautions(found: Iterable[Caution]) -> list[dict[str, str]]:
     ]
 
 
-CAUTIONS = {
+CAUTIONS: dict[str, Any] = {
     "required": True,
     "metadata": {"description": "What a qualified person should know about this answer; often empty."},
 }
@@ -155,8 +155,12 @@ def check_labels(loaded: dict[str, Any], points: int) -> list[Fault]:
     ]
 
 
-IDS = {"metadata": {"description": "Your name for each point; comes back with the points and signals."}}
-TIMES = {"metadata": {"description": "When each point was made (RFC 3339); comes back likewise."}}
+IDS: dict[str, Any] = {
+    "metadata": {"description": "Your name for each point; comes back with the points and signals."}
+}
+TIMES: dict[str, Any] = {
+    "metadata": {"description": "When each point was made (RFC 3339); comes back likewise."}
+}
 
 
 def labels_of(loaded: dict[str, Any]) -> dict[str, Sequence[str]]:

@@ -22,6 +22,7 @@ from ..data import Counts, Floats
 from ..errors import Fault, UnusableData, UnusableParameter
 from ..rules import Rule, Signal, Tail, watched
 from .common import (
+    AT_THREE_SIGMA,
     Baseline,
     BaselineRecord,
     Exclusion,
@@ -79,7 +80,7 @@ class AttributeOptions:
     ``sample_size`` the units or area of each sample, where there is no data.
     """
 
-    basis: LimitBasis = LimitBasis()
+    basis: LimitBasis = AT_THREE_SIGMA
     rules: tuple[Rule, ...] = ()
     standard: float | None = None
     sample_size: float | None = None

@@ -73,6 +73,9 @@ class LimitBasis:
         return (self.false_alarm_probability or 0.0) / 2
 
 
+AT_THREE_SIGMA = LimitBasis()
+
+
 @functools.lru_cache(256)
 def normal_multiple(tail: float) -> float:
     """The standard normal quantile with ``tail`` above it."""
@@ -220,6 +223,9 @@ class Standards:
 
     mean: Annotated[float | None, "Known process mean, in the unit of the characteristic."] = None
     sigma: Annotated[float | None, "Known within-subgroup standard deviation, in the same unit."] = None
+
+
+NO_STANDARDS = Standards()
 
 
 @dataclass(frozen=True, slots=True)

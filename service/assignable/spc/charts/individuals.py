@@ -16,6 +16,8 @@ from ..errors import Fault, UnusableData, UnusableParameter
 from ..rules import Rule, Signal, Tail, watched
 from ..sigma import moving_range, moving_ranges
 from .common import (
+    AT_THREE_SIGMA,
+    NO_STANDARDS,
     Baseline,
     BaselineRecord,
     Exclusion,
@@ -52,9 +54,9 @@ class IndividualsOptions:
 
     sigma_estimator: Literal["mean-moving-range", "median-moving-range"] = "mean-moving-range"
     span: int = 2
-    basis: LimitBasis = LimitBasis()
+    basis: LimitBasis = AT_THREE_SIGMA
     rules: tuple[Rule, ...] = ()
-    standards: Standards = Standards()
+    standards: Standards = NO_STANDARDS
     exclude: tuple[Exclusion, ...] = ()
 
 
@@ -184,7 +186,8 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
             )
         if faults:
             raise UnusableParameter(*faults)
-        assert given.mean is not None and given.sigma is not None
+        assert given.mean is not None
+        assert given.sigma is not None
         limits = _limits(options, rules, given.mean, given.sigma, "given", None, None)
         return IndividualsFit(limits, None, None, mean_performance(rules, basis, 1.0, None), ())
 

@@ -23,6 +23,8 @@ from ..errors import Fault, UnusableData, UnusableParameter
 from ..rules import Rule, Signal, Tail, watched
 from ..sigma import within
 from .common import (
+    AT_THREE_SIGMA,
+    NO_STANDARDS,
     Baseline,
     BaselineRecord,
     Exclusion,
@@ -71,9 +73,9 @@ class SubgroupOptions:
     """How the limits of a chart of subgroups are to be computed."""
 
     sigma_estimator: str
-    basis: LimitBasis = LimitBasis()
+    basis: LimitBasis = AT_THREE_SIGMA
     rules: tuple[Rule, ...] = ()
-    standards: Standards = Standards()
+    standards: Standards = NO_STANDARDS
     subgroup_size: int | None = None
     exclude: tuple[Exclusion, ...] = ()
 
@@ -270,7 +272,9 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     rules = watched(options.rules)
     given, basis = options.standards, options.basis
     if statistics is None:
-        assert given.mean is not None and given.sigma is not None and options.subgroup_size is not None
+        assert given.mean is not None
+        assert given.sigma is not None
+        assert options.subgroup_size is not None
         limits = _limits(options, spread, given.mean, given.sigma, None, options.subgroup_size, rules, None)
         performance = mean_performance(rules, basis, float(options.subgroup_size), spread)
         return SubgroupFit(limits, None, None, performance, ())

@@ -92,7 +92,7 @@ class RateStandard(f.RequestShape):
     rate = f.StrictNumber(above=0, most=1e12, metadata={"description": "Nonconformities per unit of area."})
 
 
-_COUNT_BASELINE = {
+_COUNT_BASELINE: dict[str, Any] = {
     "metadata": {"description": "The baseline; may be left out where a standard is given."},
 }
 
