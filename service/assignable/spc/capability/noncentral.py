@@ -15,17 +15,12 @@ import numpy as np
 import scipy
 
 from ..data import Floats
+from ..factors import gauss_legendre
 
 _NODES = 96
 _REACH = 8.3  # standard normal mass beyond it: 1e-16
 _ROOT_TOLERANCE = 1e-11
 _ROOT_CAP = 60
-
-
-@lru_cache(maxsize=4)
-def _legendre(nodes: int) -> tuple[Floats, Floats]:
-    x, weight = np.polynomial.legendre.leggauss(nodes)
-    return x, weight
 
 
 @lru_cache(maxsize=64)
@@ -37,8 +32,8 @@ def _chi_nodes(degrees_of_freedom: float) -> tuple[Floats, Floats]:
     # Below exp(-20) lies mass of 1e-9 at most even for ν = 1, and of nothing for a usable ν.
     low_log = max(0.5 * float(np.log(max(low, 1e-300))), -20.0 if degrees_of_freedom >= 1 else -40.0)
     high_log = 0.5 * float(np.log(high))
-    x, weight = _legendre(_NODES)
-    s = 0.5 * (high_log + low_log) + 0.5 * (high_log - low_log) * x
+    x, weight = gauss_legendre(_NODES)
+    s = low_log + (high_log - low_log) * x
     density = np.exp(-half * (np.expm1(2.0 * s) - 2.0 * s))
     mass = weight * density
     # Dividing by the sum spares the gamma function, and with it the digits it loses for large ν.
@@ -51,15 +46,15 @@ def _by_spread(t: Floats, degrees_of_freedom: float, delta: Floats) -> Floats:
 
 
 def _by_location(t: Floats, degrees_of_freedom: float, delta: Floats) -> Floats:
-    x, weight = _legendre(_NODES)
+    x, weight = gauss_legendre(_NODES)
     low = np.clip(-delta, -_REACH, _REACH)
-    half = 0.5 * (_REACH - low)
-    z = 0.5 * (_REACH + low)[:, None] + half[:, None] * x
+    length = _REACH - low
+    z = low[:, None] + length[:, None] * x
     w = np.maximum((z + delta[:, None]) / t[:, None], 0.0)
     survival = scipy.special.gammaincc(0.5 * degrees_of_freedom, 0.5 * degrees_of_freedom * w * w)
     density = np.exp(-0.5 * z * z) / np.sqrt(2.0 * np.pi)
     # Below z = -δ the event is certain.
-    return np.minimum(scipy.special.ndtr(low) + half * ((density * survival) @ weight), 1.0)
+    return np.minimum(scipy.special.ndtr(low) + length * ((density * survival) @ weight), 1.0)
 
 
 def noncentral_t_cdf(t: Floats, degrees_of_freedom: float, delta: Floats) -> Floats:
