@@ -7,12 +7,13 @@ from typing import Any
 
 import numpy as np
 import pytest
-from assignable.api import fields as f
-from assignable.api import problems
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from jsonschema import Draft202012Validator
 from marshmallow import ValidationError
+
+from assignable.api import fields as f
+from assignable.api import problems
 
 
 def faults(field: f.Field, value: Any) -> list[tuple[str, str]]:

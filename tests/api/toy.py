@@ -6,6 +6,7 @@ from threading import Event
 from typing import Any
 
 import numpy as np
+
 from assignable.api.contract import Contract, Provenance
 from assignable.api.fields import (
     AnswerShape,
