@@ -145,6 +145,9 @@ def capability(
     Intervals: Cp and Pp by chi-square [kane-1986]; one-sided indices by non-central t
     [chou-owen-borrego-1990], exact for the overall standard deviation; Cpk and Ppk with two limits by
     [bissell-1990], asymptotic; Cpm by [boyles-1991]; Cpmk by the delta method [chen-hsu-1995].
+    Coverage of a nominal 0.95, simulated: Cpk 0.94 to 0.96 from 5 values on, and its one-sided bound up to
+    0.99 for a mean in the middle; Cpm and Cpmk 0.92 and more from 10 values, 0.87 from 5 with the mean off
+    target; expected nonconforming with both limits 0.93 and more from 10 values, 0.91 from 5.
 
     Raises UnusableParameter ``confidence-out-of-range`` or ``limits-too-far``; UnusableData ``no-variation``
     (and what ``sigma.overall`` raises), ``count-out-of-range``, ``no-sigma``, ``not-finite``.
