@@ -16,8 +16,9 @@ from typing import Literal
 
 import numpy as np
 import scipy
+from numpy.typing import NDArray
 
-from assignable.spc.errors import UnusableParameter
+from assignable.spc.errors import SpcError, UnusableParameter
 from assignable.spc.runlength.quadrature import Array, Ladder, StoppedChain, gauss_legendre
 
 Sides = Literal["two", "upper", "lower"]
@@ -41,7 +42,7 @@ _GRIDS = (1.0, 1.35, 1.9, 2.7)
 _SERIES_FROM = 0.05
 _SERIES_ORDER = 14
 # One-sided EWMA: the grid ends this many standard deviations below everything the statistic does.
-_FLOOR = 9.0
+_FLOOR = 8.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,8 +53,8 @@ class MemoryRunLength:
     the stated start (zero state, or the head start given); ``percentiles`` pairs a level with the
     smallest n for which P(N ≤ n) reaches it. ``steady_state_arl`` is the mean number of points from
     the moment the process changes, after a long in-control time without a signal (the conditional,
-    or quasi-stationary, law of the statistic); None when two grids do not agree on it to 1e-7 (a two-sided CUSUM with a reference value near zero
-    forgets its start too slowly for that).
+    or quasi-stationary, law of the statistic); None when two grids do not agree on it to 1e-7 (as for a
+    two-sided CUSUM with a reference value near zero, which forgets its start too slowly).
     """
 
     arl: float
@@ -85,7 +86,7 @@ def _number(value: float, name: str, low: float, high: float, *, open_low: bool 
     return number
 
 
-def _beyond_reach(name: str) -> UnusableParameter:
+def _beyond_reach(name: str) -> SpcError:
     return UnusableParameter.of(
         "run-length-beyond-reach",
         "The average run length is beyond 1e15 points: in practice this chart never signals here, "
@@ -94,7 +95,7 @@ def _beyond_reach(name: str) -> UnusableParameter:
     )
 
 
-def _unconverged(name: str) -> UnusableParameter:
+def _unconverged(name: str) -> SpcError:
     return UnusableParameter.of(
         "run-length-not-computed", "The run length did not settle on the finest grid allowed.", name
     )
@@ -132,7 +133,8 @@ def _checked_cusum(
     if not 0.0 <= head_start < decision:
         raise UnusableParameter.of(
             "out-of-range",
-            f"head_start must be at least 0 and below the decision interval {decision:g}; it is {head_start:g}.",
+            f"head_start must be at least 0 and below the decision interval {decision:g}; it is "
+            f"{head_start:g}.",
             "head_start",
         )
     if sides == "two" and head_start > 0.5 * decision + reference:
@@ -157,7 +159,11 @@ def _change(old: _Moments, new: _Moments) -> float:
 
 def _agreed(old: _Moments, new: _Moments) -> float | None:
     """The steady-state mean, if the two grids agree on it."""
-    if old.steady is None or new.steady is None or abs(old.steady - new.steady) > _STEADY_AGREEMENT * new.steady:
+    if (
+        old.steady is None
+        or new.steady is None
+        or abs(old.steady - new.steady) > _STEADY_AGREEMENT * new.steady
+    ):
         return None
     return new.steady
 
@@ -165,7 +171,7 @@ def _agreed(old: _Moments, new: _Moments) -> float | None:
 def _words(change: float, old: _Moments, new: _Moments) -> str:
     return (
         f"Grids of {old.nodes} and {new.nodes} nodes agree to {max(change, 1e-15):.0e} (relative); the finer "
-        "one is given. Percentiles are exact to the point up to two million points, beyond that to about 1e-6."
+        "one is given. Percentiles are exact to the point up to two million points, beyond to about 1e-6."
     )
 
 
@@ -205,7 +211,7 @@ class _Ewma:
         return not self.two_sided and self.shift < 0.0 and self.edge - self.shift > 9.0 * spread
 
     def nodes(self, refinement: float) -> int:
-        width = (self.edge - self.floor) / (self.smoothing * min(self.scale, 1.0))
+        width = (self.edge - self.floor) / (self.smoothing * self.scale)
         return math.ceil(refinement * _nodes(width)) | 1
 
     def row(self, at: Array, nodes: Array, weights: Array) -> Array:
@@ -218,7 +224,7 @@ class _Ewma:
         """Probability of a signal at the next point, from each of ``at``."""
         step = self.smoothing * self.scale
         centre = (1.0 - self.smoothing) * at + self.smoothing * self.shift
-        above = scipy.special.ndtr((centre - high) / step)
+        above: Array = scipy.special.ndtr((centre - high) / step)
         if self.two_sided:
             above = above + scipy.special.ndtr((low - centre) / step)
         return above
@@ -235,7 +241,8 @@ def _ewma_grid(chart: _Ewma, count: int) -> _EwmaGrid:
     unit, weights = gauss_legendre(count)
     half, middle = 0.5 * (chart.edge - chart.floor), 0.5 * (chart.edge + chart.floor)
     nodes = middle + half * unit
-    home = int(np.argmin(np.abs(nodes - min(max(chart.shift, -0.5 * chart.edge), 0.5 * chart.edge))))
+    lowest = -0.5 * chart.edge if chart.two_sided else chart.floor
+    home = int(np.argmin(np.abs(nodes - min(max(chart.shift, lowest), 0.5 * chart.edge))))
     order = np.concatenate(([home], np.arange(home), np.arange(home + 1, count)))
     return _EwmaGrid(nodes[order], half * weights[order])
 
@@ -252,27 +259,26 @@ def _ewma_enter(chart: _Ewma, grid: _EwmaGrid) -> tuple[Array, float]:
     return row, float(chart.exit(at, chart.floor, chart.edge)[0])
 
 
-def _ewma_steady(chart: _Ewma, grid: _EwmaGrid, chain: StoppedChain) -> float | None:
-    if chain.rate * LONGEST_ARL < 1.0:
-        return None
-    before = chain
-    if chart.shift != 0.0 or chart.scale != 1.0:
-        calm = _Ewma(chart.smoothing, chart.limit, 0.0, 1.0, chart.two_sided, chart.start)
-        middle = int(np.argmin(np.abs(grid.nodes)))
-        order = np.arange(len(grid.nodes))
-        order[[0, middle]] = order[[middle, 0]]
-        moved = _EwmaGrid(grid.nodes[order], grid.weights[order])
-        # The floor of this chart, not of the calm one: both must live on the same grid.
-        before = StoppedChain(
-            calm.row(moved.nodes, moved.nodes, moved.weights),
-            calm.exit(moved.nodes, chart.floor, chart.edge),
-        )
-        law = before.conditional_law()
-        return float(law @ chain.mean[order]) / chain.rate
-    return float(before.conditional_law() @ chain.mean) / chain.rate
+def _ewma_steady(chart: _Ewma, grid: _EwmaGrid, chain: StoppedChain) -> float:
+    """Mean from the conditional in-control law, which has a grid of its own; carried over by Nyström."""
+    if chart.shift == 0.0 and chart.scale == 1.0 and chart.start == 0.0:
+        return float(chain.conditional_law() @ chain.mean) / chain.rate
+    law, nodes = _ewma_calm(chart.smoothing, chart.limit, chart.two_sided, len(grid.nodes))
+    means = chain.rate + chart.row(nodes, grid.nodes, grid.weights) @ chain.mean
+    return float(law @ means) / chain.rate
 
 
-def _ewma_fixed(chart: _Ewma, refinement: float, steady: bool = True) -> tuple[_Moments, StoppedChain, Array, float]:
+@lru_cache(maxsize=64)
+def _ewma_calm(smoothing: float, limit: float, two_sided: bool, about: int) -> tuple[Array, Array]:
+    """Law of the EWMA in control, given no signal, and the nodes it is on (not fewer than needed)."""
+    calm = _Ewma(smoothing, limit, 0.0, 1.0, two_sided, 0.0)
+    grid = _ewma_grid(calm, max(calm.nodes(1.0), min(about, calm.nodes(_GRIDS[1]))))
+    return _ewma_chain(calm, grid).conditional_law(), grid.nodes
+
+
+def _ewma_fixed(
+    chart: _Ewma, refinement: float, steady: bool = True
+) -> tuple[_Moments, StoppedChain, Array, float]:
     grid = _ewma_grid(chart, chart.nodes(refinement))
     chain = _ewma_chain(chart, grid)
     row, exit_now = _ewma_enter(chart, grid)
@@ -423,7 +429,10 @@ def _checked_points(points: tuple[int, ...]) -> None:
     for index, point in enumerate(points):
         if not 1 <= point <= MOST_POINTS:
             raise UnusableParameter.of(
-                "out-of-range", f"Each of points must be from 1 to {MOST_POINTS}; one is {point}.", "points", index
+                "out-of-range",
+                f"Each of points must be from 1 to {MOST_POINTS}; one is {point}.",
+                "points",
+                index,
             )
 
 
@@ -488,7 +497,7 @@ class _Growing:
             + (next_half / step)[:, None, None] * self.unit
             - (keep * half / step)[:, None, None] * self.unit[:, None]
         )
-        exponent = np.empty_like(z)
+        exponent: Array = np.empty_like(z)
         for m in range(order):
             exponent[m] = -0.5 * np.einsum("kij,kij->ij", z[: m + 1], z[m::-1])
         shape = np.empty_like(z)
@@ -497,12 +506,12 @@ class _Growing:
             scaled = exponent[1 : m + 1] * powers[1 : m + 1, None, None]
             shape[m] = np.einsum("kij,kij->ij", scaled, shape[m - 1 :: -1][:m]) / m
         width = next_half / (step * math.sqrt(2.0 * math.pi))
-        kernel = np.empty_like(z)
+        kernel: Array = np.empty_like(z)
         for m in range(order):
             kernel[m] = np.einsum("k,kij->ij", width[: m + 1], shape[m::-1]) * self.weights
         return kernel
 
-    def moments(self, chain: StoppedChain, order: Array, steady: float | None) -> _Moments:
+    def moments(self, chain: StoppedChain, order: NDArray[np.intp], steady: float | None) -> _Moments:
         """Mean and standard deviation from the steps taken and the series for what follows.
 
         ``chain`` is the chart at its asymptotic limits, on this grid in the order ``order``.
@@ -523,7 +532,7 @@ class _Growing:
         variance = float(pmf @ np.square(n - arl)) + square_left + 2.0 * about * mean_left + alive * about**2
         return _Moments(arl, math.sqrt(max(variance, 0.0)), steady, len(self.unit))
 
-    def _mean_series(self, chain: StoppedChain, order: Array) -> tuple[Array, Array]:
+    def _mean_series(self, chain: StoppedChain, order: NDArray[np.intp]) -> tuple[Array, Array]:
         """E[N] and E[N(N+1)/2] of what is left, from each node, at the distance reached."""
         kernel, q = self.series, (1.0 - self.chart.smoothing) ** 2
         assert kernel is not None
@@ -565,11 +574,10 @@ class _Growing:
                 break
 
 
-def _growing_parts(chart: _Ewma, growing: _Growing) -> tuple[StoppedChain, Array, _EwmaGrid]:
+def _growing_parts(chart: _Ewma, growing: _Growing) -> tuple[StoppedChain, NDArray[np.intp], _EwmaGrid]:
+    """The chart at its settled limits, the place of each of its states on the growing grid, its grid."""
     grid = _ewma_grid(chart, len(growing.unit))
-    order = np.argsort(grid.nodes)
-    where = np.empty_like(order)
-    where[order] = np.arange(len(order))
+    where = np.argsort(np.argsort(grid.nodes))
     return _ewma_chain(chart, grid), where, grid
 
 
@@ -618,8 +626,8 @@ def _ewma_growing(chart: _Ewma) -> MemoryRunLength:
         new.sd,
         tuple(zip(LEVELS, found, strict=True)),
         "Density of the EWMA stepped from limit to limit (exact variance of each point), then a power series "
-        "to the asymptotic limits, on Gauss–Legendre grids (after Crowder 1987). Steady state: conditional on "
-        "no signal, limits settled.",
+        "to the asymptotic limits, on Gauss–Legendre grids (after Crowder 1987). Steady state: conditional "
+        "on no signal, limits settled.",
         _words(change, old, new),
         _agreed(old, new),
     )
@@ -658,9 +666,12 @@ class _Side:
     chain: StoppedChain
 
     def enter(self, head_start: float) -> tuple[Array, float]:
-        return _side_rows(
-            np.array([head_start]), self.reference, self.decision, self.shift, self.scale, self.nodes, self.weights
+        """The first step from a head start: its row, and the probability that it signals."""
+        at = np.array([head_start])
+        rows, exits = _side_rows(
+            at, self.reference, self.decision, self.shift, self.scale, self.nodes, self.weights
         )
+        return rows[0], float(exits[0])
 
 
 def _side_rows(
@@ -700,8 +711,7 @@ def _one_side(
     chain = side.chain
     if chain.rate * LONGEST_ARL < 1.0:
         raise _beyond_reach("decision")
-    rows, exits = side.enter(head_start)
-    row, exit_now = rows[0], float(exits[0])
+    row, exit_now = side.enter(head_start)
     variance = chain.variance_from(row, exit_now, chain.variances())
     steady = float(_calm_law(k, h, count, False) @ chain.mean) / chain.rate
     return (
@@ -729,13 +739,13 @@ def _both_sides(
     shares, excesses, lags = [], [], []
     for side in (upper, lower):
         chain = side.chain
-        short, lag, excess = chain.lags(float(chain.variances()[0]))
+        lag, excess = chain.lags(float(chain.variances()[0]))
         excesses.append(excess)
         if head_start > 0.0:
-            rows, exits = side.enter(head_start)
-            short_now = float(exits[0]) + float(rows[0] @ short) - chain.rate
+            row, exit_now = side.enter(head_start)
+            short_now = exit_now + float(row @ chain.short) - chain.rate
             shares.append(short_now)
-            lags.append(float(rows[0] @ lag) + excess + chain.rate + short_now)
+            lags.append(float(row @ lag) + excess + chain.rate + short_now)
     excess = sum(excesses)
     law = _calm_law(k, h, count, True)
     steady = zero * float(law @ (upper.chain.mean + lower.chain.mean) - law.sum())
@@ -755,9 +765,8 @@ def _both_sides(
 
 def _pair_start(upper: _Side, lower: _Side, head_start: float) -> tuple[Array, Array, float, float]:
     """Laws of the two sides after the first point, on no signal, and the chances of either's signal."""
-    up_rows, up_exits = upper.enter(head_start)
-    low_rows, low_exits = lower.enter(head_start)
-    up, low, up_exit, low_exit = up_rows[0], low_rows[0], float(up_exits[0]), float(low_exits[0])
+    up, up_exit = upper.enter(head_start)
+    low, low_exit = lower.enter(head_start)
     up[0] -= low_exit
     low[0] -= up_exit
     return up, low, up_exit, low_exit
@@ -822,7 +831,9 @@ def cusum(
     percentiles as well as its mean. Steady state: conditional on no signal of either side.
     Raises :class:`UnusableParameter` outside these ranges, or beyond an average of 1e15 points.
     """
-    k, h, shift, scale, sides, head_start = _checked_cusum(reference, decision, shift, scale, sides, head_start)
+    k, h, shift, scale, sides, head_start = _checked_cusum(
+        reference, decision, shift, scale, sides, head_start
+    )
     toward = -shift if sides == "lower" else shift
     old = None
     for refinement in _GRIDS:
@@ -855,8 +866,8 @@ def cusum(
 
 
 def _one_ladder(side: _Side, head_start: float) -> tuple[Ladder, Array, float]:
-    rows, exits = side.enter(head_start)
-    return Ladder(side.chain.consistent_steps(), side.chain.exits), rows[0], float(exits[0])
+    row, exit_now = side.enter(head_start)
+    return Ladder(side.chain.consistent_steps(), side.chain.exits), row, exit_now
 
 
 @lru_cache(maxsize=256)
@@ -874,7 +885,9 @@ def cusum_signalled_by(
 
     Arguments and errors as :func:`cusum`.
     """
-    k, h, shift, scale, sides, head_start = _checked_cusum(reference, decision, shift, scale, sides, head_start)
+    k, h, shift, scale, sides, head_start = _checked_cusum(
+        reference, decision, shift, scale, sides, head_start
+    )
     _checked_points(points)
     count = _side_count(h, scale, _GRIDS[1])
     if sides == "two":
@@ -893,12 +906,11 @@ def _cusum_mean(
     count = _side_count(h, 1.0, refinement)
     upper = _side(k, h, -shift if sides == "lower" else shift, 1.0, count)
     rate = upper.chain.rate
-    row = upper.enter(head_start)[0][0]
-    ratio = upper.chain.mean_from(row)
+    ratio = upper.chain.mean_from(upper.enter(head_start)[0])
     if sides == "two":
         lower = _side(k, h, -shift, 1.0, count)
         rate += lower.chain.rate
-        ratio += lower.chain.mean_from(lower.enter(head_start)[0][0]) - 1.0
+        ratio += lower.chain.mean_from(lower.enter(head_start)[0]) - 1.0
     if rate * LONGEST_ARL < 1.0:
         raise _beyond_reach("decision")
     return ratio / rate
@@ -909,10 +921,10 @@ def _steady_ewma_mean(chart: _Ewma, refinement: float = 1.15) -> float:
     if chart.smoothing == 1.0:
         return 1.0 / _single_point(chart)
     grid = _ewma_grid(chart, chart.nodes(refinement))
-    steady = _ewma_steady(chart, grid, _ewma_chain(chart, grid))
-    if steady is None:
+    chain = _ewma_chain(chart, grid)
+    if chain.rate * LONGEST_ARL < 1.0:
         raise _beyond_reach("limit")
-    return steady
+    return _ewma_steady(chart, grid, chain)
 
 
 def _steady_cusum_mean(k: float, h: float, shift: float, sides: Sides, refinement: float = 1.15) -> float:

@@ -65,7 +65,7 @@ class StoppedChain:
     side of a chart that practically never signals. Regeneration: ``[asmussen-2003]``, chapter VI.
     """
 
-    __slots__ = ("_lu", "_to_home", "_wait", "exits", "mean", "rate", "size", "steps", "toll")
+    __slots__ = ("_lu", "_to_home", "exits", "mean", "rate", "short", "size", "steps", "toll")
 
     def __init__(self, steps: Array, exits: Array) -> None:
         self.steps, self.exits, self.size = steps, exits, len(exits)
@@ -81,11 +81,14 @@ class StoppedChain:
         toll = float(exits[0] + row @ signal)
         self.toll = toll if toll > _NEVER else 0.0
         self.rate = self.toll / float(1.0 + row @ wait)
-        self._wait, self._to_home = wait, to_home
+        self._to_home = to_home
         self.mean = np.concatenate(([1.0], wait * self.rate + to_home))
+        # 1 − mean, kept on its own: on a side that hardly ever signals, all that differs from home.
+        self.short = np.concatenate(([0.0], signal - wait * self.rate))
 
     def _solve(self, right: Array, transposed: bool = False) -> Array:
-        return scipy.linalg.lu_solve(self._lu, right, trans=int(transposed), check_finite=False)
+        solution: Array = scipy.linalg.lu_solve(self._lu, right, trans=int(transposed), check_finite=False)
+        return solution
 
     def mean_from(self, row: Array) -> float:
         """Mean run length, relative to home's, when the first step follows ``row``."""
@@ -97,13 +100,10 @@ class StoppedChain:
         By the law of total variance over the next step: ``V = Q V + g`` with ``g`` the variance of the
         mean still to come, which is a sum of squares and so free of cancellation.
         """
-        later = self.mean - self.rate
-        spread = (self.steps * np.square(self.mean - later[:, None])).sum(axis=1) + self.exits * later**2
+        change = (self.short + self.rate)[:, None] - self.short
+        spread = (self.steps * np.square(change)).sum(axis=1) + self.exits * (self.mean - self.rate) ** 2
         part = self._solve(spread[1:])
-        if self.toll == 0.0:
-            home = 1.0
-        else:
-            home = float(spread[0] + self.steps[0, 1:] @ part) / self.toll
+        home = 1.0 if self.toll == 0.0 else float(spread[0] + self.steps[0, 1:] @ part) / self.toll
         return np.concatenate(([home], part + self._to_home * home))
 
     def variance_from(self, row: Array, exit_now: float, variances: Array) -> float:
@@ -111,19 +111,16 @@ class StoppedChain:
         later = float(row @ self.mean)
         return float(row @ (np.square(self.mean - later) + variances)) + exit_now * later**2
 
-    def lags(self, home_variance: float) -> tuple[Array, Array, float]:
+    def lags(self, home_variance: float) -> tuple[Array, float]:
         """First-order behaviour of the survival sums near 1: what two-sided second moments need.
 
         With ``G(x, z) = Σ zⁿ P(N > n | x)``, the ratio ``G(x, z) / G(home, z)`` is
         ``mean(x) + (1 − z) lag(x) + …``, and ``1 / G(home, z) = rate + (1 − z)(1 + excess) + …``.
-        Returns ``(short, lag, excess)``, where ``short = 1 − mean`` is free of cancellation.
+        Returns ``(lag, excess)``.
         """
         excess = 0.5 * (home_variance - 1.0 - self.rate)
-        right = np.empty((self.size - 1, 1), order="F")
-        right[:, 0] = self.exits[1:] - self.rate
-        short = self._solve(right)[:, 0]
-        lag = self._solve(short + (excess + self.rate))
-        return np.concatenate(([0.0], short)), np.concatenate(([0.0], lag)), excess
+        lag = self._solve(self.short[1:] + (excess + self.rate))
+        return np.concatenate(([0.0], lag)), excess
 
     def occupation(self, row: Array) -> Array:
         """Expected number of visits to each state by a path that enters by ``row``: ``row (I − Q)⁻¹``."""
@@ -163,8 +160,8 @@ class StoppedChain:
         if opposed:
             matrix[:, 0] -= self.exits
         values, vectors = np.linalg.eig(matrix.T)
-        law = np.real(vectors[:, int(np.argmax(values.real))])
-        return law / law.sum()
+        slowest = np.real(vectors[:, int(np.argmax(values.real))])
+        return np.asarray(slowest / slowest.sum(), dtype=np.float64)
 
     def consistent_steps(self) -> Array:
         """``steps`` with each diagonal set so that row and exit add to one to the last rounding."""
@@ -177,8 +174,7 @@ class StoppedChain:
 class Ladder:
     """The powers ``M^(2^k)`` of a transition matrix, climbed and descended to read a run length's law.
 
-    ``exits`` are the probabilities of a signal at the next point. ``tail`` is ``(rate, weight)`` of the
-    geometric law ``P(N > n) = weight (1 − rate)ⁿ`` that holds beyond the ladder's last rung.
+    ``exits`` are the probabilities of a signal at the next point.
     """
 
     __slots__ = ("_powers", "_signals")
@@ -212,7 +208,11 @@ class Ladder:
         exit_now: float,
         tail: tuple[float, float],
     ) -> tuple[int, ...]:
-        """Smallest n with P(N ≤ n) ≥ level, for each level (see :meth:`signalled_by` for the start)."""
+        """Smallest n with P(N ≤ n) ≥ level, for each level (see :meth:`signalled_by` for the start).
+
+        ``tail`` is ``(rate, weight)`` of the geometric law ``P(N > n) = weight (1 − rate)ⁿ`` that holds
+        beyond the ladder's last rung.
+        """
         top = 0
         while exit_now + float(row @ self._signals[top]) < max(levels) and top < _DOUBLINGS:
             top += 1
