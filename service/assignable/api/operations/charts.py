@@ -120,7 +120,9 @@ class LimitsField(f.Object):
         self._opened = opened
         self._chart = chart
 
-    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> tuple[str, Any]:
+    def _deserialize(  # type: ignore[override]
+        self, value: Any, attr: str | None, data: Any, **kwargs: Any
+    ) -> tuple[str, Any]:
         if type(value) is dict:
             named = value.get("chart")
             if type(named) is str and named in CHARTS and named != self._chart.name:

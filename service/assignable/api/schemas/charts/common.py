@@ -50,8 +50,10 @@ class FitRequest(f.RequestShape):
         },
     )
     rules = f.Object(RulesRequest, metadata={"description": "Run rules; without them the limits alone."})
-    exclude = f.ObjectList(
-        ExclusionRequest, metadata={"description": "Baseline points with a known assignable cause."}
+    excluded = f.ObjectList(
+        ExclusionRequest,
+        data_key="exclude",
+        metadata={"description": "Baseline points with a known assignable cause."},
     )
 
 
@@ -72,7 +74,7 @@ def limit_basis(loaded: dict[str, Any]) -> LimitBasis:
 
 
 def exclusions(loaded: dict[str, Any]) -> tuple[Exclusion, ...]:
-    return tuple(Exclusion(**one) for one in loaded.get("exclude", ()))
+    return tuple(Exclusion(**one) for one in loaded.get("excluded", ()))
 
 
 class StandardsRequest(f.RequestShape):
