@@ -26,7 +26,7 @@ Sides = Literal["two", "upper", "lower"]
 LEVELS = (0.05, 0.25, 0.50, 0.75, 0.95)
 LONGEST_ARL = 1e15
 SMALLEST_SMOOTHING = 0.005
-LARGEST_LIMIT = 6.0
+LARGEST_LIMIT = 7.0
 LARGEST_DECISION = 50.0
 LARGEST_REFERENCE = 5.0
 LARGEST_SHIFT = 10.0
@@ -37,10 +37,10 @@ MOST_POINTS = 1_000_000
 _AGREEMENT = 2e-9
 _STEADY_AGREEMENT = 1e-7
 _GRIDS = (1.0, 1.35, 1.9, 2.7)
-# Time-varying EWMA limits: the distance left from the asymptote, relative, at which the power series
-# in that distance takes over from stepping, and the order of the series.
-_SERIES_FROM = 0.05
+# Time-varying EWMA limits: order of the power series in the distance left from the asymptote. It takes
+# over from stepping where its terms, which fall like (L²/2 · left)^m / m!, reach 1e-12 within that order.
 _SERIES_ORDER = 14
+_SERIES_FROM = (0.2, 1.8)
 # One-sided EWMA: the grid ends this many standard deviations below everything the statistic does.
 _FLOOR = 8.0
 
@@ -452,16 +452,18 @@ class _Growing:
         self.chart = chart
         self.unit, self.weights = gauss_legendre(chart.nodes(refinement))
         keep = (1.0 - chart.smoothing) ** 2
+        most, scaled = _SERIES_FROM
+        last = min(most, scaled / chart.limit**2)
         self.left = keep
-        high, nodes, weights = self._grid(keep)
+        high, nodes, weights = self._grid(keep, last)
         at = np.array([chart.start])
         self.law = chart.row(at, nodes, weights)[0]
         self.signals = [float(chart.exit(at, self._low(high), high)[0])]
         alive = 1.0 - self.signals[0]
-        while self.left > _SERIES_FROM and alive > 1e-18:
+        while self.left > last and alive > 1e-18:
             self.left *= keep
             before = nodes
-            high, nodes, weights = self._grid(self.left)
+            high, nodes, weights = self._grid(self.left, last)
             self.signals.append(float(self.law @ chart.exit(before, self._low(high), high)))
             self.law = self.law @ chart.row(before, nodes, weights)
             alive = float(self.law.sum())
@@ -470,10 +472,15 @@ class _Growing:
     def _low(self, high: float) -> float:
         return -high if self.chart.two_sided else self.chart.floor
 
-    def _grid(self, left: float) -> tuple[float, Array, Array]:
+    def _grid(self, left: float, last: float = 1.0) -> tuple[float, Array, Array]:
+        """Upper limit, nodes and weights; while ``left`` is above ``last``, only as many as the width asks for."""
         high = self.chart.edge * math.sqrt(1.0 - left)
         low = self._low(high)
-        return high, 0.5 * (high + low) + 0.5 * (high - low) * self.unit, 0.5 * (high - low) * self.weights
+        unit, weights = self.unit, self.weights
+        if left > last:
+            share = (high - low) / (self.chart.edge - self.chart.floor)
+            unit, weights = gauss_legendre(min(len(unit), 24 + 8 * math.ceil(share * len(unit) / 8.0)))
+        return high, 0.5 * (high + low) + 0.5 * (high - low) * unit, 0.5 * (high - low) * weights
 
     def _kernel_series(self) -> Array:
         """Taylor coefficients, in the distance left, of the step from one limit's grid to the next's."""
@@ -532,30 +539,40 @@ class _Growing:
         variance = float(pmf @ np.square(n - arl)) + square_left + 2.0 * about * mean_left + alive * about**2
         return _Moments(arl, math.sqrt(max(variance, 0.0)), steady, len(self.unit))
 
+    def mean(self, chain: StoppedChain, order: NDArray[np.intp]) -> float:
+        """Mean run length alone."""
+        pmf = np.array(self.signals)
+        arl = float(pmf @ np.arange(1, len(pmf) + 1))
+        if self.series is None:
+            return arl
+        means = self._series(chain.mean / chain.rate, order, np.zeros((_SERIES_ORDER, len(self.unit))))
+        return arl + len(pmf) * float(self.law.sum()) + float(self.law @ self._here(means))
+
     def _mean_series(self, chain: StoppedChain, order: NDArray[np.intp]) -> tuple[Array, Array]:
         """E[N] and E[N(N+1)/2] of what is left, from each node, at the distance reached."""
+        first = chain.mean / chain.rate
+        second = 0.5 * ((chain.variances() + np.square(chain.mean)) / chain.rate**2 + first)
+        means = self._series(first, order, np.zeros((_SERIES_ORDER, len(self.unit))))
+        return self._here(means), self._here(self._series(second, order, means))
+
+    def _series(self, settled: Array, order: NDArray[np.intp], source: Array) -> Array:
+        """Coefficients, in the distance left, of ``v(left) = source(left) + step(left) v(left q)``."""
         kernel, q = self.series, (1.0 - self.chart.smoothing) ** 2
         assert kernel is not None
-        size = len(self.unit)
-        first = np.empty(size)
-        second = np.empty(size)
-        first[order] = chain.mean / chain.rate
-        second[order] = 0.5 * (chain.variances() + np.square(chain.mean)) / chain.rate**2
-        second += 0.5 * first
-        means, pairs = np.empty((_SERIES_ORDER, size)), np.empty((_SERIES_ORDER, size))
-        means[0], pairs[0] = first, second
+        values: Array = np.empty_like(source)
+        values[0, order] = settled
         factors = q ** np.arange(_SERIES_ORDER)
         for m in range(1, _SERIES_ORDER):
-            known = kernel[1 : m + 1]
-            right = np.einsum("kij,kj->i", known, (factors[:m, None] * means[:m])[::-1])
-            right2 = np.einsum("kij,kj->i", known, (factors[:m, None] * pairs[:m])[::-1])
+            earlier = (factors[:m, None] * values[:m])[::-1]
+            right = np.matmul(kernel[1 : m + 1], earlier[:, :, None]).sum(axis=0)[:, 0] + source[m]
             system = -factors[m] * kernel[0]
-            system[np.diag_indices(size)] += 1.0
-            lu = scipy.linalg.lu_factor(system, overwrite_a=True, check_finite=False)
-            means[m] = scipy.linalg.lu_solve(lu, right, check_finite=False)
-            pairs[m] = scipy.linalg.lu_solve(lu, right2 + means[m], check_finite=False)
-        at = self.left ** np.arange(_SERIES_ORDER)
-        return at @ means, at @ pairs
+            system[np.diag_indices(len(right))] += 1.0
+            values[m] = np.linalg.solve(system, right)
+        return values
+
+    def _here(self, coefficients: Array) -> Array:
+        here: Array = self.left ** np.arange(_SERIES_ORDER) @ coefficients
+        return here
 
     def settle(self, most: int) -> None:
         """Step on by the series until the limits have settled, or ``most`` points are reached."""
@@ -589,7 +606,7 @@ def _ewma_growing_mean(chart: _Ewma, refinement: float = 1.15) -> float:
     chain, where, _ = _growing_parts(chart, growing)
     if chain.rate * LONGEST_ARL < 1.0:
         raise _beyond_reach("limit")
-    return growing.moments(chain, where, None).arl
+    return growing.mean(chain, where)
 
 
 def _ewma_growing(chart: _Ewma) -> MemoryRunLength:
