@@ -15,7 +15,9 @@ from ..data import Floats
 from ..errors import Fault, UnusableData, UnusableParameter
 from .variance_components import StudyNote, confidence_faults
 
+# Beyond these a square leaves the range of double precision.
 _LARGEST = 1e140
+_SMALLEST_SPREAD = 1e-140
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -124,7 +126,7 @@ def bias(levels: tuple[ReferenceLevel, ...], *, confidence: float = 0.95) -> Bia
     references = np.array([level.reference for level in by_level])
     count = int(sizes.sum())
     linearity = None
-    if float(np.ptp(references)) == 0:
+    if float(np.ptp(references)) < _SMALLEST_SPREAD:
         notes.append(
             StudyNote("one-reference", "There is one reference value only, so linearity cannot be judged.")
         )

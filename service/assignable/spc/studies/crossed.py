@@ -156,7 +156,8 @@ def crossed(
     cells = x.mean(axis=2)
     part_means, appraiser_means = cells.mean(axis=1), cells.mean(axis=0)
     interaction = cells - part_means[:, None] - appraiser_means
-    floor = rounding_sum_of_squares(measurements)
+    largest = float(np.abs(measurements).max())
+    floor = rounding_sum_of_squares(measurements.size, largest)
 
     def square(values: Floats, copies: int) -> float:
         total = copies * float(np.sum(values**2))
@@ -174,13 +175,18 @@ def crossed(
         rest = anova_row("repeatability", ss_rest, df_rest, None, 0.0, 0)
         if o == 1:
             return (part, rest, total_row((part, rest))), Model(
-                np.array([ss_part / df_part, ms_rest]), (df_part, df_rest), (0.0, 1.0), (1 / r, -1 / r)
+                np.array([ss_part / df_part, ms_rest]),
+                (df_part, df_rest),
+                largest,
+                (0.0, 1.0),
+                (1 / r, -1 / r),
             )
         appraiser = anova_row("appraiser", ss_appraiser, df_appraiser, "repeatability", ms_rest, df_rest)
         rows = (part, appraiser, rest)
         return (*rows, total_row(rows)), Model(
             np.array([ss_part / df_part, ss_appraiser / df_appraiser, ms_rest]),
             (df_part, df_appraiser, df_rest),
+            largest,
             (0.0, 0.0, 1.0),
             (1 / (o * r), 0.0, -1 / (o * r)),
             (0.0, 1 / (p * r), -1 / (p * r)),
@@ -198,6 +204,7 @@ def crossed(
         return (*rows, total_row(rows)), Model(
             np.array([ss_part / df_part, ss_appraiser / df_appraiser, between, within]),
             (df_part, df_appraiser, df_interaction, df_error),
+            largest,
             (0.0, 0.0, 0.0, 1.0),
             (1 / (o * r), 0.0, -1 / (o * r), 0.0),
             (0.0, 1 / (p * r), -1 / (p * r), 0.0),

@@ -108,7 +108,8 @@ def nested(
     grand_mean = centre + lost
     parts = x.mean(axis=2)
     appraisers = parts.mean(axis=1)
-    floor = rounding_sum_of_squares(measurements)
+    largest = float(np.abs(measurements).max())
+    floor = rounding_sum_of_squares(measurements.size, largest)
 
     def square(values: Floats, copies: int) -> float:
         total = copies * float(np.sum(values**2))
@@ -126,12 +127,15 @@ def nested(
     notes: list[StudyNote] = []
     if a == 1:
         notes.append(ONE_APPRAISER)
-        model = Model(np.array([ms_part, ms_error]), (df_part, df_error), (0.0, 1.0), (1 / r, -1 / r))
+        model = Model(
+            np.array([ms_part, ms_error]), (df_part, df_error), largest, (0.0, 1.0), (1 / r, -1 / r)
+        )
     else:
         rows = (anova_row("appraiser", ss_appraiser, df_appraiser, "part", ms_part, df_part), *rows)
         model = Model(
             np.array([ss_appraiser / df_appraiser, ms_part, ms_error]),
             (df_appraiser, df_part, df_error),
+            largest,
             (0.0, 0.0, 1.0),
             (0.0, 1 / r, -1 / r),
             (1 / (b * r), -1 / (b * r), 0.0),

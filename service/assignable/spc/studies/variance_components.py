@@ -190,9 +190,10 @@ class Terms:
 
 def confidence_faults(confidence: float) -> list[Fault]:
     """What is wrong with a confidence level, if anything."""
-    if 0 < confidence < 1:
+    # Nearer to 1 the tails are the rounding of the level, and the bounds with them.
+    if 0 < confidence <= 0.999999:
         return []
-    detail = "The confidence level must lie between 0 and 1, for example 0.95."
+    detail = "The confidence level must lie between 0 and 0.999999; 0.95 is usual."
     return [Fault("out-of-range", detail, ("confidence",))]
 
 
@@ -264,9 +265,9 @@ def complete(measurements: Floats, *, axes: str) -> None:
         )
 
 
-def rounding_sum_of_squares(measurements: Floats) -> float:
+def rounding_sum_of_squares(count: int, largest: float) -> float:
     """The sum of squares below which a difference is the rounding of the numbers sent, not variation."""
-    return measurements.size * (4.0 * np.finfo(np.float64).eps * float(np.abs(measurements).max())) ** 2
+    return count * (4.0 * float(np.finfo(np.float64).eps) * largest) ** 2
 
 
 # -- distributions -----------------------------------------------------------------------------------
@@ -403,12 +404,13 @@ ONE_APPRAISER = StudyNote(
 class Model:
     """A fitted balanced random model.
 
-    mean_squares: (q,); df: (q,). Of each component, the coefficients over the mean squares; ``None``
-    for one the model has not got.
+    mean_squares: (q,); df: (q,); largest: the largest measurement in size. Of each component, the
+    coefficients over the mean squares; ``None`` for one the model has not got.
     """
 
     mean_squares: Floats
     df: tuple[int, ...]
+    largest: float
     repeatability: tuple[float, ...]
     part: tuple[float, ...]
     appraiser: tuple[float, ...] | None = None
@@ -430,6 +432,19 @@ class Assembled:
     capability: CapabilityEffect
     chart: ChartEffect | None
     notes: tuple[StudyNote, ...]
+
+
+def _estimate(coefficients: Sequence[float], model: Model) -> float:
+    """The combination, zero where equal mean squares leave only the rounding of their difference.
+
+    Rounding comes from the measurements as sent, whose last digit may be large beside their spread, and
+    from the arithmetic.
+    """
+    estimate = float(combination(coefficients, model.mean_squares))
+    added = float(combination([abs(c) for c in coefficients], model.mean_squares))
+    eps = float(np.finfo(np.float64).eps)
+    noise = 64 * eps * added + 16 * eps * model.largest * math.sqrt(added)
+    return estimate if abs(estimate) > noise else 0.0
 
 
 def _part_over_gauge(model: Model, confidence: float) -> tuple[float, float] | None:
@@ -458,7 +473,7 @@ def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
         "part_by_appraiser": model.part_by_appraiser,
         "part": model.part,
     }
-    estimates = {name: float(combination(c, model.mean_squares)) for name, c in own.items() if c is not None}
+    estimates = {name: _estimate(c, model) for name, c in own.items() if c is not None}
     values = {name: max(estimate, 0.0) for name, estimate in estimates.items()}
     for name, estimate in estimates.items():
         if estimate < 0:
@@ -490,7 +505,7 @@ def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
 
     def component(*names: str) -> VarianceComponent:
         coefficients = model.added(*(own[name] for name in names))
-        estimate = float(combination(coefficients, model.mean_squares))
+        estimate = _estimate(coefficients, model)
         variance = sum(values.get(name, 0.0) for name in names)
         low, high = combination_interval(coefficients, model.mean_squares, model.df, asked.confidence)
         lower, upper = max(float(low), 0.0), max(float(high), 0.0)
