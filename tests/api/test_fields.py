@@ -40,6 +40,8 @@ FIELDS = {
     "integers": f.IntegerList(min_items=0),
     "table": f.NumberTable(ragged=True, max_rows=3, max_columns=3),
     "table-no-null": f.NumberTable(ragged=True, nullable=False, min_columns=2),
+    "one-or-many": f.OneOrMany(f.NumberList(above=0, max_items=3)),
+    "one-or-many-null": f.OneOrMany(f.CountList(nullable=True), allow_none=True),
     "ids": f.StringList(max_items=3, max_length=4),
 }
 

@@ -77,6 +77,8 @@ def means(order: dict[str, Any]) -> dict[str, Any]:
             Fault("too-few", "Two cars are needed.", ("data", "values")),
             Fault("odd-key", "A key that needs escaping.", ("data", "a/b~c d")),
         )
+    if np.isnan(values).all(axis=1).any():
+        raise UnusableData.of("empty-car", "A car has no values.", "data", "values")
     if order["multiple"] == 9:
         raise DocumentMismatch.of("other-chart", "These are limits of another chart.", "limits")
     return {"means": np.nanmean(values, axis=1), "upper": None}

@@ -19,7 +19,7 @@ CONTRACT_VERSION = "1.0.0"
 _OPTIONS = orjson.OPT_SERIALIZE_NUMPY
 
 
-class NotFinite(Exception):  # noqa: N818
+class NotFinite(Exception):
     """A result holds NaN or infinity at ``path``: a fault of the service, never an answer."""
 
     def __init__(self, path: str) -> None:

@@ -300,7 +300,7 @@ def _load_query(shape: Schema) -> Any:
 
 
 def _reads_json(parameter: Any) -> bool:
-    return parameter.json_schema()["type"] in ("number", "integer", "boolean")
+    return parameter.json_schema().get("type") in ("number", "integer", "boolean")
 
 
 def _from_text(text: str) -> Any:

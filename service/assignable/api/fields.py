@@ -85,6 +85,8 @@ def json_schema_of(field: ma.fields.Field[Any], ret: Json) -> Json:
     if isinstance(field.parent, AnswerShape):
         schema = _without_default_bounds(schema)
     if field.allow_none:
+        if "anyOf" in schema:
+            return {"anyOf": [*schema["anyOf"], {"type": "null"}]}
         schema["type"] = [schema["type"], "null"]
         if "enum" in schema:
             schema["enum"] = [*schema["enum"], None]
@@ -96,11 +98,13 @@ _ONLY_FOR_REQUESTS = ("maxItems", "maxLength", "pattern")
 
 def _without_default_bounds(schema: Json) -> Json:
     """What protects the service from its callers binds callers only; answers promise less."""
-    kept = {
+    kept: Json = {
         name: _without_default_bounds(value) if name == "items" else value
         for name, value in schema.items()
         if name not in _ONLY_FOR_REQUESTS
     }
+    if "anyOf" in kept:
+        kept["anyOf"] = [_without_default_bounds(choice) for choice in kept["anyOf"]]
     for name, bound in (("minimum", -1), ("maximum", 1)):
         if kept.get(name) in (bound * LARGEST, bound * LARGEST_INTEGER):
             del kept[name]

@@ -220,7 +220,7 @@ class Entry:
     parameter: str | None = None
 
 
-class Problem(Exception):  # noqa: N818
+class Problem(Exception):
     """A failure ready to be answered; the edge's own layers raise it."""
 
     def __init__(

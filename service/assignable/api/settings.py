@@ -14,7 +14,7 @@ PREFIX = "ASSIGNABLE_"
 MIB = 1024 * 1024
 
 
-class BadSettings(Exception):  # noqa: N818
+class BadSettings(Exception):
     """Settings that cannot be used; one line a fault."""
 
 

@@ -28,7 +28,7 @@ _NUMBER = re.compile(rf"{_STRING}|(-?\d+(?:\.\d+)?(?:[eE][+-]?\d+)?)", re.DOTALL
 _LONGEST_INTEGER = 310  # digits; longer than any double can hold
 
 
-class BadJson(Exception):  # noqa: N818
+class BadJson(Exception):
     """A body that is not JSON; ``detail`` is a sentence, ``line`` and ``column`` count from 1."""
 
     def __init__(self, code: str, detail: str, line: int = 1, column: int = 1) -> None:
@@ -76,7 +76,7 @@ def _keys_of(document: object) -> int:
     return keys
 
 
-class _Refused(Exception):  # noqa: N818
+class _Refused(Exception):
     """Raised inside the decoder, which alone knows that something is wrong but not where."""
 
 
