@@ -33,6 +33,7 @@ from assignable.api.app import create_app
 from assignable.api.observability import Log
 from assignable.api.operations import documentation, health
 from assignable.api.settings import BadSettings, Settings, described
+from assignable.api.shedding import Slots
 
 GOOD = {"data": {"values": [[2.51, 2.49], [2.48, None]]}}
 LIMIT = 4096
@@ -295,6 +296,20 @@ def test_busy_is_said_at_once(app: Flask) -> None:
         at_work.join(10)
     assert first[0].status_code == 200
     assert post(app.test_client(), GOOD).status_code == 200
+
+
+def test_a_place_that_is_given_back_in_time_is_taken() -> None:
+    slots = Slots(1, wait_seconds=10)
+    with slots:
+        waiting = threading.Thread(target=lambda: slots.__enter__() or slots.__exit__(None, None, None))
+        waiting.start()
+        waiting.join(0.1)
+        assert waiting.is_alive()
+    waiting.join(5)
+    assert not waiting.is_alive()
+    short = Slots(1, wait_seconds=0.01)
+    with short, pytest.raises(problems.Problem), short:
+        pass
 
 
 def test_a_refused_request_gives_its_place_back(client: FlaskClient) -> None:
