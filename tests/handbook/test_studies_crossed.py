@@ -341,6 +341,27 @@ class TestIndependently:
             below = mpmath.gammainc(30, 0, chi_square / 2, regularized=True)
             assert float(below) == pytest.approx(probability, rel=1e-9)
 
+    @pytest.mark.parametrize(("a", "b"), [(9, 18), (2, 18), (19, 60)])
+    def test_difference_is_bounded_by_zero_where_the_f_test_decides(self, a: int, b: int) -> None:
+        # Ting et al. (1990) choose the cross term so that interval and F test agree on zero.
+        coefficients = (1.0, -1.0)
+        for bound, tail in ((0, 0.025), (1, 0.975)):
+            squares = np.array([f_upper_quantile(tail, a, b), 1.0])
+            assert combination_interval(coefficients, squares, (a, b), 0.95)[bound] == pytest.approx(
+                0, abs=1e-9
+            )
+
+    def test_bounds_of_categories_and_shares_agree(self) -> None:
+        found = crossed(_AIAG).discrimination
+        for ratio, share in (
+            (found.distinct_categories_ratio, found.gauge_contribution_percent),
+            (found.distinct_categories_ratio_lower, found.gauge_contribution_percent_upper),
+            (found.distinct_categories_ratio_upper, found.gauge_contribution_percent_lower),
+        ):
+            assert ratio is not None
+            assert share is not None
+            assert ratio**2 == pytest.approx(2 * (100 / share - 1))
+
     def test_one_way_share_is_exact(self) -> None:
         # Searle, Casella & McCulloch (1992): F/F_tail - 1 over r bounds the ratio of the components exactly.
         study = crossed(_DYESTUFF)
@@ -543,7 +564,7 @@ class TestDegenerate:
             (np.arange(5.0).reshape(5, 1, 1), "nothing-repeated"),
             (np.ones((3, 2)), "empty"),
             (np.ones((3, 0, 2)), "empty"),
-            (np.full((3, 2, 2), 1e200), "out-of-range"),
+            (np.full((3, 2, 2), 1e70), "out-of-range"),
         ],
     )
     def test_unusable(self, x: np.ndarray, code: str) -> None:

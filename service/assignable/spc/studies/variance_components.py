@@ -20,9 +20,9 @@ from ..errors import Fault, UnusableData, UnusableParameter
 
 # A few hundred sentences help nobody; the edge stops at the same number.
 _MOST_FAULTS = 100
-# Beyond this a square leaves the range of double precision.
-_LARGEST = 1e140
-_SMALLEST_SPREAD = 1e-140
+# Beyond these the fourth powers in the intervals leave the range of double precision.
+_LARGEST = 1e60
+_SMALLEST_SPREAD = 1e-60
 # The rule of the AIAG manual counts with 1.41 where the derivation says √2.
 _CATEGORIES_RULE = 1.41
 
