@@ -10,13 +10,16 @@ from . import problems
 from .contract import Contract
 from .cors import Cors
 from .observability import REQUEST_ID, Edge, Log
-from .operations import charts, documentation, health
+from .operations import capability, charts, designs, documentation, health, reference
 from .settings import Settings
 
 Register = Callable[[Contract], None]
 
 OPERATIONS: tuple[Register, ...] = (
     charts.register,
+    capability.register,
+    designs.register,
+    reference.register,
     health.register,
     documentation.register,
 )

@@ -725,3 +725,20 @@ class OneOrMany(_Array):
         if isinstance(one["type"], list):
             one["type"] = one["type"][0]
         return {"anyOf": [one, self._many.json_schema()]}
+
+
+class ListOrTable(_Array):
+    """Numbers in one list, or in rows; an array (n,) or (rows, columns)."""
+
+    def __init__(self, flat: NumberList, table: NumberTable, **kwargs: Any) -> None:
+        super().__init__(min_items=1, max_items=max(flat._max_items, table._max_items), **kwargs)
+        self._flat = flat
+        self._table = table
+
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> np.ndarray:
+        rows = self._bounded(value)
+        road = self._table if any(type(row) is list for row in rows) else self._flat
+        return road._deserialize(value, attr, data, **kwargs)
+
+    def json_schema(self) -> Json:
+        return {"anyOf": [self._flat.json_schema(), self._table.json_schema()]}

@@ -14,7 +14,12 @@ FORMAT = 1
 
 def limits_document(chart: str, limits: object, characteristic: Mapping[str, Any] | None) -> dict[str, Any]:
     """The document that freezes some limits: their parameters, what they are of, and the digest."""
-    document = {"chart": chart, "format": FORMAT, "characteristic": dict(characteristic or {}), **plain(limits)}
+    document = {
+        "chart": chart,
+        "format": FORMAT,
+        "characteristic": dict(characteristic or {}),
+        **plain(limits),
+    }
     document["digest"] = digest(document)
     document["seal"] = None
     return document

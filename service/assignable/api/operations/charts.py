@@ -200,7 +200,7 @@ def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
     )
     fit_answer = _extend(
         f.AnswerShape,
-        f"{stem}Fit",
+        f"{stem}LimitsAnswer",
         "Limits to freeze, with the evidence for them.",
         {
             "limits": f.Object(
@@ -260,7 +260,7 @@ def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
     )
     judge_answer = _extend(
         f.AnswerShape,
-        f"{stem}Judgement",
+        f"{stem}SignalsAnswer",
         "New data judged by frozen limits.",
         {
             **_judged(panels),

@@ -168,8 +168,9 @@ def _bound(hint: Any, given: dict[Any, Any]) -> Any:
 
 def _sequence(item: Any, nested: Callable[[Any], Any], loading: bool, options: dict[str, Any]) -> Any:
     if item is float:
-        kept = {"max_items": _LONGEST_KEPT} if loading else {}
-        return (_Tuple if loading else f.NumberList)(min_items=0, **kept, **options)
+        if loading:
+            return _Tuple(min_items=0, max_items=_LONGEST_KEPT, **options)
+        return f.NumberList(min_items=0, **options)
     if item is int:
         return f.IntegerList(min_items=0, **options)
     if item is str:

@@ -380,7 +380,7 @@ def optimal_ewma(
 
     lowest = math.log(smallest)
     guess = math.log(0.15) + 1.4 * math.log(shift) - 0.2 * math.log(target / 500.0)
-    log_best, least = _least(cost, guess, 0.35, lowest, 0.0)
+    log_best, least = _least(cost, guess, 0.8 if time_varying and state == "zero-state" else 0.35, lowest, 0.0)
     at_bound: Bound | None = "lowest" if log_best == lowest else "highest" if log_best == 0.0 else None
     best = {"lowest": smallest, "highest": 1.0, None: math.exp(log_best)}[at_bound]
     limit = limit_for(best)

@@ -7,7 +7,7 @@ action (a warning does not stop the process), from a fresh start with windows st
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from functools import lru_cache
 
 import numpy as np
@@ -98,18 +98,28 @@ def _once(rules: Sequence[Rule], z: Floats) -> Booleans:
 def _normal_law(rules: tuple[Rule, ...], lower: float, upper: float, shift: float, scale: float) -> Decay:
     _check(lower, upper, shift, scale)
     acting = _acting(rules)
-    outside = scipy.special.ndtr(np.array([(lower - shift) / scale, (shift - upper) / scale]))
-    if len(acting) == 1:
-        return geometric(float(outside.sum()))
+    cuts, z = _regions(acting, lower, upper)
+    at = (cuts - shift) / scale
+    outside = scipy.special.ndtr(np.array([at[0], -at[-1]]))
+    return _region_law(acting, z, _between(at[:-1], at[1:]), float(outside.sum()))
+
+
+def _regions(acting: tuple[Rule, ...], lower: float, upper: float) -> tuple[Floats, Floats]:
+    """The lines that cut a statistic into regions, rising, the limits first and last; a value inside each."""
     lines = {sign * rule.distance for rule in acting[1:] if rule.distance is not None for sign in (-1.0, 1.0)}
     inner = sorted(line for line in lines if lower < line < upper)
     cuts = np.array([lower, *inner, upper])
-    # A value inside each region; where a region has no end, any beyond its one line.
+    # Where a region has no end, any value beyond its one line.
     ends = np.clip(cuts, cuts[1] - 2.0, cuts[-2] + 2.0) if inner else np.clip(cuts, -1e9, 1e9)
-    z = (ends[1:] + ends[:-1]) / 2.0
-    probability = _between((cuts[:-1] - shift) / scale, (cuts[1:] - shift) / scale)
+    return cuts, (ends[1:] + ends[:-1]) / 2.0
+
+
+def _region_law(acting: tuple[Rule, ...], z: Floats, probability: Floats, outside: float) -> Decay:
+    """The law for a continuous statistic with ``probability`` in each region, and ``outside`` the limits."""
+    if len(acting) == 1:
+        return geometric(outside)
     alone = _once(acting, z)
-    beyond = float(outside.sum() + probability[alone].sum())
+    beyond = float(outside + probability[alone].sum())
     probability, z = probability[~alone], z[~alone]
     seen = tuple(watch for watch in watches(acting, z) if watch.k > 1) if len(z) else ()
     order = Order.of(acting)
@@ -120,6 +130,27 @@ def _normal_law(rules: tuple[Rule, ...], lower: float, upper: float, shift: floa
     if order is None:
         return chain_law(automaton, probability, beyond, memory=memory)
     return order_law(automaton, order, probability, beyond, memory=memory)
+
+
+def continuous(
+    rules: Sequence[Rule] = (LIMIT,),
+    *,
+    between: Callable[[Floats], Floats],
+    lower: float = -3.0,
+    upper: float = 3.0,
+) -> RunLength:
+    """The run length of a continuous statistic of any distribution.
+
+    between: (c + 1,) probabilities below the first of c rising lines, between each two, and above the
+    last one, the lines (c,) in the unit in which the rules state their distance (``z`` of a ``Track``);
+    lower, upper: the control limits in that unit, infinite where there is none.
+    Raises ``UnusableParameter`` as ``shewhart``. [champ-woodall-1987]
+    """
+    _check(lower, upper, 0.0, 1.0)
+    acting = _acting(rules)
+    cuts, z = _regions(acting, lower, upper)
+    probability = between(cuts)
+    return _region_law(acting, z, probability[1:-1], float(probability[0] + probability[-1])).run_length()
 
 
 def discrete(

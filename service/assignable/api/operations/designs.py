@@ -1,0 +1,201 @@
+"""Operations of chart design."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+
+from ...spc import runlength
+from ...spc.charts.counts import count_law, count_lines
+from ...spc.design import subgroups
+from ...spc.errors import UnusableParameter
+from ...spc.runlength.of_rules import discrete_law
+from .. import problems
+from ..contract import Contract
+from ..schemas.common import rules_of
+from ..schemas.designs import (
+    USUAL_SHIFTS,
+    RunLengthRequest,
+    RunLengthsAnswer,
+    SubgroupDesignAnswer,
+    SubgroupDesignRequest,
+    count_basis,
+    one_chart,
+    shifts_of,
+)
+
+TAG = "Chart design"
+USUAL_FACTORS = (1.0, 0.5, 1.5, 2.0, 3.0)
+
+
+def _plan(loaded: dict[str, Any]) -> subgroups.SamplingPlan:
+    return subgroups.SamplingPlan(loaded["size"], loaded["interval_hours"], loaded["sigma_multiple"])
+
+
+def design_subgroups(loaded: dict[str, Any]) -> dict[str, Any]:
+    """The design of a mean chart."""
+    if not any(name in loaded for name in ("detect", "present", "candidates")):
+        raise UnusableParameter.of(
+            "nothing-asked",
+            "Ask for a plan with `detect`, or give a `present` plan or `candidates`.",
+            "detect",
+        )
+    shift, moment = loaded["shift"], loaded["shift_moment"]
+    rules = rules_of(loaded.get("rules")) or None
+    shifts = loaded.get("shifts", np.array(USUAL_SHIFTS))
+
+    def characteristics(plan: subgroups.SamplingPlan | subgroups.PlanPerformance) -> Any:
+        return subgroups.operating_characteristics(
+            plan.size, plan.interval_hours, plan.multiple, shifts, rules
+        )
+
+    plan = present = comparison = found = None
+    if "detect" in loaded:
+        asked = loaded["detect"]
+        plan = subgroups.plan(
+            shift,
+            power=asked.get("power"),
+            ats_hours=asked.get("ats_hours"),
+            shift_moment=moment,
+            multiple=asked.get("sigma_multiple"),
+            in_control_arl=asked.get("in_control_arl"),
+            false_alarm_probability=asked.get("false_alarm_probability"),
+            interval_hours=asked.get("interval_hours"),
+            hourly_pieces=asked.get("hourly_pieces"),
+        )
+        found = characteristics(plan)
+    if "present" in loaded:
+        present = characteristics(_plan(loaded["present"]))
+    if loaded.get("candidates"):
+        comparison = subgroups.compare(
+            [_plan(one) for one in loaded["candidates"]], shift, shift_moment=moment
+        )
+    return {"plan": plan, "characteristics": found, "present": present, "comparison": comparison}
+
+
+def _told(
+    found: runlength.RunLength,
+    within: np.ndarray,
+    probability: np.ndarray,
+    hours: float | None,
+    **at: float | None,
+) -> dict[str, Any]:
+    return {
+        "shift": at.get("shift"),
+        "scale": at.get("scale"),
+        "factor": at.get("factor"),
+        "arl": found.arl,
+        "sd": found.sd,
+        "percentiles": [{"probability": q, "points": points} for q, points in found.percentiles],
+        "within": [
+            {"points": points, "probability": p}
+            for points, p in zip(within.tolist(), probability.tolist(), strict=True)
+        ],
+        "ats_hours": None if hours is None else hours * found.arl,
+        "method": found.method,
+        "accuracy": found.accuracy,
+    }
+
+
+def run_length(loaded: dict[str, Any]) -> dict[str, Any]:
+    """Run lengths of a chart with known parameters."""
+    kind = one_chart(loaded, ("shewhart", "counts"))
+    within = loaded.get("within_points", np.empty(0, dtype=np.int64))
+    hours = loaded.get("interval_hours")
+    chart = loaded[kind]
+    if kind == "counts":
+        return {"run_lengths": _of_counts(loaded, chart, within, hours)}
+    if "factors" in loaded:
+        raise UnusableParameter.of("not-for-this-chart", "Factors are for charts of counts.", "factors")
+    rules = rules_of(chart.get("rules"))
+    reach = chart["sigma_multiple"]
+    lower = -reach if chart["sides"] != "upper" else -math.inf
+    upper = reach if chart["sides"] != "lower" else math.inf
+    root = math.sqrt(chart["subgroup_size"])
+    told = []
+    for shift, scale in shifts_of(loaded):
+        found = runlength.shewhart(rules, lower=lower, upper=upper, shift=shift * root, scale=scale)
+        probability = runlength.signal_probability(
+            within.astype(np.float64), rules, lower=lower, upper=upper, shift=shift * root, scale=scale
+        )
+        told.append(_told(found, within, probability, hours, shift=shift, scale=scale))
+    return {"run_lengths": told}
+
+
+def _of_counts(
+    loaded: dict[str, Any], chart: dict[str, Any], within: np.ndarray, hours: float | None
+) -> list[dict[str, Any]]:
+    for name in ("shifts", "scales"):
+        if name in loaded:
+            raise UnusableParameter.of(
+                "not-for-this-chart", "Counts shift by factors on their mean; give `factors`.", name
+            )
+    binomial, mean, size = chart["law"] == "binomial", chart["mean"], chart["size"]
+    if binomial and not (mean < 1 and size == int(size)):
+        raise UnusableParameter.of(
+            "not-binomial",
+            "A binomial chart needs a proportion below 1 and a whole number of units.",
+            "counts",
+            "mean" if mean >= 1 else "size",
+        )
+    rules = rules_of(chart.get("rules"))
+    lines = count_lines(binomial, mean, np.array([float(size)]), count_basis(chart))
+    told = []
+    for at, factor in enumerate(loaded.get("factors", np.array(USUAL_FACTORS)).tolist()):
+        if binomial and mean * factor >= 1:
+            if "factors" not in loaded:
+                continue
+            raise UnusableParameter.of(
+                "proportion-above-one", f"{factor:g} times {mean:g} is no proportion below 1.", "factors", at
+            )
+        support, probability = count_law(binomial, mean * factor, float(size))
+        law = discrete_law(
+            rules,
+            support=support,
+            probability=probability,
+            centre=float(lines.centre[0]),
+            sigma=float(lines.sd[0]),
+            lower=float(lines.lower[0]),
+            upper=float(lines.upper[0]),
+        )
+        reached = law.probability(within.astype(np.float64))
+        told.append(_told(law.run_length(), within, reached, hours, factor=factor))
+    return told
+
+
+def register(contract: Contract) -> None:
+    """Binds the operations of chart design."""
+    contract.tag(TAG, "How many pieces, how often, which limits, and what they cost in false alarms.")
+    contract.operation(
+        "POST",
+        "/v1/designs/subgroups",
+        operation_id="designSubgroups",
+        tag=TAG,
+        summary="Design of a mean chart",
+        description="Size and interval for a shift to detect at a required power or time to signal; operating "
+        "characteristics of a plan; candidate plans ranked by their time to signal. Parameters are taken as "
+        "known. Sources: montgomery-2013, champ-woodall-1987 with rules.",
+        request=SubgroupDesignRequest(),
+        response=SubgroupDesignAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example="designs-subgroups",
+        provenance="mean-chart-design",
+    )(design_subgroups)
+    contract.operation(
+        "POST",
+        "/v1/designs/run-length",
+        operation_id="computeRunLength",
+        tag=TAG,
+        summary="Run lengths of a chart",
+        description="Average, standard deviation and percentiles of the number of points until the first signal, "
+        "and the probability of a signal within so many points, with any mix of rules: exact by a Markov chain "
+        "for rules on zones, by a spectral method with rules on order. Sources: brook-evans-1972, "
+        "champ-woodall-1987.",
+        request=RunLengthRequest(),
+        response=RunLengthsAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example=("designs-run-length", "designs-run-length-counts"),
+        provenance="run-length",
+    )(run_length)

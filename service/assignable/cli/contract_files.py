@@ -1,0 +1,136 @@
+"""The committed contract: its document, and an executed answer beside every example request."""
+
+from __future__ import annotations
+
+import sys
+from dataclasses import dataclass
+from difflib import unified_diff
+from itertools import islice
+from pathlib import Path
+from uuid import uuid4
+
+import orjson
+
+from ..api import problems
+from ..api.answers import JSON
+from ..api.app import create_app
+from ..api.contract import Contract, examples_directory
+from ..api.settings import Settings
+
+MEND = "assignable contract --write"
+
+_REQUEST = ".request.json"
+_RESPONSE = ".response.json"
+_SHOWN = 24  # lines of a difference
+
+
+@dataclass(frozen=True, slots=True)
+class Executed:
+    """The answers, indented, by the file each belongs in; and what cannot be answered, in sentences."""
+
+    answers: dict[Path, bytes]
+    faults: tuple[str, ...]
+
+
+def execute(contract: Contract, directory: Path) -> Executed:
+    """Runs every example request of the directory through the operations that name it."""
+    found: dict[Path, bytes] = {}
+    faults: list[str] = []
+    requests = {path.name.removesuffix(_REQUEST): path for path in sorted(directory.glob("*" + _REQUEST))}
+    for operation in contract.operations.values():
+        if operation.request is not None and not operation.examples:
+            faults.append(f"{operation.operation_id} takes a body and has no example.")
+        for name in operation.examples:
+            if name not in requests:
+                faults.append(f"{operation.operation_id}: there is no {name}{_REQUEST}.")
+    for name, path in requests.items():
+        naming = [operation for operation in contract.operations.values() if name in operation.examples]
+        if not naming:
+            faults.append(f"{path.name}: no operation names it.")
+        for operation in naming:
+            try:
+                answer = operation.execute(path.read_bytes())
+            except Exception as error:
+                problem = problems.of(error)
+                if problem.kind is problems.INTERNAL:
+                    raise
+                shown = orjson.dumps(problem.members(str(uuid4())), option=orjson.OPT_INDENT_2).decode()
+                faults.append(f"{path.name}: {operation.operation_id} answers a problem.\n{shown}")
+                continue
+            if operation.media_type == JSON:
+                # The answer's text is one line; indented it can be read, and its changes reviewed.
+                file = directory / f"{name}{_RESPONSE}"
+                indented = orjson.dumps(orjson.loads(answer), option=orjson.OPT_INDENT_2) + b"\n"
+                if found.setdefault(file, indented) != indented:
+                    faults.append(f"{path.name}: two operations answer it differently.")
+    return Executed(found, tuple(faults))
+
+
+def write() -> int:
+    """Writes answers and document anew; answers to examples that are gone are removed."""
+    directory = examples_directory()
+    executed = execute(_contract(), directory)
+    if executed.faults:
+        return _failed(executed.faults)
+    for path in set(directory.glob("*" + _RESPONSE)) - set(executed.answers):
+        path.unlink()
+    for path, answer in executed.answers.items():
+        path.write_bytes(answer)
+    # A new one: the document shows the answers just written.
+    document = _document(_contract())
+    (directory.parent / "openapi.json").write_bytes(document)
+    print(f"Wrote {len(executed.answers)} answers and openapi.json ({len(document)} bytes).")
+    return 0
+
+
+def check() -> int:
+    """Compares, byte for byte; returns 1 and shows the difference where there is one."""
+    directory = examples_directory()
+    contract = _contract()
+    executed = execute(contract, directory)
+    expected = dict(executed.answers)
+    differences = [
+        f"{path.name} answers an example that is not there."
+        for path in sorted(set(directory.glob("*" + _RESPONSE)) - set(expected))
+    ]
+    expected[directory.parent / "openapi.json"] = _document(contract)
+    for path, now in expected.items():
+        committed = path.read_bytes() if path.exists() else b""
+        if committed != now:
+            differences.append(_difference(path.name, committed, now))
+    if executed.faults or differences:
+        mend = [] if executed.faults else [f"If the change is meant: {MEND}"]
+        return _failed((*executed.faults, *differences, *mend))
+    print(f"The contract is current: openapi.json and {len(executed.answers)} executed examples.")
+    return 0
+
+
+def _contract() -> Contract:
+    contract: Contract = create_app(Settings()).extensions["assignable.contract"]
+    return contract
+
+
+def _document(contract: Contract) -> bytes:
+    return contract.document() + b"\n"
+
+
+def _difference(name: str, committed: bytes, now: bytes) -> str:
+    if not committed:
+        return f"{name} is not there."
+    lines = unified_diff(
+        committed.decode().splitlines(),
+        now.decode().splitlines(),
+        f"{name} (committed)",
+        f"{name} (now)",
+        n=1,
+        lineterm="",
+    )
+    shown = list(islice(lines, _SHOWN + 1))
+    if len(shown) > _SHOWN:
+        shown[_SHOWN] = "..."
+    return "\n".join(line[:160] for line in shown)
+
+
+def _failed(sentences: tuple[str, ...]) -> int:
+    print("\n".join(sentences), file=sys.stderr)
+    return 1

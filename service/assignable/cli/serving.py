@@ -1,0 +1,230 @@
+"""The service under gunicorn: the one home of its settings, for the command and for the image.
+
+Threads wait on clients, processes compute, and a place to compute is what bounds the work
+(:mod:`assignable.api.shedding`): a thread cannot be stopped, so ``timeout`` only tells a dead worker.
+Everything is loaded, and has computed once, before the workers are forked; they share that memory.
+"""
+
+from __future__ import annotations
+
+import ipaddress
+import logging
+import os
+import socket
+import subprocess
+import sys
+from collections.abc import Mapping
+from contextlib import suppress
+from datetime import UTC, datetime
+from importlib import import_module
+from pathlib import Path
+from traceback import extract_tb
+from typing import Any
+from uuid import uuid4
+
+import orjson
+from flask import Flask
+from gunicorn.app.base import BaseApplication
+from gunicorn.glogging import Logger
+from gunicorn.http.errors import ParseException
+from gunicorn.workers.gthread import ThreadWorker
+
+from ..api import problems
+from ..api.app import create_app
+from ..api.contract import Contract, examples_directory
+from ..api.settings import BadSettings, Settings
+
+ALLOW_REMOTE = "ASSIGNABLE_ALLOW_REMOTE"
+
+# Seconds a stopping server waits for the requests it has; whoever kills it must wait longer.
+GRACE_SECONDS = 30
+
+_LOADED_BEFORE_FORK = ("scipy.special", "scipy.linalg", "scipy.sparse")
+_FIRST_CALCULATION = ("fitXbarRLimits", "xbar-r-limits")
+_LOG_LEVEL = {"requests": "info", "errors": "warning", "off": "critical"}
+
+
+class CannotServe(Exception):
+    """Why the service does not start, in one sentence and what to do."""
+
+
+def serve(environment: Mapping[str, str], *, demonstrate: bool = False) -> int:
+    """Serves until it is told to stop; returns the status to exit with."""
+    try:
+        settings = settings_from(environment)
+        _require_free(settings)
+    except (BadSettings, CannotServe) as error:
+        print(error, file=sys.stderr)
+        return 2
+    app = create_app(settings)
+    warm_up(app)
+    Server(app, settings, demonstrate=demonstrate).run()
+    return 0
+
+
+def settings_from(environment: Mapping[str, str]) -> Settings:
+    """The settings, with an address this service may listen on.
+
+    Nobody has to prove who they are yet, so that any machine that reaches the port may compute: an
+    address that is not this machine's own needs ``ASSIGNABLE_ALLOW_REMOTE=yes``.
+    Raises :class:`BadSettings`, :class:`CannotServe`.
+    """
+    allowed = environment.get(ALLOW_REMOTE, "no")
+    if allowed not in ("yes", "no"):
+        raise BadSettings(f"{ALLOW_REMOTE}: yes or no is expected.")
+    settings = Settings.from_environment(
+        {name: value for name, value in environment.items() if name != ALLOW_REMOTE}
+    )
+    if allowed == "no" and not _is_loopback(settings.host):
+        raise CannotServe(
+            f"{settings.host} can be reached from other machines, and this service asks nobody who they are. "
+            "Listen on 127.0.0.1, or, behind a proxy or in a network you trust, "
+            f"say --allow-remote or set {ALLOW_REMOTE}=yes."
+        )
+    return settings
+
+
+def _is_loopback(host: str) -> bool:
+    try:
+        found = socket.getaddrinfo(host, None, type=socket.SOCK_STREAM)
+    except OSError:
+        raise CannotServe(f"{host} is no address of this machine.") from None
+    return all(ipaddress.ip_address(entry[4][0]).is_loopback for entry in found)
+
+
+def _require_free(settings: Settings) -> None:
+    """Says at once that a port is taken, where gunicorn would try for some seconds first."""
+    family, kind, _, _, address = socket.getaddrinfo(settings.host, settings.port, type=socket.SOCK_STREAM)[0]
+    with socket.socket(family, kind) as probe:
+        probe.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+        try:
+            probe.bind(address)
+        except OSError as error:
+            raise CannotServe(
+                f"Cannot listen on port {settings.port} of {settings.host} "
+                f"({error.strerror}). Choose another with --port."
+            ) from None
+
+
+def warm_up(app: Flask) -> None:
+    """Loads what is loaded late, and computes once; raises what these raise."""
+    for module in _LOADED_BEFORE_FORK:
+        import_module(module)
+    contract: Contract = app.extensions["assignable.contract"]
+    contract.operations["getReadiness"].view()
+    operation_id, example = _FIRST_CALCULATION
+    body = (examples_directory() / f"{example}.request.json").read_bytes()
+    contract.operations[operation_id].execute(body)
+    contract.document()
+
+
+def url_of(settings: Settings) -> str:
+    """Where a browser on this machine finds the service."""
+    host = {"0.0.0.0": "127.0.0.1", "::": "::1"}.get(settings.host, settings.host)  # noqa: S104
+    return f"http://{_in_url(host)}:{settings.port}"
+
+
+def _in_url(host: str) -> str:
+    return f"[{host}]" if ":" in host else host
+
+
+def options(settings: Settings) -> dict[str, Any]:
+    """Gunicorn's settings."""
+    chosen: dict[str, Any] = {
+        "bind": f"{_in_url(settings.host)}:{settings.port}",
+        "worker_class": Worker,
+        "workers": settings.workers,
+        "threads": settings.threads,
+        "preload_app": True,
+        "timeout": 60,
+        "graceful_timeout": GRACE_SECONDS,
+        "keepalive": 15,
+        "max_requests": 0,  # workers do not grow; each new one would have to warm up
+        "control_socket_disable": True,  # else it wants to write below the home directory
+        "accesslog": None,  # the application's own log has a line for each request
+        "logger_class": ServerLog,
+        "loglevel": _LOG_LEVEL[settings.log],
+        "proc_name": "assignable",
+    }
+    memory = Path("/dev/shm")  # noqa: S108 - a heartbeat's file on a disk can stall a worker
+    if memory.is_dir() and os.access(memory, os.W_OK):
+        chosen["worker_tmp_dir"] = str(memory)
+    return chosen
+
+
+class Server(BaseApplication):  # type: ignore[misc]
+    """Gunicorn around an application that is loaded already."""
+
+    def __init__(self, app: Flask, settings: Settings, *, demonstrate: bool = False) -> None:
+        self._app = app
+        self._settings = settings
+        self._demonstrate = demonstrate
+        super().__init__()
+
+    def load_config(self) -> None:
+        for name, value in options(self._settings).items():
+            self.cfg.set(name, value)
+        if self._demonstrate:
+            self.cfg.set("when_ready", lambda _: _demonstration(url_of(self._settings)))
+
+    def load(self) -> Flask:
+        return self._app
+
+
+def _demonstration(url: str) -> None:
+    """Shows the main job from a process of its own: no thread may run in one that forks workers."""
+    subprocess.Popen([sys.executable, "-m", "assignable.cli", "demo", "--url", url])  # noqa: S603
+
+
+class Worker(ThreadWorker):  # type: ignore[misc]
+    """Answers what never becomes a request, a broken request line say, as the service answers everything."""
+
+    def handle_error(self, _request: Any, client: socket.socket, _address: Any, error: Exception) -> None:
+        if isinstance(error, ParseException):
+            problem = problems.Problem(
+                problems.BAD_REQUEST, "The request line, a header or the body's framing cannot be read."
+            )
+            self.log.warning("A request could not be read: %s", type(error).__name__)
+        else:
+            problem = problems.Problem(problems.INTERNAL)
+            self.log.exception("A request could not be handled")
+        request_id = str(uuid4())
+        body = problem.body(request_id)
+        reason = "Bad Request" if problem.kind.status == 400 else "Internal Server Error"
+        head = (
+            f"HTTP/1.1 {problem.kind.status} {reason}\r\nConnection: close\r\nCache-Control: no-store\r\n"
+            f"X-Request-ID: {request_id}\r\nX-Content-Type-Options: nosniff\r\n"
+            f"Content-Type: {problems.MEDIA_TYPE}\r\nContent-Length: {len(body)}\r\n\r\n"
+        )
+        with suppress(OSError):
+            client.settimeout(1)
+            client.sendall(head.encode() + body)
+
+
+class ServerLog(Logger):  # type: ignore[misc]
+    """What gunicorn has to say, as lines of the same log as the application's."""
+
+    def setup(self, cfg: Any) -> None:
+        super().setup(cfg)
+        for handler in self.error_log.handlers:
+            handler.setFormatter(_Line())
+
+
+class _Line(logging.Formatter):
+    def format(self, record: logging.LogRecord) -> str:
+        line: dict[str, object] = {
+            "ts": datetime.fromtimestamp(record.created, UTC)
+            .isoformat(timespec="milliseconds")
+            .replace("+00:00", "Z"),
+            "level": record.levelname.lower(),
+            "event": "server",
+            "message": record.getMessage(),
+            "pid": record.process,
+        }
+        if record.exc_info and record.exc_info[1] is not None:
+            line["error"] = type(record.exc_info[1]).__name__
+            line["where"] = [
+                f"{os.path.basename(frame.filename)}:{frame.lineno} {frame.name}"
+                for frame in extract_tb(record.exc_info[2])
+            ]
+        return orjson.dumps(line).decode()

@@ -1,0 +1,144 @@
+"""The methods of the service: what each computes, by which formula, and on whose authority."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Annotated
+
+
+@dataclass(frozen=True, slots=True)
+class Method:
+    """A method as an auditor asks for it."""
+
+    name: Annotated[str, "As `provenance.method` of an answer names it, or part of such a method."]
+    title: Annotated[str, "In words."]
+    formula: Annotated[str, "The formula as text."]
+    used_by: Annotated[tuple[str, ...], "Operation ids or charts that use it."]
+    references: Annotated[tuple[str, ...], "Keys of the sources."]
+
+
+METHODS = (
+    Method(
+        "factors",
+        "Control chart factors",
+        "d2 = E[W], d3 = SD[W] of the range W of n standard normals by quadrature; "
+        "c4 = sqrt(2/(n-1)) Gamma(n/2)/Gamma((n-1)/2); all other factors from these.",
+        ("getFactors", "xbar-r", "xbar-s", "individuals"),
+        ("tippett-1925", "hartley-1942", "abramowitz-stegun-1964", "iso-7870-2", "astm-e2587"),
+    ),
+    Method(
+        "mean-range",
+        "Within-subgroup sigma from ranges",
+        "sigma = sum f_i (R_i/d2(n_i)) / sum f_i, f_i = (d2(n_i)/d3(n_i))^2; R-bar/d2 where sizes agree.",
+        ("xbar-r", "xbar-s"),
+        ("burr-1969", "patnaik-1950"),
+    ),
+    Method(
+        "mean-sd",
+        "Within-subgroup sigma from standard deviations",
+        "sigma = sum h_i (S_i/c4(n_i)) / sum h_i, h_i = c4^2/(1-c4^2); S-bar/c4 where sizes agree.",
+        ("xbar-r", "xbar-s"),
+        ("burr-1969",),
+    ),
+    Method(
+        "pooled-sd",
+        "Within-subgroup sigma from pooled variances",
+        "sigma = sqrt(sum (n_i-1) S_i^2 / nu) / c4(nu+1), nu = sum (n_i-1).",
+        ("xbar-r", "xbar-s", "assessMeasurements"),
+        ("iso-7870-2",),
+    ),
+    Method(
+        "median-range",
+        "Within-subgroup sigma from the median range",
+        "sigma = median of R_i over the median of W for its size.",
+        ("xbar-r", "xbar-s"),
+        ("iso-7870-2",),
+    ),
+    Method(
+        "moving-range",
+        "Sigma from successive differences",
+        "sigma = mean moving range of span w over d2(w), or median moving range over the median of W.",
+        ("individuals", "assessMeasurements"),
+        ("iso-7870-2", "cryer-ryan-1990"),
+    ),
+    Method(
+        "mean-and-spread-charts",
+        "Charts of means with ranges or standard deviations",
+        "mean: centre +- k sigma/sqrt(n_i); range: d2 sigma +- k d3 sigma; deviation: c4 sigma +- k sigma "
+        "sqrt(1-c4^2); or equal-tail limits of the exact distributions.",
+        ("xbar-r", "xbar-s"),
+        ("shewhart-1931", "iso-7870-2", "astm-e2587"),
+    ),
+    Method(
+        "single-values-chart",
+        "Charts of single values and moving ranges",
+        "values: mean +- k sigma; moving range: d2(w) sigma +- k d3(w) sigma.",
+        ("individuals",),
+        ("iso-7870-2", "astm-e2587"),
+    ),
+    Method(
+        "count-charts",
+        "Charts of counts",
+        "p-bar = sum x_i/sum n_i, p-bar +- k sqrt(p-bar(1-p-bar)/n_i); u-bar = sum c_i/sum a_i, "
+        "u-bar +- k sqrt(u-bar/a_i); or exact equal-tail limits on whole counts.",
+        ("p", "np", "c", "u"),
+        ("shewhart-1931", "iso-7870-2", "astm-e2587"),
+    ),
+    Method(
+        "run-rules",
+        "Run rules",
+        "zone, mixture, stratification, trend and alternation; see GET /v1/rules for their exact meaning.",
+        ("getRules", "xbar-r", "xbar-s", "individuals", "p", "np", "c", "u"),
+        ("western-electric-1956", "nelson-1984"),
+    ),
+    Method(
+        "run-length",
+        "Run lengths of rules with known parameters",
+        "absorbing Markov chain of the rules' automaton; with rules on order, times the last value.",
+        ("computeRunLength", "designSubgroups"),
+        ("brook-evans-1972", "champ-woodall-1987"),
+    ),
+    Method(
+        "baseline-diagnostics",
+        "Diagnostics of a baseline",
+        "Ljung-Box portmanteau of autocorrelation; Anderson-Darling and Shapiro-Wilk normality; Bartlett's "
+        "test of spread; chi-square index of dispersion of counts.",
+        ("xbar-r", "xbar-s", "individuals", "p", "np", "c", "u", "assessMeasurements"),
+        (
+            "ljung-box-1978",
+            "dagostino-stephens-1986",
+            "royston-1995",
+            "bartlett-1937",
+            "fisher-1925",
+            "cochran-1954",
+            "laney-2002",
+        ),
+    ),
+    Method(
+        "capability-of-measurements",
+        "Capability and performance of normal characteristics",
+        "Cp = (U-L)/(6 sigma), Cpk = min(U-mean, mean-L)/(3 sigma) with the within-subgroup sigma; Pp, Ppk with "
+        "the overall one; Cpm, Cpmk with the root mean square deviation from the target.",
+        ("assessMeasurements",),
+        (
+            "kane-1986",
+            "chou-owen-borrego-1990",
+            "bissell-1990",
+            "boyles-1991",
+            "chen-hsu-1995",
+            "weerahandi-1993",
+            "clopper-pearson-1934",
+            "iso-22514-1",
+            "iso-22514-2",
+            "iso-22514-3",
+        ),
+    ),
+    Method(
+        "mean-chart-design",
+        "Design of a mean chart",
+        "beta = Phi(k - shift sqrt(n)) - Phi(-k - shift sqrt(n)); ARL = 1/(1-beta); ATS = interval ARL.",
+        ("designSubgroups",),
+        ("montgomery-2013", "reynolds-1988"),
+    ),
+)
+"""Every method, in the order in which they are listed."""
