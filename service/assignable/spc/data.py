@@ -151,6 +151,50 @@ class Individuals:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class Vectors:
+    """Several characteristics of one piece, in time order.
+
+    values: (m, p) single observations, or (m, n, p) subgroups of n pieces. A point with a NaN is a gap
+    as a whole: what is left of it is not used. names: of the p characteristics, in the columns' order.
+    """
+
+    values: Floats
+    names: tuple[str, ...]
+
+    def __post_init__(self) -> None:
+        if self.values.ndim not in (2, 3) or self.values.size == 0:
+            raise UnusableData.of("empty", "There are no observations in the data.", "data", "values")
+        if self.values.shape[-1] != len(self.names):
+            raise UnusableData.of(
+                "unequal-length",
+                f"There are {self.values.shape[-1]} numbers in a row for {len(self.names)} variables.",
+                "data",
+                "values",
+            )
+        object.__setattr__(self, "values", _frozen(self.values))
+
+    @property
+    def subgroup_size(self) -> int:
+        """Pieces in a subgroup; 1 for single observations."""
+        return int(self.values.shape[1]) if self.values.ndim == 3 else 1
+
+    def present(self) -> Booleans:
+        """(m,), False at gaps."""
+        flat = self.values.reshape(len(self.values), -1)
+        present: Booleans = ~np.isnan(flat).any(axis=1)
+        return present
+
+    def means(self) -> Floats:
+        """(m, p) the observations, or the means of the subgroups."""
+        if self.values.ndim == 2:
+            return self.values
+        mean = self.values.mean(axis=1)
+        # A second pass over the residuals restores the digits the first one lost.
+        corrected: Floats = mean + (self.values - mean[:, None, :]).mean(axis=1)
+        return corrected
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class Counts:
     """Counts in time order.
 

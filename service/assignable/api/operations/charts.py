@@ -157,8 +157,8 @@ class SignalAnswer(derive.answer(Signal)):  # type: ignore[misc]
     )
 
 
-def _judged(panels: type) -> dict[str, Any]:
-    return {
+def _judged(chart: Chart, panels: type) -> dict[str, Any]:
+    members = {
         "verdict": f.Choice(
             "in-control",
             "signal",
@@ -177,6 +177,14 @@ def _judged(panels: type) -> dict[str, Any]:
         "ids": f.StringList(min_items=0, metadata={"description": "Your names for the points, where given."}),
         "times": f.StringList(min_items=0, metadata={"description": "Their times, where given."}),
     }
+    if chart.details is not None:
+        members["details"] = f.Object(
+            derive.answer(chart.details),
+            required=True,
+            allow_none=True,
+            metadata={"description": "What this chart tells besides; null where there is nothing to tell."},
+        )
+    return members
 
 
 def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
@@ -196,7 +204,7 @@ def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
     )
     panels = derive.answer(chart.plotted)
     baseline = _extend(
-        f.AnswerShape, f"{stem}Baseline", "The baseline judged by its own limits.", _judged(panels)
+        f.AnswerShape, f"{stem}Baseline", "The baseline judged by its own limits.", _judged(chart, panels)
     )
     fit_answer = _extend(
         f.AnswerShape,
@@ -263,7 +271,7 @@ def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
         f"{stem}SignalsAnswer",
         "New data judged by frozen limits.",
         {
-            **_judged(panels),
+            **_judged(chart, panels),
             "carry": f.Object(
                 carry_answer, required=True, metadata={"description": "Send it with the next data."}
             ),
@@ -298,6 +306,11 @@ def _labelled(found: Sequence[Signal], labels: Mapping[str, Sequence[str]]) -> l
     ]
 
 
+def _besides(chart: Chart, judged: Any) -> dict[str, Any]:
+    """What this chart alone tells."""
+    return {} if chart.details is None else {"details": judged.details}
+
+
 def fit(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, Any]:
     """Limits from a baseline, or from standards."""
     posted = loaded.get("data")
@@ -314,6 +327,7 @@ def fit(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, 
             "signals": _labelled(baseline.signals, labels),
             "signals_found": baseline.signals_found,
             **labels,
+            **_besides(chart, baseline),
         },
         "diagnostics": result.diagnostics,
         "performance": result.performance,
@@ -336,6 +350,7 @@ def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str
         "signals": _labelled(result.signals, labels),
         "signals_found": result.signals_found,
         **labels,
+        **_besides(chart, result),
         "carry": carry_document(chart.name, digest, result.carry),
         "cautions": cautions(result.cautions),
     }

@@ -215,6 +215,7 @@ class Baseline(Generic[Q]):
     panels: Annotated[Q, "The plotted points."]
     signals: Annotated[tuple[Signal, ...], "In the order of the points."]
     signals_found: Annotated[int, "How many signals there are, told or not."]
+    details: Annotated[object | None, "What this chart tells besides."] = None
 
 
 @dataclass(frozen=True, slots=True)

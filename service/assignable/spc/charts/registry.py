@@ -14,6 +14,9 @@ class Chart:
     fit: ``(data | None, options) -> fit``, with ``limits``, ``baseline``, ``diagnostics``,
     ``performance`` and ``cautions``. judge: ``(limits, data, carry | None) -> judgement``, with
     ``verdict``, ``panels``, ``signals``, ``signals_found``, ``carry`` and ``cautions``.
+
+    details: the dataclass of what this chart tells besides, where it does; its baseline and its
+    judgement then have a member ``details`` (the object, or ``None``).
     """
 
     name: str
@@ -29,6 +32,7 @@ class Chart:
     plotted: Any
     carry: Any
     diagnostics: Any
+    details: Any = None
 
     @property
     def stem(self) -> str:
