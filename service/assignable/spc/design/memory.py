@@ -31,6 +31,7 @@ MOST_SHIFTS = 40
 _TARGET_AGREEMENT = 1e-11
 _OPTIMUM_WIDTH = 2e-5
 _ROUNDS = 60
+_SMALLEST_SHARE = 0.25
 _NEIGHBOURS = (0.5, 0.8, 1.25, 2.0)
 _TABLE = (0.5, 0.75, 1.0, 1.5, 2.0, 3.0)
 
@@ -95,9 +96,14 @@ class EwmaDesign:
 
 @dataclass(frozen=True, slots=True)
 class CusumDesign:
-    """The CUSUM that finds ``shift`` soonest at ``in_control_arl``."""
+    """The CUSUM that finds ``shift`` soonest at ``in_control_arl``.
+
+    ``at_bound``: the least was at that end of the range of k (``lowest``: the least k sought, or where h
+    reaches 50), so it is not an optimum of its own.
+    """
 
     reference: float
+    at_bound: Bound | None
     decision: float
     head_start: float
     sides: run.Sides
@@ -115,7 +121,7 @@ class CusumDesign:
 
 
 def _solve(log_ratio: Callable[[float], float], start: float, low: float, high: float) -> float | None:
-    """Where an increasing ``log_ratio`` is zero in (low, high): secant steps kept in a bracket, or None."""
+    """Where an increasing ``log_ratio`` is zero in [low, high]: secant steps kept in a bracket, or None."""
     x = min(max(start, low), high)
     below, above = low, high
     before: tuple[float, float] | None = None
@@ -123,33 +129,63 @@ def _solve(log_ratio: Callable[[float], float], start: float, low: float, high: 
         value = log_ratio(x)
         if abs(value) < _TARGET_AGREEMENT:
             return x
+        if (value < 0.0 and x >= high) or (value > 0.0 and x <= low):
+            return None
         if value < 0.0:
             below = x
         else:
             above = x
-        if (value < 0.0 and x >= high) or (value > 0.0 and x <= low):
-            return None
-        if before is None:
-            step = x + math.copysign(0.02 * x + 1e-4, -value)
-        else:
+        step = x + math.copysign(0.02 * x + 1e-4, -value)
+        if before is not None:
             slope = (value - before[1]) / (x - before[0])
-            step = x - value / slope if slope > 0.0 else math.inf
+            step = x - value / slope if slope > 0.0 else 0.5 * (below + above)
         before = (x, value)
         if not below < step < above:
-            # A bound itself is tried once, so that a target beyond it is noticed.
-            step = high if step >= high and above == high else 0.5 * (below + above)
-        if step in (below, above) and step not in (low, high):
-            return x
+            # A bound not yet tried is tried itself, so that a target beyond it is noticed.
+            untried = (step >= above == high) or (step <= below == low)
+            step = min(max(step, low), high) if untried else 0.5 * (below + above)
+        if step == x:
+            return x if abs(value) < 10.0 * _TARGET_AGREEMENT else None
         x = step
-    return x
+    return None
+
+
+def _or_none(cost: Callable[[float], float]) -> Callable[[float], float]:
+    """``cost``, infinite where no chart has the in-control run length asked for."""
+
+    def guarded(at: float) -> float:
+        try:
+            return cost(at)
+        except UnusableParameter:
+            return math.inf
+
+    return guarded
 
 
 def _least(
     cost: Callable[[float], float], guess: float, step: float, low: float, high: float
 ) -> tuple[float, float]:
-    """The minimum of ``cost`` nearest downhill from ``guess`` in [low, high]: a walk, then golden section."""
+    """The minimum of ``cost`` nearest downhill from ``guess`` in [low, high]: a walk, then golden section.
+
+    From an infinite cost the walk first goes up, then down, to where it is finite.
+    """
+    cost = _or_none(cost)
     middle = min(max(guess, low), high)
     at = cost(middle)
+    aim = step
+    while math.isinf(at):
+        if middle == high:
+            aim = -step
+        elif middle == low and aim < 0.0:
+            break
+        middle = min(max(middle + aim, low), high)
+        at = cost(middle)
+    if math.isinf(at):
+        raise UnusableParameter.of(
+            "no-such-design",
+            "No chart of this kind has the in-control average run length asked for.",
+            "in_control_arl",
+        )
     left, right = max(middle - step, low), min(middle + step, high)
     at_left = cost(left) if left < middle else math.inf
     at_right = cost(right) if right > middle else math.inf
@@ -380,7 +416,9 @@ def optimal_ewma(
 
     lowest = math.log(smallest)
     guess = math.log(0.15) + 1.4 * math.log(shift) - 0.2 * math.log(target / 500.0)
-    log_best, least = _least(cost, guess, 0.8 if time_varying and state == "zero-state" else 0.35, lowest, 0.0)
+    log_best, least = _least(
+        cost, guess, 0.8 if time_varying and state == "zero-state" else 0.35, lowest, 0.0
+    )
     at_bound: Bound | None = "lowest" if log_best == lowest else "highest" if log_best == 0.0 else None
     best = {"lowest": smallest, "highest": 1.0, None: math.exp(log_best)}[at_bound]
     limit = limit_for(best)
@@ -391,8 +429,7 @@ def optimal_ewma(
     neighbours = []
     for factor in _NEIGHBOURS:
         smoothing = factor * best
-        if smallest <= smoothing <= 1.0:
-            found = arl(smoothing)
+        if smallest <= smoothing <= 1.0 and math.isfinite(found := _or_none(arl)(smoothing)):
             neighbours.append(EwmaNeighbour(smoothing, limit_for(smoothing), found, found / least - 1.0))
     shewhart_limit, shewhart = _shewhart(target, two_sided, table, state, interval_hours)
     return EwmaDesign(
@@ -490,13 +527,16 @@ def optimal_cusum(
     state: State = "zero-state",
     interval_hours: float | None = None,
     shifts: tuple[float, ...] | None = None,
+    smallest_reference: float | None = None,
 ) -> CusumDesign:
     """The CUSUM with the least ARL at ``shift`` for a stated in-control ARL.
 
     ``shift``: its size in sigma units of the plotted statistic, 0.05 to 10 (downwards for the lower side);
     the table's ``shifts`` carry their own sign. ``state`` as for :func:`optimal_ewma`. From zero and with
     one side the answer is k = shift/2 exactly [moustakides-1986]; with two sides, a head start or from
-    steady state it is near that. Raises :class:`UnusableParameter` outside these ranges.
+    steady state it is near that. k is sought from ``smallest_reference`` up (shift/4 unless given; 0.001 or
+    more): two sides with a much smaller k need far longer than their in-control ARL to reach the conditional
+    steady state, so that its ARL says nothing there. Raises :class:`UnusableParameter` outside these ranges.
     """
     shift = _within(shift, "shift", SMALLEST_SHIFT, run.LARGEST_SHIFT)
     target = _target(in_control_arl)
@@ -524,15 +564,23 @@ def optimal_cusum(
     # Beyond the highest reference value even a decision interval of zero runs too long in control.
     highest = -float(scipy.special.ndtri(1.0 / (target * (2.0 if sides == "two" else 1.0))))
     highest = min(highest - 1e-3 * abs(highest) - 1e-4, run.LARGEST_REFERENCE)
-    lowest = 0.02
-    if highest <= lowest:
+    lowest = min(_SMALLEST_SHARE * shift, 0.5 * highest)
+    if smallest_reference is not None:
+        lowest = _within(smallest_reference, "smallest_reference", 1e-3, run.LARGEST_REFERENCE)
+    if highest <= max(lowest, 0.0):
         raise UnusableParameter.of(
             "no-such-design",
-            f"An in-control average run length of {target:g} is too short for a CUSUM with these sides.",
+            f"An in-control average run length of {target:g} is too short for a CUSUM with these sides and a "
+            f"reference value of {max(lowest, 0.0):g} or more.",
             "in_control_arl",
         )
     best, least = _least(arl, 0.5 * shift, max(0.1 * shift, 0.02), lowest, highest)
     decision = decision_for(best)
+    at_bound: Bound | None = None
+    if best <= lowest or decision > 0.999 * run.LARGEST_DECISION:
+        at_bound = "lowest"
+    elif best >= highest:
+        at_bound = "highest"
 
     def length(at: float) -> run.MemoryRunLength:
         return run.cusum(
@@ -542,8 +590,7 @@ def optimal_cusum(
     neighbours = []
     for factor in _NEIGHBOURS:
         reference = factor * best
-        if lowest <= reference <= highest:
-            found = arl(reference)
+        if lowest <= reference <= highest and math.isfinite(found := _or_none(arl)(reference)):
             neighbours.append(CusumNeighbour(reference, decision_for(reference), found, found / least - 1.0))
     shewhart_limit, shewhart = _shewhart(
         target,
@@ -554,6 +601,7 @@ def optimal_cusum(
     )
     return CusumDesign(
         reference=best,
+        at_bound=at_bound,
         decision=decision,
         head_start=fraction * decision,
         sides=sides,
