@@ -159,7 +159,8 @@ class Plot:
         def line(at: float | Floats | None, bound: float) -> Floats:
             if isinstance(at, np.ndarray):
                 return at if whole else at[index]
-            return np.broadcast_to(np.float64(bound if at is None else at), shape)
+            # np.broadcast_to does the same at ten times the cost, which small requests would feel.
+            return np.ndarray(shape, np.float64, np.array(bound if at is None else at), 0, (0,))
 
         return Panel(
             index,
@@ -287,6 +288,22 @@ def exclusion_mask(points: int, exclude: Sequence[Exclusion]) -> Booleans | None
     kept = np.ones(points, dtype=bool)
     kept[list(seen)] = False
     return kept
+
+
+def standards_alone(given: Standards, exclude: Sequence[Exclusion]) -> list[Fault]:
+    """The faults of a fit without data, which needs both standards and can exclude nothing."""
+    faults = [
+        Fault(
+            "data-missing",
+            "Without baseline data both standards must be given: the mean and the sigma.",
+            ("standards", name),
+        )
+        for name, value in (("mean", given.mean), ("sigma", given.sigma))
+        if value is None
+    ]
+    if exclude:
+        faults.append(Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",)))
+    return faults
 
 
 def too_many_signals(watched: Watched) -> tuple[Caution, ...]:

@@ -12,7 +12,7 @@ from .. import cautions as caution
 from .. import diagnostics
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals
-from ..errors import Fault, UnusableData, UnusableParameter
+from ..errors import UnusableData, UnusableParameter
 from ..rules import Rule, Signal, Tail, watched
 from ..sigma import moving_range, moving_ranges
 from .common import (
@@ -30,6 +30,7 @@ from .common import (
     Verdict,
     Watched,
     exclusion_mask,
+    standards_alone,
     too_many_signals,
     watch,
 )
@@ -171,20 +172,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
     rules = watched(options.rules)
     given, basis = options.standards, options.basis
     if data is None:
-        faults = [
-            Fault(
-                "data-missing",
-                "Without baseline data both standards must be given: the mean and the sigma.",
-                ("standards", name),
-            )
-            for name, value in (("mean", given.mean), ("sigma", given.sigma))
-            if value is None
-        ]
-        if options.exclude:
-            faults.append(
-                Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",))
-            )
-        if faults:
+        if faults := standards_alone(given, options.exclude):
             raise UnusableParameter(*faults)
         assert given.mean is not None
         assert given.sigma is not None
@@ -203,7 +191,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
             "data",
             "values",
         )
-    mean = given.mean if given.mean is not None else _centre(used, filled)
+    mean = given.mean if given.mean is not None else mean_of_values(used, filled)
     if given.sigma is not None:
         sigma, estimator, freedom = given.sigma, "given", None
     else:
@@ -237,7 +225,8 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
     )
 
 
-def _centre(values: Floats, filled: int) -> float:
+def mean_of_values(values: Floats, filled: int) -> float:
+    """The mean of the ``filled`` values that are there; a second pass restores the first one's lost digits."""
     present = values if filled == len(values) else values[~np.isnan(values)]
     first = float(present.mean())
     return first + float((present - first).mean())

@@ -37,6 +37,7 @@ from .common import (
     Verdict,
     Watched,
     exclusion_mask,
+    standards_alone,
     too_many_signals,
     watch,
 )
@@ -215,15 +216,7 @@ def _frozen_lines(size: int | None, spread: Spread, centre: float, sigma: float,
 def _check(options: SubgroupOptions, statistics: SubgroupStatistics | None, spread: Spread) -> None:
     given = options.standards
     if statistics is None:
-        missing = [name for name in ("mean", "sigma") if getattr(given, name) is None]
-        faults = [
-            Fault(
-                "data-missing",
-                "Without baseline data both standards must be given: the mean and the sigma.",
-                ("standards", name),
-            )
-            for name in missing
-        ]
+        faults = standards_alone(given, options.exclude)
         if options.subgroup_size is None:
             faults.append(
                 Fault(
@@ -231,10 +224,6 @@ def _check(options: SubgroupOptions, statistics: SubgroupStatistics | None, spre
                     "Without baseline data the subgroup size must be given.",
                     ("subgroup_size",),
                 )
-            )
-        if options.exclude:
-            faults.append(
-                Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",))
             )
         if faults:
             raise UnusableParameter(*faults)
@@ -291,7 +280,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
             "data",
         )
     total = int(used.size.sum())
-    mean = given.mean if given.mean is not None else _centre(used, total)
+    mean = given.mean if given.mean is not None else grand_mean(used, total)
     if given.sigma is not None:
         sigma, estimator, freedom = given.sigma, "given", None
     else:
@@ -306,7 +295,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     panels = _PANELS[spread](plots[0].panel(), plots[1].panel())
     baseline = Baseline(seen.verdict, panels, seen.signals, seen.found)
     typical = float(size) if size is not None else total / filled
-    found = _diagnose(data, used, kept)
+    found = diagnose(data, used, kept)
     performance = mean_performance(rules, basis, typical, spread)
     return SubgroupFit(
         limits,
@@ -317,7 +306,8 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     )
 
 
-def _centre(used: SubgroupStatistics, total: int) -> float:
+def grand_mean(used: SubgroupStatistics, total: int) -> float:
+    """The mean of all ``total`` values; a second pass restores the digits that the first one lost."""
     weights = used.size
     mean = np.where(weights > 0, used.mean, 0.0)
     first = float(weights @ mean) / total
@@ -366,9 +356,10 @@ def _watch(
     return means.with_(spreads), after
 
 
-def _diagnose(
+def diagnose(
     data: Subgroups | SubgroupSummary | None, used: SubgroupStatistics, kept: Booleans | None
 ) -> SubgroupDiagnostics:
+    """What a baseline of subgroups shows; ``used`` has the subgroups not ``kept`` turned into gaps."""
     values = data.values if isinstance(data, Subgroups) else None
     if values is not None and kept is not None:
         values = np.where(kept[:, None], values, np.nan)
@@ -419,11 +410,12 @@ def judge(
         seen.signals,
         seen.found,
         SubgroupCarry(before.points + len(statistics.size), tail),
-        (*_size_cautions(limits.subgroup_size, statistics.size), *too_many_signals(seen)),
+        (*size_cautions(limits.subgroup_size, statistics.size), *too_many_signals(seen)),
     )
 
 
-def _size_cautions(frozen: int | None, sizes: Integers) -> tuple[Caution, ...]:
+def size_cautions(frozen: int | None, sizes: Integers) -> tuple[Caution, ...]:
+    """The caution that subgroups are not of the size the limits were set for, where that is so."""
     if frozen is None:
         return ()
     other = (sizes != frozen) & (sizes > 0)
