@@ -98,10 +98,10 @@ def _capability(answer: Answer) -> Iterator[str]:
 
 
 def _run_length(answer: Answer) -> Iterator[str]:
-    shifts = _found(answer, "shifts")
-    if isinstance(shifts, list):
-        told = [f"{entry['shift']:g} sigma: {entry['arl']:.1f}" for entry in shifts if "arl" in entry]
-        yield "cars until a signal, on average, by shift of the mean: " + "; ".join(told[:6])
+    for row in answer["run_lengths"]:
+        moved = f"mean moved by {row['shift']:g} sigma" if row["shift"] else "nothing has changed"
+        hours = f", {row['ats_hours']:.1f} hours" if row.get("ats_hours") is not None else ""
+        yield f"{moved}: a signal after {row['arl']:.1f} cars on average{hours}"
 
 
 STEPS: tuple[Step, ...] = (
