@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from base64 import b64encode
-from collections.abc import Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import fields, is_dataclass
 from functools import cache
 from hashlib import sha256
 from math import isfinite
+from operator import attrgetter
 from typing import Any
 
 import numpy as np
@@ -42,39 +43,74 @@ def dumps(result: Any) -> bytes:
 
 def refuse_not_finite(result: Any) -> None:
     """Raises :class:`NotFinite` where NaN or infinity stands anywhere in a result."""
-    for path in _not_finite(result, "$"):
-        raise NotFinite(path)
+    stack = [result]
+    while stack:
+        value = stack.pop()
+        kind = type(value)
+        if kind in _HARMLESS:
+            continue
+        if kind is float:
+            if value - value != 0.0:
+                break
+        elif kind is dict:
+            stack.extend(value.values())
+        elif kind is list or kind is tuple:
+            stack.extend(value)
+        elif kind is np.ndarray:
+            if value.dtype.kind == "f":
+                if not np.isfinite(value).all():
+                    break
+            elif value.dtype.kind == "O":
+                stack.append(value.tolist())
+        elif (members := _members(kind)) is not None:
+            stack.extend(members(value))
+        elif isinstance(value, np.floating) and not np.isfinite(value):
+            break
+    else:
+        return
+    raise NotFinite(next(_not_finite(result, "$")))
+
+
+_HARMLESS = frozenset((str, int, bool, type(None)))
+
+
+@cache
+def _members(kind: type) -> Callable[[Any], Iterable[Any]] | None:
+    """What gives all fields of a dataclass at once."""
+    if not is_dataclass(kind):
+        return None
+    names = [entry.name for entry in fields(kind)]
+    if len(names) < 2:
+        return lambda value: [getattr(value, name) for name in names]
+    return attrgetter(*names)
 
 
 def _plainer(value: object) -> object:
-    """What the writer does not take as it is: strided arrays, arrays of texts or objects."""
+    """What the writer does not take as it is: one number seen many times, strided arrays, arrays of texts."""
     if isinstance(value, np.ndarray):
+        if value.ndim == 1 and value.strides == (0,) and value.dtype.kind == "f":
+            one = orjson.dumps(float(value[0]))
+            return orjson.Fragment(b"[" + b",".join([one] * len(value)) + b"]")
         return value.tolist() if value.dtype.kind in "OUS" else np.ascontiguousarray(value)
     raise TypeError(f"no JSON for {type(value).__name__}")
 
 
 def _not_finite(value: Any, path: str) -> Iterator[str]:
-    kind = type(value)
-    if kind is str or kind is int or kind is bool or value is None:
-        return
-    if isinstance(value, float):
+    """Where the numbers that are none stand: the slow road, for the message."""
+    if isinstance(value, (float, np.floating)):
         if not isfinite(value):
             yield path
     elif isinstance(value, np.ndarray):
-        if value.dtype.kind == "f":
-            if not np.isfinite(value).all():
-                yield path
-        elif value.dtype.kind == "O":
+        if value.dtype.kind == "O":
             yield from _not_finite(value.tolist(), path)
-    elif kind is dict:
+        elif value.dtype.kind == "f" and not np.isfinite(value).all():
+            yield path
+    elif isinstance(value, dict):
         for name, inner in value.items():
             yield from _not_finite(inner, f"{path}.{name}")
-    elif kind is list or kind is tuple:
+    elif isinstance(value, (list, tuple)):
         for i, inner in enumerate(value):
             yield from _not_finite(inner, f"{path}[{i}]")
-    elif isinstance(value, np.floating):
-        if not np.isfinite(value):
-            yield path
     elif is_dataclass(value):
         for entry in fields(value):
             yield from _not_finite(getattr(value, entry.name), f"{path}.{entry.name}")

@@ -104,21 +104,11 @@ class _Tuple(f.NumberList):
     """Numbers kept in a document, as the tuple that the object holds."""
 
     def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
+        # A carry holds a handful of floats: an array would cost more than it saves.
+        if type(value) is list and len(value) <= _LONGEST_KEPT and set(map(type, value)) <= {float}:
+            if not value or (min(value) >= -f.LARGEST and max(value) <= f.LARGEST):
+                return tuple(value)
         return tuple(super()._deserialize(value, attr, data, **kwargs).tolist())
-
-
-class _Matrix(f.NumberTable):
-    """Rows of numbers kept in a document, as the tuple of tuples that the object holds."""
-
-    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
-        return tuple(map(tuple, super()._deserialize(value, attr, data, **kwargs).tolist()))
-
-
-class _Texts(f.StringList):
-    """Texts kept in a document, as the tuple that the object holds."""
-
-    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
-        return tuple(super()._deserialize(value, attr, data, **kwargs))
 
 
 class _ObjectTuple(f.ObjectList):
