@@ -507,13 +507,15 @@ class _Growing:
         exponent: Array = np.empty_like(z)
         for m in range(order):
             exponent[m] = -0.5 * np.einsum("kij,kij->ij", z[: m + 1], z[m::-1])
-        shape = np.empty_like(z)
+        del z  # these arrays are the peak of the memory used
+        shape = np.empty_like(exponent)
         shape[0] = np.exp(exponent[0])
         for m in range(1, order):
             scaled = exponent[1 : m + 1] * powers[1 : m + 1, None, None]
             shape[m] = np.einsum("kij,kij->ij", scaled, shape[m - 1 :: -1][:m]) / m
         width = next_half / (step * math.sqrt(2.0 * math.pi))
-        kernel: Array = np.empty_like(z)
+        del exponent
+        kernel: Array = np.empty_like(shape)
         for m in range(order):
             kernel[m] = np.einsum("k,kij->ij", width[: m + 1], shape[m::-1]) * self.weights
         return kernel
@@ -701,7 +703,7 @@ def _side_rows(
     return steps, scipy.special.ndtr((drift - decision) / scale)
 
 
-@lru_cache(maxsize=64)
+@lru_cache(maxsize=16)
 def _side(reference: float, decision: float, shift: float, scale: float, count: int) -> _Side:
     unit, weights = gauss_legendre(count)
     nodes, weights = 0.5 * decision * (1.0 + unit), 0.5 * decision * weights
