@@ -9,9 +9,9 @@ import numpy as np
 
 from ...spc import runlength
 from ...spc.charts.counts import count_law, count_lines
+from ...spc.charts.lattice import run_law
 from ...spc.design import subgroups
 from ...spc.errors import UnusableParameter
-from ...spc.runlength.of_rules import discrete_law
 from .. import problems
 from ..contract import Contract
 from ..schemas.common import rules_of
@@ -150,11 +150,9 @@ def _of_counts(
             raise UnusableParameter.of(
                 "proportion-above-one", f"{factor:g} times {mean:g} is no proportion below 1.", "factors", at
             )
-        support, probability = count_law(binomial, mean * factor, float(size))
-        law = discrete_law(
+        law = run_law(
             rules,
-            support=support,
-            probability=probability,
+            count_law(binomial, mean * factor, float(size)),
             centre=float(lines.centre[0]),
             sigma=float(lines.sd[0]),
             lower=float(lines.lower[0]),

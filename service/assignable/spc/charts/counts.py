@@ -8,8 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 import scipy
 
-from ..data import Floats
+from ..data import Booleans, Floats
 from .common import LimitBasis
+from .lattice import WholeLaw
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -68,13 +69,17 @@ def _bracket(mean: float, sizes: Floats) -> Floats:
     return np.ceil(expected + 40.0 * np.sqrt(expected) + 800.0)
 
 
+def _apart(low: Floats, high: Floats) -> Booleans:
+    """Where a bisection goes on: until whole numbers, or beyond 2**53 doubles, are neighbours."""
+    return high - low > np.maximum(1.0, 4e-16 * high)
+
+
 def _smallest_exceeded(binomial: bool, mean: float, sizes: Floats, tail: float) -> Floats:
     """Smallest whole count with P(X > count) ≤ tail, by bisection over the integers."""
     low, high = np.full(sizes.shape, -1.0), _bracket(mean, sizes)
-    while bool((high - low > 1.0).any()):
+    while bool((move := _apart(low, high)).any()):
         middle = np.floor(0.5 * (low + high))
         enough = count_sf(binomial, np.maximum(middle, 0.0), mean, sizes) <= tail
-        move = high - low > 1.0
         high = np.where(move & enough, middle, high)
         low = np.where(move & ~enough, middle, low)
     return high
@@ -83,31 +88,21 @@ def _smallest_exceeded(binomial: bool, mean: float, sizes: Floats, tail: float) 
 def _largest_undercut(binomial: bool, mean: float, sizes: Floats, tail: float) -> Floats:
     """Largest whole count with P(X < count) ≤ tail, by bisection over the integers."""
     low, high = np.zeros(sizes.shape), _bracket(mean, sizes)
-    while bool((high - low > 1.0).any()):
+    while bool((move := _apart(low, high)).any()):
         middle = np.floor(0.5 * (low + high))
         enough = count_cdf(binomial, middle - 1.0, mean, sizes) <= tail
-        move = high - low > 1.0
         low = np.where(move & enough, middle, low)
         high = np.where(move & ~enough, middle, high)
     return low
 
 
-def count_law(binomial: bool, mean: float, size: float) -> tuple[Floats, Floats]:
-    """Whole counts that can occur in one sample, (s,) rising, and the probability of each, (s,).
+def count_law(binomial: bool, mean: float, size: float) -> WholeLaw:
+    """The binomial or Poisson law of the count in one sample, for its run length."""
 
-    Counts further than 12 standard deviations and 50 from the mean are left out: together they weigh less
-    than 1e-20. Probabilities are differences of the nearer tail, which keep their digits.
-    """
-    expected = mean * size
-    reach = 12.0 * math.sqrt(expected) + 50.0
-    low = max(math.floor(expected - reach), 0)
-    high = math.ceil(expected + reach)
-    if binomial:
-        high = min(high, int(size))
-    edges = np.arange(low - 1, high + 1, dtype=np.float64)
-    sizes = np.full(edges.shape, size)
-    known = np.maximum(edges, 0.0)
-    below = count_cdf(binomial, edges, mean, sizes)
-    above = np.where(edges < 0, 1.0, count_sf(binomial, known, mean, sizes))
-    probability = np.where(edges[1:] <= expected, below[1:] - below[:-1], above[:-1] - above[1:])
-    return edges[1:], np.maximum(probability, 0.0)
+    def below(count: Floats) -> Floats:
+        return count_cdf(binomial, count, mean, np.full(count.shape, size))
+
+    def above(count: Floats) -> Floats:
+        return count_sf(binomial, count, mean, np.full(count.shape, size))
+
+    return WholeLaw(below, above, mean * size, 0.0, size if binomial else math.inf)

@@ -4,13 +4,16 @@ from __future__ import annotations
 
 import functools
 import math
+from collections.abc import Callable, Iterable
 
 import numpy as np
 
 from .. import runlength
+from ..errors import UnusableParameter
 from ..rules import Rule
 from .common import LimitBasis, Performance, ShiftPerformance
 from .counts import count_law, count_lines
+from .lattice import run_law
 from .lines import Spread, beyond_spread_lines
 
 SHIFTS = (0.5, 1.0, 1.5, 2.0, 3.0)
@@ -22,8 +25,23 @@ FACTORS = (0.5, 1.5, 2.0, 3.0)
 _BEYOND_SENSE = 1e15
 
 
-def _told(arl: float) -> float | None:
-    return arl if arl < _BEYOND_SENSE else None
+def priced(run_length: Callable[[], runlength.RunLength]) -> tuple[float | None, str]:
+    """An average run length with its method; ``None`` with the reason where it cannot be computed.
+
+    A chart's limits are good without their price, so that a fit never fails for it.
+    """
+    try:
+        found = run_length()
+    except UnusableParameter as error:
+        return None, f"not computed: {error}"
+    return (found.arl if found.arl < _BEYOND_SENSE else None), found.method
+
+
+def after_shifts(
+    run_length: Callable[[float], runlength.RunLength], shifts: Iterable[float]
+) -> tuple[ShiftPerformance, ...]:
+    """The average run length after each shift."""
+    return tuple(ShiftPerformance(shift, priced(functools.partial(run_length, shift))[0]) for shift in shifts)
 
 
 @functools.lru_cache(1024)
@@ -39,18 +57,18 @@ def mean_performance(
     def run_length(shift: float) -> runlength.RunLength:
         return runlength.shewhart(rules, lower=-reach, upper=reach, shift=shift * math.sqrt(size))
 
-    in_control = run_length(0.0)
+    in_control, method = priced(lambda: run_length(0.0))
     beyond = None
     if spread is not None and size == int(size) and size > 1:
         beyond = beyond_spread_lines(spread, int(size), basis.sigma_multiple, basis.tail)
     return Performance(
         "value" if spread is None else "mean",
-        _told(in_control.arl),
+        in_control,
         beyond,
-        tuple(ShiftPerformance(shift, _told(run_length(shift).arl)) for shift in SHIFTS),
+        after_shifts(run_length, SHIFTS),
         "standard deviations of a single value",
         size,
-        in_control.method,
+        method,
     )
 
 
@@ -61,34 +79,20 @@ def count_performance(
     """Run lengths of a panel of counts, exact under the binomial or Poisson law; for whole sizes only if binomial.
 
     ``size`` is the units or area of a sample (the rounded average where sizes vary, ``None`` where unknown).
+    Where :mod:`.lattice` takes the counts as continuous, the method says so.
     """
     unit = "factors on the proportion" if binomial else "factors on the rate"
     if size is None:
         return Performance(panel, None, None, (), unit, None, "not computed: the sample size is not known")
-    at = max(round(size), 1) if binomial else size
-    lines = count_lines(binomial, mean, np.array([float(at)]), basis)
+    at = max(float(round(size)), 1.0) if binomial else size
+    lines = count_lines(binomial, mean, np.array([at]), basis)
+    centre, sigma = float(lines.centre[0]), float(lines.sd[0])
     lower, upper = float(lines.lower[0]), float(lines.upper[0])
 
-    def run_length(factor: float) -> runlength.RunLength | None:
-        shifted = mean * factor
-        if binomial and shifted >= 1.0:
-            return None
-        support, probability = count_law(binomial, shifted, float(at))
-        return runlength.discrete(
-            rules,
-            support=support,
-            probability=probability,
-            centre=float(lines.centre[0]),
-            sigma=float(lines.sd[0]),
-            lower=lower,
-            upper=upper,
-        )
+    def run_length(factor: float) -> runlength.RunLength:
+        law = count_law(binomial, mean * factor, at)
+        return run_law(rules, law, centre=centre, sigma=sigma, lower=lower, upper=upper).run_length()
 
-    in_control = run_length(1.0)
-    assert in_control is not None
-    told = []
-    for factor in FACTORS:
-        found = run_length(factor)
-        if found is not None:
-            told.append(ShiftPerformance(factor, _told(found.arl)))
-    return Performance(panel, _told(in_control.arl), None, tuple(told), unit, float(at), in_control.method)
+    in_control, method = priced(lambda: run_length(1.0))
+    possible = [factor for factor in FACTORS if not binomial or mean * factor < 1.0]
+    return Performance(panel, in_control, None, after_shifts(run_length, possible), unit, at, method)

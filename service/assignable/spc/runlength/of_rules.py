@@ -132,14 +132,14 @@ def _region_law(acting: tuple[Rule, ...], z: Floats, probability: Floats, outsid
     return order_law(automaton, order, probability, beyond, memory=memory)
 
 
-def continuous(
+def continuous_law(
     rules: Sequence[Rule] = (LIMIT,),
     *,
     between: Callable[[Floats], Floats],
     lower: float = -3.0,
     upper: float = 3.0,
-) -> RunLength:
-    """The run length of a continuous statistic of any distribution.
+) -> Decay:
+    """The law of the run length of a continuous statistic of any distribution.
 
     between: (c + 1,) probabilities below the first of c rising lines, between each two, and above the
     last one, the lines (c,) in the unit in which the rules state their distance (``z`` of a ``Track``);
@@ -150,7 +150,7 @@ def continuous(
     acting = _acting(rules)
     cuts, z = _regions(acting, lower, upper)
     probability = between(cuts)
-    return _region_law(acting, z, probability[1:-1], float(probability[0] + probability[-1])).run_length()
+    return _region_law(acting, z, probability[1:-1], float(probability[0] + probability[-1]))
 
 
 def discrete(
