@@ -9,7 +9,7 @@ from typing import Any, Literal
 from ....spc.charts.common import Exclusion, LimitBasis
 from ....spc.errors import UnusableParameter
 from ... import fields as f
-from ..common import Characteristic, ExclusionRequest, RulesRequest
+from ..common import Characteristic, RulesRequest
 
 USUAL_FALSE_ALARM = 0.0027
 """About what limits at three sigma give a normal statistic."""
@@ -25,10 +25,16 @@ class ChartRequest:
     options: Callable[[dict[str, Any]], Any]
 
 
-class FitRequest(f.RequestShape):
-    """What every fit takes."""
+class BaselineRequest(f.RequestShape):
+    """What every fit of a chart with run rules takes."""
 
     characteristic = f.Object(Characteristic, metadata={"description": "What was measured."})
+    rules = f.Object(RulesRequest, metadata={"description": "Run rules; without them the limits alone."})
+
+
+class FitRequest(BaselineRequest):
+    """The same, with a choice of how the limits are placed."""
+
     limit_basis = f.Choice(
         "sigma",
         "probability",
@@ -48,12 +54,6 @@ class FitRequest(f.RequestShape):
             "description": "Under `probability`: that a point in control lies outside, half beyond each limit; "
             f"{USUAL_FALSE_ALARM} unless given."
         },
-    )
-    rules = f.Object(RulesRequest, metadata={"description": "Run rules; without them the limits alone."})
-    excluded = f.ObjectList(
-        ExclusionRequest,
-        data_key="exclude",
-        metadata={"description": "Baseline points with a known assignable cause."},
     )
 
 

@@ -49,7 +49,7 @@ class SubgroupData(f.RequestShape):
     times = f.TimeList(**TIMES)
 
 
-def subgroups(loaded: dict[str, Any]) -> Subgroups | SubgroupSummary:
+def subgroups(loaded: dict[str, Any], *, need_spread: bool = True) -> Subgroups | SubgroupSummary:
     """Subgroups as posted. Raises UnusableData for parts that do not fit each other."""
     if "values" in loaded:
         faults = [
@@ -69,7 +69,8 @@ def subgroups(loaded: dict[str, Any]) -> Subgroups | SubgroupSummary:
         raise UnusableData.of("data-missing", "Give the values, or the means with sizes and spreads.", "data")
     means = loaded["means"]
     faults = check_labels(loaded, len(means))
-    if ("ranges" in loaded) == ("sds" in loaded):
+    spreads = ("ranges" in loaded) + ("sds" in loaded)
+    if spreads == 2 or (need_spread and not spreads):
         faults.append(
             Fault("one-spread", "With means, give either ranges or sds (standard deviations).", ("data",))
         )
@@ -90,6 +91,8 @@ def subgroups(loaded: dict[str, Any]) -> Subgroups | SubgroupSummary:
             )
     if faults:
         raise UnusableData(*faults)
+    if not spreads:
+        return SubgroupSummary(means, sizes)
     name = "ranges" if "ranges" in loaded else "sds"
     spread = loaded[name]
     missing = np.isnan(spread) & ~np.isnan(means) & (sizes > 1)
