@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 from difflib import get_close_matches
 from pathlib import Path
@@ -10,11 +11,17 @@ from uuid import uuid4
 from ..api import problems
 from ..api.app import create_app
 from ..api.contract import Contract, Operation
+from ..api.settings import BadSettings
+from .environment import read_settings
 
 
 def compute(operation_id: str, file: str | None) -> int:
     """Prints the answer to a file's body; a problem goes to standard error, with status 1."""
-    contract: Contract = create_app().extensions["assignable.contract"]
+    try:
+        settings, _ = read_settings(os.environ)
+    except BadSettings as error:
+        return _not_understood(str(error))
+    contract: Contract = create_app(settings).extensions["assignable.contract"]
     operation = contract.operations.get(operation_id)
     if operation is None:
         near = get_close_matches(operation_id, contract.operations, n=1, cutoff=0.5)

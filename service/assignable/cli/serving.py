@@ -33,8 +33,7 @@ from ..api import problems
 from ..api.app import create_app
 from ..api.contract import Contract, examples_directory
 from ..api.settings import BadSettings, Settings
-
-ALLOW_REMOTE = "ASSIGNABLE_ALLOW_REMOTE"
+from .environment import ALLOW_REMOTE, read_settings
 
 # Seconds a stopping server waits for the requests it has; whoever kills it must wait longer.
 GRACE_SECONDS = 30
@@ -69,13 +68,8 @@ def settings_from(environment: Mapping[str, str]) -> Settings:
     address that is not this machine's own needs ``ASSIGNABLE_ALLOW_REMOTE=yes``.
     Raises :class:`BadSettings`, :class:`CannotServe`.
     """
-    allowed = environment.get(ALLOW_REMOTE, "no")
-    if allowed not in ("yes", "no"):
-        raise BadSettings(f"{ALLOW_REMOTE}: yes or no is expected.")
-    settings = Settings.from_environment(
-        {name: value for name, value in environment.items() if name != ALLOW_REMOTE}
-    )
-    if allowed == "no" and not _is_loopback(settings.host):
+    settings, remote_allowed = read_settings(environment)
+    if not remote_allowed and not _is_loopback(settings.host):
         raise CannotServe(
             f"{settings.host} can be reached from other machines, and this service asks nobody who they are. "
             "Listen on 127.0.0.1, or, behind a proxy or in a network you trust, "
