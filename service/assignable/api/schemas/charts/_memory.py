@@ -14,7 +14,7 @@ from ....spc.runlength.memory import LARGEST_SHIFT
 from ....spc.sigma import LARGEST_SPAN, WITHIN
 from ... import fields as f
 from ..common import check_labels
-from .common import BaselineRequest, StandardsRequest, exclusions
+from .common import AnyFitRequest, StandardsRequest, exclusions
 from .subgroups import SubgroupData, subgroups
 
 
@@ -51,7 +51,7 @@ def points(loaded: dict[str, Any]) -> Data:
     return Individuals(loaded["individuals"])
 
 
-class MemoryFit(BaselineRequest):
+class MemoryFit(AnyFitRequest):
     """A baseline for a chart with memory."""
 
     data = f.Object(

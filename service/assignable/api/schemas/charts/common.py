@@ -9,7 +9,7 @@ from typing import Any, Literal
 from ....spc.charts.common import Exclusion, LimitBasis
 from ....spc.errors import UnusableParameter
 from ... import fields as f
-from ..common import Characteristic, RulesRequest
+from ..common import Characteristic, ExclusionRequest, RulesRequest
 
 USUAL_FALSE_ALARM = 0.0027
 """About what limits at three sigma give a normal statistic."""
@@ -25,10 +25,20 @@ class ChartRequest:
     options: Callable[[dict[str, Any]], Any]
 
 
-class BaselineRequest(f.RequestShape):
-    """What every fit of a chart with run rules takes."""
+class AnyFitRequest(f.RequestShape):
+    """What every fit takes."""
 
     characteristic = f.Object(Characteristic, metadata={"description": "What was measured."})
+    excluded = f.ObjectList(
+        ExclusionRequest,
+        data_key="exclude",
+        metadata={"description": "Baseline points with a known assignable cause."},
+    )
+
+
+class BaselineRequest(AnyFitRequest):
+    """What every fit of a chart with run rules takes."""
+
     rules = f.Object(RulesRequest, metadata={"description": "Run rules; without them the limits alone."})
 
 
