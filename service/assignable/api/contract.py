@@ -8,7 +8,8 @@ document is made from the same calls, when it is first asked for.
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Mapping
+import threading
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
@@ -26,6 +27,8 @@ from .shedding import Slots
 
 View = Callable[..., Any]
 Link = Mapping[str, Any]
+Route = tuple[str, str, str]
+"""Method, path and operation id."""
 
 OPERATION = "assignable.operation"  # the environ's key for the id of the operation that answers
 
@@ -50,7 +53,7 @@ class ProblemDetails(AnswerShape):
     type = StrictString(
         required=True, metadata={"description": "Which kind of problem; resolves on this service."}
     )
-    title = StrictString(required=True)
+    title = StrictString(required=True, metadata={"description": "The kind in words."})
     status = StrictInteger(required=True, metadata={"description": "The HTTP status."})
     detail = StrictString(required=True, metadata={"description": "What happened, this time."})
     instance = StrictString(required=True, metadata={"description": "This occurrence."})
@@ -64,7 +67,7 @@ class ProblemDetails(AnswerShape):
 class Provenance(AnswerShape):
     """What an answer was computed with, and of what."""
 
-    service = StrictString(required=True)
+    service = StrictString(required=True, metadata={"description": "The program's name."})
     version = StrictString(required=True, metadata={"description": "Of the program."})
     contract = StrictString(required=True, metadata={"description": "Of this document."})
     method = StrictString(required=True, metadata={"description": "The method's name in this service."})
@@ -122,11 +125,49 @@ class Contract:
         self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds)
         self._tags: dict[str, str] = {}
         self._constant: dict[str, tuple[bytes, str]] = {}
-        self.operations: dict[str, Operation] = {}
+        self._bound: dict[str, Operation] = {}
+        self._announced: dict[str, Callable[[Contract], None]] = {}
+        self._binding = threading.RLock()
 
     @property
     def app(self) -> Flask:
         return self._app
+
+    @property
+    def operations(self) -> Mapping[str, Operation]:
+        """Every operation by its id, those announced bound by now, in the order of the routes."""
+        for operation_id in tuple(self._announced):
+            self._bind_announced(operation_id)
+        order = [rule.endpoint for rule in self._app.url_map.iter_rules() if rule.endpoint in self._bound]
+        return {operation_id: self._bound[operation_id] for operation_id in dict.fromkeys(order)}
+
+    def announce(self, routes: Iterable[Route], register: Callable[[Contract], None]) -> None:
+        """Takes up routes now whose operations ``register`` binds when one of them is first needed.
+
+        Shapes and the numerics behind them are most of a start; a server binds them all before it forks.
+        """
+        for method, path, operation_id in routes:
+            self._announced[operation_id] = register
+            self._app.add_url_rule(
+                _PARAMETER.sub(r"<\1>", path), operation_id, self._first_call(operation_id), methods=[method]
+            )
+
+    def _first_call(self, operation_id: str) -> Callable[..., Response]:
+        def answer(**path: str) -> Response:
+            self._bind_announced(operation_id)
+            found: Response = self._app.view_functions[operation_id](**path)  # type: ignore[assignment]
+            return found
+
+        return answer
+
+    def _bind_announced(self, operation_id: str) -> None:
+        with self._binding:
+            register = self._announced.get(operation_id)
+            if register is None:
+                return
+            register(self)
+            if operation_id in self._announced:
+                raise ValueError(f"{operation_id}: announced, and bound by nobody")
 
     def tag(self, name: str, description: str) -> None:
         """Describes a group of operations."""
@@ -161,7 +202,7 @@ class Contract:
         ``openapi/examples``. ``provenance`` is the method's name; with it the answer gets that member.
         ``computes`` takes a compute slot. ``cache_seconds`` is how long a GET may be kept, None not at all.
         """
-        _check(method, path, operation_id, self.operations, self._tags, tag, links)
+        _check(method, path, operation_id, self._bound, self._tags, tag, links)
 
         def bind(view: View) -> View:
             operation = Operation(
@@ -183,10 +224,15 @@ class Contract:
                 computes=computes,
                 cache_seconds=cache_seconds if method == "GET" else None,
             )
-            self.operations[operation_id] = operation
-            self._app.add_url_rule(
-                _PARAMETER.sub(r"<\1>", path), operation_id, self._endpoint(operation), methods=[method]
-            )
+            self._bound[operation_id] = operation
+            rule = _PARAMETER.sub(r"<\1>", path)
+            if self._announced.pop(operation_id, None) is None:
+                self._app.add_url_rule(rule, operation_id, self._endpoint(operation), methods=[method])
+                return view
+            (known,) = self._app.url_map.iter_rules(operation_id)
+            if known.rule != rule or known.methods is None or method not in known.methods:
+                raise ValueError(f"{operation_id}: bound to another route than it was announced with")
+            self._app.view_functions[operation_id] = self._endpoint(operation)
             return view
 
         return bind
@@ -251,7 +297,8 @@ class Contract:
 
     def document(self) -> bytes:
         """The OpenAPI document, the same bytes at every call."""
-        return self._document
+        with self._binding:
+            return self._document
 
     @cached_property
     def _document(self) -> bytes:

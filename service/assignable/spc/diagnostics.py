@@ -98,8 +98,8 @@ class ShapiroWilk:
 class Normality:
     """Two tests of normality of the single values."""
 
-    anderson_darling: AndersonDarling
-    shapiro_wilk: ShapiroWilk
+    anderson_darling: Annotated[AndersonDarling, "Anderson and Darling's test, which weighs the tails."]
+    shapiro_wilk: Annotated[ShapiroWilk, "Shapiro and Wilk's test."]
     values_tested: Annotated[int, "Number of values tested; of more than 5000, an evenly spaced 5000."]
     distinct_values: Annotated[int, "Number of different values among them; few where values are rounded."]
 

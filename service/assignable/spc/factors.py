@@ -10,7 +10,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import overload
+from typing import Annotated, overload
 
 import numpy as np
 import scipy
@@ -33,28 +33,28 @@ _PANEL_NODES = 64
 class Factors:
     """Factors of mean, range and standard deviation charts for subgroups of one size.
 
-    size is n, multiple the k of k-sigma limits; the names are those of ISO 7870-2 and ASTM E2587. A
-    lower factor of a spread chart that is not positive is ``None``: a limit nothing can cross is no limit.
+    The names are those of ISO 7870-2 and ASTM E2587. A limit nothing can cross is no limit, so a lower factor
+    of a spread chart that is not positive is null.
     """
 
-    size: int
-    multiple: float
-    d2: float
-    d3: float
-    c4: float
-    A: float
-    A2: float
-    A3: float
-    B3: float | None
-    B4: float
-    B5: float | None
-    B6: float
-    D1: float | None
-    D2: float
-    D3: float | None
-    D4: float
-    E2: float
-    median_range: float
+    size: Annotated[int, "Values in a subgroup, n."]
+    multiple: Annotated[float, "Limits lie this many sigma out, k."]
+    d2: Annotated[float, "Mean range of n values over sigma."]
+    d3: Annotated[float, "Standard deviation of the range over sigma."]
+    c4: Annotated[float, "Mean standard deviation of n values over sigma."]
+    A: Annotated[float, "Limits of the mean from a known sigma: k/√n."]
+    A2: Annotated[float, "Limits of the mean from the mean range: k/(d2√n)."]
+    A3: Annotated[float, "Limits of the mean from the mean standard deviation: k/(c4√n)."]
+    B3: Annotated[float | None, "Lower limit of s over its mean; null where not positive."]
+    B4: Annotated[float, "Upper limit of s over its mean."]
+    B5: Annotated[float | None, "Lower limit of s over a known sigma; null where not positive."]
+    B6: Annotated[float, "Upper limit of s over a known sigma."]
+    D1: Annotated[float | None, "Lower limit of the range over a known sigma; null where not positive."]
+    D2: Annotated[float, "Upper limit of the range over a known sigma."]
+    D3: Annotated[float | None, "Lower limit of the range over its mean; null where not positive."]
+    D4: Annotated[float, "Upper limit of the range over its mean."]
+    E2: Annotated[float, "Limits of single values from the mean range of n: k/d2."]
+    median_range: Annotated[float, "Median range of n values over sigma."]
 
 
 def factors(n: int, multiple: float = 3.0) -> Factors:

@@ -24,7 +24,7 @@ from dataclasses import dataclass
 from functools import lru_cache
 from itertools import pairwise
 from types import MappingProxyType
-from typing import Literal
+from typing import Annotated, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -53,17 +53,19 @@ _FEW = 10
 class Rule:
     """One rule; see the module for the exact meaning of each form.
 
-    points: k, the points that must show the pattern; window: m, the successive points looked at
-    (equal to k but for zone and mixture). distance: in sigma of the point, beyond it for zone and
-    mixture, within it for stratification, ``None`` for trend and alternation.
     Raises ``UnusableParameter`` (where: ``points``, ``window``, ``distance``, ``severity``).
     """
 
-    form: Form
-    points: int
-    window: int
-    distance: float | None = None
-    severity: Severity = "action"
+    form: Annotated[Form, "What the rule looks for: one of five forms."]
+    points: Annotated[int, "Points that must show the pattern."]
+    window: Annotated[int, "Successive points looked at; as many as points but for zone and mixture."]
+    distance: Annotated[
+        float | None,
+        "In sigma of each point: beyond it for zone and mixture, within it for stratification; null otherwise.",
+    ] = None
+    severity: Annotated[Severity, "Whether it asks for action; a warning leaves the verdict as it is."] = (
+        "action"
+    )
 
     def __post_init__(self) -> None:
         form, k, m, z = self.form, self.points, self.window, self.distance
@@ -247,9 +249,9 @@ class Track:
 class Tail:
     """What the next call needs: the last points since the last gap, fewer than the longest window."""
 
-    value: tuple[float, ...] = ()
-    z: tuple[float, ...] = ()
-    sigma: tuple[float, ...] = ()
+    value: Annotated[tuple[float, ...], "As plotted, in the unit of the chart."] = ()
+    z: Annotated[tuple[float, ...], "Signed distances from the centre line, in each point's own sigma."] = ()
+    sigma: Annotated[tuple[float, ...], "Of each point, in the unit of the chart."] = ()
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -496,21 +498,19 @@ def _detect_many(rules: tuple[Rule, ...], track: Track, tail: Tail | None) -> De
 
 @dataclass(frozen=True, slots=True)
 class Signal:
-    """One signal, in words.
+    """One signal, in words."""
 
-    rule, form, severity: of the rule (``limit`` for the control limit); index: the point it is
-    given on; side: ``above`` (or rising), ``below`` (or falling), or ``None``; points: those that
-    took part, negative before this call; sentence: what is seen, plainly.
-    """
-
-    rule: str
-    form: Form
-    panel: str
-    index: int
-    side: Literal["above", "below"] | None
-    points: tuple[int, ...]
-    severity: Severity
-    sentence: str
+    rule: Annotated[str, "Code of the rule as `GET /v1/rules` spells it; `limit` for the control limits."]
+    form: Annotated[Form, "What the rule looks for."]
+    panel: Annotated[str, "The panel it is given on."]
+    index: Annotated[int, "The point it is given on, from 0 for the first of this request."]
+    side: Annotated[
+        Literal["above", "below"] | None,
+        "Above (or rising), below (or falling), or null where the rule has no side.",
+    ]
+    points: Annotated[tuple[int, ...], "Those that took part; below 0 where they lie in earlier calls."]
+    severity: Annotated[Severity, "Whether it asks for action; a warning leaves the verdict as it is."]
+    sentence: Annotated[str, "What is seen, plainly."]
 
 
 def signals(detection: Detection, *, panel: str, most: int = 1000) -> tuple[Signal, ...]:

@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Literal, NoReturn, TypeAlias
+from typing import Annotated, Literal, NoReturn, TypeAlias
 
 import numpy as np
 import scipy
@@ -45,14 +45,11 @@ _LARGEST_SPREAD = 1e150
 
 @dataclass(frozen=True, slots=True)
 class SigmaEstimate:
-    """An estimate of sigma in the unit of the data.
+    """An estimate of sigma; see the module for its degrees of freedom."""
 
-    degrees_of_freedom: effective ones (see the module), not necessarily whole; estimator: its name.
-    """
-
-    sigma: float
-    degrees_of_freedom: float
-    estimator: str
+    sigma: Annotated[float, "In the unit of the data."]
+    degrees_of_freedom: Annotated[float, "Effective ones, not necessarily whole."]
+    estimator: Annotated[str, "Its name."]
 
 
 def within(statistics: SubgroupStatistics, estimator: str) -> SigmaEstimate:

@@ -15,7 +15,7 @@ TAG = "Running it"
 class Health(AnswerShape):
     """The state of the service."""
 
-    status = Choice("pass", required=True)
+    status = Choice("pass", required=True, metadata={"description": "That all is well."})
     version = StrictString(required=True, metadata={"description": "Of the program."})
     contract = StrictString(required=True, metadata={"description": "Of this document."})
 

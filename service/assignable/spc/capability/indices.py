@@ -13,7 +13,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Literal, TypeAlias
+from typing import Annotated, Literal, TypeAlias
 
 import numpy as np
 import scipy
@@ -43,17 +43,17 @@ LARGEST_COUNT = 10_000_000
 
 @dataclass(frozen=True, slots=True)
 class Index:
-    """An index with what is known of it.
+    """An index with what is known of it."""
 
-    lower, upper: two-sided interval at the confidence asked. lower_bound: one-sided lower confidence
-    bound, the true index being at least that with the same confidence. method: of all three.
-    """
-
-    value: float
-    lower: float
-    upper: float
-    lower_bound: float
-    method: IntervalMethod
+    value: Annotated[float, "The estimate; no unit."]
+    lower: Annotated[float, "Lower end of the two-sided interval at the confidence asked."]
+    upper: Annotated[float, "Upper end of it."]
+    lower_bound: Annotated[
+        float, "One-sided bound: the true index is at least this, with the confidence asked."
+    ]
+    method: Annotated[
+        IntervalMethod, "Of interval and bound: an exact law, or the author and year of an approximation."
+    ]
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,50 +72,67 @@ class NormalSummary:
 
 @dataclass(frozen=True, slots=True)
 class Capability:
-    """Indices of a normal characteristic; each ``None`` where it is not defined or lacks its sigma.
+    """Indices of a normal characteristic; each null where it is not defined or lacks its sigma.
 
-    cp, pp: both limits needed. cpk, ppk: the smaller of cpl and cpu (ppl and ppu), or the only one there
-    is. cpm: (upper - lower)/(6τ̂) and cpmk: min(upper - x̄, x̄ - lower)/(3τ̂), with both limits and a target,
-    τ̂² = Σ(xᵢ - target)²/N, the mean square deviation from the target (divisor N [boyles-1991]).
-    expected_within, expected_total: nonconforming product of a normal process with that sigma.
-    observed: the values counted, ``None`` from a summary.
+    cpm is (upper - lower)/(6τ̂) and cpmk min(upper - x̄, x̄ - lower)/(3τ̂), with τ̂² = Σ(xᵢ - target)²/N, the mean
+    square deviation from the target (divisor N [boyles-1991]).
     """
 
-    count: int
-    mean: float
-    within: SigmaEstimate | None
-    total: SigmaEstimate | None
-    confidence: float
-    cp: Index | None
-    cpk: Index | None
-    cpu: Index | None
-    cpl: Index | None
-    pp: Index | None
-    ppk: Index | None
-    ppu: Index | None
-    ppl: Index | None
-    cpm: Index | None
-    cpmk: Index | None
-    expected_within: Nonconforming | None
-    expected_total: Nonconforming | None
-    observed: ObservedNonconforming | None
+    count: Annotated[int, "How many values there were."]
+    mean: Annotated[float, "Of all values, in the unit of the characteristic."]
+    within: Annotated[SigmaEstimate | None, "Within-subgroup sigma; null where there is none."]
+    total: Annotated[SigmaEstimate | None, "Overall standard deviation; null where there is none."]
+    confidence: Annotated[float, "Of each interval by itself, as a proportion."]
+    cp: Annotated[
+        Index | None,
+        "Width of the specification over six within-subgroup sigma; null unless both limits are given.",
+    ]
+    cpk: Annotated[Index | None, "The smaller of cpl and cpu, or the only one there is."]
+    cpu: Annotated[
+        Index | None,
+        "From the mean to the upper limit, over three within-subgroup sigma; null without that limit.",
+    ]
+    cpl: Annotated[
+        Index | None,
+        "From the lower limit to the mean, over three within-subgroup sigma; null without that limit.",
+    ]
+    pp: Annotated[Index | None, "As cp, with the overall standard deviation."]
+    ppk: Annotated[Index | None, "As cpk, with the overall standard deviation."]
+    ppu: Annotated[Index | None, "As cpu, with the overall standard deviation."]
+    ppl: Annotated[Index | None, "As cpl, with the overall standard deviation."]
+    cpm: Annotated[
+        Index | None,
+        "Width over six root mean square deviations from the target; null unless both limits and a target are given.",
+    ]
+    cpmk: Annotated[
+        Index | None,
+        "From the mean to the nearer limit, over three root mean square deviations from the target; null likewise.",
+    ]
+    expected_within: Annotated[
+        Nonconforming | None,
+        "Nonconforming product expected of a normal process with the within-subgroup sigma.",
+    ]
+    expected_total: Annotated[
+        Nonconforming | None,
+        "Nonconforming product expected of a normal process with the overall standard deviation.",
+    ]
+    observed: Annotated[ObservedNonconforming | None, "Nonconforming values counted; null from a summary."]
 
 
 @dataclass(frozen=True, slots=True)
 class MachineCapability:
-    """Cm and Cmk of a short run made under constant conditions, on the overall standard deviation.
+    """Cm and Cmk of a short run made under constant conditions, on the overall standard deviation."""
 
-    cm is ``None`` with one limit. expected and observed: nonconforming product, as in :class:`Capability`.
-    """
-
-    count: int
-    mean: float
-    total: SigmaEstimate
-    confidence: float
-    cm: Index | None
-    cmk: Index
-    expected: Nonconforming
-    observed: ObservedNonconforming | None
+    count: Annotated[int, "How many values there were."]
+    mean: Annotated[float, "Of all values, in the unit of the characteristic."]
+    total: Annotated[SigmaEstimate, "Overall standard deviation."]
+    confidence: Annotated[float, "Of each interval by itself, as a proportion."]
+    cm: Annotated[
+        Index | None, "Width of the specification over six standard deviations; null with one limit."
+    ]
+    cmk: Annotated[Index, "From the mean to the nearer limit, over three standard deviations."]
+    expected: Annotated[Nonconforming, "Nonconforming product expected of a normal process."]
+    observed: Annotated[ObservedNonconforming | None, "Nonconforming values counted; null from a summary."]
 
 
 @dataclass(frozen=True, slots=True)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Annotated
 
 import numpy as np
 import scipy
@@ -23,37 +24,33 @@ _END_STEPS = 6
 class Nonconforming:
     """Expected nonconforming product of a normal process, in parts per million (ppm).
 
-    below_ppm, above_ppm: ``None`` for a side without a limit. lower_ppm, upper_ppm: two-sided interval for
-    the total at the confidence asked; upper_bound_ppm: one-sided upper confidence bound for it.
     method: ``non-central-t`` (one limit; exact for the overall standard deviation) or
     ``weerahandi-1993`` (both limits, see :func:`total_area_cdf`).
     """
 
-    below_ppm: float | None
-    above_ppm: float | None
-    total_ppm: float
-    lower_ppm: float
-    upper_ppm: float
-    upper_bound_ppm: float
-    method: str
+    below_ppm: Annotated[float | None, "Below the lower limit; null where there is none."]
+    above_ppm: Annotated[float | None, "Above the upper limit; null where there is none."]
+    total_ppm: Annotated[float, "Outside the limits there are."]
+    lower_ppm: Annotated[float, "Lower end of the two-sided interval for the total, at the confidence asked."]
+    upper_ppm: Annotated[float, "Upper end of it."]
+    upper_bound_ppm: Annotated[
+        float, "One-sided bound: the true total is at most this, with the confidence asked."
+    ]
+    method: Annotated[str, "Of interval and bound."]
 
 
 @dataclass(frozen=True, slots=True)
 class ObservedNonconforming:
-    """Nonconforming values counted: a value equal to a limit conforms.
+    """Nonconforming values counted: a value equal to a limit conforms."""
 
-    below, above: ``None`` for a side without a limit; inspected: the values there were. lower_ppm,
-    upper_ppm: the two-sided interval of Clopper & Pearson at the confidence asked.
-    """
-
-    below: int | None
-    above: int | None
-    total: int
-    inspected: int
-    total_ppm: float
-    lower_ppm: float
-    upper_ppm: float
-    method: str = "clopper-pearson-1934"
+    below: Annotated[int | None, "Values below the lower limit; null where there is none."]
+    above: Annotated[int | None, "Values above the upper limit; null where there is none."]
+    total: Annotated[int, "Values outside the limits there are."]
+    inspected: Annotated[int, "How many values there were."]
+    total_ppm: Annotated[float, "Their share in parts per million."]
+    lower_ppm: Annotated[float, "Lower end of its two-sided interval, at the confidence asked."]
+    upper_ppm: Annotated[float, "Upper end of it."]
+    method: Annotated[str, "Of the interval."] = "clopper-pearson-1934"
 
 
 def clopper_pearson(events: int, trials: int, confidence: float) -> tuple[float, float]:

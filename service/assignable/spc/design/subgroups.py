@@ -17,7 +17,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Literal, TypeAlias
+from typing import Annotated, Literal, TypeAlias
 
 import numpy as np
 import scipy
@@ -58,66 +58,60 @@ class SamplingPlan:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class OperatingCharacteristics:
-    """What one sampling plan detects, for each shift; arrays (k,) in the order of ``shifts``.
+    """What one sampling plan detects, shift by shift; arrays (k,) in the order of ``shifts``."""
 
-    shifts: in process sigma. beta: probability that the first sample after the shift gives no signal, and
-    power: that it does. arl, sd_run_length: samples to the signal, the one with the signal included.
-    ats_hours, ats_random_hours: average time to signal for a shift just after a sample, and at a random
-    moment. in_control_*: with no shift; false_alarms_per_1000_hours counts signals of a chart that starts
-    afresh after each. method: how the run lengths were computed.
-    """
-
-    size: int
-    interval_hours: float
-    multiple: float
-    pieces_per_hour: float
-    false_alarm_probability: float
-    in_control_arl: float
-    in_control_sd_run_length: float
-    in_control_ats_hours: float
-    false_alarms_per_1000_hours: float
-    shifts: Floats
-    beta: Floats
-    power: Floats
-    arl: Floats
-    sd_run_length: Floats
-    ats_hours: Floats
-    ats_random_hours: Floats
-    method: str
+    size: Annotated[int, "Pieces in a sample."]
+    interval_hours: Annotated[float, "Hours from one sample to the next."]
+    multiple: Annotated[float, "Limits lie this many sigma of the mean out."]
+    pieces_per_hour: Annotated[float, "What the plan costs in pieces measured."]
+    false_alarm_probability: Annotated[float, "Of a signal at one sample while nothing has shifted."]
+    in_control_arl: Annotated[float, "Samples between false alarms, on average."]
+    in_control_sd_run_length: Annotated[float, "Standard deviation of the samples between false alarms."]
+    in_control_ats_hours: Annotated[float, "Hours between false alarms, on average."]
+    false_alarms_per_1000_hours: Annotated[float, "Of a chart that starts afresh after each signal."]
+    shifts: Annotated[Floats, "Shifts of the mean, in standard deviations of single values."]
+    beta: Annotated[Floats, "Probability that the first sample after each shift gives no signal."]
+    power: Annotated[Floats, "Probability that it gives one."]
+    arl: Annotated[Floats, "Samples until the signal on average, that sample included."]
+    sd_run_length: Annotated[Floats, "Standard deviation of that number of samples."]
+    ats_hours: Annotated[Floats, "Average hours to the signal, for a shift just after a sample."]
+    ats_random_hours: Annotated[Floats, "Average hours to the signal, for a shift at a random moment."]
+    method: Annotated[str, "How the run lengths were computed."]
 
 
 @dataclass(frozen=True, slots=True)
 class PlanPerformance:
-    """A sampling plan and what it does for one shift; fields as in :class:`OperatingCharacteristics`."""
+    """A sampling plan, and what it does for one shift."""
 
-    size: int
-    interval_hours: float
-    multiple: float
-    pieces_per_hour: float
-    false_alarm_probability: float
-    in_control_arl: float
-    false_alarms_per_1000_hours: float
-    shift: float
-    power: float
-    arl: float
-    sd_run_length: float
-    ats_hours: float
-    ats_random_hours: float
+    size: Annotated[int, "Pieces in a sample."]
+    interval_hours: Annotated[float, "Hours from one sample to the next."]
+    multiple: Annotated[float, "Limits lie this many sigma of the mean out."]
+    pieces_per_hour: Annotated[float, "What the plan costs in pieces measured."]
+    false_alarm_probability: Annotated[float, "Of a signal at one sample while nothing has shifted."]
+    in_control_arl: Annotated[float, "Samples between false alarms, on average."]
+    false_alarms_per_1000_hours: Annotated[float, "Of a chart that starts afresh after each signal."]
+    shift: Annotated[float, "Shift of the mean to detect, in standard deviations of single values."]
+    power: Annotated[float, "Probability that the first sample after the shift signals."]
+    arl: Annotated[float, "Samples until the signal on average, that sample included."]
+    sd_run_length: Annotated[float, "Standard deviation of that number of samples."]
+    ats_hours: Annotated[float, "Average hours to the signal, for a shift just after a sample."]
+    ats_random_hours: Annotated[float, "Average hours to the signal, for a shift at a random moment."]
 
 
 @dataclass(frozen=True, slots=True)
 class Comparison:
-    """Plans in the order of their average time to signal, the quickest first.
+    """Plans in the order of their average time to signal, the quickest first."""
 
-    ranking: indices into the plans as given; equal_rate: whether all measure equally many pieces an hour,
-    within one in a thousand: only then does the order compare like with like.
-    """
-
-    shift: float
-    shift_moment: ShiftMoment
-    equal_rate: bool
-    ranking: tuple[int, ...]
-    plans: tuple[PlanPerformance, ...]
+    shift: Annotated[float, "Shift of the mean to detect, in standard deviations of single values."]
+    shift_moment: Annotated[
+        ShiftMoment, "When the shift happens: just after a sample, or at a random moment between two."
+    ]
+    equal_rate: Annotated[
+        bool,
+        "Whether all plans measure equally many pieces an hour, within one in a thousand; else unlike is compared.",
+    ]
+    ranking: Annotated[tuple[int, ...], "Positions in the list of plans as given, from 0."]
+    plans: Annotated[tuple[PlanPerformance, ...], "The plans in that order."]
 
 
 # ---------------------------------------------------------------------------------------------------
