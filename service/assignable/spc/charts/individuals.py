@@ -133,9 +133,10 @@ class IndividualsJudgement:
     cautions: tuple[Caution, ...]
 
 
-def _plots(
+def individual_plots(
     values: Floats, ranges: Floats, centre: float, sigma: float, span: int, basis: LimitBasis
 ) -> tuple[Plot, Plot]:
+    """The value panel and the moving-range panel of single values under given parameters."""
     far = basis.multiple * sigma
     lines = spread_lines("range", span, basis.sigma_multiple, basis.tail)
     return (
@@ -203,7 +204,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
     limits = _limits(
         options, rules, mean, sigma, estimator, freedom, BaselineRecord(filled, filled, options.exclude)
     )
-    plots = _plots(values, moving_ranges(used, options.span), mean, sigma, options.span, basis)
+    plots = individual_plots(values, moving_ranges(used, options.span), mean, sigma, options.span, basis)
     seen, _ = _watch(plots, rules, None, kept)
     found = IndividualsDiagnostics(
         diagnostics.autocorrelation(used), diagnostics.normality(used), diagnostics.resolution(used, None)
@@ -244,7 +245,7 @@ def _limits(
     if not (math.isfinite(centre) and math.isfinite(sigma) and sigma > 0):
         raise UnusableData.of("out-of-scale", "The spread of the values cannot be represented.", "data")
     basis, nothing = options.basis, np.empty(0)
-    plots = _plots(nothing, nothing, centre, sigma, options.span, basis)
+    plots = individual_plots(nothing, nothing, centre, sigma, options.span, basis)
     return IndividualsLimits(
         centre,
         sigma,
@@ -271,19 +272,20 @@ def judge(
     values, recent = data.values, before.recent
     series = np.concatenate((recent, values)) if recent else values
     ranges = moving_ranges(series, limits.span)[len(recent) :]
-    plots = _plots(values, ranges, limits.centre, limits.sigma, limits.span, limits.basis)
+    plots = individual_plots(values, ranges, limits.centre, limits.sigma, limits.span, limits.basis)
     seen, tail = _watch(plots, limits.rules, before.value, None)
     return IndividualsJudgement(
         seen.verdict,
         ValueMovingRange(plots[0].panel(), plots[1].panel()),
         seen.signals,
         seen.found,
-        IndividualsCarry(before.points + len(values), tail, _since_gap(series, limits.span - 1)),
+        IndividualsCarry(before.points + len(values), tail, since_gap(series, limits.span - 1)),
         too_many_signals(seen),
     )
 
 
-def _since_gap(series: Floats, most: int) -> tuple[float, ...]:
+def since_gap(series: Floats, most: int) -> tuple[float, ...]:
+    """The last values after the last gap, at most so many."""
     last = series[-most:]
     gaps = np.isnan(last).nonzero()[0]
     return tuple((last if not len(gaps) else last[gaps[-1] + 1 :]).tolist())

@@ -162,7 +162,7 @@ class SubgroupJudgement(Generic[Q]):
     cautions: tuple[Caution, ...]
 
 
-def _plots(
+def subgroup_plots(
     statistics: SubgroupStatistics, spread: Spread, centre: float, sigma: float, basis: LimitBasis
 ) -> tuple[Plot, Plot]:
     """The mean panel and the spread panel of some subgroups under given parameters."""
@@ -209,7 +209,7 @@ def _frozen_lines(size: int | None, spread: Spread, centre: float, sigma: float,
         following = PanelLimits(None, None, None)
         return _PANELS[spread](PanelLimits(centre, None, None), following)
     some = np.full(1, np.nan)
-    plots = _plots(SubgroupStatistics(np.array([size]), some, some, some), spread, centre, sigma, basis)
+    plots = subgroup_plots(SubgroupStatistics(np.array([size]), some, some, some), spread, centre, sigma, basis)
     return _PANELS[spread](plots[0].limits(), plots[1].limits())
 
 
@@ -290,7 +290,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     record = BaselineRecord(filled, total, options.exclude)
     limits = _limits(options, spread, mean, sigma, freedom, size, rules, record, estimator)
 
-    plots = _plots(statistics, spread, mean, sigma, basis)
+    plots = subgroup_plots(statistics, spread, mean, sigma, basis)
     seen, _ = _watch(plots, spread, rules, None, kept)
     panels = _PANELS[spread](plots[0].panel(), plots[1].panel())
     baseline = Baseline(seen.verdict, panels, seen.signals, seen.found)
@@ -402,7 +402,7 @@ def judge(
     statistics = data.statistics()
     _check(SubgroupOptions("", standards=Standards(limits.centre, limits.sigma)), statistics, spread)
     before = carry or NEW
-    plots = _plots(statistics, spread, limits.centre, limits.sigma, limits.basis)
+    plots = subgroup_plots(statistics, spread, limits.centre, limits.sigma, limits.basis)
     seen, tail = _watch(plots, spread, limits.rules, before.mean, None)
     return SubgroupJudgement(
         seen.verdict,
