@@ -247,11 +247,18 @@ def test_plain_results_are_written() -> None:
 
 
 def test_provenance_is_the_last_member() -> None:
-    for written in (b"{}", b'{"a":1}'):
-        whole = json.loads(answers.with_provenance(written, "toy", b"body"))
+    for plain in ({}, {"a": 1}):
+        whole = json.loads(answers.dumps(answers.with_provenance(plain, "toy", b"body")))
         assert list(whole)[-1] == "provenance"
         assert whole["provenance"]["request_digest"] == answers.digest_of(b"body")
-        assert {key: value for key, value in whole.items() if key != "provenance"} == json.loads(written)
+        assert {key: value for key, value in whole.items() if key != "provenance"} == plain
+
+
+def test_one_number_seen_many_times_is_written_as_such() -> None:
+    line = np.ndarray((3,), np.float64, np.array(1.5), 0, (0,))
+    assert answers.dumps({"a": line, "b": line[:0]}) == b'{"a":[1.5,1.5,1.5],"b":[]}'
+    with pytest.raises(answers.NotFinite):
+        answers.dumps({"a": np.ndarray((3,), np.float64, np.array(np.nan), 0, (0,))})
 
 
 def test_a_start_loads_no_scipy_and_no_document_maker() -> None:

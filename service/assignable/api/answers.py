@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from base64 import b64encode
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import fields, is_dataclass
 from functools import cache
 from hashlib import sha256
@@ -71,7 +71,7 @@ def refuse_not_finite(result: Any) -> None:
     raise NotFinite(next(_not_finite(result, "$")))
 
 
-_HARMLESS = frozenset((str, int, bool, type(None)))
+_HARMLESS = frozenset((str, int, bool, type(None), orjson.Fragment))
 
 
 @cache
@@ -88,7 +88,7 @@ def _members(kind: type) -> Callable[[Any], Iterable[Any]] | None:
 def _plainer(value: object) -> object:
     """What the writer does not take as it is: one number seen many times, strided arrays, arrays of texts."""
     if isinstance(value, np.ndarray):
-        if value.ndim == 1 and value.strides == (0,) and value.dtype.kind == "f":
+        if value.ndim == 1 and value.strides == (0,) and len(value) and value.dtype.kind == "f":
             one = orjson.dumps(float(value[0]))
             return orjson.Fragment(b"[" + b",".join([one] * len(value)) + b"]")
         return value.tolist() if value.dtype.kind in "OUS" else np.ascontiguousarray(value)
@@ -134,11 +134,10 @@ def _provenance_of(method: str) -> bytes:
     return orjson.dumps({**known, "method": method})[:-1] + b',"request_digest":"'
 
 
-def with_provenance(answer: bytes, method: str, request: bytes) -> bytes:
-    """The JSON object ``answer`` with a last member that says what it is and of which request."""
-    comma = b"" if answer == b"{}" else b","
-    digest = digest_of(request).encode()
-    return b"".join((answer[:-1], comma, b'"provenance":', _provenance_of(method), digest, b'"}}'))
+def with_provenance(result: Mapping[str, Any], method: str, request: bytes) -> dict[str, Any]:
+    """The members of an answer with a last one that says what it is and of which request."""
+    written = _provenance_of(method) + digest_of(request).encode() + b'"}'
+    return {**result, "provenance": orjson.Fragment(written)}
 
 
 def content_digest(body: bytes) -> str:

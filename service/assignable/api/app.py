@@ -10,19 +10,12 @@ from . import problems
 from .contract import Contract
 from .cors import Cors
 from .observability import REQUEST_ID, Edge, Log
-from .operations import capability, charts, designs, documentation, health, reference
+from .operations import announce, documentation
 from .settings import Settings
 
 Register = Callable[[Contract], None]
 
-OPERATIONS: tuple[Register, ...] = (
-    charts.register,
-    capability.register,
-    designs.register,
-    reference.register,
-    health.register,
-    documentation.register,
-)
+OPERATIONS: tuple[Register, ...] = (announce, documentation.register)
 
 
 def create_app(

@@ -112,8 +112,9 @@ class Operation:
         """A view's result as the bytes of the answer."""
         if self.media_type != answers.JSON:
             return result.encode() if isinstance(result, str) else bytes(result)
-        written = answers.dumps(result)
-        return written if self.provenance is None else answers.with_provenance(written, self.provenance, body)
+        if self.provenance is not None:
+            result = answers.with_provenance(result, self.provenance, body)
+        return answers.dumps(result)
 
 
 class Contract:

@@ -1,0 +1,68 @@
+"""The operations, by group: which routes there are, and the module that binds them when they are needed."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from functools import partial
+from importlib import import_module
+
+from ...spc.charts import MODULES
+from ...spc.charts.registry import stem_of
+from ..contract import Contract, Route
+
+
+@dataclass(frozen=True, slots=True)
+class Group:
+    """Operations that one module binds."""
+
+    module: str
+    routes: tuple[Route, ...]
+
+
+def _of_charts(names: Iterable[str]) -> tuple[Route, ...]:
+    return tuple(
+        route
+        for name in names
+        for route in (
+            ("POST", f"/v1/charts/{name}/limits", f"fit{stem_of(name)}Limits"),
+            ("POST", f"/v1/charts/{name}/signals", f"judge{stem_of(name)}"),
+        )
+    )
+
+
+GROUPS = (
+    Group("charts", _of_charts(name for names in MODULES.values() for name in names)),
+    Group("capability", (("POST", "/v1/capability/measurements", "assessMeasurements"),)),
+    Group(
+        "designs",
+        (
+            ("POST", "/v1/designs/subgroups", "designSubgroups"),
+            ("POST", "/v1/designs/run-length", "computeRunLength"),
+        ),
+    ),
+    Group(
+        "reference",
+        (
+            ("GET", "/v1/charts", "listCharts"),
+            ("GET", "/v1/factors", "getFactors"),
+            ("GET", "/v1/rules", "getRules"),
+            ("GET", "/v1/methods", "getMethods"),
+        ),
+    ),
+    Group(
+        "health",
+        (("GET", "/health/live", "getLiveness"), ("GET", "/health/ready", "getReadiness")),
+    ),
+)
+"""Every group, in the order in which the contract lists them."""
+
+
+def announce(contract: Contract) -> None:
+    """Takes up the routes of every group."""
+    for group in GROUPS:
+        contract.announce(group.routes, partial(_bind, group.module))
+
+
+def _bind(module: str, contract: Contract) -> None:
+    import_module(f"{__name__}.{module}").register(contract)

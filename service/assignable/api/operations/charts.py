@@ -17,7 +17,7 @@ from .. import fields as f
 from .. import problems
 from ..contract import Contract, Provenance
 from ..schemas import derive
-from ..schemas.charts import REQUESTS, ChartRequest
+from ..schemas.charts import ChartRequest, request_of
 from ..schemas.common import CAUTIONS, CautionAnswer, Characteristic, cautions, labels_of
 
 TAG = "Charts"
@@ -364,7 +364,7 @@ def register(contract: Contract) -> None:
     """Binds both operations of every chart in the registry."""
     contract.tag(TAG, "Limits from a baseline, and signals on new data under frozen limits. " + VERDICT_NOTE)
     for chart in CHARTS.values():
-        takes = REQUESTS[chart.name]
+        takes = request_of(chart.name)
         fit_request, fit_answer, judge_request, judge_answer = _shapes(chart, takes)
         contract.operation(
             "POST",

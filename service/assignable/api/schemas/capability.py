@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from typing import Any
 
-
 from ...spc.capability.indices import (
     LARGEST_COUNT,
     LEAST_CONFIDENCE,

@@ -37,4 +37,9 @@ class Chart:
     @property
     def stem(self) -> str:
         """The name in camel case, as operation ids and schema names need it: ``XbarR``."""
-        return "".join(part.capitalize() for part in self.name.split("-"))
+        return stem_of(self.name)
+
+
+def stem_of(name: str) -> str:
+    """The name of a chart in camel case."""
+    return "".join(part.capitalize() for part in name.split("-"))

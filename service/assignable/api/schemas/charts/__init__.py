@@ -2,20 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from importlib import import_module
-from types import MappingProxyType
 
 from ....spc.charts import MODULES
 from .common import ChartRequest
 
-REQUESTS: Mapping[str, ChartRequest] = MappingProxyType(
-    {
-        name: request
-        for module in MODULES
-        for name, request in import_module(f"{__name__}.{module}").REQUESTS.items()
-    }
-)
-"""By the name of the chart."""
 
-__all__ = ["REQUESTS", "ChartRequest"]
+def request_of(chart: str) -> ChartRequest:
+    """What the chart of this name takes."""
+    module = next(module for module, names in MODULES.items() if chart in names)
+    found: ChartRequest = import_module(f"{__name__}.{module}").REQUESTS[chart]
+    return found
+
+
+__all__ = ["ChartRequest", "request_of"]

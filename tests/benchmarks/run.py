@@ -1,0 +1,347 @@
+"""The benchmark: one command that prints a table of ratios, each against its floor, measured in one run.
+
+    python tests/benchmarks/run.py            every row
+    python tests/benchmarks/run.py http       the rows whose name holds a word
+
+Ratios of one run are what to quote: absolute times change with the machine. Nothing here is a test.
+"""
+
+from __future__ import annotations
+
+import io
+import os
+import resource
+import shutil
+import socket
+import subprocess
+import sys
+import tempfile
+import threading
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+os.environ["ASSIGNABLE_LOG"] = "off"
+
+HERE = Path(__file__).resolve().parent
+SECONDS = float(os.environ.get("BENCHMARK_SECONDS", "4"))
+CLIENTS = 8
+
+
+def row(name: str, measured: str, ratio: float | None, aim: str) -> None:
+    print(f"{name:<44} {measured:>34} {'' if ratio is None else f'{ratio:8.2f}'}   {aim}", flush=True)
+
+
+# ---------------------------------------------------------------------------------------------------
+# Bodies
+
+
+def fit_body() -> bytes:
+    import numpy as np
+    import orjson
+
+    values = np.random.default_rng(1).normal(2.5, 0.012, (25, 5)).round(3).tolist()
+    return orjson.dumps(
+        {
+            "characteristic": {"name": "wall thickness", "unit": "mm"},
+            "data": {"values": values},
+            "rules": {"published": "western-electric-1956"},
+        }
+    )
+
+
+def post(path: str, body: bytes, application=None) -> bytes:
+    """One request through the application, without a socket."""
+    from assignable.api.app import create_app
+
+    application = application or post.__dict__.setdefault("application", create_app())
+    environ = {
+        "REQUEST_METHOD": "POST",
+        "PATH_INFO": path,
+        "SCRIPT_NAME": "",
+        "QUERY_STRING": "",
+        "SERVER_NAME": "localhost",
+        "SERVER_PORT": "80",
+        "SERVER_PROTOCOL": "HTTP/1.1",
+        "wsgi.version": (1, 0),
+        "wsgi.url_scheme": "http",
+        "wsgi.input": io.BytesIO(body),
+        "wsgi.errors": sys.stderr,
+        "wsgi.multithread": True,
+        "wsgi.multiprocess": True,
+        "wsgi.run_once": False,
+        "CONTENT_LENGTH": str(len(body)),
+        "CONTENT_TYPE": "application/json",
+        "HTTP_HOST": "localhost",
+    }
+    status: list[str] = []
+    answer = application.wsgi_app(environ, lambda s, h, e=None: status.append(s))
+    written = b"".join(answer)
+    assert status[0].startswith("200"), written[:500]
+    return written
+
+
+def judge_body() -> bytes:
+    import orjson
+
+    limits = orjson.loads(post("/v1/charts/xbar-r/limits", fit_body()))["limits"]
+    data = {"values": [[2.51, 2.49, 2.5, 2.5, 2.52]]}
+    first = orjson.loads(
+        post("/v1/charts/xbar-r/signals", orjson.dumps({"limits": limits, "data": data}))
+    )
+    return orjson.dumps({"limits": limits, "data": data, "carry": first["carry"]})
+
+
+# ---------------------------------------------------------------------------------------------------
+# Over HTTP, on the shipped server settings
+
+BARE = '''
+import sys
+from pathlib import Path
+from flask import Flask, Response, request
+
+answers = [Path(name).read_text() for name in {names!r}]
+application = Flask("bare")
+
+@application.post("/<int:which>")
+def answer(which):
+    request.get_json()
+    return Response(answers[which], content_type="application/json")
+'''
+
+OURS = """
+from assignable.api.app import create_app
+application = create_app()
+"""
+
+
+def _free_port() -> int:
+    with socket.socket() as found:
+        found.bind(("127.0.0.1", 0))
+        return found.getsockname()[1]
+
+
+@contextmanager
+def _server(folder: Path, name: str, source: str) -> Iterator[int]:
+    """gunicorn with the shipped settings, serving ``source`` on a free loopback port."""
+    (folder / f"{name}.py").write_text(source)
+    port = _free_port()
+    process = subprocess.Popen(
+        [
+            sys.executable,
+            "-m",
+            "gunicorn",
+            "-c",
+            str(HERE.parents[1] / "docker" / "gunicorn.conf.py"),
+            "--bind",
+            f"127.0.0.1:{port}",
+            "--chdir",
+            str(folder),
+            f"{name}:application",
+        ],
+        env={**os.environ, "PYTHONPATH": str(folder)},
+        stdout=subprocess.DEVNULL,
+        stderr=subprocess.DEVNULL,
+    )
+    try:
+        for _ in range(200):
+            try:
+                socket.create_connection(("127.0.0.1", port), 1).close()
+                break
+            except OSError:
+                time.sleep(0.05)
+        yield port
+    finally:
+        process.terminate()
+        process.wait(20)
+
+
+def _rate(port: int, path: str, body: bytes, folder: Path) -> float:
+    """Answered requests a second, by wrk where it is installed, by plain sockets else."""
+    if shutil.which("wrk"):
+        quoted = body.decode().replace("\\", "\\\\").replace("'", "\\'")
+        script = folder / "post.lua"
+        script.write_text(
+            f"wrk.method='POST'\nwrk.body='{quoted}'\nwrk.headers['Content-Type']='application/json'\n"
+        )
+        command = ["wrk", "-t1", f"-c{CLIENTS}", f"-d{SECONDS:g}s", "-s", str(script)]
+        out = subprocess.run(
+            [*command, f"http://127.0.0.1:{port}{path}"], capture_output=True, text=True, check=True
+        ).stdout
+        assert "Non-2xx" not in out, out
+        return float(out.split("Requests/sec:")[1].split()[0])
+    return _rate_by_sockets(port, path, body)
+
+
+def _rate_by_sockets(port: int, path: str, body: bytes) -> float:
+    request = (
+        f"POST {path} HTTP/1.1\r\nHost: x\r\nContent-Type: application/json\r\nContent-Length: {len(body)}\r\n\r\n"
+    ).encode() + body
+    counts = [0] * CLIENTS
+    until = time.monotonic() + SECONDS
+
+    def client(at: int) -> None:
+        with socket.create_connection(("127.0.0.1", port)) as connection, connection.makefile("rb") as answers:
+            while time.monotonic() < until:
+                connection.sendall(request)
+                length = 0
+                assert b" 200 " in answers.readline()
+                while (line := answers.readline()) != b"\r\n":
+                    if line.lower().startswith(b"content-length:"):
+                        length = int(line.split(b":")[1])
+                answers.read(length)
+                counts[at] += 1
+
+    threads = [threading.Thread(target=client, args=(at,)) for at in range(CLIENTS)]
+    for thread in threads:
+        thread.start()
+    for thread in threads:
+        thread.join()
+    return sum(counts) / SECONDS
+
+
+def http() -> None:
+    """Requests a second against a bare Flask application on the same settings."""
+    fit, judge = fit_body(), judge_body()
+    with tempfile.TemporaryDirectory() as name:
+        folder = Path(name)
+        for at, (path, body) in enumerate(
+            (("/v1/charts/xbar-r/limits", fit), ("/v1/charts/xbar-r/signals", judge))
+        ):
+            (folder / f"answer{at}").write_bytes(post(path, body))
+        bare = BARE.format(names=[str(folder / f"answer{at}") for at in (0, 1)])
+        with _server(folder, "bare", bare) as floor, _server(folder, "ours", OURS) as ours:
+            for at, title, path, body, aim in (
+                (0, "http: xbar-r limits, 25x5, all diagnostics", "/v1/charts/xbar-r/limits", fit, "aim ≥ 0.4"),
+                (1, "http: one subgroup judged with carry", "/v1/charts/xbar-r/signals", judge, "aim ≥ 0.6"),
+            ):
+                ratios = []
+                for _ in range(3):
+                    a = _rate(ours, path, body, folder)
+                    b = _rate(floor, f"/{at}", body, folder)
+                    ratios.append((a / b, a, b))
+                ratio, a, b = sorted(ratios)[1]
+                row(title, f"{a:.0f} of {b:.0f} requests/s", ratio, aim)
+
+
+# ---------------------------------------------------------------------------------------------------
+# In process
+
+
+def _cpu(action: Callable[[], object], times: int = 3) -> float:
+    best = float("inf")
+    for _ in range(times):
+        start = time.process_time()
+        action()
+        best = min(best, time.process_time() - start)
+    return best
+
+
+def large() -> None:
+    """200,000 subgroups of five, bytes in and bytes out, against parsing, arithmetic and writing alone."""
+    import numpy as np
+    import orjson
+
+    values = np.random.default_rng(2).normal(2.5, 0.012, (200_000, 5)).round(4).tolist()
+    body = orjson.dumps({"data": {"values": values}, "rules": {"published": "western-electric-1956"}})
+    del values
+
+    def floor() -> bytes:
+        x = np.array(orjson.loads(body)["data"]["values"])
+        mean, spread = x.mean(axis=1), x.max(axis=1) - x.min(axis=1)
+        return orjson.dumps({"mean": mean, "range": spread}, option=orjson.OPT_SERIALIZE_NUMPY)
+
+    post("/v1/charts/xbar-r/limits", fit_body())
+    pairs = [(_cpu(lambda: post("/v1/charts/xbar-r/limits", body), 1), _cpu(floor, 1)) for _ in range(5)]
+    ours, bare = min(a for a, _ in pairs), min(b for _, b in pairs)
+    row(
+        "large: xbar-r limits, 200,000x5",
+        f"{ours * 1e3:.0f} of {bare * 1e3:.0f} ms CPU",
+        ours / bare,
+        "aim ≤ 2",
+    )
+
+
+def memory() -> None:
+    """Peak memory of that request over what the process held before, against the body."""
+    code = """
+import sys, resource
+sys.path.insert(0, %r)
+import run
+import numpy as np, orjson
+run.post("/v1/charts/xbar-r/limits", run.fit_body())
+parts = [b'{"data":{"values":[']
+rows = np.random.default_rng(2).normal(2.5, 0.012, (200_000, 5)).round(4)
+for at in range(0, len(rows), 1000):
+    parts.append(orjson.dumps(rows[at:at + 1000], option=orjson.OPT_SERIALIZE_NUMPY)[1:-1])
+    parts.append(b",")
+parts[-1] = b']},"rules":{"published":"western-electric-1956"}}'
+body = b"".join(parts)
+del rows, parts
+before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+held = int(open("/proc/self/statm").read().split()[1]) * 4
+run.post("/v1/charts/xbar-r/limits", body)
+print(len(body), (resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - held) * 1024)
+""" % str(HERE)
+    out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout
+    size, peak = map(int, out.split())
+    row(
+        "memory: peak of that request over the body",
+        f"{peak / 1e6:.0f} MB for {size / 1e6:.1f} MB",
+        peak / size,
+        "aim ≤ 15",
+    )
+
+
+def runs() -> None:
+    """Run length of the four Western Electric rules, cold, and again."""
+    code = """
+import time
+from assignable.spc import runlength
+from assignable.spc.rules import PUBLISHED, Rule
+import scipy.linalg, scipy.special
+rules = PUBLISHED["western-electric-1956"].rules
+for _ in range(2):
+    start = time.process_time()
+    runlength.shewhart(rules)
+    print(time.process_time() - start)
+"""
+    out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout
+    cold, again = map(float, out.split())
+    row("runs: Western Electric 1956, cold", f"{cold * 1e3:.1f} ms CPU", None, "aim < 50 ms")
+    row("runs: the same again", f"{again * 1e6:.0f} µs CPU", None, "cached")
+
+
+def start() -> None:
+    """Import to ready, against importing flask, marshmallow and numpy alone."""
+
+    def seconds(code: str) -> float:
+        began = resource.getrusage(resource.RUSAGE_CHILDREN)
+        subprocess.run([sys.executable, "-c", code], check=True)
+        ended = resource.getrusage(resource.RUSAGE_CHILDREN)
+        return ended.ru_utime + ended.ru_stime - began.ru_utime - began.ru_stime
+
+    nothing = min(seconds("pass") for _ in range(5))
+    ours, floor = [], []
+    for _ in range(9):
+        ours.append(seconds("from assignable.api.app import create_app; create_app()"))
+        floor.append(seconds("import flask, marshmallow, numpy"))
+    a, b = min(ours) - nothing, min(floor) - nothing
+    row("start: import to ready", f"{a * 1e3:.0f} of {b * 1e3:.0f} ms CPU", a / b, "aim ≤ 1.5")
+
+
+ROWS = {"http": http, "large": large, "memory": memory, "runs": runs, "start": start}
+
+
+def main(words: list[str]) -> None:
+    """Prints the rows asked for."""
+    print(f"{'what':<44} {'measured':>34} {'ratio':>8}")
+    for name, measure in ROWS.items():
+        if not words or any(word in name for word in words):
+            measure()
+
+
+if __name__ == "__main__":
+    main(sys.argv[1:])
