@@ -44,6 +44,7 @@ T = TypeVar("T")
 P = TypeVar("P")
 Q = TypeVar("Q")
 AttributeChart = Literal["p", "np", "c", "u"]
+CountChart = Literal["p", "np", "c", "u", "p-prime", "u-prime"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -166,17 +167,18 @@ class AttributeJudgement(Generic[Q]):
     cautions: tuple[Caution, ...]
 
 
-def _is_binomial(chart: AttributeChart) -> bool:
-    return chart in ("p", "np")
+def is_binomial(chart: CountChart) -> bool:
+    """Whether the chart counts units, of which no more can be nonconforming than were inspected."""
+    return chart in ("p", "np", "p-prime")
 
 
-def _plots_count(chart: AttributeChart) -> bool:
+def _plots_count(chart: CountChart) -> bool:
     return chart in ("np", "c")
 
 
-def _plot(chart: AttributeChart, counts: Floats, sizes: Floats, mean: float, basis: LimitBasis) -> Plot:
+def plot_counts(chart: CountChart, counts: Floats, sizes: Floats, mean: float, basis: LimitBasis) -> Plot:
     """The panel of some samples; ``sizes`` is (m,), or (1,) where it is one for all."""
-    binomial = _is_binomial(chart)
+    binomial = is_binomial(chart)
     if len(sizes) == 1:
         lines = count_lines(binomial, mean, sizes, basis)
         unit = 1.0 if _plots_count(chart) else float(sizes[0])
@@ -208,7 +210,7 @@ def _plot(chart: AttributeChart, counts: Floats, sizes: Floats, mean: float, bas
 # Data
 
 
-def _sizes(chart: AttributeChart, data: Counts) -> Floats:
+def sample_sizes(chart: CountChart, data: Counts) -> Floats:
     """Sizes (m,), or (1,) where all samples have one; raises UnusableData for what the chart cannot take."""
     counts, inspected = data.counts, data.inspected
     present = ~np.isnan(counts)
@@ -233,7 +235,7 @@ def _sizes(chart: AttributeChart, data: Counts) -> Floats:
                 ("data", "inspected", at),
             )
         )
-    if _is_binomial(chart):
+    if is_binomial(chart):
         for at in np.flatnonzero(counts > inspected)[:100].tolist():
             faults.append(
                 Fault(
@@ -264,6 +266,46 @@ def _sizes(chart: AttributeChart, data: Counts) -> Floats:
     return np.where(present, inspected, sizes[0])
 
 
+def events_and_total(
+    counts: Floats, sizes: Floats, binomial: bool, *, needed: bool
+) -> tuple[int, float, float]:
+    """Samples counted, their events, and what was inspected in all; counts (m,), sizes (m,) or (1,).
+
+    Where the mean is ``needed`` from them, raises UnusableData for fewer than two samples, no event, or
+    every unit nonconforming.
+    """
+    present = ~np.isnan(counts)
+    filled = int(np.count_nonzero(present))
+    total = float(sizes[0]) * filled if len(sizes) == 1 else float(sizes[present].sum())
+    events = float(counts[present].sum())
+    if not needed:
+        return filled, events, total
+    if filled < 2:
+        raise UnusableData.of(
+            "too-few-samples",
+            f"Limits need at least two samples, and 20 to 25 to deserve trust; there "
+            f"{'is one' if filled else 'are none'}.",
+            "data",
+            "counts",
+        )
+    if events == 0:
+        raise UnusableData.of(
+            "no-events",
+            "Every count is 0, so there is nothing to set limits from. Inspect more, give a standard, or "
+            "record what was inspected between events instead.",
+            "data",
+            "counts",
+        )
+    if binomial and events == total:
+        raise UnusableData.of(
+            "all-nonconforming",
+            "Every unit inspected is nonconforming, so there is nothing to set limits from.",
+            "data",
+            "counts",
+        )
+    return filled, events, total
+
+
 def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart) -> AttributeFit:
     """Limits of a chart of counts from a baseline, or from a standard.
 
@@ -273,7 +315,7 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
     all zero (or all nonconforming); UnusableParameter for options that do not fit. Source: [iso-7870-2].
     """
     rules = watched(options.rules)
-    basis, binomial = options.basis, _is_binomial(chart)
+    basis, binomial = options.basis, is_binomial(chart)
     if data is None:
         faults = []
         if options.standard is None:
@@ -312,46 +354,17 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
             "size-with-data", "The sample size comes from the data; give it only without data.", "sample_size"
         )
 
-    sizes = _sizes(chart, data)
+    sizes = sample_sizes(chart, data)
     kept = exclusion_mask(len(data.counts), options.exclude)
     counts = data.counts if kept is None else np.where(kept, data.counts, np.nan)
-    present = ~np.isnan(counts)
-    filled = int(np.count_nonzero(present))
-    total = float(sizes[0]) * filled if len(sizes) == 1 else float(sizes[present].sum())
-    if options.standard is not None:
-        mean = options.standard
-    else:
-        if filled < 2:
-            raise UnusableData.of(
-                "too-few-samples",
-                f"Limits need at least two samples, and 20 to 25 to deserve trust; there "
-                f"{'is one' if filled else 'are none'}.",
-                "data",
-                "counts",
-            )
-        events = float(counts[present].sum())
-        if events == 0:
-            raise UnusableData.of(
-                "no-events",
-                "Every count is 0, so there is nothing to set limits from. Inspect more, give a standard, or "
-                "record what was inspected between events instead.",
-                "data",
-                "counts",
-            )
-        if binomial and events == total:
-            raise UnusableData.of(
-                "all-nonconforming",
-                "Every unit inspected is nonconforming, so there is nothing to set limits from.",
-                "data",
-                "counts",
-            )
-        mean = events / total
+    filled, events, total = events_and_total(counts, sizes, binomial, needed=options.standard is None)
+    mean = events / total if options.standard is None else options.standard
     size = float(sizes[0]) if len(sizes) == 1 else None
     record = BaselineRecord(filled, filled, options.exclude)
     source: Literal["estimated", "given"] = "estimated" if options.standard is None else "given"
     limits = _limits(chart, options, rules, mean, source, size, record)
 
-    plot = _plot(chart, data.counts, sizes, mean, basis)
+    plot = plot_counts(chart, data.counts, sizes, mean, basis)
     seen, _ = watch(PANEL_NAMES[chart], plot, rules, kept=kept)
     z = (plot.value - plot.centre) / plot.sigma
     found = AttributeDiagnostics(
@@ -362,7 +375,7 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
         ),
         diagnostics.autocorrelation(z if kept is None else np.where(kept, z, np.nan)),
     )
-    typical = total / filled
+    typical = total / filled if filled else float(sizes.mean())
     return AttributeFit(
         limits,
         Baseline(seen.verdict, _PANELS[chart](plot.panel()), seen.signals, seen.found),
@@ -407,7 +420,7 @@ def _limits(
         centre = mean if not _plots_count(chart) else None
         lines = PanelLimits(centre, None, None)
     else:
-        lines = _plot(chart, np.empty(0), np.array([size]), mean, basis).limits()
+        lines = plot_counts(chart, np.empty(0), np.array([size]), mean, basis).limits()
     return AttributeLimits(
         mean,
         source,
@@ -429,7 +442,7 @@ def judge(
     Limits of ``p`` and ``u`` follow each sample's own size. Raises UnusableData for counts the chart
     cannot take; a sample of another size than the frozen one on ``np`` or ``c`` is refused.
     """
-    sizes = _sizes(chart, data)
+    sizes = sample_sizes(chart, data)
     if _plots_count(chart) and data.inspected is not None and float(sizes[0]) != limits.sample_size:
         other = "p" if chart == "np" else "u"
         raise UnusableData.of(
@@ -443,7 +456,7 @@ def judge(
         assert limits.sample_size is not None
         sizes = np.array([limits.sample_size])
     before = carry or NEW
-    plot = _plot(chart, data.counts, sizes, limits.mean, limits.basis)
+    plot = plot_counts(chart, data.counts, sizes, limits.mean, limits.basis)
     seen, tail = watch(PANEL_NAMES[chart], plot, limits.rules, tail=before.tail)
     return AttributeJudgement(
         seen.verdict,
