@@ -76,24 +76,28 @@ class Subgroups:
         of the largest range, so that values near 1e300 or 1e-300 neither overflow nor vanish.
         """
         x = self.values
-        present = ~np.isnan(x)
-        size = present.sum(axis=1)
         m, n = x.shape
-        if bool(present.all()):
-            mean = x.mean(axis=1)
+        sums = np.add.reduce(x, axis=1)
+        total = float(np.add.reduce(sums))
+        # A missing piece makes the total NaN; values are bounded so that nothing else can.
+        if total == total:
+            size = np.full(m, n)
+            mean = sums / n
             # A second pass over the residuals restores the digits the first one lost.
             residual = x - mean[:, None]
-            mean = mean + residual.mean(axis=1)
+            mean = mean + np.add.reduce(residual, axis=1) / n
             if n < 2:
                 nothing = np.full(m, np.nan)
                 return SubgroupStatistics(size, mean, nothing, nothing)
-            spread = x.max(axis=1) - x.min(axis=1)
-            unit = float(spread.max()) or 1.0
+            spread = np.maximum.reduce(x, axis=1) - np.minimum.reduce(x, axis=1)
+            unit = float(np.maximum.reduce(spread)) or 1.0
             residual /= unit
             square = np.einsum("ij,ij->i", residual, residual)
-            square -= residual.sum(axis=1) ** 2 / n
+            square -= np.add.reduce(residual, axis=1) ** 2 / n
             sd = np.sqrt(np.maximum(square, 0.0) / (n - 1)) * unit
             return SubgroupStatistics(size, mean, spread, np.where(spread > 0, sd, 0.0))
+        present = x == x
+        size = present.sum(axis=1)
         filled = np.where(present, x, 0.0)
         some = np.maximum(size, 1)
         mean = filled.sum(axis=1) / some
@@ -192,6 +196,18 @@ class Vectors:
         # A second pass over the residuals restores the digits the first one lost.
         corrected: Floats = mean + (self.values - mean[:, None, :]).mean(axis=1)
         return corrected
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Intervals:
+    """What lies between successive events, in their order: opportunities, or time; (m,), NaN for a gap."""
+
+    values: Floats
+
+    def __post_init__(self) -> None:
+        if self.values.ndim != 1 or self.values.size == 0:
+            raise UnusableData.of("empty", "There are no intervals in the data.", "data", "intervals")
+        object.__setattr__(self, "values", _frozen(self.values))
 
 
 @dataclass(frozen=True, slots=True, eq=False)

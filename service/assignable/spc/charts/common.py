@@ -202,7 +202,14 @@ def watch(
     kept: Booleans | None = None,
 ) -> tuple[Watched, Tail]:
     """The signals of one panel under its limits and ``rules``, and the tail that the next call needs."""
-    detection = detect(rules, plot.track(kept), tail)
+    return watch_track(name, plot.track(kept), rules, tail=tail)
+
+
+def watch_track(
+    name: str, track: Track, rules: Sequence[Rule] = (), *, tail: Tail | None = None
+) -> tuple[Watched, Tail]:
+    """The same for a panel whose scores are not those of its plot."""
+    detection = detect(rules, track, tail)
     if not len(detection):
         return Watched(), detection.tail
     return Watched(in_words(detection, panel=name, most=MOST_SIGNALS), len(detection)), detection.tail
