@@ -335,6 +335,48 @@ _LISTED = (
         "Confidence intervals on linear combinations of variance components that are unrestricted in sign",
         "Journal of Statistical Computation and Simulation 35, 135-143",
     ),
+    Reference(
+        "wheeler-chambers-1992",
+        "Wheeler, D. J.; Chambers, D. S.",
+        1992,
+        "Understanding statistical process control, 2nd edition",
+        "SPC Press, Knoxville",
+    ),
+    Reference(
+        "kaminsky-1992",
+        "Kaminsky, F. C.; Benneyan, J. C.; Davis, R. D.; Burke, R. J.",
+        1992,
+        "Statistical control charts based on a geometric distribution",
+        "Journal of Quality Technology 24(2), 63-69",
+    ),
+    Reference(
+        "nelson-1994",
+        "Nelson, L. S.",
+        1994,
+        "A control chart for parts-per-million nonconforming items",
+        "Journal of Quality Technology 26(3), 239-240",
+    ),
+    Reference(
+        "xie-goh-ranjan-2002",
+        "Xie, M.; Goh, T. N.; Ranjan, P.",
+        2002,
+        "Some effective control chart procedures for reliability monitoring",
+        "Reliability Engineering and System Safety 77(2), 143-150",
+    ),
+    Reference(
+        "girshick-mosteller-savage-1946",
+        "Girshick, M. A.; Mosteller, F.; Savage, L. J.",
+        1946,
+        "Unbiased estimates for certain binomial sampling problems with applications",
+        "Annals of Mathematical Statistics 17(1), 13-23",
+    ),
+    Reference(
+        "cohen-1965",
+        "Cohen, A. C.",
+        1965,
+        "Maximum likelihood estimation in the Weibull distribution based on complete and on censored samples",
+        "Technometrics 7(4), 579-588",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(
