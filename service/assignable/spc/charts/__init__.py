@@ -19,6 +19,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "individuals": ("individuals",),
         "attributes": ("p", "np", "c", "u"),
         "dispersed": ("p-prime", "u-prime"),
+        "rare": ("g", "t"),
     }
 )
 """The charts of each module, in the order in which they are listed."""
