@@ -97,23 +97,34 @@ def judge_body() -> bytes:
 # ---------------------------------------------------------------------------------------------------
 # Over HTTP, on the shipped server settings
 
-BARE = '''
+BARE = """
 import sys
 from pathlib import Path
 from flask import Flask, Response, request
+from assignable.api.settings import Settings
+from assignable.cli.serving import Server
 
-answers = [Path(name).read_text() for name in {names!r}]
+answers = [Path(name).read_text() for name in sys.argv[2:]]
 application = Flask("bare")
 
 @application.post("/<int:which>")
 def answer(which):
     request.get_json()
     return Response(answers[which], content_type="application/json")
-'''
+
+Server(application, Settings(port=int(sys.argv[1]), log="off")).run()
+"""
 
 OURS = """
+import sys
 from assignable.api.app import create_app
-application = create_app()
+from assignable.api.settings import Settings
+from assignable.cli.serving import Server, warm_up
+
+settings = Settings(port=int(sys.argv[1]), log="off")
+application = create_app(settings)
+warm_up(application)
+Server(application, settings).run()
 """
 
 
@@ -124,29 +135,16 @@ def _free_port() -> int:
 
 
 @contextmanager
-def _server(folder: Path, name: str, source: str) -> Iterator[int]:
-    """gunicorn with the shipped settings, serving ``source`` on a free loopback port."""
-    (folder / f"{name}.py").write_text(source)
+def _server(source: str, *arguments: str) -> Iterator[int]:
+    """The source run as a server with the shipped settings, on a free loopback port."""
     port = _free_port()
     process = subprocess.Popen(
-        [
-            sys.executable,
-            "-m",
-            "gunicorn",
-            "-c",
-            str(HERE.parents[1] / "docker" / "gunicorn.conf.py"),
-            "--bind",
-            f"127.0.0.1:{port}",
-            "--chdir",
-            str(folder),
-            f"{name}:application",
-        ],
-        env={**os.environ, "PYTHONPATH": str(folder)},
+        [sys.executable, "-c", source, str(port), *arguments],
         stdout=subprocess.DEVNULL,
         stderr=subprocess.DEVNULL,
     )
     try:
-        for _ in range(200):
+        for _ in range(400):
             try:
                 socket.create_connection(("127.0.0.1", port), 1).close()
                 break
@@ -155,7 +153,7 @@ def _server(folder: Path, name: str, source: str) -> Iterator[int]:
         yield port
     finally:
         process.terminate()
-        process.wait(20)
+        process.wait(40)
 
 
 def _rate(port: int, path: str, body: bytes, folder: Path) -> float:
@@ -211,8 +209,7 @@ def http() -> None:
             (("/v1/charts/xbar-r/limits", fit), ("/v1/charts/xbar-r/signals", judge))
         ):
             (folder / f"answer{at}").write_bytes(post(path, body))
-        bare = BARE.format(names=[str(folder / f"answer{at}") for at in (0, 1)])
-        with _server(folder, "bare", bare) as floor, _server(folder, "ours", OURS) as ours:
+        with _server(BARE, *(str(folder / f"answer{at}") for at in (0, 1))) as floor, _server(OURS) as ours:
             for at, title, path, body, aim in (
                 (0, "http: xbar-r limits, 25x5, all diagnostics", "/v1/charts/xbar-r/limits", fit, "aim ≥ 0.4"),
                 (1, "http: one subgroup judged with carry", "/v1/charts/xbar-r/signals", judge, "aim ≥ 0.6"),

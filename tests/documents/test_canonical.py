@@ -4,7 +4,7 @@ import json
 
 import pytest
 import rfc8785
-from assignable.documents.canonical import canonical, digest
+from assignable.documents.canonical import NotFinite, canonical, digest, plain
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
@@ -46,3 +46,14 @@ def test_digest_and_seal_are_not_digested(member):
     assert digest({**document, member: "anything"}) == digest(document)
     assert digest({**document, "centre": 2.6}) != digest(document)
     assert digest({"centre": 2.5, "chart": "xbar-r"}) == digest(document)
+
+
+def test_a_document_is_never_written_with_a_number_that_is_none():
+    for bad in (float("nan"), float("inf"), -float("inf")):
+        with pytest.raises(NotFinite):
+            plain({"limits": [{"centre": bad}]})
+
+
+def test_whole_numbers_are_integers_in_a_document():
+    assert plain({"a": 3.0, "b": (1.5, -2.0), "c": 1e300}) == {"a": 3, "b": [1.5, -2], "c": 1e300}
+    assert type(plain(3.0)) is int

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping
+from dataclasses import fields
+from functools import cache
 from typing import Any
 
 import orjson
@@ -13,9 +15,35 @@ UNSIGNED = ("digest", "seal")
 """Members that speak about the rest of a document, and so are no part of what is digested."""
 
 
+class NotFinite(Exception):
+    """A number of a document is NaN or infinite: a fault of the service, never a document."""
+
+
 def plain(value: object) -> Any:
-    """A result object as the plain JSON values that a caller reads back."""
-    return orjson.loads(orjson.dumps(value, option=orjson.OPT_SERIALIZE_NUMPY))
+    """A result object as the plain JSON values that a caller reads back, whole numbers as integers.
+
+    Raises :class:`NotFinite`.
+    """
+    kind = type(value)
+    if kind is float:
+        if value - value != 0.0:  # type: ignore[operator]
+            raise NotFinite
+        return int(value) if value.is_integer() and abs(value) < 1e15 else value  # type: ignore[attr-defined, arg-type]
+    if kind in _AS_THEY_ARE:
+        return value
+    if kind is tuple or kind is list:
+        return [plain(inner) for inner in value]  # type: ignore[attr-defined]
+    if kind is dict:
+        return {name: plain(inner) for name, inner in value.items()}  # type: ignore[attr-defined]
+    return {name: plain(getattr(value, name)) for name in _names(kind)}
+
+
+_AS_THEY_ARE = frozenset((str, int, bool, type(None)))
+
+
+@cache
+def _names(kind: type) -> tuple[str, ...]:
+    return tuple(entry.name for entry in fields(kind))
 
 
 def canonical(value: Any) -> bytes:
@@ -37,29 +65,27 @@ class _Differs(Exception):
 def _same_in_both(value: Any) -> Any:
     kind = type(value)
     if kind is float:
-        size = abs(value)
         if value == 0.0:
             return 0
         # The two write exponents differently, and whole numbers with or without a point.
-        if not 1e-4 <= size < 1e15:
+        if not 1e-4 <= abs(value) < 1e15:
             raise _Differs
         return int(value) if value.is_integer() else value
     if kind is str:
         if not value.isascii() or not value.isprintable():
             raise _Differs
         return value
-    if kind is dict:
-        for name in value:
-            if not name.isascii() or not name.isprintable():
-                raise _Differs
-        return {name: _same_in_both(inner) for name, inner in value.items()}
-    if kind is list:
-        return [_same_in_both(inner) for inner in value]
     if value is None or kind is bool:
         return value
-    if kind is int and -(2**53) < value < 2**53:
+    if kind is int:
+        if not -(2**53) < value < 2**53:
+            raise _Differs
         return value
-    raise _Differs
+    if kind is list:
+        return [_same_in_both(inner) for inner in value]
+    if not all(name.isascii() and name.isprintable() for name in value):
+        raise _Differs
+    return {name: _same_in_both(inner) for name, inner in value.items()}
 
 
 def digest(document: Mapping[str, Any]) -> str:

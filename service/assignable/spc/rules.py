@@ -413,7 +413,7 @@ def _k_of_m(flags: Booleans, k: int, m: int, stretch: Integers | None) -> Intege
     stretch: the number of the stretch between gaps that each position belongs to, or ``None``
     without gaps.
     """
-    at = np.flatnonzero(flags)
+    at: Integers = flags.nonzero()[0]
     if k == 1:
         return at
     if len(at) < k:
@@ -432,9 +432,11 @@ def _detect_many(rules: tuple[Rule, ...], track: Track, tail: Tail | None) -> De
     sigma = np.asarray(track.sigma, dtype=np.float64)
     slack = TOLERANCE * sigma
     found: list[tuple[int, int, Integers]] = [
-        (0, 1, np.flatnonzero(value > track.upper + slack)),
-        (0, -1, np.flatnonzero(value < track.lower - slack)),
+        (0, 1, (value > track.upper + slack).nonzero()[0]),
+        (0, -1, (value < track.lower - slack).nonzero()[0]),
     ]
+    if len(rules) == 1 and not len(found[0][2]) and not len(found[1][2]):
+        return Detection(rules, _NONE, _NONE, _NO_SIDE, Tail(), z, 0)
     before = 0
     if tail is not None:
         before = len(tail.z)
