@@ -10,7 +10,9 @@ from typing import Any
 
 import orjson
 from apispec import APISpec
-from apispec.ext.marshmallow import MarshmallowPlugin
+from apispec.ext.marshmallow import MarshmallowPlugin, OpenAPIConverter
+from apispec.ext.marshmallow.common import resolve_schema_instance
+from marshmallow import INCLUDE
 
 from . import answers, problems
 from .contract import _PARAMETER, Operation, ProblemDetails, examples_directory
@@ -41,6 +43,26 @@ _INTRODUCTION = (
 )
 
 
+class _Converter(OpenAPIConverter):
+    def schema2jsonschema(self, schema: Any) -> dict[str, Any]:
+        # The library leaves out whether a shape is closed where the shape has a description.
+        made: dict[str, Any] = super().schema2jsonschema(schema)
+        shape = resolve_schema_instance(schema)
+        made["description"] = _text_of(shape)
+        made["additionalProperties"] = shape.unknown == INCLUDE
+        return made
+
+
+class _Plugin(MarshmallowPlugin):
+    Converter = _Converter
+
+
+def _text_of(shape: Any) -> str:
+    """A shape's first paragraph, as the contract writes names."""
+    text = getattr(shape.Meta, "description", None) or (type(shape).__doc__ or "").split("\n\n")[0]
+    return " ".join(text.replace("``", "`").split())
+
+
 def problems_of(operation: Operation) -> tuple[ProblemType, ...]:
     """Every problem an operation can answer, by status and in the order of the table."""
     possible = set(operation.problems) | set(_OF_EVERY_OPERATION)
@@ -57,7 +79,7 @@ def problems_of(operation: Operation) -> tuple[ProblemType, ...]:
 
 def describe(operations: Iterable[Operation], tags: Mapping[str, str]) -> bytes:
     """The document of these operations; equal calls give equal bytes."""
-    plugin = MarshmallowPlugin(schema_name_resolver=lambda shape: _name_of(shape))
+    plugin = _Plugin(schema_name_resolver=lambda shape: _name_of(shape))
     operations = tuple(operations)
     used = {operation.tag for operation in operations}
     spec = APISpec(
