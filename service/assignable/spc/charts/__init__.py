@@ -20,6 +20,9 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "attributes": ("p", "np", "c", "u"),
         "dispersed": ("p-prime", "u-prime"),
         "rare": ("g", "t"),
+        "ewma": ("ewma",),
+        "cusum": ("cusum",),
+        "moving_average": ("moving-average",),
     }
 )
 """The charts of each module, in the order in which they are listed."""

@@ -21,6 +21,7 @@ from ..data import Booleans, Floats, Individuals, Subgroups, SubgroupStatistics,
 from ..design.memory import SMALLEST_SHIFT
 from ..errors import Fault, UnusableData, UnusableParameter
 from ..runlength.memory import LARGEST_SHIFT, LONGEST_ARL, MemoryRunLength
+from ..runlength.survival import RunLength
 from ..sigma import WITHIN, SigmaEstimate, moving_range, within
 from .common import (
     NO_STANDARDS,
@@ -267,7 +268,7 @@ def designed(detect: Detect, typical: float, design: Callable[[float], D]) -> D:
 
 
 def price(
-    panel: str, run_length: Callable[[float], MemoryRunLength], typical: float, besides: str = ""
+    panel: str, run_length: Callable[[float], MemoryRunLength | RunLength], typical: float, besides: str = ""
 ) -> Performance:
     """What a chart costs and buys, from its run length at a shift in standard deviations of its points.
 

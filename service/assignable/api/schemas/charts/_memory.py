@@ -66,7 +66,7 @@ class MemoryFit(AnyFitRequest):
             "the others for subgroups (`mean-sd` unless given, `mean-range` where only ranges were kept)."
         },
     )
-    span = f.StrictInteger(
+    moving_range_span = f.StrictInteger(
         least=2,
         most=LARGEST_SPAN,
         load_default=2,
@@ -104,7 +104,7 @@ def source_of(loaded: dict[str, Any]) -> Source:
     """Where mean and sigma come from."""
     return Source(
         loaded.get("sigma_estimator"),
-        loaded["span"],
+        loaded["moving_range_span"],
         Standards(**loaded.get("standards", {})),
         loaded.get("subgroup_size"),
         exclusions(loaded),
