@@ -10,7 +10,8 @@ from typing import Annotated
 
 import numpy as np
 
-from .data import SubgroupStatistics
+from .components import components
+from .data import Floats, SubgroupStatistics
 from .diagnostics import (
     FEWEST_RANGE_VALUES,
     FEWEST_VALUES,
@@ -20,14 +21,17 @@ from .diagnostics import (
     Resolution,
     SpreadStability,
 )
-from .errors import Where
+from .errors import UnusableData, Where
 from .factors import LARGEST_SIZE, c4, d2, d3, relative_sd_of_sd
+from .sigma import SigmaEstimate, moving_range
 
 COMMON_PRACTICE = "common practice"
 
 FEW_SUBGROUPS = 20
 LARGE_SUBGROUP = 10
 SIGNIFICANCE = 0.01
+# Share of the means outside the limits, from which the limits rather than the process are in question.
+MANY_OUTSIDE = 0.1
 # Values to each different reading, from which rounding shows in a test of normality.
 TIED = 5
 
@@ -149,6 +153,37 @@ def not_normal(found: Normality | None) -> Caution | None:
         f"A² = {test.statistic:.3g}, {_probability(test.p_value)}). {advice}",
         ("data",),
         "dagostino-stephens-1986",
+    )
+
+
+def varies_between(
+    means: Floats, outside: int, size: float, sigma: float, freedom: float | None
+) -> Caution | None:
+    """Means that vary, from each to the next, far more than the values within their subgroups explain.
+
+    means: (m,), NaN at gaps, of ``size`` values each; outside: how many lie outside the limits; sigma:
+    within subgroups, with its degrees of freedom (``None`` where it is known). A lasting shift alone
+    does not raise this: it moves few of the successive differences.
+    """
+    present = int(np.count_nonzero(means == means))
+    if outside < MANY_OUTSIDE * present or outside < 2 or present < FEWEST_VALUES:
+        return None
+    try:
+        moving = moving_range(means)
+    except UnusableData:
+        return None
+    within = sigma if freedom is None else SigmaEstimate(sigma, freedom, "")
+    found = components(moving, within, size)
+    if found.p_value >= SIGNIFICANCE:
+        return None
+    return Caution(
+        "varies-between-subgroups",
+        f"{outside} of {present} means lie outside their limits, and successive means differ far more than the "
+        f"values within a subgroup explain (ratio of variances {found.ratio:.3g}, "
+        f"{_probability(found.p_value)}). Where the pieces of a subgroup share a load, a mould or a reel, that is "
+        "the nature of the process, and the `between-within` chart has the limits for it.",
+        ("data",),
+        "wheeler-chambers-1992",
     )
 
 

@@ -46,6 +46,16 @@ class SubgroupStatistics:
         first = int(self.size.max(initial=0))
         return first if first and bool(((self.size == first) | (self.size == 0)).all()) else None
 
+    @property
+    def usual_size(self) -> int | None:
+        """The commonest size of two or more, the larger of two as common; ``None`` where there is none."""
+        one = self.common_size
+        if one is not None:
+            return one if one > 1 else None
+        counted = np.bincount(self.size)
+        counted[:2] = 0
+        return len(counted) - 1 - int(counted[::-1].argmax()) if counted.any() else None
+
     def keep(self, kept: Booleans) -> SubgroupStatistics:
         """The same with the subgroups not kept, (m,) bool, turned into gaps."""
         if bool(kept.all()):

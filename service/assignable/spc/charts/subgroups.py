@@ -92,7 +92,9 @@ class SubgroupLimits(Generic[P]):
         float | None, "Effective degrees of freedom of sigma; null where it was a standard."
     ]
     subgroup_size: Annotated[
-        int | None, "The one size the panels' limits are for; null where they follow each subgroup's size."
+        int | None,
+        "The commonest size, which the panels' limits are for; the limits of a subgroup of another size follow "
+        "its own. Null where no subgroup holds two values.",
     ]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
     sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
@@ -209,7 +211,9 @@ def _frozen_lines(size: int | None, spread: Spread, centre: float, sigma: float,
         following = PanelLimits(None, None, None)
         return _PANELS[spread](PanelLimits(centre, None, None), following)
     some = np.full(1, np.nan)
-    plots = subgroup_plots(SubgroupStatistics(np.array([size]), some, some, some), spread, centre, sigma, basis)
+    plots = subgroup_plots(
+        SubgroupStatistics(np.array([size]), some, some, some), spread, centre, sigma, basis
+    )
     return _PANELS[spread](plots[0].limits(), plots[1].limits())
 
 
@@ -272,11 +276,12 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     kept = exclusion_mask(points, options.exclude)
     used = statistics if kept is None else statistics.keep(kept)
     filled = int(np.count_nonzero(used.size))
+    if not filled:
+        raise UnusableData.of("empty", "Every value is missing or excluded.", "data")
     if filled < 2 and (given.mean is None or given.sigma is None):
         raise UnusableData.of(
             "too-few-subgroups",
-            f"Limits need at least two subgroups with values, and 20 to 25 to deserve trust; there "
-            f"{'is one' if filled == 1 else 'are none'}.",
+            f"Limits need at least two subgroups with values, and 20 to 25 to deserve trust; there is one.",
             "data",
         )
     total = int(used.size.sum())
@@ -286,7 +291,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     else:
         estimate = within(used, options.sigma_estimator)
         sigma, estimator, freedom = estimate.sigma, estimate.estimator, estimate.degrees_of_freedom
-    size = used.common_size
+    size = used.usual_size
     record = BaselineRecord(filled, total, options.exclude)
     limits = _limits(options, spread, mean, sigma, freedom, size, rules, record, estimator)
 
@@ -302,7 +307,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
         baseline,
         found,
         performance,
-        _cautions(found, used, filled, spread, limits, seen),
+        _cautions(found, used, filled, spread, limits, seen, plots[0]),
     )
 
 
@@ -378,7 +383,10 @@ def _cautions(
     spread: Spread,
     limits: SubgroupLimits,
     seen: Watched,
+    means: Plot,
 ) -> tuple[Caution, ...]:
+    far = np.abs(used.mean - means.centre) > limits.basis.multiple * means.sigma
+    typical = float(used.size.sum()) / max(filled, 1)
     return caution.collect(
         caution.few_subgroups(filled),
         caution.large_subgroups(used),
@@ -387,6 +395,9 @@ def _cautions(
         caution.not_normal(found.normality),
         caution.coarse_resolution(found.resolution),
         caution.unstable_spread(found.spread_stability),
+        caution.varies_between(
+            used.mean, int(np.count_nonzero(far)), typical, limits.sigma, limits.degrees_of_freedom
+        ),
         *too_many_signals(seen),
     )
 
