@@ -6,6 +6,7 @@ Bodies are the examples of the service's own document, which names the file of e
 from __future__ import annotations
 
 import json
+import os
 import sys
 import time
 import urllib.error
@@ -154,11 +155,12 @@ def _print_request(url: str, step: Step, name: str) -> None:
 def _when_ready(url: str) -> Answer:
     """What the service says of itself once it takes work."""
     until = time.monotonic() + _PATIENCE_SECONDS
+    parent = os.getppid()
     while True:
         try:
             return _answer_of(f"{url}/health/ready")
         except Unreachable:
-            if time.monotonic() > until:
+            if time.monotonic() > until or os.getppid() != parent:  # the server that started this is gone
                 raise
         time.sleep(0.05)
 

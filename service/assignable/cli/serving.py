@@ -11,7 +11,6 @@ import ipaddress
 import logging
 import os
 import socket
-import subprocess
 import sys
 from collections.abc import Mapping
 from contextlib import suppress
@@ -159,19 +158,27 @@ class Server(BaseApplication):  # type: ignore[misc]
         for name, value in options(self._settings).items():
             self.cfg.set(name, value)
         if self._demonstrate:
-            self.cfg.set("when_ready", lambda _: _demonstration(url_of(self._settings)))
+            self.cfg.set("when_ready", lambda _: _demonstrate(url_of(self._settings)))
 
     def load(self) -> Flask:
         return self._app
 
 
-def _demonstration(url: str) -> None:
-    """Shows the main job from a process of its own: no thread may run in one that forks workers."""
-    subprocess.Popen([sys.executable, "-m", "assignable.cli", "demo", "--url", url])  # noqa: S603
+def _demonstrate(url: str) -> None:
+    """Shows the main job from a process of its own, which gunicorn reaps: no thread may run where workers fork."""
+    command = (sys.executable, "-m", "assignable.cli", "demo", "--url", url)
+    os.posix_spawn(sys.executable, command, os.environ)
 
 
 class Worker(ThreadWorker):  # type: ignore[misc]
-    """Answers what never becomes a request, a broken request line say, as the service answers everything."""
+    """Stops at once for new callers, and answers what never becomes a request as the service answers all."""
+
+    def set_accept_enabled(self, enabled: bool) -> None:
+        super().set_accept_enabled(enabled)
+        if not self.alive:
+            # Left open, it would hold new connections, which nobody takes, until the last request is done.
+            for listener in self.sockets:
+                listener.close()
 
     def handle_error(self, _request: Any, client: socket.socket, _address: Any, error: Exception) -> None:
         if isinstance(error, ParseException):
