@@ -150,6 +150,8 @@ def _server(source: str, *arguments: str) -> Iterator[int]:
                 break
             except OSError:
                 time.sleep(0.05)
+        else:
+            raise SystemExit("the server did not start: run `assignable serve` to see why")
         yield port
     finally:
         process.terminate()
