@@ -23,6 +23,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "ewma": ("ewma",),
         "cusum": ("cusum",),
         "moving_average": ("moving-average",),
+        "between_within": ("between-within",),
     }
 )
 """The charts of each module, in the order in which they are listed."""

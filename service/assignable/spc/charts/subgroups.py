@@ -17,6 +17,7 @@ import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics, factors
+from ..baseline import change_points
 from ..cautions import Caution
 from ..data import Booleans, Floats, Integers, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -139,6 +140,9 @@ class SubgroupDiagnostics:
     spread_stability: Annotated[
         diagnostics.SpreadStability | None, "Equal variances within the subgroups; null where not computable."
     ]
+    change_point: Annotated[
+        change_points.ChangePoint | None, "A lasting step within the baseline; null for fewer than 8 points."
+    ] = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -281,7 +285,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     if filled < 2 and (given.mean is None or given.sigma is None):
         raise UnusableData.of(
             "too-few-subgroups",
-            f"Limits need at least two subgroups with values, and 20 to 25 to deserve trust; there is one.",
+            "Limits need at least two subgroups with values, and 20 to 25 to deserve trust; there is one.",
             "data",
         )
     total = int(used.size.sum())
@@ -373,6 +377,7 @@ def diagnose(
         None if values is None else diagnostics.normality(values),
         None if values is None else diagnostics.resolution(values, used),
         diagnostics.spread_stability(used),
+        change_points.of_subgroups(used),
     )
 
 
@@ -395,6 +400,8 @@ def _cautions(
         caution.not_normal(found.normality),
         caution.coarse_resolution(found.resolution),
         caution.unstable_spread(found.spread_stability),
+        change_points.caution_of_level(found.change_point),
+        change_points.caution_of_spread(found.change_point),
         caution.varies_between(
             used.mean, int(np.count_nonzero(far)), typical, limits.sigma, limits.degrees_of_freedom
         ),
