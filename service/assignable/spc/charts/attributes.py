@@ -186,7 +186,8 @@ def plot_counts(chart: CountChart, counts: Floats, sizes: Floats, mean: float, b
         top = float(sizes[0]) if binomial else math.inf
         return Plot(
             counts / unit,
-            float(lines.centre[0]) / unit,
+            # A ratio's centre is the mean to the last digit, whichever way a call is split.
+            float(lines.centre[0]) if _plots_count(chart) else mean,
             float(lines.sd[0]) / unit,
             lower / unit if lower > 0 else None,
             upper / unit if upper < top else None,
@@ -211,11 +212,14 @@ def plot_counts(chart: CountChart, counts: Floats, sizes: Floats, mean: float, b
 
 
 def sample_sizes(chart: CountChart, data: Counts) -> Floats:
-    """Sizes (m,), or (1,) where all samples have one; raises UnusableData for what the chart cannot take."""
+    """Sizes (m,), or (1,) where all samples have one; raises UnusableData for what the chart cannot take.
+
+    Where every sample is a gap the size is 1: it is that of no point.
+    """
     counts, inspected = data.counts, data.inspected
     present = ~np.isnan(counts)
     if not bool(present.any()):
-        raise UnusableData.of("empty", "Every count is missing.", "data", "counts")
+        return np.ones(1)
     if inspected is None:
         if chart != "c":
             raise UnusableData.of(
@@ -264,6 +268,13 @@ def sample_sizes(chart: CountChart, data: Counts) -> Floats:
             other,
         )
     return np.where(present, inspected, sizes[0])
+
+
+def baseline_sizes(chart: CountChart, data: Counts) -> Floats:
+    """The same for a baseline, which must hold a count."""
+    if bool(np.isnan(data.counts).all()):
+        raise UnusableData.of("empty", "Every count is missing.", "data", "counts")
+    return sample_sizes(chart, data)
 
 
 def events_and_total(
@@ -354,7 +365,7 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
             "size-with-data", "The sample size comes from the data; give it only without data.", "sample_size"
         )
 
-    sizes = sample_sizes(chart, data)
+    sizes = baseline_sizes(chart, data)
     kept = exclusion_mask(len(data.counts), options.exclude)
     counts = data.counts if kept is None else np.where(kept, data.counts, np.nan)
     filled, events, total = events_and_total(counts, sizes, binomial, needed=options.standard is None)
@@ -443,7 +454,8 @@ def judge(
     cannot take; a sample of another size than the frozen one on ``np`` or ``c`` is refused.
     """
     sizes = sample_sizes(chart, data)
-    if _plots_count(chart) and data.inspected is not None and float(sizes[0]) != limits.sample_size:
+    gaps = bool(np.isnan(data.counts).all())
+    if _plots_count(chart) and not gaps and data.inspected is not None and sizes[0] != limits.sample_size:
         other = "p" if chart == "np" else "u"
         raise UnusableData.of(
             "size-differs",
@@ -452,7 +464,7 @@ def judge(
             "data",
             "inspected",
         )
-    if chart == "c" and data.inspected is None:
+    if _plots_count(chart) and (gaps or data.inspected is None):
         assert limits.sample_size is not None
         sizes = np.array([limits.sample_size])
     before = carry or NEW

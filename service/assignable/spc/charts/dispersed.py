@@ -30,6 +30,7 @@ from .attributes import (
     AttributeDiagnostics,
     Proportions,
     Rates,
+    baseline_sizes,
     events_and_total,
     is_binomial,
     plot_counts,
@@ -169,7 +170,7 @@ def fit(data: Counts | None, options: DispersedOptions, *, chart: DispersedChart
         raise UnusableParameter.of(
             "size-with-data", "The sample size comes from the data; give it only without data.", "sample_size"
         )
-    sizes = sample_sizes(chart, data)
+    sizes = baseline_sizes(chart, data)
     kept = exclusion_mask(len(data.counts), options.exclude)
     counts = data.counts if kept is None else np.where(kept, data.counts, np.nan)
     filled, events, total = events_and_total(counts, sizes, binomial, needed=options.mean is None)
