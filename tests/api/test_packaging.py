@@ -235,6 +235,24 @@ def test_the_contract_written_is_the_contract_checked(
     assert "assignable contract --write" in said
 
 
+def test_last_digits_of_another_processor_are_no_difference(
+    examples: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["contract", "--write"]) == 0
+    answer = examples / "xbar-r-limits.response.json"
+    written = answer.read_text()
+    (centre,) = set(re.findall(r'^    "centre": (2\.[0-9]+)', written, re.MULTILINE))
+    for factor, status in ((1 + 1e-15, 0), (1 - 1e-12, 0), (1 + 1e-8, 1)):
+        answer.write_text(written.replace(centre, repr(float(centre) * factor)))
+        assert answer.read_text() != written
+        assert main(["contract", "--check"]) == status
+    answer.write_text(written.replace("sha-256:", "sha-512:"))
+    assert main(["contract", "--check"]) == 1
+    answer.write_text(written.replace('"in-control"', '"signal"'))
+    assert main(["contract", "--check"]) == 1
+    capsys.readouterr()
+
+
 def test_an_example_that_breaks_the_contract_is_told(
     examples: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
