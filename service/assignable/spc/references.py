@@ -528,7 +528,8 @@ _LISTED = (
         "mardia-1974",
         "Mardia, K. V.",
         1974,
-        "Applications of some measures of multivariate skewness and kurtosis in testing normality and robustness studies",
+        "Applications of some measures of multivariate skewness and kurtosis in testing normality and "
+        "robustness studies",
         "Sankhya B 36(2), 115-128",
     ),
     Reference(
@@ -549,7 +550,8 @@ _LISTED = (
         "rigdon-1995",
         "Rigdon, S. E.",
         1995,
-        "An integral equation for the in-control average run length of a multivariate exponentially weighted moving average control chart",
+        "An integral equation for the in-control average run length of a multivariate exponentially weighted "
+        "moving average control chart",
         "Journal of Statistical Computation and Simulation 52(4), 351-365",
     ),
     Reference(

@@ -10,6 +10,7 @@ import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..baseline import change_points
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals
 from ..errors import UnusableData, UnusableParameter
@@ -108,6 +109,9 @@ class IndividualsDiagnostics:
     ]
     normality: Annotated[diagnostics.Normality | None, "Of the values; null where too few."]
     resolution: Annotated[diagnostics.Resolution | None, "Of the measurement."]
+    change_point: Annotated[
+        change_points.ChangePoint | None, "A lasting step within the baseline; null for fewer than 8 values."
+    ] = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -207,7 +211,10 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
     plots = individual_plots(values, moving_ranges(used, options.span), mean, sigma, options.span, basis)
     seen, _ = _watch(plots, rules, None, kept)
     found = IndividualsDiagnostics(
-        diagnostics.autocorrelation(used), diagnostics.normality(used), diagnostics.resolution(used, None)
+        diagnostics.autocorrelation(used),
+        diagnostics.normality(used),
+        diagnostics.resolution(used, None),
+        change_points.of_values(used),
     )
     return IndividualsFit(
         limits,
@@ -221,6 +228,8 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
             caution.autocorrelated(found.autocorrelation),
             caution.not_normal(found.normality),
             caution.coarse_resolution(found.resolution),
+            change_points.caution_of_level(found.change_point),
+            change_points.caution_of_spread(found.change_point),
             *too_many_signals(seen),
         ),
     )
