@@ -111,6 +111,20 @@ class _Tuple(f.NumberList):
         return tuple(super()._deserialize(value, attr, data, **kwargs).tolist())
 
 
+class _Matrix(f.NumberTable):
+    """Rows of numbers kept in a document, as the tuple of tuples that the object holds."""
+
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
+        return tuple(map(tuple, super()._deserialize(value, attr, data, **kwargs).tolist()))
+
+
+class _Texts(f.StringList):
+    """Texts kept in a document, as the tuple that the object holds."""
+
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
+        return tuple(super()._deserialize(value, attr, data, **kwargs))
+
+
 class _ObjectTuple(f.ObjectList):
     """Objects kept in a document, as the tuple that the object holds."""
 
@@ -178,8 +192,8 @@ def _sequence(item: Any, nested: Callable[[Any], Any], loading: bool, options: d
     if item is int:
         return f.IntegerList(min_items=0, **options)
     if item == tuple[float, ...]:
-        longest = {"max_rows": _LONGEST_KEPT} if loading else {}
-        return (_Matrix if loading else f.NumberTable)(nullable=False, min_rows=0, **longest, **options)
+        most = _LONGEST_KEPT if loading else f.MAX_ROWS
+        return (_Matrix if loading else f.NumberTable)(nullable=False, min_rows=0, max_rows=most, **options)
     if item is str:
         texts = {"max_items": _LONGEST_KEPT} if loading else {}
         return (_Texts if loading else f.StringList)(min_items=0, **texts, **options)

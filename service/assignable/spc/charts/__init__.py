@@ -23,6 +23,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "ewma": ("ewma",),
         "cusum": ("cusum",),
         "moving_average": ("moving-average",),
+        "multivariate": ("t-squared",),
         "between_within": ("between-within",),
     }
 )
