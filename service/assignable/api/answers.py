@@ -62,7 +62,7 @@ def refuse_not_finite(result: Any) -> None:
                     break
             elif value.dtype.kind == "O":
                 stack.append(value.tolist())
-        elif (members := _members(kind)) is not None:
+        elif (members := _members(kind)) is not None:  # type: ignore[arg-type]
             stack.extend(members(value))
         elif isinstance(value, np.floating) and not np.isfinite(value):
             break
@@ -75,7 +75,7 @@ _HARMLESS = frozenset((str, int, bool, type(None), orjson.Fragment))
 
 
 @cache
-def _members(kind: type) -> Callable[[Any], Iterable[Any]] | None:
+def _members(kind: Any) -> Callable[[Any], Iterable[Any]] | None:
     """What gives all fields of a dataclass at once."""
     if not is_dataclass(kind):
         return None

@@ -19,30 +19,30 @@ class NotFinite(Exception):
     """A number of a document is NaN or infinite: a fault of the service, never a document."""
 
 
-def plain(value: object) -> Any:
+def plain(value: Any) -> Any:
     """A result object as the plain JSON values that a caller reads back, whole numbers as integers.
 
     Raises :class:`NotFinite`.
     """
     kind = type(value)
     if kind is float:
-        if value - value != 0.0:  # type: ignore[operator]
+        if value - value != 0.0:
             raise NotFinite
-        return int(value) if value.is_integer() and abs(value) < 1e15 else value  # type: ignore[attr-defined, arg-type]
+        return int(value) if value.is_integer() and abs(value) < 1e15 else value
     if kind in _AS_THEY_ARE:
         return value
     if kind is tuple or kind is list:
-        return [plain(inner) for inner in value]  # type: ignore[attr-defined]
+        return [plain(inner) for inner in value]
     if kind is dict:
-        return {name: plain(inner) for name, inner in value.items()}  # type: ignore[attr-defined]
-    return {name: plain(getattr(value, name)) for name in _names(kind)}
+        return {name: plain(inner) for name, inner in value.items()}
+    return {name: plain(getattr(value, name)) for name in _names(kind)}  # type: ignore[arg-type]
 
 
 _AS_THEY_ARE = frozenset((str, int, bool, type(None)))
 
 
 @cache
-def _names(kind: type) -> tuple[str, ...]:
+def _names(kind: Any) -> tuple[str, ...]:
     return tuple(entry.name for entry in fields(kind))
 
 

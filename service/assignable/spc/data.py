@@ -106,7 +106,7 @@ class Subgroups:
             square -= np.add.reduce(residual, axis=1) ** 2 / n
             sd = np.sqrt(np.maximum(square, 0.0) / (n - 1)) * unit
             return SubgroupStatistics(size, mean, spread, np.where(spread > 0, sd, 0.0))
-        present = x == x
+        present: Booleans = np.asarray(x == x)
         size = present.sum(axis=1)
         filled = np.where(present, x, 0.0)
         some = np.maximum(size, 1)

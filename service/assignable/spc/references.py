@@ -568,6 +568,34 @@ _LISTED = (
         "Designing a multivariate EWMA control chart",
         "Journal of Quality Technology 29(1), 8-15",
     ),
+    Reference(
+        "crowder-1987",
+        "Crowder, S. V.",
+        1987,
+        "A simple method for studying run-length distributions of exponentially weighted moving average charts",
+        "Technometrics 29(4), 401-407",
+    ),
+    Reference(
+        "vance-1986",
+        "Vance, L. C.",
+        1986,
+        "Average run lengths of cumulative sum control charts for controlling normal means",
+        "Journal of Quality Technology 18(3), 189-193",
+    ),
+    Reference(
+        "van-dobben-de-bruyn-1968",
+        "van Dobben de Bruyn, C. S.",
+        1968,
+        "Cumulative sum tests: theory and practice",
+        "Griffin, London",
+    ),
+    Reference(
+        "asmussen-2003",
+        "Asmussen, S.",
+        2003,
+        "Applied probability and queues, 2nd edition",
+        "Springer, New York",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(

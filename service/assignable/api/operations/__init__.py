@@ -39,6 +39,8 @@ GROUPS = (
         (
             ("POST", "/v1/designs/subgroups", "designSubgroups"),
             ("POST", "/v1/designs/run-length", "computeRunLength"),
+            ("POST", "/v1/designs/ewma", "designEwma"),
+            ("POST", "/v1/designs/cusum", "designCusum"),
         ),
     ),
     Group(

@@ -136,7 +136,7 @@ class LimitsField(f.Object):
 class CarryField(f.Object):
     """A carry as it came with the last answer; loads to the document and the object of ``spc``."""
 
-    def _deserialize(
+    def _deserialize(  # type: ignore[override]
         self, value: Any, attr: str | None, data: Any, **kwargs: Any
     ) -> tuple[dict[str, Any], Any]:
         return value, super()._deserialize(value, attr, data, **kwargs)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable, Iterable, Sequence
 from typing import Any
 
 import numpy as np
@@ -10,13 +11,19 @@ import numpy as np
 from ...spc import runlength
 from ...spc.charts.counts import count_law, count_lines
 from ...spc.charts.lattice import run_law
+from ...spc.design import memory as designs
 from ...spc.design import subgroups
-from ...spc.errors import UnusableParameter
+from ...spc.errors import UnusableParameter, Where
+from ...spc.runlength import memory
 from .. import problems
 from ..contract import Contract
-from ..schemas.common import rules_of
+from ..schemas.common import located, rules_of
 from ..schemas.designs import (
     USUAL_SHIFTS,
+    CusumDesignAnswer,
+    CusumDesignRequest,
+    EwmaDesignAnswer,
+    EwmaDesignRequest,
     RunLengthRequest,
     RunLengthsAnswer,
     SubgroupDesignAnswer,
@@ -76,9 +83,9 @@ def design_subgroups(loaded: dict[str, Any]) -> dict[str, Any]:
 
 
 def _told(
-    found: runlength.RunLength,
-    within: np.ndarray,
-    probability: np.ndarray,
+    found: runlength.RunLength | memory.MemoryRunLength,
+    within: Sequence[int],
+    probability: Iterable[float],
     hours: float | None,
     **at: float | None,
 ) -> dict[str, Any]:
@@ -90,42 +97,152 @@ def _told(
         "sd": found.sd,
         "percentiles": [{"probability": q, "points": points} for q, points in found.percentiles],
         "within": [
-            {"points": points, "probability": p}
-            for points, p in zip(within.tolist(), probability.tolist(), strict=True)
+            {"points": points, "probability": p} for points, p in zip(within, probability, strict=True)
         ],
+        "steady_state_arl": getattr(found, "steady_state_arl", None),
         "ats_hours": None if hours is None else hours * found.arl,
         "method": found.method,
         "accuracy": found.accuracy,
     }
 
 
+_KINDS = ("shewhart", "ewma", "cusum", "counts")
+_Lawful = Callable[[float, float], tuple[Any, Iterable[float]]]
+
+
 def run_length(loaded: dict[str, Any]) -> dict[str, Any]:
     """Run lengths of a chart with known parameters."""
-    kind = one_chart(loaded, ("shewhart", "counts"))
-    within = loaded.get("within_points", np.empty(0, dtype=np.int64))
+    kind = one_chart(loaded, _KINDS)
+    within = tuple(loaded.get("within_points", np.empty(0, dtype=np.int64)).tolist())
     hours = loaded.get("interval_hours")
     chart = loaded[kind]
     if kind == "counts":
         return {"run_lengths": _of_counts(loaded, chart, within, hours)}
     if "factors" in loaded:
         raise UnusableParameter.of("not-for-this-chart", "Factors are for charts of counts.", "factors")
-    rules = rules_of(chart.get("rules"))
-    reach = chart["sigma_multiple"]
-    lower = -reach if chart["sides"] != "upper" else -math.inf
-    upper = reach if chart["sides"] != "lower" else math.inf
+    law = {"shewhart": _shewhart, "ewma": _ewma, "cusum": _cusum}[kind](chart, within)
     root = math.sqrt(chart["subgroup_size"])
     told = []
-    for shift, scale in shifts_of(loaded):
-        found = runlength.shewhart(rules, lower=lower, upper=upper, shift=shift * root, scale=scale)
-        probability = runlength.signal_probability(
-            within.astype(np.float64), rules, lower=lower, upper=upper, shift=shift * root, scale=scale
-        )
+    for at, (shift, scale) in enumerate(shifts_of(loaded)):
+        places: dict[str, Where] = {name: (kind, name) for name in chart}
+        with located(shift=("shifts", at), scale=("scales", at), rules=(kind, "rules"), **places):
+            found, probability = law(shift * root, scale)
         told.append(_told(found, within, probability, hours, shift=shift, scale=scale))
     return {"run_lengths": told}
 
 
+def _shewhart(chart: dict[str, Any], within: tuple[int, ...]) -> _Lawful:
+    rules = rules_of(chart.pop("rules", None), "shewhart", "rules")
+    reach = chart["sigma_multiple"]
+    lower = -reach if chart["sides"] != "upper" else -math.inf
+    upper = reach if chart["sides"] != "lower" else math.inf
+
+    def law(shift: float, scale: float) -> tuple[Any, Iterable[float]]:
+        found = runlength.shewhart(rules, lower=lower, upper=upper, shift=shift, scale=scale)
+        reached = runlength.signal_probability(
+            np.array(within, dtype=np.float64), rules, lower=lower, upper=upper, shift=shift, scale=scale
+        )
+        return found, reached.tolist()
+
+    return law
+
+
+def _ewma(chart: dict[str, Any], within: tuple[int, ...]) -> _Lawful:
+    def law(shift: float, scale: float) -> tuple[Any, Iterable[float]]:
+        given = {
+            "smoothing": chart["smoothing"],
+            "limit": chart["limit"],
+            "shift": shift,
+            "scale": scale,
+            "two_sided": chart["sides"] == "two",
+            "start": chart["start"],
+            "time_varying": chart["limits"] == "time-varying",
+        }
+        return memory.ewma(**given), memory.ewma_signalled_by(points=within, **given) if within else ()
+
+    return law
+
+
+def _cusum(chart: dict[str, Any], within: tuple[int, ...]) -> _Lawful:
+    def law(shift: float, scale: float) -> tuple[Any, Iterable[float]]:
+        given = {
+            "reference": chart["reference"],
+            "decision": chart["decision"],
+            "shift": shift,
+            "scale": scale,
+            "sides": chart["sides"],
+            "head_start": chart["head_start"],
+        }
+        return memory.cusum(**given), memory.cusum_signalled_by(points=within, **given) if within else ()
+
+    return law
+
+
+def design_ewma(loaded: dict[str, Any]) -> dict[str, Any]:
+    """The optimal EWMA for a shift, the limit for a smoothing, or both."""
+    _asked(loaded, "smoothing")
+    varying, two = loaded["limits"] == "time-varying", loaded["sides"] == "two"
+    limit = best = None
+    if "smoothing" in loaded:
+        limit = designs.ewma_limit(
+            smoothing=loaded["smoothing"],
+            in_control_arl=loaded["in_control_arl"],
+            time_varying=varying,
+            two_sided=two,
+        )
+    if "shift" in loaded:
+        best = designs.optimal_ewma(
+            shift=loaded["shift"],
+            in_control_arl=loaded["in_control_arl"],
+            state=loaded["state"],
+            time_varying=varying,
+            two_sided=two,
+            interval_hours=loaded.get("interval_hours"),
+            shifts=_table(loaded),
+        )
+    return {"limit": limit, "optimal": best}
+
+
+def design_cusum(loaded: dict[str, Any]) -> dict[str, Any]:
+    """The optimal CUSUM for a shift, the decision interval for a reference value, or both."""
+    _asked(loaded, "reference")
+    decision = best = None
+    with located(head_start=("head_start_fraction",)):
+        if "reference" in loaded:
+            decision = designs.cusum_decision(
+                reference=loaded["reference"],
+                in_control_arl=loaded["in_control_arl"],
+                sides=loaded["sides"],
+                head_start_fraction=loaded["head_start_fraction"],
+            )
+        if "shift" in loaded:
+            best = designs.optimal_cusum(
+                shift=loaded["shift"],
+                in_control_arl=loaded["in_control_arl"],
+                sides=loaded["sides"],
+                head_start_fraction=loaded["head_start_fraction"],
+                state=loaded["state"],
+                interval_hours=loaded.get("interval_hours"),
+                shifts=_table(loaded),
+            )
+    return {"decision": decision, "optimal": best}
+
+
+def _asked(loaded: dict[str, Any], parameter: str) -> None:
+    if parameter not in loaded and "shift" not in loaded:
+        raise UnusableParameter.of(
+            "nothing-asked",
+            f"Give the shift to find soonest, or a {parameter} of your own to complete.",
+            "shift",
+        )
+
+
+def _table(loaded: dict[str, Any]) -> tuple[float, ...] | None:
+    return tuple(loaded["shifts"].tolist()) if "shifts" in loaded else None
+
+
 def _of_counts(
-    loaded: dict[str, Any], chart: dict[str, Any], within: np.ndarray, hours: float | None
+    loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...], hours: float | None
 ) -> list[dict[str, Any]]:
     for name in ("shifts", "scales"):
         if name in loaded:
@@ -140,7 +257,7 @@ def _of_counts(
             "counts",
             "mean" if mean >= 1 else "size",
         )
-    rules = rules_of(chart.get("rules"))
+    rules = rules_of(chart.get("rules"), "counts", "rules")
     lines = count_lines(binomial, mean, np.array([float(size)]), count_basis(chart))
     told = []
     for at, factor in enumerate(loaded.get("factors", np.array(USUAL_FACTORS)).tolist()):
@@ -158,7 +275,7 @@ def _of_counts(
             lower=float(lines.lower[0]),
             upper=float(lines.upper[0]),
         )
-        reached = law.probability(within.astype(np.float64))
+        reached = law.probability(np.array(within, dtype=np.float64)).tolist()
         told.append(_told(law.run_length(), within, reached, hours, factor=factor))
     return told
 
@@ -189,11 +306,47 @@ def register(contract: Contract) -> None:
         summary="Run lengths of a chart",
         description="Average, standard deviation and percentiles of the number of points until the first signal, "
         "and the probability of a signal within so many points, with any mix of rules: exact by a Markov chain "
-        "for rules on zones, by a spectral method with rules on order. Sources: brook-evans-1972, "
-        "champ-woodall-1987.",
+        "for rules on zones, by a spectral method with rules on order; of EWMA and CUSUM charts by Nystrom's method; "
+        "of counts exactly. Sources: brook-evans-1972, champ-woodall-1987, crowder-1987, vance-1986.",
         request=RunLengthRequest(),
         response=RunLengthsAnswer(),
         problems=(problems.NOT_COMPUTABLE,),
-        example=("designs-run-length", "designs-run-length-counts"),
+        example=(
+            "designs-run-length",
+            "designs-run-length-ewma",
+            "designs-run-length-cusum",
+            "designs-run-length-counts",
+        ),
         provenance="run-length",
     )(run_length)
+    contract.operation(
+        "POST",
+        "/v1/designs/ewma",
+        operation_id="designEwma",
+        tag=TAG,
+        summary="Design of an EWMA chart",
+        description="The smoothing and limit that find a shift soonest at a stated in-control run length, with run "
+        "lengths by shift, how flat the optimum is, and the Shewhart chart at the same false-alarm rate beside it; "
+        "or the limit for a smoothing of your own. Sources: crowder-1989, lucas-saccucci-1990.",
+        request=EwmaDesignRequest(),
+        response=EwmaDesignAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example="designs-ewma",
+        provenance="ewma-design",
+    )(design_ewma)
+    contract.operation(
+        "POST",
+        "/v1/designs/cusum",
+        operation_id="designCusum",
+        tag=TAG,
+        summary="Design of a CUSUM chart",
+        description="The reference value and decision interval that find a shift soonest at a stated in-control run "
+        "length, with run lengths by shift, how flat the optimum is, and the Shewhart chart at the same false-alarm "
+        "rate beside it; or the decision interval for a reference value of your own. Sources: page-1954, vance-1986, "
+        "moustakides-1986.",
+        request=CusumDesignRequest(),
+        response=CusumDesignAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example="designs-cusum",
+        provenance="cusum-design",
+    )(design_cusum)

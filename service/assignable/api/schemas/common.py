@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
+from contextlib import contextmanager
 from typing import Any
 from urllib.parse import quote
 
 from ...spc.cautions import Caution
-from ...spc.errors import Fault, SpcError, UnusableParameter
+from ...spc.errors import Fault, SpcError, UnusableParameter, Where
 from ...spc.rules import FARTHEST_DISTANCE, LONGEST_WINDOW, MOST_RULES, PUBLISHED, Rule
 from .. import fields as f
 
@@ -51,6 +52,26 @@ CAUTIONS: dict[str, Any] = {
     "required": True,
     "metadata": {"description": "What a qualified person should know about this answer; often empty."},
 }
+
+
+@contextmanager
+def located(**places: Where) -> Iterator[None]:
+    """Puts faults where the caller wrote what they are about: an argument's name becomes its place."""
+    try:
+        yield
+    except SpcError as error:
+        raise type(error)(
+            *(
+                Fault(
+                    fault.code,
+                    fault.detail,
+                    (*places.get(str(fault.where[0]), fault.where[:1]), *fault.where[1:])
+                    if fault.where
+                    else (),
+                )
+                for fault in error.faults
+            )
+        ) from error
 
 
 class RuleRequest(f.RequestShape):
@@ -107,8 +128,9 @@ class RulesRequest(f.RequestShape):
     )
 
 
-def rules_of(loaded: dict[str, Any] | None) -> tuple[Rule, ...]:
-    """The rules a request asks for. Raises UnusableParameter with the place of each that cannot be."""
+def rules_of(loaded: dict[str, Any] | None, *place: str) -> tuple[Rule, ...]:
+    """The rules asked for at ``place`` (``rules``). Raises UnusableParameter with the place of each fault."""
+    place = place or ("rules",)
     if not loaded:
         return ()
     rules: list[Rule] = []
@@ -120,11 +142,11 @@ def rules_of(loaded: dict[str, Any] | None) -> tuple[Rule, ...]:
             rules.append(Rule(**one))
         except SpcError as error:
             faults.extend(
-                Fault(fault.code, fault.detail, ("rules", "own", at, *fault.where)) for fault in error.faults
+                Fault(fault.code, fault.detail, (*place, "own", at, *fault.where)) for fault in error.faults
             )
     if len(rules) > MOST_RULES and not faults:
         faults.append(
-            Fault("too-many-rules", f"At most {MOST_RULES} rules are watched at once.", ("rules", "own"))
+            Fault("too-many-rules", f"At most {MOST_RULES} rules are watched at once.", (*place, "own"))
         )
     if faults:
         raise UnusableParameter(*faults)

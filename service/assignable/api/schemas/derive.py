@@ -105,9 +105,9 @@ class _Tuple(f.NumberList):
 
     def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
         # A carry holds a handful of floats: an array would cost more than it saves.
-        if type(value) is list and len(value) <= _LONGEST_KEPT and set(map(type, value)) <= {float}:
-            if not value or (min(value) >= -f.LARGEST and max(value) <= f.LARGEST):
-                return tuple(value)
+        small = type(value) is list and len(value) <= _LONGEST_KEPT and set(map(type, value)) <= {float}
+        if small and (not value or (min(value) >= -f.LARGEST and max(value) <= f.LARGEST)):
+            return tuple(value)
         return tuple(super()._deserialize(value, attr, data, **kwargs).tolist())
 
 

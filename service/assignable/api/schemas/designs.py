@@ -7,6 +7,17 @@ from typing import Any
 import numpy as np
 
 from ...spc.charts.common import LimitBasis
+from ...spc.design.memory import (
+    HIGHEST_ARL,
+    LOWEST_ARL,
+    MOST_SHIFTS,
+    CusumDesign,
+    EwmaDesign,
+)
+from ...spc.design.memory import (
+
+)
+from ...spc.design.memory import SMALLEST_SHIFT as SMALLEST_MEMORY_SHIFT
 from ...spc.design.subgroups import (
     LARGEST_MULTIPLE,
     LARGEST_SHIFT,
@@ -19,6 +30,7 @@ from ...spc.design.subgroups import (
     PlanPerformance,
 )
 from ...spc.errors import UnusableParameter
+from ...spc.runlength import memory
 from .. import fields as f
 from ..contract import Provenance
 from . import derive
@@ -192,10 +204,82 @@ class CountChartRequest(f.RequestShape):
     rules = f.Object(RulesRequest, metadata={"description": "Run rules; without them the limits alone."})
 
 
+class EwmaChartRequest(f.RequestShape):
+    """An EWMA of a normal statistic."""
+
+    smoothing = f.StrictNumber(
+        required=True,
+        least=memory.SMALLEST_SMOOTHING,
+        most=1,
+        metadata={"description": "Weight of the newest point (lambda)."},
+    )
+    limit = f.StrictNumber(
+        required=True,
+        above=0,
+        most=memory.LARGEST_LIMIT,
+        metadata={"description": "Limits lie this many standard deviations of the EWMA out (L)."},
+    )
+    limits = f.Choice(
+        "asymptotic",
+        "time-varying",
+        load_default="asymptotic",
+        metadata={
+            "description": "Which standard deviation: the one in the long run, or the exact one of each point."
+        },
+    )
+    sides = f.Choice("two", "upper", load_default="two", metadata={"description": "Which limits there are."})
+    start = f.StrictNumber(
+        least=-10,
+        most=10,
+        load_default=0.0,
+        metadata={"description": "Head start, in sigma of the statistic."},
+    )
+    subgroup_size = f.StrictInteger(
+        least=1,
+        most=LARGEST_SIZE,
+        load_default=1,
+        metadata={"description": "Values in each plotted mean; 1 unless given."},
+    )
+
+
+class CusumChartRequest(f.RequestShape):
+    """A tabular CUSUM of a normal statistic."""
+
+    reference = f.StrictNumber(
+        required=True,
+        least=0,
+        most=memory.LARGEST_REFERENCE,
+        metadata={"description": "Reference value k, in sigma of the statistic."},
+    )
+    decision = f.StrictNumber(
+        required=True,
+        above=0,
+        most=memory.LARGEST_DECISION,
+        metadata={"description": "Decision interval h, in sigma of the statistic."},
+    )
+    sides = f.Choice(
+        "two", "upper", "lower", load_default="two", metadata={"description": "Which sums there are."}
+    )
+    head_start = f.StrictNumber(
+        least=0,
+        most=memory.LARGEST_DECISION,
+        load_default=0.0,
+        metadata={"description": "Where the sums start, in sigma of the statistic; 0 unless given."},
+    )
+    subgroup_size = f.StrictInteger(
+        least=1,
+        most=LARGEST_SIZE,
+        load_default=1,
+        metadata={"description": "Values in each plotted mean; 1 unless given."},
+    )
+
+
 class RunLengthRequest(f.RequestShape):
     """A chart with known parameters, and the shifts for which its run length is asked."""
 
     shewhart = f.Object(ShewhartRequest, metadata={"description": "A chart of a normal statistic; or else:"})
+    ewma = f.Object(EwmaChartRequest, metadata={"description": "An EWMA of it; or else:"})
+    cusum = f.Object(CusumChartRequest, metadata={"description": "A CUSUM of it; or else:"})
     counts = f.Object(CountChartRequest, metadata={"description": "A chart of counts."})
     shifts = f.NumberList(
         least=-100,
@@ -322,3 +406,105 @@ def shifts_of(loaded: dict[str, Any]) -> list[tuple[float, float]]:
             "scales",
         )
     return list(zip(shifts.tolist(), scales.tolist(), strict=True))
+
+
+# ---------------------------------------------------------------------------------------------------
+# Charts with memory
+
+
+class _MemoryDesignRequest(f.RequestShape):
+    in_control_arl = f.StrictNumber(
+        required=True,
+        least=LOWEST_ARL,
+        most=HIGHEST_ARL,
+        metadata={"description": "Points between false alarms on average, from the start of the chart."},
+    )
+    shift = f.StrictNumber(
+        least=SMALLEST_MEMORY_SHIFT,
+        most=memory.LARGEST_SHIFT,
+        metadata={
+            "description": "Shift to find soonest, in standard deviations of the plotted statistic; asks for the "
+            "optimal chart."
+        },
+    )
+    state = f.Choice(
+        "zero-state",
+        "steady-state",
+        load_default="zero-state",
+        metadata={"description": "Whether the shift is there from the start, or comes after long control."},
+    )
+    interval_hours = f.StrictNumber(
+        **HOURS, metadata={"description": "Hours between points, for times to signal."}
+    )
+    shifts = f.NumberList(
+        least=-memory.LARGEST_SHIFT,
+        most=memory.LARGEST_SHIFT,
+        max_items=MOST_SHIFTS,
+        metadata={"description": "Shifts of the table of run lengths; multiples of `shift` unless given."},
+    )
+
+
+class EwmaDesignRequest(_MemoryDesignRequest):
+    """An EWMA to be designed: the optimal one for a shift, or the limit for a smoothing you chose."""
+
+    smoothing = f.StrictNumber(
+        least=memory.SMALLEST_SMOOTHING,
+        most=1,
+        metadata={"description": "A weight you chose: asks for its limit alone."},
+    )
+    limits = f.Choice(
+        "asymptotic",
+        "time-varying",
+        load_default="asymptotic",
+        metadata={"description": "Which standard deviation of the EWMA the limit multiplies."},
+    )
+    sides = f.Choice("two", "upper", load_default="two", metadata={"description": "Which limits there are."})
+
+
+class CusumDesignRequest(_MemoryDesignRequest):
+    """A CUSUM to be designed: the optimal one for a shift, or the decision interval for your reference value."""
+
+    reference = f.StrictNumber(
+        least=0,
+        most=memory.LARGEST_REFERENCE,
+        metadata={"description": "A reference value you chose: asks for its decision interval alone."},
+    )
+    sides = f.Choice(
+        "two", "upper", "lower", load_default="two", metadata={"description": "Which sums there are."}
+    )
+    head_start_fraction = f.StrictNumber(
+        least=0,
+        most=0.95,
+        load_default=0.0,
+        metadata={"description": "Head start over the decision interval; at most 0.5 with two sides."},
+    )
+
+
+class EwmaDesignAnswer(f.AnswerShape):
+    """What was asked for, else null."""
+
+    limit = f.StrictNumber(
+        required=True, allow_none=True, metadata={"description": "L for the smoothing you chose."}
+    )
+    optimal = f.Object(
+        derive.answer(EwmaDesign),
+        required=True,
+        allow_none=True,
+        metadata={"description": "The EWMA that finds the shift soonest at that in-control run length."},
+    )
+    provenance = PROVENANCE
+
+
+class CusumDesignAnswer(f.AnswerShape):
+    """What was asked for, else null."""
+
+    decision = f.StrictNumber(
+        required=True, allow_none=True, metadata={"description": "h for the reference value you chose."}
+    )
+    optimal = f.Object(
+        derive.answer(CusumDesign),
+        required=True,
+        allow_none=True,
+        metadata={"description": "The CUSUM that finds the shift soonest at that in-control run length."},
+    )
+    provenance = PROVENANCE

@@ -37,7 +37,7 @@ _TABLE = (0.5, 0.75, 1.0, 1.5, 2.0, 3.0)
 
 
 @dataclass(frozen=True, slots=True)
-class Performance:
+class MemoryPerformance:
     """A chart at one shift (sigma units): run length from the start, and from steady state.
 
     ``ats_hours``, given an interval between points: ``arl`` intervals for zero-state (the shift is there
@@ -88,10 +88,10 @@ class EwmaDesign:
     shift: float
     in_control_arl: float
     arl: float
-    out_of_control: tuple[Performance, ...]
+    out_of_control: tuple[MemoryPerformance, ...]
     neighbours: tuple[EwmaNeighbour, ...]
     shewhart_limit: float
-    shewhart: tuple[Performance, ...]
+    shewhart: tuple[MemoryPerformance, ...]
 
 
 @dataclass(frozen=True, slots=True)
@@ -111,10 +111,10 @@ class CusumDesign:
     shift: float
     in_control_arl: float
     arl: float
-    out_of_control: tuple[Performance, ...]
+    out_of_control: tuple[MemoryPerformance, ...]
     neighbours: tuple[CusumNeighbour, ...]
     shewhart_limit: float
-    shewhart: tuple[Performance, ...]
+    shewhart: tuple[MemoryPerformance, ...]
 
 
 # --- searches -----------------------------------------------------------------------------------------
@@ -283,12 +283,12 @@ def _checked_interval(interval_hours: float | None) -> float | None:
 
 def _performance(
     shift: float, length: run.MemoryRunLength, state: State, interval_hours: float | None
-) -> Performance:
+) -> MemoryPerformance:
     points: float | None = length.arl
     if state == "steady-state":
         points = None if length.steady_state_arl is None else length.steady_state_arl - 0.5
     hours = None if points is None or interval_hours is None else points * interval_hours
-    return Performance(shift, length.arl, length.sd, length.steady_state_arl, hours)
+    return MemoryPerformance(shift, length.arl, length.sd, length.steady_state_arl, hours)
 
 
 def _reachable(
@@ -307,7 +307,7 @@ def _reachable(
 
 def _shewhart(
     target: float, two_sided: bool, shifts: tuple[float, ...], state: State, interval_hours: float | None
-) -> tuple[float, tuple[Performance, ...]]:
+) -> tuple[float, tuple[MemoryPerformance, ...]]:
     limit = -float(scipy.special.ndtri((0.5 if two_sided else 1.0) / target))
 
     def length(shift: float) -> run.MemoryRunLength:
