@@ -14,9 +14,6 @@ from ...spc.design.memory import (
     CusumDesign,
     EwmaDesign,
 )
-from ...spc.design.memory import (
-
-)
 from ...spc.design.memory import SMALLEST_SHIFT as SMALLEST_MEMORY_SHIFT
 from ...spc.design.subgroups import (
     LARGEST_MULTIPLE,

@@ -92,10 +92,8 @@ class Decay:
         last = len(self.survival) - 1
         followed = self.survival[np.minimum(t, last).astype(np.int64)]
         beyond = np.maximum(t - last, 0.0)
-        if self.hazard < 1.0:
-            gone = -np.expm1(beyond * math.log1p(-self.hazard))
-        else:
-            gone = (beyond > 0).astype(np.float64)
+        certain = self.hazard >= 1.0
+        gone = (beyond > 0).astype(np.float64) if certain else -np.expm1(beyond * math.log1p(-self.hazard))
         # 1 - S + S * gone, without losing a small probability of an early signal.
         early = (1.0 - self.survival)[np.minimum(t, last).astype(np.int64)]
         probability: Floats = early + followed * gone
