@@ -596,6 +596,62 @@ _LISTED = (
         "Applied probability and queues, 2nd edition",
         "Springer, New York",
     ),
+    Reference(
+        "iso-7870-3",
+        "ISO",
+        2020,
+        "Control charts - Part 3: Acceptance control charts",
+        "ISO 7870-3:2020",
+    ),
+    Reference(
+        "iso-7870-8",
+        "ISO",
+        2017,
+        "Control charts - Part 8: Charting techniques for short runs and small mixed batches",
+        "ISO 7870-8:2017",
+    ),
+    Reference(
+        "iso-7870-9",
+        "ISO",
+        2020,
+        "Control charts - Part 9: Control charts for stationary processes",
+        "ISO 7870-9:2020",
+    ),
+    Reference(
+        "freund-1957",
+        "Freund, R. A.",
+        1957,
+        "Acceptance control charts",
+        "Industrial Quality Control 14(4), 13-23",
+    ),
+    Reference(
+        "mandel-1969",
+        "Mandel, B. J.",
+        1969,
+        "The regression control chart",
+        "Journal of Quality Technology 1(1), 1-9",
+    ),
+    Reference(
+        "fieller-1954",
+        "Fieller, E. C.",
+        1954,
+        "Some problems in interval estimation",
+        "Journal of the Royal Statistical Society B 16(2), 175-185",
+    ),
+    Reference(
+        "hurvich-tsai-1989",
+        "Hurvich, C. M.; Tsai, C.-L.",
+        1989,
+        "Regression and time series model selection in small samples",
+        "Biometrika 76(2), 297-307",
+    ),
+    Reference(
+        "alwan-roberts-1988",
+        "Alwan, L. C.; Roberts, H. V.",
+        1988,
+        "Time-series modeling for statistical process control",
+        "Journal of Business and Economic Statistics 6(1), 87-95",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(

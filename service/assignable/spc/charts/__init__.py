@@ -25,6 +25,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "moving_average": ("moving-average",),
         "multivariate": ("t-squared",),
         "between_within": ("between-within",),
+        "short_run": ("short-run",),
     }
 )
 """The charts of each module, in the order in which they are listed."""

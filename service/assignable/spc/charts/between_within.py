@@ -112,7 +112,9 @@ class BetweenWithinLimits:
     span: Annotated[int, "How many successive means a moving range spans."]
     within_statistic: Annotated[Literal["range", "sd"], "What the panel of the spread within plots."]
     subgroup_size: Annotated[
-        int | None, "The one size of the subgroups; null where the limits within follow each subgroup's size."
+        int | None,
+        "The commonest size, which the lines within are for; those of a subgroup of another size follow its own. "
+        "Null where no subgroup holds two values.",
     ]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
     sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
@@ -292,7 +294,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: BetweenWithinOptions)
         freedom,
         options.span,
         options.within_statistic,
-        used.common_size,
+        used.usual_size,
         basis.limit_basis,
         basis.sigma_multiple,
         basis.false_alarm_probability,
@@ -317,7 +319,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: BetweenWithinOptions)
         limits,
         Baseline(seen.verdict, _panels(plots), seen.signals, seen.found),
         shown,
-        _performance(rules, basis, used.common_size, options.within_statistic),
+        _performance(rules, basis, used.usual_size, options.within_statistic),
         caution.collect(
             caution.few_subgroups(filled),
             caution.range_inefficient(used) if estimator in ("mean-range", "median-range") else None,
