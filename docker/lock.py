@@ -22,7 +22,7 @@ CONSTRAINTS = HERE / "constraints.txt"
 
 # One version for all: another version of the numerics is another answer in its last digit.
 SAME_EVERYWHERE = ("--universal", "--python-version", "3.11", "--fork-strategy", "fewest")
-PLAIN = ("--quiet", "--no-annotate", "--no-header", "--no-emit-index-url", "--no-emit-find-links")
+PLAIN = ("--quiet", "--no-annotate", "--no-header")
 
 
 def resolve(source: Path, target: Path, *options: str) -> None:
