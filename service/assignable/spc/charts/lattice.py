@@ -17,7 +17,7 @@ import numpy as np
 from ..data import Floats
 from ..rules import TOLERANCE, Rule, watched
 from ..runlength.of_rules import continuous_law, discrete_law
-from ..runlength.survival import Decay
+from ..runlength.survival import Decay, geometric
 
 MOST_ORDERED = 200
 LARGEST_WHOLE = 1e12
@@ -50,6 +50,8 @@ def run_law(
     if max(centre, law.middle) > LARGEST_WHOLE:
         return _as_continuous(rules, law, centre, sigma, lower, upper, "taken as continuous", "relative 0.03")
     acting = tuple(rule for rule in watched(rules) if rule.severity == "action")
+    if len(acting) == 1:
+        return geometric(_outside(law, lower - TOLERANCE * sigma, upper + TOLERANCE * sigma))
     if any(rule.distance is None for rule in acting):
         least, most = max(lower, law.least), min(upper, law.most)
         if most - least > MOST_ORDERED:
@@ -73,6 +75,16 @@ def run_law(
         lower=lower,
         upper=upper,
     )
+
+
+def _outside(law: WholeLaw, lower: float, upper: float) -> float:
+    """P(X < lower) + P(X > upper)."""
+    outside = 0.0
+    if lower > law.least:
+        outside += float(law.below(np.array([math.ceil(lower) - 1.0]))[0])
+    if upper < law.most:
+        outside += float(law.above(np.array([math.floor(upper) + 0.0]))[0])
+    return outside
 
 
 def _gathered(law: WholeLaw, edges: Floats) -> tuple[Floats, Floats]:
