@@ -27,6 +27,7 @@ MAX_VALUES = 1_000_000  # values of a table or a list of numbers
 MAX_TEXTS = 200_000  # ids or times of a list
 MAX_TEXT = 200  # characters of a text
 MAX_OBJECTS = 10_000  # objects of a list
+MAX_KEPT = 1_000  # items of a list in a document that a caller sends back
 
 # Control characters and what XML 1.0 cannot hold; halves of surrogate pairs cannot be written as UTF-8.
 _FORBIDDEN = re.compile("[\x00-\x1f\x7f-\x9f\ud800-\udfff\ufffe\uffff]")

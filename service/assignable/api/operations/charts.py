@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from contextlib import suppress
 from functools import lru_cache, partial
 from typing import Any
 
@@ -16,7 +17,7 @@ from ...spc.rules import Signal
 from .. import fields as f
 from .. import problems
 from ..contract import Contract, Provenance
-from ..schemas import derive
+from ..schemas import derive, quick
 from ..schemas.charts import ChartRequest, request_of
 from ..schemas.common import CAUTIONS, CautionAnswer, Characteristic, cautions, labels_of
 
@@ -136,9 +137,16 @@ class LimitsField(f.Object):
 class CarryField(f.Object):
     """A carry as it came with the last answer; loads to the document and the object of ``spc``."""
 
+    def __init__(self, chart: Chart, shape: type[f.RequestShape], **kwargs: Any) -> None:
+        super().__init__(shape, **kwargs)
+        self._quick = quick.reader(chart.carry, _carry_frame(chart))
+
     def _deserialize(  # type: ignore[override]
         self, value: Any, attr: str | None, data: Any, **kwargs: Any
     ) -> tuple[dict[str, Any], Any]:
+        if self._quick is not None:
+            with suppress(quick.Irregular):
+                return value, self._quick(value)
         return value, super()._deserialize(value, attr, data, **kwargs)
 
 
@@ -259,6 +267,7 @@ def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
                 takes.data, required=True, metadata={"description": "The new data, in time order."}
             ),
             "carry": CarryField(
+                chart,
                 carry_kept,
                 allow_none=True,
                 load_default=None,

@@ -17,8 +17,6 @@ import marshmallow as ma
 from ...spc.data import Floats, Integers
 from .. import fields as f
 
-_LONGEST_KEPT = 1000  # items of a list in a document that a caller sends back
-
 
 def answer(
     result: Any, name: str | None = None, text: str | None = None, frame: Mapping[str, Any] | None = None
@@ -104,10 +102,6 @@ class _Tuple(f.NumberList):
     """Numbers kept in a document, as the tuple that the object holds."""
 
     def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> Any:
-        # A carry holds a handful of floats: an array would cost more than it saves.
-        small = type(value) is list and len(value) <= _LONGEST_KEPT and set(map(type, value)) <= {float}
-        if small and (not value or (min(value) >= -f.LARGEST and max(value) <= f.LARGEST)):
-            return tuple(value)
         return tuple(super()._deserialize(value, attr, data, **kwargs).tolist())
 
 
@@ -187,15 +181,15 @@ def _bound(hint: Any, given: dict[Any, Any]) -> Any:
 def _sequence(item: Any, nested: Callable[[Any], Any], loading: bool, options: dict[str, Any]) -> Any:
     if item is float:
         if loading:
-            return _Tuple(min_items=0, max_items=_LONGEST_KEPT, **options)
+            return _Tuple(min_items=0, max_items=f.MAX_KEPT, **options)
         return f.NumberList(min_items=0, **options)
     if item is int:
         return f.IntegerList(min_items=0, **options)
     if item == tuple[float, ...]:
-        most = _LONGEST_KEPT if loading else f.MAX_ROWS
+        most = f.MAX_KEPT if loading else f.MAX_ROWS
         return (_Matrix if loading else f.NumberTable)(nullable=False, min_rows=0, max_rows=most, **options)
     if item is str:
-        texts = {"max_items": _LONGEST_KEPT} if loading else {}
+        texts = {"max_items": f.MAX_KEPT} if loading else {}
         return (_Texts if loading else f.StringList)(min_items=0, **texts, **options)
     if is_dataclass(_class(item)):
         return (_ObjectTuple if loading else f.ObjectList)(nested(item), **options)

@@ -1,0 +1,77 @@
+"""The quick reader of carries takes what their shape takes, to the same object, and nothing else."""
+
+import copy
+import json
+import random
+
+import pytest
+from marshmallow import ValidationError
+
+from assignable.api.app import create_app
+from assignable.api.contract import examples_directory
+from assignable.api.operations import charts as operations
+from assignable.api.schemas import derive, quick
+from assignable.api.settings import Settings
+from assignable.spc.charts import CHARTS
+
+PALETTE = (
+    None,
+    True,
+    -1,
+    1.5,
+    1e301,
+    10**400,
+    "x",
+    "é",
+    "\x07",
+    "a" * 300,
+    [],
+    [1, 2.5],
+    [None],
+    {},
+    {"a": 1},
+)
+
+
+def _carry(name):
+    client = create_app(Settings(log="off")).test_client()
+    body = (examples_directory() / f"{name}-signals.request.json").read_bytes()
+    return client.post(f"/v1/charts/{name}/signals", data=body, content_type="application/json").json["carry"]
+
+
+def _nodes(value, path=()):
+    yield path
+    for key, inner in value.items() if isinstance(value, dict) else ():
+        yield from _nodes(inner, (*path, key))
+
+
+@pytest.mark.parametrize("name", list(CHARTS))
+def test_quick_and_shape_agree(name):
+    chart = CHARTS[name]
+    frame = operations._carry_frame(chart)
+    read = quick.reader(chart.carry, frame)
+    if read is None:
+        pytest.skip("the shape alone reads this carry")
+    shape = derive.document(chart.carry, f"Test{chart.stem}Carry", "As received.", frame)()
+    whole = _carry(name)
+    assert read(whole) == shape.load(whole)
+    draw = random.Random(1)
+    for _ in range(300):
+        changed = copy.deepcopy(whole)
+        *steps, last = draw.choice([path for path in _nodes(whole) if path])
+        here = changed
+        for step in steps:
+            here = here[step]
+        if draw.random() < 0.2:
+            del here[last]
+        else:
+            here[last if draw.random() < 0.8 else "another"] = draw.choice(PALETTE)
+        try:
+            quickly = read(changed)
+        except quick.Irregular:
+            continue
+        try:
+            assert shape.load(json.loads(json.dumps(changed))) == quickly
+        except ValidationError as error:
+            # A chart's name of another chart is the one text that only the shape knows.
+            assert set(error.messages) <= {"chart"}
