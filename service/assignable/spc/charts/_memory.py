@@ -16,6 +16,7 @@ import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..baseline import change_points
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..design.memory import SMALLEST_SHIFT
@@ -104,7 +105,7 @@ class Established:
     """Parameters, with what they were estimated from.
 
     points: the baseline's points with the excluded ones as gaps, ``None`` for standards alone; typical:
-    values behind a point, on average.
+    values behind a point, on average and rounded.
     """
 
     parameters: Parameters
@@ -176,8 +177,9 @@ def establish(data: Data | None, source: Source) -> Established:
         BaselineRecord(filled, total, source.exclude),
     )
     found = _diagnose(data, used, kept)
-    typical = float(common) if common is not None else total / filled if filled else 1.0
-    return Established(parameters, used, typical, found, _cautions(found, used, filled, single, estimator))
+    # Whole, so that run lengths once computed serve the next baseline too.
+    typical = float(max(round(total / max(filled, 1)), 1)) if common is None else float(common)
+    return Established(parameters, used, typical, found, _cautions(found, used, filled, single, parameters))
 
 
 def _estimate(used: SubgroupStatistics, source: Source, single: bool) -> SigmaEstimate:
@@ -204,28 +206,46 @@ def _estimate(used: SubgroupStatistics, source: Source, single: bool) -> SigmaEs
 
 
 def _diagnose(data: Data, used: SubgroupStatistics, kept: Booleans | None) -> SubgroupDiagnostics:
-    if not isinstance(data, Individuals):
-        return diagnose(data, used, kept)
-    values = used.mean
-    return SubgroupDiagnostics(
-        diagnostics.autocorrelation(values),
-        diagnostics.normality(values),
-        diagnostics.resolution(values, None),
-        None,
-    )
+    means = used.mean
+    if isinstance(data, Individuals):
+        return SubgroupDiagnostics(
+            diagnostics.autocorrelation(means),
+            diagnostics.normality(means),
+            diagnostics.resolution(means, None),
+            None,
+            change_points.of_values(means),
+        )
+    if used.range is None and used.sd is None:
+        steps = change_points.of_values(means)
+        level = None if steps is None else change_points.ChangePoint(steps.mean, None)
+        return SubgroupDiagnostics(diagnostics.autocorrelation(means), None, None, None, level)
+    return diagnose(data, used, kept)
 
 
 def _cautions(
-    found: SubgroupDiagnostics, used: SubgroupStatistics, filled: int, single: bool, estimator: str
+    found: SubgroupDiagnostics, used: SubgroupStatistics, filled: int, single: bool, parameters: Parameters
 ) -> tuple[Caution, ...]:
+    ranges = parameters.sigma_estimator in ("mean-range", "median-range")
     return caution.collect(
         caution.few_individuals(filled) if single else caution.few_subgroups(filled),
         caution.large_subgroups(used),
-        caution.range_inefficient(used) if estimator in ("mean-range", "median-range") else None,
+        caution.range_inefficient(used) if ranges else None,
         caution.autocorrelated(found.autocorrelation),
         caution.not_normal(found.normality),
         caution.coarse_resolution(found.resolution),
         caution.unstable_spread(found.spread_stability),
+        change_points.caution_of_level(found.change_point),
+        change_points.caution_of_spread(found.change_point),
+        None if single else _between(used, filled, parameters),
+    )
+
+
+def _between(used: SubgroupStatistics, filled: int, parameters: Parameters) -> Caution | None:
+    with np.errstate(over="ignore"):
+        far = np.abs(used.mean - parameters.centre) * np.sqrt(used.size) > 3.0 * parameters.sigma
+    typical = float(used.size.sum()) / max(filled, 1)
+    return caution.varies_between(
+        used.mean, int(np.count_nonzero(far)), typical, parameters.sigma, parameters.degrees_of_freedom
     )
 
 
