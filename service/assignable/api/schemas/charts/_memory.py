@@ -83,7 +83,7 @@ class MemoryFit(AnyFitRequest):
     )
 
 
-class DetectRequest(f.RequestShape):
+class ShiftToDetect(f.RequestShape):
     """A shift to find soonest, at a stated rate of false alarms."""
 
     shift = f.StrictNumber(

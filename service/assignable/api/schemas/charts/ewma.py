@@ -7,7 +7,7 @@ from typing import Any
 from ....spc.charts.ewma import EwmaOptions
 from ....spc.runlength.memory import LARGEST_LIMIT, SMALLEST_SMOOTHING
 from ... import fields as f
-from ._memory import DetectRequest, MemoryFit, PointData, detect_of, points, source_of
+from ._memory import ShiftToDetect, MemoryFit, PointData, detect_of, points, source_of
 from .common import ChartRequest
 
 
@@ -34,7 +34,7 @@ class EwmaFit(MemoryFit):
         },
     )
     detect = f.Object(
-        DetectRequest, metadata={"description": "What the chart is designed for, instead of its parameters."}
+        ShiftToDetect, metadata={"description": "What the chart is designed for, instead of its parameters."}
     )
 
 
