@@ -458,3 +458,15 @@ def test_gaps_end_runs() -> None:
     assert [s.index for s in r.judge_times(limits, intervals(below), None).signals] == [7]
     assert r.judge_times(limits, intervals([*below[:7], math.nan, 6.9]), None).signals == ()
     assert r.judge_times(limits, intervals([*below[:7], 7.0]), None).signals == ()
+
+
+def test_extremes_neither_overflow_nor_warn() -> None:
+    steep = r.fit_times(None, r.TimeOptions("weibull", mean=1.0, shape=1000.0)).performance
+    assert [shift.arl for shift in steep.shifts] == [pytest.approx(1.0)] * 4
+    found = fit_t([1e-300, 1.0, 1e300, 5.0, 1e100, 1e-100, 2.0, 3.0, 4.0]).diagnostics
+    assert found is not None
+    assert found.exponential is not None
+    assert found.exponential.p_value < 1e-100
+    huge = fit_g([9e15, 8e15, 0.0, 9e15], rules=PUBLISHED["western-electric-1956"].rules)
+    assert huge.performance.in_control_arl is not None
+    assert "taken as continuous" in huge.performance.method

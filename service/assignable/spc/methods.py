@@ -85,6 +85,30 @@ METHODS = (
         ("shewhart-1931", "iso-7870-2", "astm-e2587"),
     ),
     Method(
+        "dispersed-count-charts",
+        "Charts of counts that vary more, or less, than chance alone",
+        "z_i = (p_i - p-bar)/sqrt(p-bar(1-p-bar)/n_i), or with sqrt(u-bar/a_i); sigma_z = mean moving range of z "
+        "over d2(2); p-bar +- k sigma_z sqrt(p-bar(1-p-bar)/n_i).",
+        ("p-prime", "u-prime"),
+        ("laney-2002",),
+    ),
+    Method(
+        "opportunities-between-events",
+        "Chart of opportunities between events",
+        "geometric: p = 1/(1 + y-bar), or unbiased (n-1)/(n-1 + sum y); y-bar +- k sqrt(y-bar(y-bar+1)), or exact "
+        "equal-tail limits on whole counts from P(Y > y) = (1-p)^(y+1).",
+        ("g",),
+        ("kaminsky-1992", "girshick-mosteller-savage-1946"),
+    ),
+    Method(
+        "time-between-events",
+        "Chart of the time between events",
+        "exponential or Weibull by maximum likelihood; equal-tail limits scale (-ln(1-a/2))^(1/shape) and "
+        "scale (-ln(a/2))^(1/shape); rules on normal scores.",
+        ("t",),
+        ("xie-goh-ranjan-2002", "nelson-1994", "cohen-1965"),
+    ),
+    Method(
         "run-rules",
         "Run rules",
         "zone, mixture, stratification, trend and alternation; see GET /v1/rules for their exact meaning.",

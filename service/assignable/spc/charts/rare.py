@@ -140,7 +140,8 @@ def _few(filled: int) -> Caution | None:
 
 
 def _correlation(used: Floats, shape: float = 1.0) -> diagnostics.Autocorrelation | None:
-    # The power makes an exponential value nearly normal, so that no single long interval decides.
+    """Of the intervals to a power that makes exponential values nearly normal [nelson-1994]."""
+    # As they are, a single long interval would decide.
     largest = float(np.fmax.reduce(used, initial=0.0))
     if not largest > 0.0:
         return None
@@ -622,9 +623,9 @@ def _exponential_test(times: Floats, shape: float | None) -> ExponentialTest | N
     n = len(times)
     if shape is None or n < diagnostics.FEWEST_VALUES:
         return None
-    unit = times / float(times.mean())
-    log_scale = math.log(weibull_scale(unit, shape))
-    logs = float(np.log(unit).sum())
+    mean = float(times.mean())
+    log_scale = math.log(weibull_scale(times, shape)) - math.log(mean)
+    logs = float(np.log(times).sum()) - n * math.log(mean)
     gain = n * math.log(shape) - n * shape * log_scale + (shape - 1.0) * logs
     statistic = max(2.0 * gain, 0.0)
     return ExponentialTest(shape, statistic, float(scipy.special.chdtrc(1, statistic)))
@@ -870,11 +871,14 @@ def _time_performance(rules: tuple[Rule, ...], shape: float, false_alarm: float)
     reach = normal_multiple(false_alarm / 2.0)
 
     def run_length(factor: float) -> runlength.RunLength:
+        # A hazard of 1e299 is as good as any beyond it.
+        growth = math.exp(min(shape * math.log(factor), 680.0))
+
         def between(cuts: Floats) -> Floats:
             below, above = scipy.special.log_ndtr(cuts), scipy.special.log_ndtr(-cuts)
             # The cumulative hazard at each line, from the tail in which it keeps its digits.
             calm = np.where(cuts < 0.0, -np.log1p(-np.exp(below)), -above)
-            hazard = np.concatenate(([0.0], calm * factor**shape, [math.inf]))
+            hazard = np.concatenate(([0.0], calm * growth, [math.inf]))
             cdf, sf = -np.expm1(-hazard), np.exp(-hazard)
             return np.where(cdf[1:] < 0.5, cdf[1:] - cdf[:-1], sf[:-1] - sf[1:])
 

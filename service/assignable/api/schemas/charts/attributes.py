@@ -13,6 +13,9 @@ from ... import fields as f
 from ..common import IDS, TIMES, check_labels, rules_of
 from .common import ChartRequest, FitRequest, exclusions, limit_basis
 
+SMALLEST = 1e-15
+"""Of an area, a proportion or a rate: below it a standardised count could not be represented."""
+
 
 def _counts_field(text: str) -> f.CountList:
     return f.CountList(
@@ -41,7 +44,7 @@ class EventsData(f.RequestShape):
 
     counts = _counts_field("Nonconformities")
     inspected = f.OneOrMany(
-        f.NumberList(above=0, most=1e15, nullable=True, max_items=f.MAX_ROWS),
+        f.NumberList(least=SMALLEST, most=1e15, nullable=True, max_items=f.MAX_ROWS),
         required=True,
         metadata={"description": "Area of opportunity, in units of your choice: one number, or one each."},
     )
@@ -53,7 +56,7 @@ class EventsOfOneAreaData(EventsData):
     """Nonconformities over one constant area of opportunity, in time order."""
 
     inspected = f.OneOrMany(
-        f.NumberList(above=0, most=1e15, nullable=True, max_items=f.MAX_ROWS),
+        f.NumberList(least=SMALLEST, most=1e15, nullable=True, max_items=f.MAX_ROWS),
         metadata={"description": "Area of opportunity where it is not 1; it must not vary on this chart."},
     )
 
@@ -83,13 +86,17 @@ def counts(loaded: dict[str, Any]) -> Counts:
 class ProportionStandard(f.RequestShape):
     """A proportion known in advance."""
 
-    proportion = f.StrictNumber(above=0, below=1, metadata={"description": "Proportion nonconforming."})
+    proportion = f.StrictNumber(
+        least=SMALLEST, below=1, metadata={"description": "Proportion nonconforming."}
+    )
 
 
 class RateStandard(f.RequestShape):
     """A rate known in advance."""
 
-    rate = f.StrictNumber(above=0, most=1e12, metadata={"description": "Nonconformities per unit of area."})
+    rate = f.StrictNumber(
+        least=SMALLEST, most=1e12, metadata={"description": "Nonconformities per unit of area."}
+    )
 
 
 _COUNT_BASELINE: dict[str, Any] = {
@@ -119,7 +126,7 @@ class UFit(FitRequest):
     data = f.Object(EventsData, **_COUNT_BASELINE)
     standards = f.Object(RateStandard, metadata={"description": "A rate known in advance."})
     sample_size = f.StrictNumber(
-        above=0,
+        least=SMALLEST,
         most=1e15,
         metadata={"description": "Only without data: area of every sample, if they agree."},
     )

@@ -7,7 +7,7 @@ from typing import Any
 from ....spc.charts.dispersed import DispersedOptions
 from ... import fields as f
 from ..common import rules_of
-from .attributes import EventsData, ProportionStandard, RateStandard, UnitsData, counts
+from .attributes import SMALLEST, EventsData, ProportionStandard, RateStandard, UnitsData, counts
 from .common import BaselineRequest, ChartRequest, exclusions
 
 _SIGMA_Z: dict[str, Any] = {
@@ -66,7 +66,7 @@ class UPrimeFit(DispersedFitRequest):
     )
     standards = f.Object(DispersedRateStandards, metadata={"description": "Values known in advance."})
     sample_size = f.StrictNumber(
-        above=0,
+        least=SMALLEST,
         most=1e15,
         metadata={"description": "Only without data: area of every sample, if they agree."},
     )
