@@ -28,7 +28,17 @@ PLAIN = ("--quiet", "--no-annotate", "--no-header")
 def resolve(source: Path, target: Path, *options: str) -> None:
     """Writes what ``source`` needs; ``--output-file`` also gives the versions that are preferred."""
     subprocess.run(
-        ["uv", "pip", "compile", str(source), "--output-file", str(target), *SAME_EVERYWHERE, *PLAIN, *options],
+        [
+            "uv",
+            "pip",
+            "compile",
+            str(source),
+            "--output-file",
+            str(target),
+            *SAME_EVERYWHERE,
+            *PLAIN,
+            *options,
+        ],
         check=True,
         cwd=HERE.parent,
     )
