@@ -99,7 +99,8 @@ def test_the_wheel_holds_every_file_of_the_package_and_of_the_contract(wheel: Zi
         f"assignable/{path.relative_to(base)}"
         for base, folder in ((ROOT / "service" / "assignable", "."), (ROOT, "openapi"))
         for path in (base / folder).rglob("*")
-        if path.is_file() and "__pycache__" not in path.parts
+        if path.is_file()
+        and not any(part.startswith((".", "__pycache__")) for part in path.relative_to(base).parts)
     }
     names = set(wheel.namelist())
     assert len(expected) > 50
