@@ -26,6 +26,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "multivariate": ("t-squared",),
         "between_within": ("between-within",),
         "short_run": ("short-run",),
+        "trend": ("trend",),
     }
 )
 """The charts of each module, in the order in which they are listed."""
