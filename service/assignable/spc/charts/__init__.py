@@ -24,6 +24,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "cusum": ("cusum",),
         "moving_average": ("moving-average",),
         "multivariate": ("t-squared",),
+        "mewma": ("mewma",),
         "between_within": ("between-within",),
         "short_run": ("short-run",),
         "trend": ("trend",),

@@ -333,7 +333,9 @@ def fit(data: Vectors | None, options: TSquaredOptions) -> TSquaredFit:
     plot = _plot(statistic, len(limits.variables), line)
     seen, _ = watch("t_squared", plot, kept=kept)
     terms = (limits.unconditional_limit, limits.conditional_limit)
-    details = decompose(seen.signals, deviations, statistic, measure, limits.variables, terms)
+    details = decompose(
+        seen.signals, deviations, statistic, limits.subgroup_size, measure, limits.variables, terms
+    )
     panels = TSquaredPanels(plot.panel())
     shown = None if found is None else diagnose(found, means, measure, data)
     return TSquaredFit(
@@ -397,7 +399,9 @@ def judge(limits: TSquaredLimits, data: Vectors, carry: TSquaredCarry | None) ->
         TSquaredPanels(plot.panel()),
         seen.signals,
         seen.found,
-        decompose(seen.signals, deviations, statistic, measure, limits.variables, terms),
+        decompose(
+            seen.signals, deviations, statistic, limits.subgroup_size, measure, limits.variables, terms
+        ),
         TSquaredCarry((carry.points if carry else 0) + len(data.values)),
         too_many_signals(seen),
     )

@@ -35,7 +35,7 @@ DEPENDENT = 1e-10
 """Eigenvalue of the correlation matrix below which variables count as dependent."""
 NEARLY_DEPENDENT = 1e-4
 _INVOLVED = 0.05  # of the largest loading on a dependency, from which a variable takes part in it
-_FARTHEST = 1e300
+_FARTHEST = 1e120  # standard deviations
 _SIGNIFICANCE = 0.01
 
 
@@ -86,14 +86,18 @@ class Metric:
         return white
 
     def squares(self, deviations: Floats) -> Floats:
-        """(m,) squared distances of (m, p) deviations from the mean, NaN at gaps, at most 1e300."""
+        """(m,) squared distances of (m, p) deviations from the mean, NaN at gaps."""
         white = self.whiten(deviations)
         with np.errstate(over="ignore", invalid="ignore"):
             found: Floats = (white * white).sum(axis=1)
-        if not bool((found < _FARTHEST).all()):
-            gap = np.isnan(deviations).any(axis=1)
-            found = np.where(gap, np.nan, np.where(found < _FARTHEST, found, _FARTHEST))
+        strange = ~(found < np.inf)
+        if bool(strange.any()) and not bool(np.isnan(deviations[strange]).any(axis=1).all()):
+            return self.squares(self.within_reach(deviations))
         return found
+
+    def within_reach(self, deviations: Floats) -> Floats:
+        """Deviations of at most 1e120 standard deviations, whose squares can be represented."""
+        return np.clip(deviations, -_FARTHEST * self.sd, _FARTHEST * self.sd)
 
 
 @lru_cache(maxsize=256)
@@ -334,50 +338,33 @@ def decompose(
     signals: Sequence[Signal],
     deviations: Floats,
     statistics: Floats,
+    scale: float | Floats,
     measure: Metric,
     names: tuple[str, ...],
     limits: tuple[float, float],
 ) -> Decompositions | None:
     """Signals by variable: unconditional terms, and each variable's term given all the others.
 
-    deviations: (m, p) from the mean, statistics: (m,) plotted, of the call; limits: for the two kinds of
-    term. The statistic falls by just the conditional term where a variable is left out. ``None`` without
-    signals. Source: [mason-tracy-young-1995].
+    deviations: (m, p) from the mean, statistics: (m,) plotted, of the call; scale: of the statistic over
+    the squared distance of the deviations, one or (m,); limits: for the two kinds of term. The statistic
+    falls by just the conditional term where a variable is left out. ``None`` without signals.
+    Source: [mason-tracy-young-1995].
     """
     at = np.array([signal.index for signal in signals[:MOST_DECOMPOSED]], dtype=np.int64)
     if not len(at):
         return None
-    rows, values = deviations[at], statistics[at]
-    apart, given = terms(rows, values, measure)
-    with np.errstate(over="ignore"):
-        z = np.clip(rows / measure.sd, -_FARTHEST, _FARTHEST)
-    # The plotted statistic may be scaled, as of means of subgroups: its terms then are too.
-    scale = np.sqrt(apart / np.maximum(z * z, 1e-300))
-    z = np.where(z == 0.0, 0.0, z * scale)
+    rows = measure.within_reach(deviations[at])
+    factor = np.sqrt(scale[at, None] if isinstance(scale, np.ndarray) else scale)
+    z = rows / measure.sd * factor
+    apart = np.square(z)
+    given = np.square((measure.whiten(rows) @ measure.whitener) * factor) / measure.precision
     told = tuple(
         Decomposition(
             index, value, z[i], apart[i], given[i], _sentence(names, z[i], apart[i], given[i], limits)
         )
-        for i, (index, value) in enumerate(zip(at.tolist(), values.tolist(), strict=True))
+        for i, (index, value) in enumerate(zip(at.tolist(), statistics[at].tolist(), strict=True))
     )
     return Decompositions(names, *limits, told)
-
-
-def terms(rows: Floats, statistics: Floats, measure: Metric) -> tuple[Floats, Floats]:
-    """(k, p) unconditional and conditional terms of rows whose statistic is given.
-
-    The statistic fixes the scale: 1 for single observations, n for means of n, another for smoothed ones.
-    """
-    white = measure.whiten(rows)
-    with np.errstate(over="ignore", invalid="ignore"):
-        square = (white * white).sum(axis=1)
-        scale = np.where(square > 0, statistics / np.where(square > 0, square, 1.0), 0.0)[:, None]
-        apart = np.minimum((rows / measure.sd) ** 2 * scale, _FARTHEST)
-        given = np.minimum((white @ measure.whitener) ** 2 / measure.precision * scale, _FARTHEST)
-    far = ~(np.isfinite(apart) & np.isfinite(given))
-    if bool(far.any()):
-        apart, given = np.where(far, _FARTHEST, apart), np.where(far, _FARTHEST, given)
-    return apart, given
 
 
 def _sentence(

@@ -269,6 +269,18 @@ def _settled(step: _Step, disc: _Disc, along: Floats) -> Floats:
     return np.asarray(found, dtype=np.float64).reshape(disc.shape)
 
 
+def _points_followed(smoothing: float) -> int:
+    return math.ceil(math.log(_SETTLED_SHIFTED) / (2.0 * math.log1p(-smoothing)))
+
+
+def work(smoothing: float, limit: float) -> int:
+    """About how many values of the kernel :func:`arls` needs with ``exact``."""
+    if smoothing == 1.0:
+        return 0
+    along, across = _Disc(_bound(smoothing, limit)).shape
+    return _points_followed(smoothing) * along * across * across
+
+
 @lru_cache(maxsize=256)
 def arls(
     p: int, smoothing: float, limit: float, shifts: tuple[float, ...], *, exact: bool = False
@@ -287,8 +299,7 @@ def arls(
     step = _Step(disc, disc, keep, p)
     means = [_settled(step, disc, step.along(shift)) for shift in shifts]
     if exact:
-        last = math.ceil(math.log(_SETTLED_SHIFTED) / (2.0 * math.log(keep)))
-        for point in range(last, 0, -1):
+        for point in range(_points_followed(smoothing), 0, -1):
             now = _Disc(_bound(smoothing, limit) * math.sqrt(1.0 - keep ** (2 * point)))
             back = _Step(now, disc, keep, p)
             means = [1.0 + back(back.along(shift), later) for shift, later in zip(shifts, means, strict=True)]
