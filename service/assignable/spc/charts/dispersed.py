@@ -22,7 +22,7 @@ from ..cautions import Caution
 from ..data import Counts, Floats
 from ..errors import Fault, UnusableData, UnusableParameter
 from ..rules import Rule, Signal, watched
-from ..sigma import moving_range
+from ..sigma import moving_range, moving_ranges
 from .attributes import (
     NEW,
     SMALL_COUNT,
@@ -244,10 +244,11 @@ def _dispersion(chart: DispersedChart, counts: Floats, sizes: Floats, mean: floa
     """``sigma_z`` with its effective degrees of freedom."""
     plain = plot_counts(chart, counts, sizes, mean, LimitBasis())
     z = (plain.value - plain.centre) / plain.sigma
-    estimate = moving_range(z)
+    ranges = moving_ranges(z)
     # Proportions that are all equal leave a residue of rounding in their differences.
     residue = 1e-13 * float(np.max(mean / np.asarray(plain.sigma)))
-    if not estimate.sigma > residue:
+    largest = float(np.fmax.reduce(ranges, initial=-1.0))
+    if 0.0 <= largest <= residue:
         raise UnusableData.of(
             "no-variation",
             "No sample differs from the one before it, so there is no variation to set limits from; give "
@@ -255,6 +256,7 @@ def _dispersion(chart: DispersedChart, counts: Floats, sizes: Floats, mean: floa
             "data",
             "counts",
         )
+    estimate = moving_range(z)
     return estimate.sigma, estimate.degrees_of_freedom
 
 
