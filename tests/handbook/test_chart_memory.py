@@ -18,7 +18,7 @@ from assignable.spc.charts.ewma import EwmaOptions
 from assignable.spc.charts.moving_average import MovingAverageOptions
 from assignable.spc.data import Individuals, Subgroups, SubgroupSummary
 from assignable.spc.design import memory as design
-from assignable.spc.errors import SpcError, UnusableData, UnusableParameter
+from assignable.spc.errors import DocumentMismatch, SpcError, UnusableData, UnusableParameter
 from assignable.spc.runlength import moving
 from assignable.spc.sigma import moving_range
 
@@ -649,6 +649,24 @@ def test_gaps_alone_and_points_of_another_size(name: str) -> None:
     assert getattr(after.panels, own).value.tolist() == getattr(without.panels, own).value.tolist()
     other = chart.judge(limits, Subgroups(np.full((2, 3), 10.0)), None)
     assert [caution.code for caution in other.cautions] == ["size-differs"]
+
+
+@pytest.mark.parametrize(
+    ("name", "wrong"),
+    [
+        ("ewma", {"variance": -0.1}),
+        ("cusum", {"upper": cusum.CusumSide(-1.0, 0, 0, 0.0, 0.0)}),
+        ("moving-average", {"sizes": (1.0,)}),
+        ("moving-average", {"sizes": (1.0, 0.0)}),
+    ],
+)
+def test_a_carry_that_cannot_be_is_refused(name: str, wrong: dict[str, object]) -> None:
+    limits = FITS[name](Individuals(MONTGOMERY), Source()).limits
+    chart = CHARTS[name]
+    carry = chart.judge(limits, Individuals(MONTGOMERY), None).carry
+    with pytest.raises(DocumentMismatch) as refused:
+        chart.judge(limits, Individuals(MONTGOMERY), replace(carry, **wrong))
+    assert refused.value.faults[0].code == "carry-edited"
 
 
 def test_wild_values_stay_finite() -> None:

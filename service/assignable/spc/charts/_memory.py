@@ -20,7 +20,7 @@ from ..baseline import change_points
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..design.memory import SMALLEST_SHIFT
-from ..errors import Fault, UnusableData, UnusableParameter
+from ..errors import DocumentMismatch, Fault, UnusableData, UnusableParameter
 from ..runlength.memory import LARGEST_SHIFT, LONGEST_ARL, MemoryRunLength
 from ..runlength.survival import RunLength
 from ..sigma import WITHIN, SigmaEstimate, moving_range, within
@@ -247,6 +247,17 @@ def _between(used: SubgroupStatistics, filled: int, parameters: Parameters) -> C
     return caution.varies_between(
         used.mean, int(np.count_nonzero(far)), typical, parameters.sigma, parameters.degrees_of_freedom
     )
+
+
+def check_carry(sound: bool) -> None:
+    """Raises DocumentMismatch for a carry whose figures cannot have come from this service."""
+    if not sound:
+        raise DocumentMismatch.of(
+            "carry-edited",
+            "The figures of this carry do not fit each other. Send the carry exactly as it was received, or leave "
+            "it out to start afresh.",
+            "carry",
+        )
 
 
 def scattered(there: Booleans | None, of_points: Floats, elsewhere: float) -> Floats:

@@ -33,6 +33,7 @@ from ._memory import (
     Detect,
     Parameters,
     Source,
+    check_carry,
     check_given,
     designed,
     establish,
@@ -548,8 +549,16 @@ def judge(limits: CusumLimits, data: Data, carry: CusumCarry | None) -> CusumJud
     """New points under frozen limits: sums, signals with the shift behind them, and the carry.
 
     Judging in one call or in any split with the carry passed on gives identical signals. Raises
-    UnusableData for means without a spread, where it is watched.
+    UnusableData for means without a spread, where it is watched; DocumentMismatch for a carry that cannot be.
     """
+    if carry is not None:
+        sides = (carry.upper, carry.lower, carry.spread_upper, carry.spread_lower)
+        check_carry(
+            all(
+                side is None or min(side.sum, side.points, side.reach, side.weight, side.head_start) >= 0
+                for side in sides
+            )
+        )
     points = points_of(data)
     seen, panels, details, after = _walk(points, isinstance(data, Individuals), limits, carry)
     return CusumJudgement(

@@ -27,6 +27,7 @@ from ._memory import (
     Detect,
     Parameters,
     Source,
+    check_carry,
     check_given,
     designed,
     establish,
@@ -222,10 +223,13 @@ def _recursion(weight: float, rest: float, x: np.ndarray, before: float) -> np.n
 def judge(limits: EwmaLimits, data: Data, carry: EwmaCarry | None) -> EwmaJudgement:
     """New points under frozen limits: averages, signals, and the carry for the next call.
 
-    Judging in one call or in any split with the carry passed on gives identical signals.
+    Judging in one call or in any split with the carry passed on gives identical signals. Raises
+    DocumentMismatch for a carry that cannot be.
     """
+    before = carry or NEW
+    check_carry(0.0 <= before.variance <= 1.0)
     points = points_of(data)
-    plot, after = _plot(points, limits, carry or NEW)
+    plot, after = _plot(points, limits, before)
     seen: Watched = watch("ewma", plot)[0]
     return EwmaJudgement(
         seen.verdict,

@@ -26,6 +26,7 @@ from ._memory import (
     Data,
     Parameters,
     Source,
+    check_carry,
     establish,
     points_of,
     present,
@@ -209,10 +210,14 @@ def judge(
 ) -> MovingAverageJudgement:
     """New points under frozen limits: averages, signals, and the carry for the next call.
 
-    Judging in one call or in any split with the carry passed on gives identical signals.
+    Judging in one call or in any split with the carry passed on gives identical signals. Raises
+    DocumentMismatch for a carry that cannot be.
     """
+    before = carry or NEW
+    kept = len(before.sizes)
+    check_carry(kept == len(before.deviations) and kept < limits.span and min(before.sizes, default=1) >= 1)
     points = points_of(data)
-    plot, after = _plot(points, limits, carry or NEW)
+    plot, after = _plot(points, limits, before)
     seen, _ = watch("average", plot)
     return MovingAverageJudgement(
         seen.verdict,
