@@ -652,6 +652,13 @@ _LISTED = (
         "Time-series modeling for statistical process control",
         "Journal of Business and Economic Statistics 6(1), 87-95",
     ),
+    Reference(
+        "box-jenkins-1976",
+        "Box, G. E. P.; Jenkins, G. M.",
+        1976,
+        "Time series analysis: forecasting and control, revised edition",
+        "Holden-Day, San Francisco",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(

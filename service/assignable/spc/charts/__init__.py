@@ -28,6 +28,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "between_within": ("between-within",),
         "short_run": ("short-run",),
         "trend": ("trend",),
+        "residual": ("residual",),
     }
 )
 """The charts of each module, in the order in which they are listed."""
