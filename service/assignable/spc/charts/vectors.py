@@ -103,11 +103,14 @@ class Metric:
 @lru_cache(maxsize=256)
 def metric(mean: tuple[float, ...], covariance: Matrix) -> Metric:
     """The metric of a mean and a covariance that :func:`check_covariance` has passed."""
-    centre, rows = np.array(mean), np.array(covariance)
+    return _metric(np.array(mean), np.array(covariance))
+
+
+def _metric(centre: Floats, rows: Floats) -> Metric:
     sd = np.sqrt(rows.diagonal())
     correlation = rows / sd[:, None] / sd
     factor = np.linalg.cholesky(correlation)
-    whitener = np.linalg.solve(factor, np.eye(len(mean)))
+    whitener = np.linalg.solve(factor, np.eye(len(centre)))
     precision = (whitener * whitener).sum(axis=0) / sd**2
     whitener = np.tril(whitener) / sd
     for array in (centre, sd, whitener, precision):
@@ -436,9 +439,8 @@ def diagnose(found: Estimate, means: Floats, measure: Metric, data: Vectors) -> 
         if found.estimator == "sample":
             squares = measure.squares(rows) * (m / (m - 1.0))
         else:
-            factor = np.linalg.qr(rows / sd, mode="r")
-            white = scipy.linalg.solve_triangular(factor, (rows / sd).T, trans="T")
-            squares = m * np.square(white).sum(axis=0)
+            scaled = rows / sd
+            squares = _metric(np.zeros(p), scaled.T @ scaled / m).squares(scaled)
         statistic = float(np.square(squares).mean())
         expected = p * (p + 2.0) * (m - 1.0) / (m + 1.0)
         variance = 8.0 * p * (p + 2.0) * (m - 3.0) * (m - p - 1.0) * (m - p + 1.0)
