@@ -20,7 +20,6 @@ from packaging.version import Version
 from assignable.api import contract, openapi
 from assignable.api.settings import Settings, described
 from assignable.cli import contract_files, main
-from assignable.cli.environment import ALLOW_REMOTE
 from assignable.cli.serving import GRACE_SECONDS
 
 ROOT = Path(__file__).resolve().parents[2]
@@ -167,7 +166,7 @@ def test_locks_hold_no_address(name: str) -> None:
 
 
 def test_what_the_image_and_the_manifests_set_are_settings() -> None:
-    known = {row.variable for row in described()} | {ALLOW_REMOTE}
+    known = {row.variable for row in described()}
     for path in (DOCKER / "Dockerfile", DOCKER / "compose.yaml", DOCKER / "kubernetes" / "deployment.yaml"):
         used = set(re.findall(r"^[^#\n]*?(ASSIGNABLE_[A-Z_]+)", path.read_text(), re.MULTILINE))
         assert used

@@ -50,6 +50,12 @@ def _one_of(*choices: str) -> Callable[[str], str]:
     return read
 
 
+def _yes_or_no(text: str) -> bool:
+    if text not in ("yes", "no"):
+        raise ValueError("yes or no")
+    return text == "yes"
+
+
 def _host(text: str) -> str:
     if not text or text != text.strip() or any(letter.isspace() or letter == "/" for letter in text):
         raise ValueError("a host name or an address")
@@ -75,8 +81,14 @@ class Settings:
 
     host: str = _setting("127.0.0.1", "Address the server listens on.", _host)
     port: int = _setting(8000, "Port the server listens on.", _whole(1, 65535))
+    allow_remote: bool = _setting(
+        False,
+        "Whether it may listen where other machines reach it, though it asks nobody who they are: yes or no.",
+        _yes_or_no,
+    )
     workers: int = _setting(
-        os.cpu_count() or 1, "Worker processes; as many as processors unless set.", _whole(1, 256)
+        len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1,
+        "Worker processes; as many as processors unless set.", _whole(1, 256)
     )
     threads: int = _setting(8, "Threads of a worker, which wait on clients.", _whole(1, 256))
     compute_slots: int = _setting(1, "Calculations a worker does at once.", _whole(1, 64))

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 import sys
 from difflib import get_close_matches
 from pathlib import Path
@@ -11,14 +10,13 @@ from uuid import uuid4
 from ..api import problems
 from ..api.app import create_app
 from ..api.contract import Contract, Operation
-from ..api.settings import BadSettings
-from .environment import read_settings
+from ..api.settings import BadSettings, Settings
 
 
 def compute(operation_id: str, file: str | None) -> int:
     """Prints the answer to a file's body; a problem goes to standard error, with status 1."""
     try:
-        settings, _ = read_settings(os.environ)
+        settings = Settings.from_environment()
     except BadSettings as error:
         return _not_understood(str(error))
     contract: Contract = create_app(settings).extensions["assignable.contract"]

@@ -32,7 +32,6 @@ from ..api import problems
 from ..api.app import create_app
 from ..api.contract import Contract, examples_directory
 from ..api.settings import BadSettings, Settings
-from .environment import ALLOW_REMOTE, read_settings
 
 # Seconds a stopping server waits for the requests it has; whoever kills it must wait longer.
 GRACE_SECONDS = 30
@@ -67,12 +66,12 @@ def settings_from(environment: Mapping[str, str]) -> Settings:
     address that is not this machine's own needs ``ASSIGNABLE_ALLOW_REMOTE=yes``.
     Raises :class:`BadSettings`, :class:`CannotServe`.
     """
-    settings, remote_allowed = read_settings(environment)
-    if not remote_allowed and not _is_loopback(settings.host):
+    settings = Settings.from_environment(environment)
+    if not settings.allow_remote and not _is_loopback(settings.host):
         raise CannotServe(
             f"{settings.host} can be reached from other machines, and this service asks nobody who they are. "
             "Listen on 127.0.0.1, or, behind a proxy or in a network you trust, "
-            f"say --allow-remote or set {ALLOW_REMOTE}=yes."
+            "say --allow-remote or set ASSIGNABLE_ALLOW_REMOTE=yes."
         )
     return settings
 
