@@ -659,6 +659,13 @@ _LISTED = (
         "Time series analysis: forecasting and control, revised edition",
         "Holden-Day, San Francisco",
     ),
+    Reference(
+        "champ-jones-2004",
+        "Champ, C. W.; Jones, L. A.",
+        2004,
+        "Designing phase I X-bar charts with small sample sizes",
+        "Quality and Reliability Engineering International 20(5), 497-510",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(

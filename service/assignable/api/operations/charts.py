@@ -16,7 +16,7 @@ from ...spc.errors import DocumentMismatch
 from ...spc.rules import Signal
 from .. import fields as f
 from .. import problems
-from ..contract import Contract, Provenance
+from ..contract import Contract, Provenance, examples_directory
 from ..schemas import derive, quick
 from ..schemas.charts import ChartRequest, request_of
 from ..schemas.common import CAUTIONS, CautionAnswer, Characteristic, cautions, labels_of
@@ -369,6 +369,12 @@ def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str
 # Routes
 
 
+def _examples(stem: str) -> tuple[str, ...]:
+    """The chart's example, and those of its options beside it."""
+    more = examples_directory().glob(f"{stem}-*.request.json")
+    return (stem, *sorted(path.name.removesuffix(".request.json") for path in more))
+
+
 def register(contract: Contract) -> None:
     """Binds both operations of every chart in the registry."""
     contract.tag(TAG, "Limits from a baseline, and signals on new data under frozen limits. " + VERDICT_NOTE)
@@ -387,7 +393,7 @@ def register(contract: Contract) -> None:
             request=fit_request,
             response=fit_answer,
             problems=(problems.NOT_COMPUTABLE,),
-            example=f"{chart.name}-limits",
+            example=_examples(f"{chart.name}-limits"),
             links={
                 f"judge{chart.stem}": {
                     "operationId": f"judge{chart.stem}",
@@ -409,6 +415,6 @@ def register(contract: Contract) -> None:
             request=judge_request,
             response=judge_answer,
             problems=(problems.NOT_COMPUTABLE, problems.DOCUMENT_MISMATCH),
-            example=f"{chart.name}-signals",
+            example=_examples(f"{chart.name}-signals"),
             provenance=chart.name,
         )(partial(judge, chart, takes))

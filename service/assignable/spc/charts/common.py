@@ -16,6 +16,7 @@ from typing import Annotated, Generic, Literal, TypeVar
 import numpy as np
 import scipy
 
+from ..baseline.estimation import EstimatedPerformance
 from ..cautions import Caution
 from ..data import Booleans, Floats, Integers
 from ..errors import Fault, UnusableParameter
@@ -150,6 +151,12 @@ class Plot:
             upper=np.asarray(self.ceiling if self.upper is None else self.upper),
         )
 
+    def beyond(self) -> Booleans:
+        """(m,) bool: values strictly beyond a limit; a gap is not."""
+        above = False if self.upper is None else self.value > self.upper
+        below = False if self.lower is None else self.value < self.lower
+        return np.logical_or(above, below)
+
     def panel(self) -> Panel:
         """The panel of the answer; lines that do not vary are one number seen at every point."""
         index = (self.value == self.value).nonzero()[0]
@@ -263,6 +270,10 @@ class Performance:
     shift_unit: Annotated[str, "What a shift of 1 means."]
     subgroup_size: Annotated[float | None, "The size these figures are for."]
     method: Annotated[str, "How the run lengths were computed."]
+    estimated: Annotated[
+        EstimatedPerformance | None,
+        "What limits from estimates deliver; null where nothing was estimated, or it is not known for the chart.",
+    ] = None
 
 
 def exclusion_mask(points: int, exclude: Sequence[Exclusion]) -> Booleans | None:
@@ -311,6 +322,19 @@ def standards_alone(given: Standards, exclude: Sequence[Exclusion]) -> list[Faul
     if exclude:
         faults.append(Fault("no-such-point", "There is no baseline to exclude points from.", ("exclude",)))
     return faults
+
+
+def baseline_alone(guarantee: object, joint: object, screening: object) -> list[Fault]:
+    """The faults of a fit without data that asks for what needs a baseline: each ``None`` where it does not."""
+    return [
+        Fault("data-missing", "There is no baseline that this could be about; leave it out.", (name,))
+        for name, asked in (
+            ("guarantee", guarantee),
+            ("joint_false_alarm_probability", joint),
+            ("screening", screening),
+        )
+        if asked is not None
+    ]
 
 
 def too_many_signals(watched: Watched) -> tuple[Caution, ...]:

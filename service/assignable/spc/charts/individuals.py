@@ -3,14 +3,15 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import partial
 from typing import Annotated, Generic, Literal, TypeVar
 
 import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics
-from ..baseline import change_points
+from ..baseline import change_points, estimation, joint, screening
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals
 from ..errors import UnusableData, UnusableParameter
@@ -30,6 +31,7 @@ from .common import (
     Standards,
     Verdict,
     Watched,
+    baseline_alone,
     exclusion_mask,
     standards_alone,
     too_many_signals,
@@ -60,6 +62,9 @@ class IndividualsOptions:
     rules: tuple[Rule, ...] = ()
     standards: Standards = NO_STANDARDS
     exclude: tuple[Exclusion, ...] = ()
+    guarantee: estimation.Guarantee | None = None
+    joint_false_alarm_probability: float | None = None
+    screening: screening.Screening | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -112,6 +117,26 @@ class IndividualsDiagnostics:
     change_point: Annotated[
         change_points.ChangePoint | None, "A lasting step within the baseline; null for fewer than 8 values."
     ] = None
+    judged_by: Annotated[
+        joint.JointLimits | None,
+        "The joint limits that judged the baseline, where asked for; null where its own frozen limits and "
+        "rules did.",
+    ] = None
+    screening: Annotated[
+        screening.Screened | None, "What automatic screening did; null where not asked for."
+    ] = None
+
+
+@dataclass(frozen=True, slots=True)
+class _Known:
+    """Centre and sigma, given or from the ``filled`` values of ``used``."""
+
+    used: Floats
+    filled: int
+    mean: float
+    sigma: float
+    estimator: str
+    freedom: float | None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -170,6 +195,9 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
 
     ``σ̂ = MR̄/d2(w)`` over moving ranges of span w, or the median moving range over the median of W. A
     gap, and an excluded value, breaks the moving range: no range spans it.
+    A guarantee sets the multiple. A joint false-alarm probability widens the limits (and replaces the rules)
+    by which the baseline itself is judged and screened, and leaves the frozen limits as they are. Screening
+    looks at the values alone: a wide moving range does not say which of its values is to blame.
 
     Raises UnusableData for fewer than two values or no variation; UnusableParameter for options that
     do not fit. Source: [iso-7870-2], [astm-e2587].
@@ -177,17 +205,72 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
     rules = watched(options.rules)
     given, basis = options.standards, options.basis
     if data is None:
-        if faults := standards_alone(given, options.exclude):
+        faults = standards_alone(given, options.exclude)
+        faults += baseline_alone(options.guarantee, options.joint_false_alarm_probability, options.screening)
+        if faults:
             raise UnusableParameter(*faults)
         assert given.mean is not None
         assert given.sigma is not None
-        limits = _limits(options, rules, given.mean, given.sigma, "given", None, None)
+        limits = _limits(options, rules, _Known(np.empty(0), 0, given.mean, given.sigma, "given", None), None)
         return IndividualsFit(limits, None, None, mean_performance(rules, basis, 1.0, None), ())
 
     values = data.values
     kept = exclusion_mask(len(values), options.exclude)
+    screened = None
+    if options.screening is not None:
+        present = values == values
+        kept, left_out, screened = screening.screen(
+            present if kept is None else present & kept, partial(_beyond, values, options), options.screening
+        )
+        options = replace(options, exclude=(*options.exclude, *left_out))
+    known = _estimate(values, kept, options)
+    if options.guarantee is not None:
+        basis = _guaranteed(known, options)
+        options = replace(options, basis=basis)
+    used, filled = known.used, known.filled
+    limits = _limits(options, rules, known, BaselineRecord(filled, filled, options.exclude))
+    plots, judged_by = _judged(values, known, basis, options)
+    seen, _ = _watch(plots, rules if judged_by is None else watched(()), None, kept)
+    found = IndividualsDiagnostics(
+        diagnostics.autocorrelation(used),
+        diagnostics.normality(used),
+        diagnostics.resolution(used, None),
+        change_points.of_values(used),
+        judged_by,
+        screened,
+    )
+    delivered = estimation.performance(
+        filled,
+        known.freedom,
+        basis.multiple,
+        centre_known=given.mean is not None,
+        guarantee=options.guarantee,
+    )
+    return IndividualsFit(
+        limits,
+        Baseline(
+            seen.verdict, ValueMovingRange(plots[0].panel(), plots[1].panel()), seen.signals, seen.found
+        ),
+        found,
+        replace(mean_performance(rules, basis, 1.0, None), estimated=delivered),
+        caution.collect(
+            caution.few_individuals(filled),
+            caution.autocorrelated(found.autocorrelation),
+            caution.not_normal(found.normality),
+            caution.coarse_resolution(found.resolution),
+            change_points.caution_of_level(found.change_point),
+            change_points.caution_of_spread(found.change_point),
+            screening.caution(screened),
+            *too_many_signals(seen),
+        ),
+    )
+
+
+def _estimate(values: Floats, kept: Booleans | None, options: IndividualsOptions) -> _Known:
+    """Centre and sigma of the values kept; raises UnusableData where there are too few."""
+    given = options.standards
     used = values if kept is None else np.where(kept, values, np.nan)
-    filled = int(np.count_nonzero(~np.isnan(used)))
+    filled = int(np.count_nonzero(used == used))
     if filled < 2 and (given.mean is None or given.sigma is None):
         raise UnusableData.of(
             "too-few-values",
@@ -198,41 +281,57 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
         )
     mean = given.mean if given.mean is not None else mean_of_values(used, filled)
     if given.sigma is not None:
-        sigma, estimator, freedom = given.sigma, "given", None
-    else:
-        statistic: Literal["mean", "median"] = (
-            "median" if options.sigma_estimator == "median-moving-range" else "mean"
-        )
-        estimate = moving_range(used, span=options.span, statistic=statistic)
-        sigma, estimator, freedom = estimate.sigma, estimate.estimator, estimate.degrees_of_freedom
-    limits = _limits(
-        options, rules, mean, sigma, estimator, freedom, BaselineRecord(filled, filled, options.exclude)
+        return _Known(used, filled, mean, given.sigma, "given", None)
+    statistic: Literal["mean", "median"] = (
+        "median" if options.sigma_estimator == "median-moving-range" else "mean"
     )
-    plots = individual_plots(values, moving_ranges(used, options.span), mean, sigma, options.span, basis)
-    seen, _ = _watch(plots, rules, None, kept)
-    found = IndividualsDiagnostics(
-        diagnostics.autocorrelation(used),
-        diagnostics.normality(used),
-        diagnostics.resolution(used, None),
-        change_points.of_values(used),
+    found = moving_range(used, span=options.span, statistic=statistic)
+    return _Known(used, filled, mean, found.sigma, found.estimator, found.degrees_of_freedom)
+
+
+def _guaranteed(known: _Known, options: IndividualsOptions) -> LimitBasis:
+    assert options.guarantee is not None
+    multiple = estimation.multiple_of(
+        options.guarantee, known.filled, known.freedom, centre_known=options.standards.mean is not None
     )
-    return IndividualsFit(
-        limits,
-        Baseline(
-            seen.verdict, ValueMovingRange(plots[0].panel(), plots[1].panel()), seen.signals, seen.found
-        ),
-        found,
-        mean_performance(rules, basis, 1.0, None),
-        caution.collect(
-            caution.few_individuals(filled),
-            caution.autocorrelated(found.autocorrelation),
-            caution.not_normal(found.normality),
-            caution.coarse_resolution(found.resolution),
-            change_points.caution_of_level(found.change_point),
-            change_points.caution_of_spread(found.change_point),
-            *too_many_signals(seen),
-        ),
+    return LimitBasis("sigma", multiple, None)
+
+
+def _judged(
+    values: Floats, known: _Known, basis: LimitBasis, options: IndividualsOptions
+) -> tuple[tuple[Plot, Plot], joint.JointLimits | None]:
+    """The panels under the limits that judge the baseline: the joint ones where they are asked for."""
+    span = options.span
+    ranges = moving_ranges(known.used, span)
+    probability = options.joint_false_alarm_probability
+    if probability is None:
+        return individual_plots(values, ranges, known.mean, known.sigma, span, basis), None
+    limits = joint.of_values(
+        probability,
+        known.filled,
+        span,
+        known.freedom,
+        resistant=known.estimator == "median-moving-range",
     )
+    plot, _ = individual_plots(
+        values, ranges, known.mean, known.sigma, span, LimitBasis("sigma", limits.sigma_multiple)
+    )
+    _, spread = individual_plots(
+        values,
+        ranges,
+        known.mean,
+        known.sigma,
+        span,
+        LimitBasis("probability", None, 2.0 * limits.spread_tail_probability),
+    )
+    return (plot, replace(spread, lower=None)), limits
+
+
+def _beyond(values: Floats, options: IndividualsOptions, kept: Booleans) -> Booleans:
+    """(m,) values beyond the limits that those kept give."""
+    known = _estimate(values, kept, options)
+    basis = options.basis if options.guarantee is None else _guaranteed(known, options)
+    return _judged(values, known, basis, options)[0][0].beyond()
 
 
 def mean_of_values(values: Floats, filled: int) -> float:
@@ -243,14 +342,9 @@ def mean_of_values(values: Floats, filled: int) -> float:
 
 
 def _limits(
-    options: IndividualsOptions,
-    rules: tuple[Rule, ...],
-    centre: float,
-    sigma: float,
-    estimator: str,
-    freedom: float | None,
-    record: BaselineRecord | None,
+    options: IndividualsOptions, rules: tuple[Rule, ...], known: _Known, record: BaselineRecord | None
 ) -> IndividualsLimits:
+    centre, sigma = known.mean, known.sigma
     if not (math.isfinite(centre) and math.isfinite(sigma) and sigma > 0):
         raise UnusableData.of("out-of-scale", "The spread of the values cannot be represented.", "data")
     basis, nothing = options.basis, np.empty(0)
@@ -258,8 +352,8 @@ def _limits(
     return IndividualsLimits(
         centre,
         sigma,
-        estimator,
-        freedom,
+        known.estimator,
+        known.freedom,
         options.span,
         basis.limit_basis,
         basis.sigma_multiple,

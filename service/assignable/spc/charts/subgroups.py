@@ -10,14 +10,14 @@ from __future__ import annotations
 import functools
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Annotated, Any, Generic, Literal, TypeVar
 
 import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics, factors
-from ..baseline import change_points
+from ..baseline import change_points, estimation, joint, screening
 from ..cautions import Caution
 from ..data import Booleans, Floats, Integers, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -37,6 +37,7 @@ from .common import (
     Standards,
     Verdict,
     Watched,
+    baseline_alone,
     exclusion_mask,
     standards_alone,
     too_many_signals,
@@ -80,6 +81,9 @@ class SubgroupOptions:
     standards: Standards = NO_STANDARDS
     subgroup_size: int | None = None
     exclude: tuple[Exclusion, ...] = ()
+    guarantee: estimation.Guarantee | None = None
+    joint_false_alarm_probability: float | None = None
+    screening: screening.Screening | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -146,12 +150,39 @@ class SubgroupDiagnostics:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class SubgroupStudy(SubgroupDiagnostics):
+    """What the baseline itself shows, and how it was judged."""
+
+    judged_by: Annotated[
+        joint.JointLimits | None,
+        "The joint limits that judged the baseline, where asked for; null where its own frozen limits and "
+        "rules did.",
+    ] = None
+    screening: Annotated[
+        screening.Screened | None, "What automatic screening did; null where not asked for."
+    ] = None
+
+
+@dataclass(frozen=True, slots=True)
+class _Known:
+    """Centre and sigma, given or from the subgroups ``used``, of which ``filled`` hold ``total`` values."""
+
+    used: SubgroupStatistics
+    filled: int
+    total: int
+    mean: float
+    sigma: float
+    estimator: str
+    freedom: float | None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class SubgroupFit(Generic[P, Q]):
     """Limits of a chart of subgroups with the evidence for them."""
 
     limits: SubgroupLimits[P]
     baseline: Baseline[Q] | None
-    diagnostics: SubgroupDiagnostics | None
+    diagnostics: SubgroupStudy | None
     performance: Performance
     cautions: tuple[Caution, ...]
 
@@ -225,6 +256,7 @@ def _check(options: SubgroupOptions, statistics: SubgroupStatistics | None, spre
     given = options.standards
     if statistics is None:
         faults = standards_alone(given, options.exclude)
+        faults += baseline_alone(options.guarantee, options.joint_false_alarm_probability, options.screening)
         if options.subgroup_size is None:
             faults.append(
                 Fault(
@@ -260,6 +292,9 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     ``c4σ̂ ± k·σ̂√(1−c4²)``; or equal-tail limits of the exact distributions. A lower spread limit that
     is not positive does not exist. Standards given replace the estimates.
 
+    A guarantee sets the multiple. A joint false-alarm probability widens the limits (and replaces the rules)
+    by which the baseline itself is judged and screened, and leaves the frozen limits as they are.
+
     Raises UnusableData for data without at least two subgroups, or without variation;
     UnusableParameter for options that do not fit the data. Source: [iso-7870-2], [astm-e2587];
     probability limits from the distributions of the normal, of the range and of the deviation.
@@ -276,8 +311,62 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
         performance = mean_performance(rules, basis, float(options.subgroup_size), spread)
         return SubgroupFit(limits, None, None, performance, ())
 
-    points = len(statistics.size)
-    kept = exclusion_mask(points, options.exclude)
+    kept = exclusion_mask(len(statistics.size), options.exclude)
+    screened = None
+    if options.screening is not None:
+        present = statistics.size > 0
+        kept, left_out, screened = screening.screen(
+            present if kept is None else present & kept,
+            functools.partial(_beyond, statistics, spread, options),
+            options.screening,
+        )
+        options = replace(options, exclude=(*options.exclude, *left_out))
+    known = _estimate(statistics, kept, options)
+    if options.guarantee is not None:
+        basis = _guaranteed(known, options)
+        options = replace(options, basis=basis)
+    used, filled, total = known.used, known.filled, known.total
+    size = used.usual_size
+    record = BaselineRecord(filled, total, options.exclude)
+    limits = _limits(
+        options, spread, known.mean, known.sigma, known.freedom, size, rules, record, known.estimator
+    )
+
+    plots, judged_by = _judged(statistics, spread, known, basis, options)
+    seen, _ = _watch(plots, spread, rules if judged_by is None else watched(()), None, kept)
+    panels = _PANELS[spread](plots[0].panel(), plots[1].panel())
+    baseline = Baseline(seen.verdict, panels, seen.signals, seen.found)
+    typical = float(size) if size is not None else total / filled
+    found = diagnose(data, used, kept)
+    study = SubgroupStudy(
+        found.autocorrelation,
+        found.normality,
+        found.resolution,
+        found.spread_stability,
+        found.change_point,
+        judged_by,
+        screened,
+    )
+    delivered = estimation.performance(
+        filled,
+        known.freedom,
+        basis.multiple,
+        centre_known=given.mean is not None,
+        guarantee=options.guarantee,
+    )
+    performance = replace(mean_performance(rules, basis, typical, spread), estimated=delivered)
+    return SubgroupFit(
+        limits,
+        baseline,
+        study,
+        performance,
+        _cautions(study, used, filled, spread, limits, seen, plots[0]),
+    )
+
+
+def _estimate(statistics: SubgroupStatistics, kept: Booleans | None, options: SubgroupOptions) -> _Known:
+    """Centre and sigma of the subgroups kept; raises UnusableData where there are too few."""
+    given = options.standards
     used = statistics if kept is None else statistics.keep(kept)
     filled = int(np.count_nonzero(used.size))
     if not filled:
@@ -291,28 +380,53 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
     total = int(used.size.sum())
     mean = given.mean if given.mean is not None else grand_mean(used, total)
     if given.sigma is not None:
-        sigma, estimator, freedom = given.sigma, "given", None
-    else:
-        estimate = within(used, options.sigma_estimator)
-        sigma, estimator, freedom = estimate.sigma, estimate.estimator, estimate.degrees_of_freedom
-    size = used.usual_size
-    record = BaselineRecord(filled, total, options.exclude)
-    limits = _limits(options, spread, mean, sigma, freedom, size, rules, record, estimator)
+        return _Known(used, filled, total, mean, given.sigma, "given", None)
+    found = within(used, options.sigma_estimator)
+    return _Known(used, filled, total, mean, found.sigma, found.estimator, found.degrees_of_freedom)
 
-    plots = subgroup_plots(statistics, spread, mean, sigma, basis)
-    seen, _ = _watch(plots, spread, rules, None, kept)
-    panels = _PANELS[spread](plots[0].panel(), plots[1].panel())
-    baseline = Baseline(seen.verdict, panels, seen.signals, seen.found)
-    typical = float(size) if size is not None else total / filled
-    found = diagnose(data, used, kept)
-    performance = mean_performance(rules, basis, typical, spread)
-    return SubgroupFit(
-        limits,
-        baseline,
-        found,
-        performance,
-        _cautions(found, used, filled, spread, limits, seen, plots[0]),
+
+def _guaranteed(known: _Known, options: SubgroupOptions) -> LimitBasis:
+    assert options.guarantee is not None
+    multiple = estimation.multiple_of(
+        options.guarantee, known.filled, known.freedom, centre_known=options.standards.mean is not None
     )
+    return LimitBasis("sigma", multiple, None)
+
+
+def _judged(
+    statistics: SubgroupStatistics,
+    spread: Spread,
+    known: _Known,
+    basis: LimitBasis,
+    options: SubgroupOptions,
+) -> tuple[tuple[Plot, Plot], joint.JointLimits | None]:
+    """The panels under the limits that judge the baseline: the joint ones where they are asked for."""
+    probability = options.joint_false_alarm_probability
+    if probability is None:
+        return subgroup_plots(statistics, spread, known.mean, known.sigma, basis), None
+    size = min(max(round(known.total / known.filled), factors.SMALLEST_SIZE), factors.LARGEST_SIZE)
+    limits = joint.of_subgroups(probability, known.filled, size, known.freedom, spread, known.estimator)
+    means, _ = subgroup_plots(
+        statistics, spread, known.mean, known.sigma, LimitBasis("sigma", limits.sigma_multiple)
+    )
+    _, spreads = subgroup_plots(
+        statistics,
+        spread,
+        known.mean,
+        known.sigma,
+        LimitBasis("probability", None, 2.0 * limits.spread_tail_probability),
+    )
+    return (means, replace(spreads, lower=None)), limits
+
+
+def _beyond(
+    statistics: SubgroupStatistics, spread: Spread, options: SubgroupOptions, kept: Booleans
+) -> Booleans:
+    """(m,) subgroups beyond the limits that those kept give, on either panel."""
+    known = _estimate(statistics, kept, options)
+    basis = options.basis if options.guarantee is None else _guaranteed(known, options)
+    plots, _ = _judged(statistics, spread, known, basis, options)
+    return plots[0].beyond() | plots[1].beyond()
 
 
 def grand_mean(used: SubgroupStatistics, total: int) -> float:
@@ -382,7 +496,7 @@ def diagnose(
 
 
 def _cautions(
-    found: SubgroupDiagnostics,
+    found: SubgroupStudy,
     used: SubgroupStatistics,
     filled: int,
     spread: Spread,
@@ -405,6 +519,7 @@ def _cautions(
         caution.varies_between(
             used.mean, int(np.count_nonzero(far)), typical, limits.sigma, limits.degrees_of_freedom
         ),
+        screening.caution(found.screening),
         *too_many_signals(seen),
     )
 
@@ -467,7 +582,7 @@ def _chart(
         limits=SubgroupLimits[panels(PanelLimits)],  # type: ignore[misc]
         plotted=panels(Panel),
         carry=SubgroupCarry,
-        diagnostics=SubgroupDiagnostics,
+        diagnostics=SubgroupStudy,
     )
 
 

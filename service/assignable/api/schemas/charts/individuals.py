@@ -11,7 +11,15 @@ from ....spc.errors import UnusableData
 from ....spc.sigma import LARGEST_SPAN
 from ... import fields as f
 from ..common import IDS, TIMES, check_labels, rules_of
-from .common import ChartRequest, FitRequest, StandardsRequest, exclusions, limit_basis
+from .common import (
+    ChartRequest,
+    StandardsRequest,
+    StudyRequest,
+    exclusions,
+    guarantee,
+    limit_basis,
+    screening,
+)
 
 
 class IndividualsData(f.RequestShape):
@@ -36,7 +44,7 @@ def individuals(loaded: dict[str, Any]) -> Individuals:
     return Individuals(loaded["values"])
 
 
-class IndividualsFit(FitRequest):
+class IndividualsFit(StudyRequest):
     """A baseline of single values."""
 
     data = f.Object(
@@ -67,6 +75,9 @@ def individuals_options(loaded: dict[str, Any]) -> IndividualsOptions:
         rules_of(loaded.get("rules")),
         Standards(**loaded.get("standards", {})),
         exclusions(loaded),
+        guarantee(loaded),
+        loaded.get("joint_false_alarm_probability"),
+        screening(loaded),
     )
 
 

@@ -14,7 +14,15 @@ from ....spc.factors import LARGEST_SIZE
 from ....spc.sigma import WITHIN
 from ... import fields as f
 from ..common import IDS, TIMES, check_labels, rules_of
-from .common import ChartRequest, FitRequest, StandardsRequest, exclusions, limit_basis
+from .common import (
+    ChartRequest,
+    StandardsRequest,
+    StudyRequest,
+    exclusions,
+    guarantee,
+    limit_basis,
+    screening,
+)
 
 
 class SubgroupData(f.RequestShape):
@@ -108,7 +116,7 @@ def subgroups(loaded: dict[str, Any], *, need_spread: bool = True) -> Subgroups 
     return SubgroupSummary(means, sizes, loaded.get("ranges"), loaded.get("sds"))
 
 
-class _SubgroupFit(FitRequest):
+class _SubgroupFit(StudyRequest):
     data = f.Object(
         SubgroupData,
         metadata={"description": "The baseline; may be left out where both standards are given."},
@@ -148,6 +156,9 @@ def subgroup_options(loaded: dict[str, Any]) -> SubgroupOptions:
         Standards(**loaded.get("standards", {})),
         loaded.get("subgroup_size"),
         exclusions(loaded),
+        guarantee(loaded),
+        loaded.get("joint_false_alarm_probability"),
+        screening(loaded),
     )
 
 
