@@ -96,22 +96,60 @@ def problem_of(
         assert entry["detail"].strip()
         assert entry["code"] == entry["code"].lower()
         if known.status == 422 and "parameter" not in entry:
-            assert resolves(entry["pointer"], sent), (entry, members["detail"])
+            assert resolves(entry["pointer"], sent), entry
+            if entry["code"] != "unknown-field":
+                assert is_of_contract(entry["pointer"], _sent_to(answer)), entry
     if known.status == 422:
         assert members["errors"], members
     return members
 
 
+def steps_of(pointer: str) -> list[str]:
+    return [unquote(step).replace("~1", "/").replace("~0", "~") for step in pointer[1:].split("/")[1:]]
+
+
+def is_of_contract(pointer: str, schema: dict[str, Any]) -> bool:
+    """Whether a pointer leads to a place that a request's schema knows."""
+    here = [schema]
+    for step in steps_of(pointer):
+        inner = []
+        for one in here:
+            if step in one.get("properties", {}):
+                inner.append(one["properties"][step])
+            if step.isdigit() and "items" in one:
+                inner.append(one["items"])
+        here = [one for found in inner for one in alternatives(found)]
+        if not here:
+            return False
+    return True
+
+
+def alternatives(schema: dict[str, Any]) -> Iterator[dict[str, Any]]:
+    """What a schema may stand for, references followed, null left out."""
+    while "$ref" in schema:
+        schema = document()["components"]["schemas"][schema["$ref"].rpartition("/")[2]]
+    if "anyOf" in schema:
+        for one in schema["anyOf"]:
+            yield from alternatives(one)
+    elif schema.get("type") != "null":
+        yield schema
+
+
+def request_schema(operation_id: str) -> dict[str, Any]:
+    """The schema of what an operation takes, with a reference at most at its members."""
+    (schema,) = alternatives(described(operation_id)["requestBody"]["content"]["application/json"]["schema"])
+    return schema
+
+
 def resolves(pointer: str, body: Json) -> bool:
-    """Whether a pointer leads to something in the body, or to a member that its parent lacks."""
+    """Whether a pointer leads to something in the body, or by names alone to what the body lacks."""
     if not pointer.startswith("#"):
         return False
-    steps = [unquote(step).replace("~1", "/").replace("~0", "~") for step in pointer[1:].split("/")[1:]]
+    steps = steps_of(pointer)
     for at, step in enumerate(steps):
-        last = at == len(steps) - 1
         if isinstance(body, dict):
             if step not in body:
-                return last
+                return not any(name.isdigit() for name in steps[at:])
             body = body[step]
         elif isinstance(body, list):
             if not step.isdigit() or int(step) >= len(body):
@@ -120,6 +158,11 @@ def resolves(pointer: str, body: Json) -> bool:
         else:
             return False
     return True
+
+
+def _sent_to(answer: TestResponse) -> dict[str, Any]:
+    path = answer.request.path
+    return next(request_schema(name) for name, found in operations().items() if found.path == path)
 
 
 def pointers(members: dict[str, Any]) -> list[str]:
@@ -147,6 +190,16 @@ def put(body: Json, path: tuple[str | int, ...], value: Json) -> Json:
         here[step] = put_here
         here = put_here
     return made
+
+
+def has(body: Json, path: tuple[str | int, ...]) -> bool:
+    """Whether there is something at this path."""
+    for step in path:
+        if step in body if isinstance(body, dict) else isinstance(body, list) and step < len(body):
+            body = body[step]
+        else:
+            return False
+    return True
 
 
 def nodes(body: Json, path: tuple[str | int, ...] = ()) -> Iterator[tuple[str | int, ...]]:

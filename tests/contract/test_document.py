@@ -31,22 +31,6 @@ def shapes() -> dict[str, dict[str, Any]]:
     return served.document()["components"]["schemas"]
 
 
-def resolved(schema: dict[str, Any]) -> dict[str, Any]:
-    while "$ref" in schema:
-        schema = shapes()[schema["$ref"].removeprefix(REFERENCE)]
-    return schema
-
-
-def alternatives(schema: dict[str, Any]) -> Iterator[dict[str, Any]]:
-    """What a schema may stand for, references followed, null left out."""
-    schema = resolved(schema)
-    if "anyOf" in schema:
-        for one in schema["anyOf"]:
-            yield from alternatives(one)
-    elif schema.get("type") != "null":
-        yield schema
-
-
 def types_of(schema: dict[str, Any]) -> set[str]:
     found = schema.get("type", [])
     return set(found if isinstance(found, list) else [found])
@@ -79,12 +63,8 @@ def used_by(schema: dict[str, Any]) -> set[str]:
 def of_requests() -> set[str]:
     found: set[str] = set()
     for operation_id in TAKING_BODY:
-        found |= used_by(request_schema(operation_id))
+        found |= used_by(served.request_schema(operation_id))
     return found
-
-
-def request_schema(operation_id: str) -> dict[str, Any]:
-    return served.described(operation_id)["requestBody"]["content"]["application/json"]["schema"]
 
 
 def answer_schema(operation_id: str) -> dict[str, Any]:
@@ -232,7 +212,7 @@ def test_names_are_lower_case_with_underscores() -> None:
 @pytest.mark.parametrize(("operation_id", "name"), served.examples())
 def test_an_example_is_answered_as_the_contract_says(operation_id: str, name: str) -> None:
     sent = served.example(name)
-    validator(request_schema(operation_id)).validate(sent)
+    validator(served.request_schema(operation_id)).validate(sent)
     answer = served.answer_of(operation_id, sent)
     validator(answer_schema(operation_id)).validate(answer)
     for path in served.nodes(answer):
@@ -274,10 +254,12 @@ def places(operation_id: str) -> Iterator[tuple[Path, dict[str, Any], dict[str, 
     """Every place of a request: its path, its schema, and the body it can be set in."""
 
     def walk(schema: dict[str, Any], path: Path, sent: Any) -> Iterator[tuple[Path, dict[str, Any], Any]]:
-        choices = list(alternatives(schema))
+        choices = list(served.alternatives(schema))
         for one in choices:
             listed = "array" in types_of(one)
-            base = served.put(sent, path, []) if listed and len(choices) > 1 else sent
+            base = sent
+            if listed and (len(choices) > 1 or not served.has(sent, (*path, one.get("minItems", 1) - 1))):
+                base = served.put(sent, path, [None] * one.get("minItems", 0))
             yield path, one, base
             for member, inner in one.get("properties", {}).items():
                 yield from walk(inner, (*path, member), base)
@@ -285,7 +267,7 @@ def places(operation_id: str) -> Iterator[tuple[Path, dict[str, Any], dict[str, 
                 yield from walk(one["items"], (*path, 0), base)
 
     example = served.example(served.operations()[operation_id].examples[0])
-    yield from walk(request_schema(operation_id), (), example)
+    yield from walk(served.request_schema(operation_id), (), example)
 
 
 def beyond(schema: dict[str, Any]) -> Iterator[tuple[Any, Any]]:

@@ -10,8 +10,9 @@ from typing import Any
 
 import orjson
 from apispec import APISpec
-from apispec.ext.marshmallow import MarshmallowPlugin, OpenAPIConverter
+from apispec.ext.marshmallow import MarshmallowPlugin
 from apispec.ext.marshmallow.common import resolve_schema_instance
+from apispec.ext.marshmallow.openapi import OpenAPIConverter
 from marshmallow import INCLUDE
 
 from . import answers, problems
@@ -46,7 +47,7 @@ _INTRODUCTION = (
 class _Converter(OpenAPIConverter):
     def schema2jsonschema(self, schema: Any) -> dict[str, Any]:
         # The library leaves out whether a shape is closed where the shape has a description.
-        made: dict[str, Any] = super().schema2jsonschema(schema)
+        made: dict[str, Any] = super().schema2jsonschema(schema)  # type: ignore[no-untyped-call]
         shape = resolve_schema_instance(schema)
         made["description"] = _text_of(shape)
         made["additionalProperties"] = shape.unknown == INCLUDE

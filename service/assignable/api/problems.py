@@ -168,6 +168,9 @@ OF_CLASS: dict[type[Exception], ProblemType] = {
     DocumentMismatch: DOCUMENT_MISMATCH,
 }
 
+BEYOND_SCHEMAS = frozenset(("unequal-length", "too-many-values"))
+"""Codes of faults that fields find and no schema can state."""
+
 _OF_STATUS = {
     400: BAD_REQUEST,
     404: NOT_FOUND,
@@ -264,7 +267,8 @@ def of(error: Exception) -> Problem:
     if isinstance(error, BadJson):
         return Problem(NOT_JSON, error.detail, errors=(Entry(error.code, error.detail, "#"),))
     if isinstance(error, ValidationError):
-        return _listed(CONTRACT_VIOLATION, pointers(error.messages))
+        entries = tuple(pointers(error.messages))
+        return _listed(_kind_of(entries), entries)
     if isinstance(error, SpcError):
         kind = next((OF_CLASS[cls] for cls in type(error).__mro__ if cls in OF_CLASS), NOT_COMPUTABLE)
         return _listed(
@@ -273,6 +277,12 @@ def of(error: Exception) -> Problem:
     if isinstance(error, HTTPException):
         return _of_http(error)
     return Problem(INTERNAL)
+
+
+def _kind_of(entries: tuple[Entry | int, ...]) -> ProblemType:
+    """A body with no other fault than what a schema cannot state has the shape that the contract states."""
+    codes = {entry.code for entry in entries if isinstance(entry, Entry)}
+    return NOT_COMPUTABLE if codes and codes <= BEYOND_SCHEMAS else CONTRACT_VIOLATION
 
 
 def pointer(path: Iterable[str | int]) -> str:

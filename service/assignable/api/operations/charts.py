@@ -12,7 +12,7 @@ import orjson
 from ...documents.limits import carry_document, check_carry, check_limits, limits_document
 from ...spc.charts import CHARTS, Chart
 from ...spc.charts.common import Performance
-from ...spc.errors import DocumentMismatch
+from ...spc.errors import DocumentMismatch, SpcError
 from ...spc.rules import Signal
 from .. import fields as f
 from .. import problems
@@ -107,7 +107,11 @@ class LimitsField(f.Object):
         @lru_cache(1024)
         def opened(blob: bytes) -> tuple[str, Any]:
             document = orjson.loads(blob)
-            loaded = super(LimitsField, self)._deserialize(document, None, None)
+            try:
+                loaded = super(LimitsField, self)._deserialize(document, None, None)
+            except SpcError:  # no document of ours holds what its own objects refuse
+                check_limits(chart.name, document)
+                raise
             check_limits(chart.name, document)
             if document["seal"] is not None:
                 raise DocumentMismatch.of(
@@ -144,10 +148,14 @@ class CarryField(f.Object):
     def _deserialize(  # type: ignore[override]
         self, value: Any, attr: str | None, data: Any, **kwargs: Any
     ) -> tuple[dict[str, Any], Any]:
-        if self._quick is not None:
-            with suppress(quick.Irregular):
-                return value, self._quick(value)
-        return value, super()._deserialize(value, attr, data, **kwargs)
+        try:
+            if self._quick is not None:
+                with suppress(quick.Irregular):
+                    return value, self._quick(value)
+            return value, super()._deserialize(value, attr, data, **kwargs)
+        except SpcError:
+            check_carry(value["chart"], value["limits"], value)
+            raise
 
 
 # ---------------------------------------------------------------------------------------------------
@@ -416,5 +424,12 @@ def register(contract: Contract) -> None:
             response=judge_answer,
             problems=(problems.NOT_COMPUTABLE, problems.DOCUMENT_MISMATCH),
             example=_examples(f"{chart.name}-signals"),
+            links={
+                f"continue{chart.stem}": {
+                    "operationId": f"judge{chart.stem}",
+                    "description": "The carry goes, as it is, beside the next data under the same limits.",
+                    "x-request-body": {"limits": "$request.body#/limits", "carry": "$response.body#/carry"},
+                }
+            },
             provenance=chart.name,
         )(partial(judge, chart, takes))

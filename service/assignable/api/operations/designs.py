@@ -22,6 +22,7 @@ from ..schemas.designs import (
     USUAL_SHIFTS,
     CusumDesignAnswer,
     CusumDesignRequest,
+    DetectRequest,
     EwmaDesignAnswer,
     EwmaDesignRequest,
     RunLengthRequest,
@@ -61,17 +62,19 @@ def design_subgroups(loaded: dict[str, Any]) -> dict[str, Any]:
     plan = present = comparison = found = None
     if "detect" in loaded:
         asked = loaded["detect"]
-        plan = subgroups.plan(
-            shift,
-            power=asked.get("power"),
-            ats_hours=asked.get("ats_hours"),
-            shift_moment=moment,
-            multiple=asked.get("sigma_multiple"),
-            in_control_arl=asked.get("in_control_arl"),
-            false_alarm_probability=asked.get("false_alarm_probability"),
-            interval_hours=asked.get("interval_hours"),
-            hourly_pieces=asked.get("hourly_pieces"),
-        )
+        places: dict[str, Where] = {name: ("detect", name) for name in DetectRequest._declared_fields}
+        with located(multiple=("detect", "sigma_multiple"), **places):
+            plan = subgroups.plan(
+                shift,
+                power=asked.get("power"),
+                ats_hours=asked.get("ats_hours"),
+                shift_moment=moment,
+                multiple=asked.get("sigma_multiple"),
+                in_control_arl=asked.get("in_control_arl"),
+                false_alarm_probability=asked.get("false_alarm_probability"),
+                interval_hours=asked.get("interval_hours"),
+                hourly_pieces=asked.get("hourly_pieces"),
+            )
         found = characteristics(plan)
     if "present" in loaded:
         present = characteristics(_plan(loaded["present"]))

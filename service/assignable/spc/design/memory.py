@@ -11,7 +11,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Literal
+from typing import Annotated, Literal
 
 import scipy
 
@@ -38,83 +38,104 @@ _TABLE = (0.5, 0.75, 1.0, 1.5, 2.0, 3.0)
 
 @dataclass(frozen=True, slots=True)
 class MemoryPerformance:
-    """A chart at one shift (sigma units): run length from the start, and from steady state.
+    """What a chart does at one shift.
 
-    ``ats_hours``, given an interval between points: ``arl`` intervals for zero-state (the shift is there
-    from the start, [montgomery-2013]), ``steady_state_arl − ½`` intervals for steady-state (the shift falls
-    anywhere between two points, [reynolds-1988]); None without an interval or a run length.
+    ``ats_hours``: for zero-state, ``arl`` intervals [montgomery-2013]; for steady-state, ``steady_state_arl - ½``
+    intervals, the shift falling anywhere between two points [reynolds-1988].
     """
 
-    shift: float
-    arl: float
-    sd: float
-    steady_state_arl: float | None
-    ats_hours: float | None
+    shift: Annotated[float, "Shift of the mean, in standard deviations of the plotted statistic."]
+    arl: Annotated[float, "Points until the signal on average, for a shift that is there from the start."]
+    sd: Annotated[float, "Standard deviation of that number of points."]
+    steady_state_arl: Annotated[
+        float | None,
+        "The same average for a shift that comes once the chart has run for long; null where not asked.",
+    ]
+    ats_hours: Annotated[
+        float | None,
+        "Average hours to the signal in the state asked; null without an interval or a run length.",
+    ]
 
 
 @dataclass(frozen=True, slots=True)
 class EwmaNeighbour:
-    """An EWMA with another λ at the same in-control ARL; ``excess`` is its ARL over the optimum's, less 1."""
+    """An EWMA with another smoothing constant at the same in-control run length."""
 
-    smoothing: float
-    limit: float
-    arl: float
-    excess: float
+    smoothing: Annotated[float, "Its smoothing constant, lambda."]
+    limit: Annotated[float, "Its limits, in the kind that was asked."]
+    arl: Annotated[float, "Average run length at the shift to detect."]
+    excess: Annotated[float, "That over the optimum's, less 1."]
 
 
 @dataclass(frozen=True, slots=True)
 class CusumNeighbour:
-    """A CUSUM with another k at the same in-control ARL; ``excess`` is its ARL over the optimum's, less 1."""
+    """A CUSUM with another reference value at the same in-control run length."""
 
-    reference: float
-    decision: float
-    arl: float
-    excess: float
+    reference: Annotated[float, "Its reference value k, in sigma."]
+    decision: Annotated[float, "Its decision interval h, in sigma."]
+    arl: Annotated[float, "Average run length at the shift to detect."]
+    excess: Annotated[float, "That over the optimum's, less 1."]
 
 
 @dataclass(frozen=True, slots=True)
 class EwmaDesign:
-    """The EWMA that finds ``shift`` soonest at ``in_control_arl``; ``limit`` is of the kind ``limits``.
+    """The EWMA that finds the shift soonest at the in-control run length asked."""
 
-    ``at_bound``: the least was at that end of the range of λ, so it is not an optimum of its own.
-    """
-
-    smoothing: float
-    at_bound: Bound | None
-    limit: float
-    limits: Limits
-    two_sided: bool
-    state: State
-    shift: float
-    in_control_arl: float
-    arl: float
-    out_of_control: tuple[MemoryPerformance, ...]
-    neighbours: tuple[EwmaNeighbour, ...]
-    shewhart_limit: float
-    shewhart: tuple[MemoryPerformance, ...]
+    smoothing: Annotated[float, "Weight of the latest point, lambda."]
+    at_bound: Annotated[
+        Bound | None,
+        "Which end of the range of lambda the least was at, so that it is no optimum of its own; else null.",
+    ]
+    limit: Annotated[float, "Where the limits lie, of the kind that `limits` says."]
+    limits: Annotated[
+        Limits, "Whether they follow the statistic's own growing standard deviation or its last one."
+    ]
+    two_sided: Annotated[bool, "Whether both directions are watched."]
+    state: Annotated[
+        State, "Whether the shift is there from the start or comes once the chart has run for long."
+    ]
+    shift: Annotated[float, "Shift to detect, in standard deviations of the plotted statistic."]
+    in_control_arl: Annotated[float, "Points between false alarms, on average."]
+    arl: Annotated[float, "Points until the signal at that shift on average, in the state asked."]
+    out_of_control: Annotated[tuple[MemoryPerformance, ...], "What it does at each shift asked."]
+    neighbours: Annotated[
+        tuple[EwmaNeighbour, ...], "What other choices at the same in-control run length would cost."
+    ]
+    shewhart_limit: Annotated[
+        float, "Limits of the chart without memory that has the same in-control run length, in sigma."
+    ]
+    shewhart: Annotated[tuple[MemoryPerformance, ...], "What that chart does at the same shifts."]
 
 
 @dataclass(frozen=True, slots=True)
 class CusumDesign:
-    """The CUSUM that finds ``shift`` soonest at ``in_control_arl``.
+    """The CUSUM that finds the shift soonest at the in-control run length asked.
 
-    ``at_bound``: the least was at that end of the range of k (``lowest``: the least k sought, or where h
-    reaches 50), so it is not an optimum of its own.
+    ``at_bound``: ``lowest`` is the least k sought, or where h reaches 50.
     """
 
-    reference: float
-    at_bound: Bound | None
-    decision: float
-    head_start: float
-    sides: run.Sides
-    state: State
-    shift: float
-    in_control_arl: float
-    arl: float
-    out_of_control: tuple[MemoryPerformance, ...]
-    neighbours: tuple[CusumNeighbour, ...]
-    shewhart_limit: float
-    shewhart: tuple[MemoryPerformance, ...]
+    reference: Annotated[float, "Reference value k, in sigma."]
+    at_bound: Annotated[
+        Bound | None,
+        "Which end of the range of k the least was at, so that it is no optimum of its own; else null.",
+    ]
+    decision: Annotated[float, "Decision interval h, in sigma."]
+    head_start: Annotated[float, "Where the sums start, in sigma."]
+    sides: Annotated[run.Sides, "Which directions are watched."]
+    state: Annotated[
+        State, "Whether the shift is there from the start or comes once the chart has run for long."
+    ]
+    shift: Annotated[float, "Shift to detect, in standard deviations of the plotted statistic."]
+    in_control_arl: Annotated[float, "Points between false alarms, on average."]
+    arl: Annotated[float, "Points until the signal at that shift on average, in the state asked."]
+    out_of_control: Annotated[tuple[MemoryPerformance, ...], "What it does at each shift asked."]
+    neighbours: Annotated[
+        tuple[CusumNeighbour, ...], "What other choices at the same in-control run length would cost."
+    ]
+    shewhart_limit: Annotated[
+        float, "Limits of the chart without memory that has the same in-control run length, in sigma."
+    ]
+    shewhart: Annotated[tuple[MemoryPerformance, ...], "What that chart does at the same shifts."]
 
 
 # --- searches -----------------------------------------------------------------------------------------
