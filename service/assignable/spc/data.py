@@ -24,6 +24,11 @@ def _frozen(array: NDArray) -> NDArray:
     return array
 
 
+def _unit_of_square(largest: float) -> float:
+    """A unit in which ``largest`` can be squared; 1 but for extreme values, so that a row's figures are its own."""
+    return 1.0 if 1e-140 < largest < 1e140 or largest == 0.0 else largest
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class SubgroupStatistics:
     """Each subgroup's own figures; what a chart of subgroups is computed from.
@@ -82,8 +87,8 @@ class Subgroups:
     def statistics(self) -> SubgroupStatistics:
         """Size, mean, range and standard deviation of each row.
 
-        Two-pass, so that values like 10000000.2 keep their digits; deviations are squared in units
-        of the largest range, so that values near 1e300 or 1e-300 neither overflow nor vanish.
+        Two-pass, so that values like 10000000.2 keep their digits; values near 1e300 or 1e-300 are squared
+        in units of the largest range, so that they neither overflow nor vanish.
         """
         x = self.values
         m, n = x.shape
@@ -100,7 +105,7 @@ class Subgroups:
                 nothing = np.full(m, np.nan)
                 return SubgroupStatistics(size, mean, nothing, nothing)
             spread = np.maximum.reduce(x, axis=1) - np.minimum.reduce(x, axis=1)
-            unit = float(np.maximum.reduce(spread)) or 1.0
+            unit = _unit_of_square(float(np.maximum.reduce(spread)))
             residual /= unit
             square = np.einsum("ij,ij->i", residual, residual)
             square -= np.add.reduce(residual, axis=1) ** 2 / n
@@ -115,7 +120,7 @@ class Subgroups:
         mean = np.where(size > 0, mean + residual.sum(axis=1) / some, np.nan)
         top = np.where(present, x, -np.inf).max(axis=1)
         spread = np.where(size > 1, top - np.where(present, x, np.inf).min(axis=1), np.nan)
-        unit = float(np.where(size > 1, spread, 0.0).max()) or 1.0
+        unit = _unit_of_square(float(np.where(size > 1, spread, 0.0).max()))
         residual /= unit
         square = np.einsum("ij,ij->i", residual, residual) - residual.sum(axis=1) ** 2 / some
         sd = np.sqrt(np.maximum(square, 0.0) / np.maximum(size - 1, 1)) * unit
