@@ -64,7 +64,7 @@ TERM_PROBABILITY = 0.0027
 
 LARGEST_LIMIT = 1000.0
 _FEW = 64  # points up to which plain steps outrun the filter
-_MOST_WORK = 5_000_000  # kernel values of run lengths after shifts under growing limits
+_MOST_WORK = 5_000_000  # kernel values of run lengths after shifts: about a second
 _LONGEST_TOLD = 1e15
 
 
@@ -159,7 +159,7 @@ def mewma_performance(p: int, smoothing: float, limit: float, size: int, exact: 
     method = f"{run_length.METHOD}, {run_length.ACCURACY}, for a mean and a covariance known exactly"
     shifts: tuple[ShiftPerformance, ...] = ()
     if in_control < _LONGEST_TOLD:
-        if exact and run_length.work(smoothing, limit) > _MOST_WORK:
+        if run_length.work(smoothing, limit, exact=exact) > _MOST_WORK:
             method += "; those after shifts are not computed for so many variables with so little smoothing"
         else:
             scaled = tuple(shift * math.sqrt(size) for shift in SHIFTS)

@@ -254,6 +254,14 @@ def check_standards(given: VectorStandards) -> None:
     """Raises UnusableParameter where a given mean or covariance is none."""
     p = len(given.variables)
     faults = []
+    if p < 2:
+        faults.append(
+            Fault(
+                "too-few-variables",
+                "This chart is for two variables or more; for one, use the charts of single values or subgroups.",
+                ("standards", "variables"),
+            )
+        )
     if len(given.mean) != p:
         faults.append(
             Fault(

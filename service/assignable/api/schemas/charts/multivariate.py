@@ -92,19 +92,16 @@ def _repeated(names: tuple[str, ...], where: tuple[str, ...]) -> list[Fault]:
 class VectorStandardsRequest(f.RequestShape):
     """Mean and covariance known in advance; both replace their estimates."""
 
-    variables = f.StringList(**_NAMES)
+    variables = f.StringList(**{**_NAMES, "min_items": 1})
     mean = f.NumberList(
         required=True,
-        min_items=2,
         max_items=MOST_VARIABLES,
         metadata={"description": "Mean of each variable, in its own unit."},
     )
     covariance = f.NumberTable(
         required=True,
         nullable=False,
-        min_rows=2,
         max_rows=MOST_VARIABLES,
-        min_columns=2,
         max_columns=MOST_VARIABLES,
         metadata={
             "description": "Covariance matrix of single pieces: a row and a column a variable; symmetric."
