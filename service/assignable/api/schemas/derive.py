@@ -14,6 +14,7 @@ from typing import Annotated, Any, Literal, Union, get_args, get_origin, get_typ
 
 import marshmallow as ma
 
+from ...spc.bounds import Bound
 from ...spc.data import Floats, Integers
 from .. import fields as f
 
@@ -128,8 +129,10 @@ class _ObjectTuple(f.ObjectList):
 
 def _field(hint: Any, given: dict[Any, Any], nested: Callable[[Any], Any], loading: bool) -> ma.fields.Field:
     text = ""
+    bound: Bound | None = None
     if get_origin(hint) is Annotated:
-        hint, text, *_ = get_args(hint)
+        hint, text, *more = get_args(hint)
+        bound = next((each for each in more if isinstance(each, Bound)), None)
     hint = given.get(hint, hint)
     nullable = False
     if get_origin(hint) in (Union, types.UnionType):
@@ -146,10 +149,12 @@ def _field(hint: Any, given: dict[Any, Any], nested: Callable[[Any], Any], loadi
         "allow_none": nullable,
         "metadata": {"description": text} if text else {},
     }
+    # What bounds a document binds callers; an answer only says what it says.
+    bounds = _bounds(bound) if loading and bound is not None else {}
     if hint is float:
-        return f.StrictNumber(**options_)
+        return f.StrictNumber(**bounds, **options_)
     if hint is int:
-        return f.StrictInteger(**options_)
+        return f.StrictInteger(**bounds, **options_)
     if hint is bool:
         return f.StrictBoolean(**options_)
     if hint is str:
@@ -168,6 +173,11 @@ def _field(hint: Any, given: dict[Any, Any], nested: Callable[[Any], Any], loadi
         if more == [...]:
             return _sequence(item, nested, loading, options_)
     raise TypeError(f"no shape for {hint!r}")
+
+
+def _bounds(bound: Bound) -> dict[str, Any]:
+    given = {name: getattr(bound, name) for name in ("least", "most", "above", "below")}
+    return {name: value for name, value in given.items() if value is not None}
 
 
 def _bound(hint: Any, given: dict[Any, Any]) -> Any:
