@@ -29,6 +29,7 @@ MODULES: Mapping[str, tuple[str, ...]] = MappingProxyType(
         "short_run": ("short-run",),
         "trend": ("trend",),
         "residual": ("residual",),
+        "acceptance": ("acceptance",),
     }
 )
 """The charts of each module, in the order in which they are listed."""
