@@ -267,7 +267,7 @@ def _mean_alarm(known_by: Baseline, multiple: float) -> float:
     return 2.0 * float(scipy.special.stdtr(known_by.degrees_of_freedom, -t))
 
 
-def _root(miss: Callable[[float], float], low: float, high: float, width: float) -> float:
+def rising_root(miss: Callable[[float], float], low: float, high: float, width: float) -> float:
     """Where ``miss``, negative at low and positive at high, is zero: Illinois steps, at most 100 of them.
 
     Both functions solved here are all but straight on their scales.
@@ -313,7 +313,7 @@ def _percentile(known_by: Baseline, multiple: float, probability: float) -> floa
     while miss(high) < 0.0 and high < _LARGEST:
         high = min(high + step, _LARGEST)
         step *= 2.0
-    return _root(miss, low, high, 1e-11)
+    return rising_root(miss, low, high, 1e-11)
 
 
 def percentile(known_by: Baseline, multiple: float, probability: float) -> float:
@@ -423,7 +423,7 @@ def guaranteed_multiple(known_by: Baseline, in_control_arl: float, confidence: f
                 "This baseline is too small: no usable multiple of its sigma gives the confidence asked.",
                 "confidence",
             )
-    return math.exp(_root(miss, low, high, 1e-13))
+    return math.exp(rising_root(miss, low, high, 1e-13))
 
 
 def _check_multiple(multiple: float) -> None:
