@@ -44,7 +44,7 @@ MOST_PERCENTILES = 20
 # Half the range of Z; what is left out weighs 2e-17.
 _REACH = 8.5
 _PANELS, _PANEL_NODES = 34, 12
-_MOMENT_NODES = 128
+_MOMENT_NODES = 64
 _MANY = 1e4  # degrees of freedom
 _LARGEST = 690.0  # logarithm of the largest mean that is told
 
@@ -297,22 +297,28 @@ def rising_root(miss: Callable[[float], float], low: float, high: float, width: 
 
 def _percentile(known_by: Baseline, multiple: float, probability: float) -> float:
     """The logarithm of the ARL that a share of baselines falls short of."""
-    c = math.log(0.5) - float(scipy.special.log_ndtr(-multiple))
+    freedom = known_by.degrees_of_freedom
     goal = float(scipy.special.ndtri(probability))
 
     def miss(log_arl: float) -> float:
         share = _shorter(known_by, multiple, math.exp(-log_arl))
         return float(scipy.special.ndtri(min(max(share, 1e-300), 1.0 - 1e-16))) - goal
 
-    low, high = c, c
-    step = 0.25
+    # Begun as if all the error were sigma's; the centre's makes it shorter.
+    ratio = math.sqrt(
+        2.0 * float(scipy.special.gammaincinv(0.5 * freedom, probability)) / _chi_scale(freedom)
+    )
+    start = math.log(0.5) - float(scipy.special.log_ndtr(-multiple * ratio))
+    low = high = min(max(start, 1e-9), _LARGEST)
+    step = 0.02 + 1.0 / known_by.means
     while miss(low) > 0.0 and low > 1e-9:
-        low = max(0.5 * low, low - step) if low > 1e-3 else 1e-9
+        high, low = low, max(0.5 * low, low - step) if low > 1e-3 else 1e-9
         step *= 2.0
-    step = 0.25
-    while miss(high) < 0.0 and high < _LARGEST:
-        high = min(high + step, _LARGEST)
-        step *= 2.0
+    if high == low:
+        step = 0.02
+        while miss(high) < 0.0 and high < _LARGEST:
+            low, high = high, min(high + step, _LARGEST)
+            step *= 2.0
     return rising_root(miss, low, high, 1e-11)
 
 
