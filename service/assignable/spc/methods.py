@@ -139,6 +139,28 @@ METHODS = (
         ),
     ),
     Method(
+        "change-point",
+        "Steps of level and spread within a baseline",
+        "largest likelihood ratio over all splits; p-value of the whole search by the normal scores' crossing rate.",
+        ("xbar-r", "xbar-s", "individuals"),
+        ("sullivan-woodall-1996", "worsley-1979", "james-1987", "siegmund-1985"),
+    ),
+    Method(
+        "joint-limits",
+        "Limits that judge all points of a baseline at once",
+        "E[(2 Phi(K' W) - 1)^m] = sqrt(1 - alpha) over the distribution of W = estimated over true sigma.",
+        ("xbar-r", "xbar-s", "individuals"),
+        ("champ-jones-2004",),
+    ),
+    Method(
+        "chart-recommendation",
+        "Choice of a chart",
+        "kind of data, then what the process does by nature, then the shift that matters, then the sample's size; a "
+        "sample is looked at with the diagnostics of a baseline.",
+        ("recommendChart",),
+        ("iso-7870-1",),
+    ),
+    Method(
         "capability-of-measurements",
         "Capability and performance of normal characteristics",
         "Cp = (U-L)/(6 sigma), Cpk = min(U-mean, mean-L)/(3 sigma) with the within-subgroup sigma; Pp, Ppk with "

@@ -666,6 +666,13 @@ _LISTED = (
         "Designing phase I X-bar charts with small sample sizes",
         "Quality and Reliability Engineering International 20(5), 497-510",
     ),
+    Reference(
+        "iso-7870-1",
+        "ISO",
+        2019,
+        "Control charts - Part 1: General guidelines",
+        "ISO 7870-1:2019",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(

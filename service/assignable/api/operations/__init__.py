@@ -33,6 +33,7 @@ def _of_charts(names: Iterable[str]) -> tuple[Route, ...]:
 
 GROUPS = (
     Group("charts", _of_charts(name for names in MODULES.values() for name in names)),
+    Group("recommendation", (("POST", "/v1/charts/recommendation", "recommendChart"),)),
     Group("capability", (("POST", "/v1/capability/measurements", "assessMeasurements"),)),
     Group(
         "designs",
