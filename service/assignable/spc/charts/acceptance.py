@@ -247,7 +247,8 @@ def fit(data: Subgroups | SubgroupSummary | None, options: AcceptanceOptions) ->
     """n and acceptance control limits from a specification and two risks; sigma known, or from a baseline.
 
     ``APL = U − z_p1 σ``, ``RPL = U − z_p2 σ``, ``n = ((z_α + z_β)/(z_p1 − z_p2))²`` rounded up,
-    ``ACL = APL + z_α σ/√n``, and mirrored at a lower limit: α is held, and β falls below what was asked. With a fixed n, α is held too.
+    ``ACL = APL + z_α σ/√n``, and mirrored at a lower limit: α is held, and β falls below what was asked. With a
+    fixed n, α is held too.
 
     Raises UnusableParameter for fractions out of order, or without a sigma; UnusableData where no process level
     meets both specification limits at p₁, or for no variation. Source: [iso-7870-3], [freund-1957].
@@ -331,8 +332,8 @@ def _limits(
         raise UnusableData.of(
             "specification-too-narrow",
             f"The specification is {width:.3g} sigma wide, and {2.0 * deviate(plan.acceptable_fraction):.3g} are "
-            f"needed for a level at which no more than {plan.acceptable_fraction:g} lies outside each limit. Use a chart that "
-            "keeps the level on target, or reduce the variation within.",
+            f"needed for a level at which no more than {plan.acceptable_fraction:g} lies outside each limit. Use a "
+            "chart that keeps the level on target, or reduce the variation within.",
             "specification",
         )
     side = upper or lower

@@ -16,7 +16,7 @@ import numpy as np
 import scipy
 
 from .. import cautions as caution
-from .. import diagnostics, runlength
+from .. import diagnostics
 from ..cautions import Caution
 from ..data import Floats, Individuals
 from ..errors import Fault, SpcError, UnusableData, UnusableParameter
@@ -38,7 +38,7 @@ from .common import (
     watch,
 )
 from .individuals import mean_of_values, since_gap
-from .price import SHIFTS, priced
+from .price import SHIFTS, mean_performance
 from .registry import Chart
 
 LARGEST_ORDER = 20
@@ -296,16 +296,9 @@ def fit_model(values: Floats, order: int) -> Model:
     y = response - centres[-1]
     if order:
         solved, _, rank, _ = np.linalg.lstsq(design, y, rcond=None)
-        if int(rank) < order:
-            raise UnusableData.of(
-                "no-single-model",
-                f"The values follow each other so exactly that a model of order {order} has no single solution; "
-                "choose a smaller order, or check how the values were recorded.",
-                "order",
-            )
         residual = y - design @ solved
     else:
-        solved, residual = np.empty(0), y
+        solved, rank, residual = np.empty(0), 0, y
     freedom = w - order - 1
     sigma = math.sqrt(float(residual @ residual) / freedom)
     spread = float(np.abs(y).max())
@@ -316,6 +309,13 @@ def fit_model(values: Floats, order: int) -> Model:
             "check how they were recorded.",
             "data",
             "values",
+        )
+    if int(rank) < order:
+        raise UnusableData.of(
+            "no-single-model",
+            f"The values follow each other so exactly that a model of order {order} has no single solution; "
+            "choose a smaller order, or check how the values were recorded.",
+            "order",
         )
     coefficients = tuple(solved.tolist())
     check_stationary(coefficients, UnusableData, "data", "values")
@@ -409,7 +409,7 @@ def fit(data: Individuals | None, options: ResidualOptions) -> ResidualFit:
             ResidualPanels(plot.panel()),
             seen.signals,
             seen.found,
-            _next(limits, since_gap(values, limits.order) if limits.order else ()),
+            _next(limits, _last(values, limits)),
         ),
         shown,
         _performance(rules, basis, model.coefficients),
@@ -493,13 +493,19 @@ def _plot(found: Floats, limits: ResidualLimits) -> Plot:
 
 def _next(limits: ResidualLimits, recent: tuple[float, ...]) -> NextValue | None:
     """The forecast from the last p values; ``None`` where they are not there."""
-    if len(recent) < limits.order:
+    if len(recent) < len(limits.coefficients):
         return None
     about = 0.0
     for coefficient, value in zip(limits.coefficients, reversed(recent), strict=True):
         about += coefficient * (value - limits.mean)
     forecast, far = limits.mean + about, limits.basis.multiple * limits.sigma
     return NextValue(forecast, forecast - far, forecast + far)
+
+
+def _last(series: Floats, limits: ResidualLimits) -> tuple[float, ...]:
+    """The last p values since a gap."""
+    order = len(limits.coefficients)
+    return since_gap(series, order) if order else ()
 
 
 def _few_windows(found: Floats, limits: ResidualLimits) -> Caution | None:
@@ -544,43 +550,34 @@ def _performance(rules: tuple[Rule, ...], basis: LimitBasis, coefficients: tuple
     """Run lengths of the residuals, were the model known exactly.
 
     A lasting shift of the process shows in full in its first residual, then less as the forecasts follow it. With
-    the limit alone the run length is exact; with run rules it is that of the shift that lasts, ``δ(1 − Σφ)``.
+    the limit alone the run length is exact; with run rules it is that of the part that lasts, ``δ(1 − Σφ)``, and is
+    told for the shifts δ whose lasting part is a round number.
     """
-    reach = basis.multiple
-    in_control, method = priced(lambda: runlength.shewhart(rules, lower=-reach, upper=reach))
-    alone = len(rules) == 1
+    plain = mean_performance(rules, basis, 1.0, None)
     left = np.concatenate(([1.0], 1.0 - np.cumsum(coefficients))).tolist()
-    shifts = []
-    for shift in SHIFTS:
-        lasting = shift * left[-1]
-        if alone:
-            signal = [
-                float(scipy.special.ndtr(-reach - shift * share) + scipy.special.ndtr(shift * share - reach))
-                for share in left
-            ]
-            arl, not_yet = 0.0, 1.0
-            for chance in signal[:-1]:
-                arl += not_yet
-                not_yet *= 1.0 - chance
-            shifts.append(ShiftPerformance(shift, arl + not_yet / signal[-1]))
-        else:
-            found = functools.partial(runlength.shewhart, rules, lower=-reach, upper=reach, shift=lasting)
-            shifts.append(ShiftPerformance(shift, priced(found)[0]))
-    if coefficients:
-        method += (
-            "; the first residuals after a shift included"
-            if alone
-            else "; for a shift, the part that lasts in the residuals, their first ones left out"
-        )
-    return Performance(
-        "residual",
-        in_control,
-        None,
-        tuple(shifts),
-        "standard deviations of a residual, of a lasting shift of the process mean",
-        1.0,
-        method,
+    if len(rules) == 1:
+        shifts = tuple(ShiftPerformance(shift, _run_length(basis.multiple, shift, left)) for shift in SHIFTS)
+        besides = "; the first residuals after a shift included"
+    else:
+        shifts = tuple(ShiftPerformance(one.shift / left[-1], one.arl) for one in plain.shifts)
+        besides = "; for a shift, by the part of it that lasts, the first residuals left out"
+    return replace(
+        plain,
+        panel="residual",
+        shifts=shifts,
+        shift_unit="standard deviations of a residual, of a lasting shift of the process mean",
+        method=plain.method + (besides if coefficients else ""),
     )
+
+
+def _run_length(reach: float, shift: float, left: list[float]) -> float:
+    """Under the limit alone: the first residuals hold the shares ``left`` of a shift, all later ones the last share."""
+    arl, not_yet, chance = 0.0, 1.0, 1.0
+    for share in left:
+        chance = float(scipy.special.ndtr(-reach - shift * share) + scipy.special.ndtr(shift * share - reach))
+        arl += not_yet
+        not_yet *= 1.0 - chance
+    return arl + not_yet / chance
 
 
 def judge(limits: ResidualLimits, data: Individuals, carry: ResidualCarry | None) -> ResidualJudgement:
@@ -595,7 +592,7 @@ def judge(limits: ResidualLimits, data: Individuals, carry: ResidualCarry | None
     found = residuals(series, limits.mean, limits.coefficients)[len(recent) :]
     plot = _plot(found, limits)
     seen, tail = watch("residual", plot, limits.rules, tail=before.residual)
-    last = since_gap(series, limits.order) if limits.order else ()
+    last = _last(series, limits)
     return ResidualJudgement(
         seen.verdict,
         ResidualPanels(plot.panel()),
