@@ -100,6 +100,19 @@ def test_both_tails_count_where_the_levels_are_near() -> None:
     assert near.producer_risk > 0.09  # both limits are as near
 
 
+def test_a_side_without_limit_is_out_of_reach() -> None:
+    values = np.array([[1.0, 2.0], [-1e200, -1e200], [5.0, 9.9]])
+    options = AcceptanceOptions(Specification(None, 10.0), PLAN, sigma=1.0)
+    found = acceptance.fit(Subgroups(values), options)
+    assert found.limits.panels.mean.lower is None
+    assert found.baseline is not None
+    panel = found.baseline.panels.mean
+    assert np.isfinite(panel.lower).all()
+    assert not [signal for signal in found.baseline.signals if signal.side == "below"]
+    single = acceptance.judge(found.limits, Subgroups(values[:, :1]), None)
+    assert len(single.panels.within.index) == 0
+
+
 def test_risks_by_simulation() -> None:
     rng = np.random.default_rng(57)
     found = limits(PLAN, -8.0, 8.0)

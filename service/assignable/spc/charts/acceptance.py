@@ -51,6 +51,8 @@ T = TypeVar("T")
 LARGE_SAMPLE = 25
 _STEPS = (-2, -1, 0, 1, 2, 3, 4, 5, 6)
 _FARTHEST = 1e15
+# Stands in a panel on the side that has no limit: no number of a request lies beyond it.
+_NO_LIMIT = 1e300
 
 
 @dataclass(frozen=True, slots=True)
@@ -401,7 +403,7 @@ def _plots(statistics: SubgroupStatistics, limits: AcceptanceLimits) -> tuple[Pl
     )
     lower, upper = _lines(specification, limits.plan, sigma, sizes)
     of_mean = sigma / np.sqrt(sizes)
-    return Plot(statistics.mean, centre, of_mean, lower, upper), inside
+    return Plot(statistics.mean, centre, of_mean, lower, upper, -_NO_LIMIT, _NO_LIMIT), inside
 
 
 def _watch(plots: tuple[Plot, Plot], kept: Booleans | None) -> Watched:
