@@ -109,6 +109,46 @@ METHODS = (
         ("xie-goh-ranjan-2002", "nelson-1994", "cohen-1965"),
     ),
     Method(
+        "between-and-within",
+        "Means as single values, components between and within",
+        "mean of means +- k sigma_m, sigma_m = mean moving range of the means over d2(w); between = sigma_m^2 - "
+        "sigma_w^2/n (n the harmonic mean of sizes), set to 0 where below, and shown as it comes.",
+        ("between-within",),
+        ("iso-7870-2", "wheeler-chambers-1992", "patnaik-1950"),
+    ),
+    Method(
+        "short-runs",
+        "Many parts on one chart",
+        "deviation x - T of each part, or standardised (x - T)/sigma of the part; limits as for single values or "
+        "subgroups of what is plotted.",
+        ("short-run",),
+        ("iso-7870-8", "iso-7870-2"),
+    ),
+    Method(
+        "drifting-level",
+        "A fitted line with parallel limits",
+        "weighted least squares of the level on position; line +- k sigma/sqrt(n_i); sigma^2 = sum n_i e_i^2/(m-2), or "
+        "from moving ranges, or within subgroups; where the line meets a limit, with Fieller's interval.",
+        ("trend",),
+        ("mandel-1969", "montgomery-2013", "fieller-1954"),
+    ),
+    Method(
+        "autoregressive-residuals",
+        "Residuals of an autoregressive model",
+        "conditional least squares on whole windows of p + 1 values; order by AICc = w ln(SSE/w) + 2k + 2k(k+1)/(w-k-1), "
+        "k = p + 2; residuals 0 +- k sigma; roots within the unit circle.",
+        ("residual",),
+        ("iso-7870-9", "alwan-roberts-1988", "box-jenkins-1976", "hurvich-tsai-1989"),
+    ),
+    Method(
+        "acceptance-limits",
+        "Acceptance control limits",
+        "n = ((z_alpha + z_beta)/(z_p1 - z_p2))^2 rounded up; APL = U - z_p1 sigma, RPL = U - z_p2 sigma, "
+        "limit = APL + z_alpha sigma/sqrt(n), mirrored at a lower limit.",
+        ("acceptance",),
+        ("iso-7870-3", "freund-1957"),
+    ),
+    Method(
         "run-rules",
         "Run rules",
         "zone, mixture, stratification, trend and alternation; see GET /v1/rules for their exact meaning.",
