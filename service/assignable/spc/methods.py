@@ -135,8 +135,8 @@ METHODS = (
     Method(
         "autoregressive-residuals",
         "Residuals of an autoregressive model",
-        "conditional least squares on whole windows of p + 1 values; order by AICc = w ln(SSE/w) + 2k + 2k(k+1)/(w-k-1), "
-        "k = p + 2; residuals 0 +- k sigma; roots within the unit circle.",
+        "conditional least squares on whole windows of p + 1 values; order by AICc = w ln(SSE/w) + 2k + "
+        "2k(k+1)/(w-k-1), k = p + 2; residuals 0 +- k sigma; roots within the unit circle.",
         ("residual",),
         ("iso-7870-9", "alwan-roberts-1988", "box-jenkins-1976", "hurvich-tsai-1989"),
     ),
