@@ -12,7 +12,6 @@ from functools import cache
 from typing import Any
 from urllib.parse import unquote
 
-import orjson
 from flask import Flask
 from werkzeug.test import TestResponse
 
@@ -63,7 +62,7 @@ def described(operation_id: str) -> dict[str, Any]:
 
 def post(path: str, body: Json, **kwargs: Any) -> TestResponse:
     """A request with this body: bytes as they are, anything else as JSON."""
-    data = body if isinstance(body, bytes) else orjson.dumps(body)
+    data = body if isinstance(body, bytes) else json.dumps(body).encode()  # whatever it holds
     return app().test_client().post(path, data=data, **{"content_type": "application/json", **kwargs})
 
 

@@ -55,7 +55,16 @@ def canonical(value: Any) -> bytes:
     try:
         return orjson.dumps(_same_in_both(value), option=orjson.OPT_SORT_KEYS)
     except _Differs:
-        return rfc8785.dumps(value)
+        return rfc8785.dumps(_doubles(value))
+
+
+def _doubles(value: Any) -> Any:
+    """Integers that a double skips as the doubles they stand for: another program may drop the exponent."""
+    if type(value) is int and not -(2**53) < value < 2**53:
+        return float(value)
+    if type(value) is list:
+        return [_doubles(inner) for inner in value]
+    return {name: _doubles(inner) for name, inner in value.items()} if type(value) is dict else value
 
 
 class _Differs(Exception):

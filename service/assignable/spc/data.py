@@ -107,8 +107,10 @@ class Subgroups:
             spread = np.maximum.reduce(x, axis=1) - np.minimum.reduce(x, axis=1)
             unit = _unit_of_square(float(np.maximum.reduce(spread)))
             residual /= unit
-            square = np.einsum("ij,ij->i", residual, residual)
-            square -= np.add.reduce(residual, axis=1) ** 2 / n
+            # Equal values near 1e300 may overflow by their rounding errors; their deviation is 0 all the same.
+            with np.errstate(over="ignore", invalid="ignore"):
+                square = np.einsum("ij,ij->i", residual, residual)
+                square -= np.add.reduce(residual, axis=1) ** 2 / n
             sd = np.sqrt(np.maximum(square, 0.0) / (n - 1)) * unit
             return SubgroupStatistics(size, mean, spread, np.where(spread > 0, sd, 0.0))
         present: Booleans = np.asarray(x == x)
@@ -122,7 +124,8 @@ class Subgroups:
         spread = np.where(size > 1, top - np.where(present, x, np.inf).min(axis=1), np.nan)
         unit = _unit_of_square(float(np.where(size > 1, spread, 0.0).max()))
         residual /= unit
-        square = np.einsum("ij,ij->i", residual, residual) - residual.sum(axis=1) ** 2 / some
+        with np.errstate(over="ignore", invalid="ignore"):  # as above
+            square = np.einsum("ij,ij->i", residual, residual) - residual.sum(axis=1) ** 2 / some
         sd = np.sqrt(np.maximum(square, 0.0) / np.maximum(size - 1, 1)) * unit
         sd = np.where(size > 1, np.where(spread > 0, sd, 0.0), np.nan)
         return SubgroupStatistics(size, mean, spread, sd)
@@ -200,7 +203,7 @@ class Vectors:
     def present(self) -> Booleans:
         """(m,), False at gaps."""
         flat = self.values.reshape(len(self.values), -1)
-        present: Booleans = ~np.isnan(flat).any(axis=1)
+        present: Booleans = np.asarray(~np.isnan(flat).any(axis=1))
         return present
 
     def means(self) -> Floats:

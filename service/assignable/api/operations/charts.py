@@ -104,38 +104,36 @@ class LimitsField(f.Object):
     def __init__(self, chart: Chart, shape: type[f.RequestShape], **kwargs: Any) -> None:
         super().__init__(shape, **kwargs)
 
-        @lru_cache(1024)
-        def opened(blob: bytes) -> tuple[str, Any]:
-            document = orjson.loads(blob)
-            try:
-                loaded = super(LimitsField, self)._deserialize(document, None, None)
-            except SpcError:  # no document of ours holds what its own objects refuse
-                check_limits(chart.name, document)
-                raise
-            check_limits(chart.name, document)
-            if document["seal"] is not None:
-                raise DocumentMismatch.of(
-                    "seal-not-known",
-                    "This server has no key to check the seal of these limits with.",
-                    "limits",
-                    "seal",
-                )
-            return document["digest"], loaded
-
-        self._opened = opened
         self._chart = chart
+        self._opened = lru_cache(1024)(lambda blob: self._open(orjson.loads(blob)))
 
     def _deserialize(  # type: ignore[override]
         self, value: Any, attr: str | None, data: Any, **kwargs: Any
     ) -> tuple[str, Any]:
-        if type(value) is dict:
-            named = value.get("chart")
-            if type(named) is str and named in CHARTS and named != self._chart.name:
-                check_limits(self._chart.name, value)
+        named = value.get("chart") if type(value) is dict else None
+        if type(named) is str and named in CHARTS and named != self._chart.name:
+            check_limits(self._chart.name, value)
+        try:
             blob = orjson.dumps(value)
-            return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._opened.__wrapped__(blob)
-        loaded: tuple[str, Any] = super()._deserialize(value, attr, data, **kwargs)
-        return loaded
+        except TypeError:  # half a character, or an integer beyond 64 bits
+            return self._open(value)
+        return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._open(value)
+
+    def _open(self, document: Any) -> tuple[str, Any]:
+        try:
+            loaded = super()._deserialize(document, None, None)
+        except SpcError:  # no document of ours holds what its own objects refuse
+            check_limits(self._chart.name, document)
+            raise
+        check_limits(self._chart.name, document)
+        if document["seal"] is not None:
+            raise DocumentMismatch.of(
+                "seal-not-known",
+                "This server has no key to check the seal of these limits with.",
+                "limits",
+                "seal",
+            )
+        return document["digest"], loaded
 
 
 class CarryField(f.Object):

@@ -270,16 +270,17 @@ def _of_counts(
             raise UnusableParameter.of(
                 "proportion-above-one", f"{factor:g} times {mean:g} is no proportion below 1.", "factors", at
             )
-        law = run_law(
-            rules,
-            count_law(binomial, mean * factor, float(size)),
-            centre=float(lines.centre[0]),
-            sigma=float(lines.sd[0]),
-            lower=float(lines.lower[0]),
-            upper=float(lines.upper[0]),
-        )
-        reached = law.probability(np.array(within, dtype=np.float64)).tolist()
-        told.append(_told(law.run_length(), within, reached, hours, factor=factor))
+        with located(rules=("counts", "rules")):
+            law = run_law(
+                rules,
+                count_law(binomial, mean * factor, float(size)),
+                centre=float(lines.centre[0]),
+                sigma=float(lines.sd[0]),
+                lower=float(lines.lower[0]),
+                upper=float(lines.upper[0]),
+            )
+            reached = law.probability(np.array(within, dtype=np.float64)).tolist()
+            told.append(_told(law.run_length(), within, reached, hours, factor=factor))
     return told
 
 

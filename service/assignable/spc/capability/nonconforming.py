@@ -141,6 +141,8 @@ def total_area_limits(
     fall together, the limits of the tails add up. Elsewhere secant steps in the probits of area and
     probability, kept in a bracket, end at a step of 1e-9 of a probit, or after 40 steps with the last one.
     """
+    if to_lower + to_upper < 1e-9:  # nothing to speak of fits between the limits
+        return np.ones(below.size)
     together = np.clip(below + above, 1e-300, 1.0 - 1e-15)
     sharp = min(abs(to_lower), abs(to_upper)) * math.sqrt(0.5 * count / freedom)
     larger = np.clip(np.maximum(below, above), 1e-300, 1.0 - 1e-15)
