@@ -11,7 +11,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Annotated, Literal, TypeAlias
+from typing import Annotated
 
 import numpy as np
 import scipy
@@ -19,21 +19,6 @@ import scipy
 from ..data import Booleans, Floats
 from ..errors import UnusableData
 from . import goodness
-
-DistributionName: TypeAlias = Literal[
-    "normal",
-    "lognormal",
-    "lognormal-3",
-    "weibull",
-    "weibull-3",
-    "gamma",
-    "exponential",
-    "half-normal",
-    "folded-normal",
-    "rayleigh",
-    "largest-extreme-value",
-    "smallest-extreme-value",
-]
 
 FEWEST_VALUES = 10
 MOST_VALUES = 100_000
@@ -110,14 +95,16 @@ _LARGEST = _Standard(
 # Laws with parameters, θ unconstrained
 
 
-class _Law:
+class Law:
     """A law in its own unit: functions of u and θ, and its maximum likelihood without censoring."""
 
-    name: DistributionName
+    name: str
     half_line: bool
     parameters: int
     modification: goodness.Modification = "none"
     threshold = False
+    censored = True  # whether values below a limit can be fitted
+    mirrored = False  # whether it goes down where the values have their tail below
 
     def log_density(self, u: Floats, theta: Floats) -> Floats:
         raise NotImplementedError
@@ -147,20 +134,23 @@ class _Law:
         raise NotImplementedError
 
 
-class _Located(_Law):
+class _Located(Law):
     """Location and scale of the values, or of their logarithms above a threshold."""
 
     def __init__(
         self,
-        name: DistributionName,
+        name: str,
         base: _Standard,
         modification: goodness.Modification,
         *,
         logs: bool = False,
         threshold: bool = False,
         fixed: float | None = None,
+        mirrored: bool = False,
     ) -> None:
         self.name = name
+        self.mirrored = mirrored
+        self.censored = not threshold
         self.half_line = logs and not threshold
         self.threshold = threshold
         self.modification = modification
@@ -322,10 +312,10 @@ def _smallest_extreme(y: Floats) -> Floats:
     return np.array([location, math.log(sigma)])
 
 
-class _Gamma(_Law):
+class _Gamma(Law):
     """Gamma, θ = (log shape, log mean)."""
 
-    name: DistributionName = "gamma"
+    name = "gamma"
     half_line = True
     parameters = 2
 
@@ -381,10 +371,10 @@ class _Gamma(_Law):
         return np.array([theta[0], 0.0])
 
 
-class _HalfNormal(_Law):
+class _HalfNormal(Law):
     """Half normal, θ = (log σ)."""
 
-    name: DistributionName = "half-normal"
+    name = "half-normal"
     half_line = True
     parameters = 1
 
@@ -422,10 +412,10 @@ class _HalfNormal(_Law):
         return np.zeros(1)
 
 
-class _FoldedNormal(_Law):
+class _FoldedNormal(Law):
     """Absolute value of a normal, θ = (μ, log σ) with μ ≥ 0 [leone-nelson-nottingham-1961]."""
 
-    name: DistributionName = "folded-normal"
+    name = "folded-normal"
     half_line = True
     parameters = 2
 
@@ -499,7 +489,12 @@ class _FoldedNormal(_Law):
         return np.array([theta[0] * math.exp(-float(theta[1])), 0.0])
 
 
-LAWS: dict[str, _Law] = {
+def threshold_normal(name: str) -> Law:
+    """A three-parameter lognormal of another name, whose tail is on the side where the values have theirs."""
+    return _Located(name, _NORMAL, "none", logs=True, threshold=True, mirrored=True)
+
+
+LAWS: dict[str, Law] = {
     law.name: law
     for law in (
         _Located("normal", _NORMAL, "normal"),
@@ -550,7 +545,7 @@ class Fitted:
     the observed information; ``None`` where that is not positive definite.
     """
 
-    law: _Law
+    law: Law
     theta: Floats
     shift: float
     unit: float
@@ -562,6 +557,12 @@ class Fitted:
     @property
     def parameters(self) -> tuple[DistributionParameter, ...]:
         """As they are told, in the values' unit; of a mirrored law, the distance from its bound down."""
+        if self.direction < 0 and not self.law.half_line:
+            told = self.law.told(self.theta, 0.0, self.unit)
+            return tuple(
+                DistributionParameter(one.name, self.shift - one.value) if one.name == "threshold" else one
+                for one in told
+            )
         return self.law.told(self.theta, 0.0 if self.law.half_line else self.shift, self.unit)
 
     @property
@@ -621,7 +622,7 @@ class Fitted:
         )
 
 
-def _score_functions(law: _Law) -> Callable[[Floats, Floats, Floats], Floats]:
+def _score_functions(law: Law) -> Callable[[Floats, Floats, Floats], Floats]:
     """Scores of each parameter (k, m) at the quantiles of p (m,), for the law with θ."""
 
     def scores(p: Floats, q: Floats, theta: Floats) -> Floats:
@@ -632,7 +633,7 @@ def _score_functions(law: _Law) -> Callable[[Floats, Floats, Floats], Floats]:
             if law.threshold and k == 2:
                 scale = math.exp(float(theta[1]))
                 z = (np.log(u) - theta[0]) / scale
-                slope = -z if law.name == "lognormal-3" else -np.expm1(np.minimum(z, 700.0))
+                slope = -np.expm1(np.minimum(z, 700.0)) if law.name == "weibull-3" else -z
                 found[k] = (1.0 - slope / scale) / u
                 continue
             step = np.zeros(law.parameters)
@@ -643,7 +644,7 @@ def _score_functions(law: _Law) -> Callable[[Floats, Floats, Floats], Floats]:
     return scores
 
 
-def _frame(law: _Law, sample: Sample) -> tuple[float, float, int]:
+def _frame(law: Law, sample: Sample) -> tuple[float, float, int]:
     """Shift, unit and direction of a law's own unit. Raises UnusableData ``outside-support``."""
     values, below = sample.values, sample.below
     everything = np.concatenate([values, below]) if below.size else values
@@ -672,25 +673,34 @@ def _frame(law: _Law, sample: Sample) -> tuple[float, float, int]:
             )
         return origin, float(u.mean()) or 1.0, direction
     shift = float(np.median(everything))
-    return shift, float(np.abs(everything - shift).mean()) or 1.0, 1
+    u = everything - shift
+    unit = float(np.abs(u).mean()) or 1.0
+    down = law.mirrored and float((((u - u.mean()) / unit) ** 3).sum()) < 0.0
+    return shift, unit, -1 if down else 1
 
 
 def fit(name: str, sample: Sample) -> Fitted:
-    """The named distribution fitted to a sample by maximum likelihood.
+    """The named distribution fitted to a sample; see :func:`fit_law`."""
+    return fit_law(LAWS[name], sample)
+
+
+def fit_law(law: Law, sample: Sample) -> Fitted:
+    """A law fitted to a sample by maximum likelihood.
 
     Values below a limit enter with the probability of being below it [cohen-1959]; the likelihood is then
     climbed by Newton steps. Raises UnusableData: ``outside-support``, ``no-maximum``, ``no-variation``,
     ``too-few-values``, ``too-many-values``, ``all-below-limits``.
     """
-    law = LAWS[name]
+    name = law.name
     check(sample)
     shift, unit, direction = _frame(law, sample)
     u = direction * (sample.values - shift) / unit
     limits = direction * (sample.below - shift) / unit
-    if limits.size and law.threshold:
+    if limits.size and not law.censored:
         raise UnusableData.of(
             "no-maximum",
-            f"Results below a limit do not show where the distribution {name} starts; choose one without a threshold.",
+            f"Results below a limit do not show where the distribution {name} starts or ends; choose one without a "
+            "threshold.",
             "data",
             "below",
         )
@@ -709,7 +719,7 @@ def fit(name: str, sample: Sample) -> Fitted:
         return total
 
     if limits.size:
-        theta = _climb(law, likelihood, theta, u)
+        theta = climb(law, likelihood, theta, u)
     gradient_units = law.units(theta, u)
     covariance = _inverse_information(likelihood, theta, gradient_units)
     value = likelihood(theta) - u.size * math.log(unit)
@@ -758,7 +768,7 @@ def check(sample: Sample) -> None:
         )
 
 
-def _start(law: _Law, u: Floats, limits: Floats) -> Floats:
+def _start(law: Law, u: Floats, limits: Floats) -> Floats:
     """Where to begin climbing: the fit with each value below a limit put at a part of it."""
     filled = np.concatenate([u, limits * 0.6 if law.half_line else limits - 0.5])
     try:
@@ -799,7 +809,7 @@ def _inverse_information(f: Callable[[Floats], float], at: Floats, units: Floats
     return inverse
 
 
-def _climb(law: _Law, f: Callable[[Floats], float], start: Floats, u: Floats) -> Floats:
+def climb(law: Law, f: Callable[[Floats], float], start: Floats, u: Floats) -> Floats:
     """The maximum of f by damped Newton steps. Raises UnusableData ``no-maximum``."""
     at = start
     for _ in range(_CLIMB_CAP):

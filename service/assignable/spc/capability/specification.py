@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from ..errors import Fault, UnusableParameter
 
@@ -14,13 +14,16 @@ class Specification:
 
     lower, upper: a value equal to a limit conforms; ``None`` for the side that has no limit, one at the
     least being given. target: the value aimed at, or ``None``; it lies strictly between the limits given.
-    Raises UnusableParameter, with all faults at once: ``not-finite``, ``no-limit``, ``limits-crossed``,
-    ``target-outside``.
+    natural_lower, natural_upper: bounds that no value can be beyond, such as 0 for a length; a limit there
+    asks for nothing. Raises UnusableParameter, with all faults at once: ``not-finite``, ``no-limit``,
+    ``limits-crossed``, ``target-outside``, ``bounds-crossed``, ``limit-beyond-bound``.
     """
 
     lower: float | None = None
     upper: float | None = None
     target: float | None = None
+    natural_lower: float | None = None
+    natural_upper: float | None = None
 
     def __post_init__(self) -> None:
         faults = [
@@ -29,6 +32,8 @@ class Specification:
                 ("lower limit", "lower", self.lower),
                 ("upper limit", "upper", self.upper),
                 ("target", "target", self.target),
+                ("natural lower bound", "natural_lower", self.natural_lower),
+                ("natural upper bound", "natural_upper", self.natural_upper),
             )
             if value is not None and not math.isfinite(value)
         ]
@@ -45,6 +50,8 @@ class Specification:
         if lower is not None and upper is not None and not lower < upper:
             detail = f"The lower limit, {lower:g}, must be below the upper limit, {upper:g}."
             return [Fault("limits-crossed", detail, ("specification", "lower"))]
+        if faults := self._bound_faults():
+            return faults
         if target is None:
             return []
         if lower is not None and target <= lower:
@@ -54,6 +61,46 @@ class Specification:
             detail = f"The target, {target:g}, must be below the upper limit, {upper:g}."
             return [Fault("target-outside", detail, ("specification", "target"))]
         return []
+
+    def _bound_faults(self) -> list[Fault]:
+        least, most = self.natural_lower, self.natural_upper
+        if least is None and most is None:
+            return []
+        if least is not None and most is not None and not least < most:
+            detail = f"The natural lower bound, {least:g}, must be below the natural upper bound, {most:g}."
+            return [Fault("bounds-crossed", detail, ("specification", "natural_lower"))]
+        faults = []
+        for name, limit in (("lower", self.lower), ("upper", self.upper)):
+            if limit is None:
+                continue
+            if least is not None and (limit < least or (name == "upper" and limit == least)):
+                detail = f"The {name} limit, {limit:g}, is beyond the natural lower bound, {least:g}."
+                faults.append(Fault("limit-beyond-bound", detail, ("specification", name)))
+            elif most is not None and (limit > most or (name == "lower" and limit == most)):
+                detail = f"The {name} limit, {limit:g}, is beyond the natural upper bound, {most:g}."
+                faults.append(Fault("limit-beyond-bound", detail, ("specification", name)))
+        if not faults and self.effective_limits == (None, None):
+            detail = (
+                "The only limit is a natural bound, which every value meets; give a limit on the other side."
+            )
+            faults.append(Fault("no-limit", detail, ("specification",)))
+        return faults
+
+    @property
+    def effective_limits(self) -> tuple[float | None, float | None]:
+        """Lower and upper limit, without one that is a natural bound."""
+        return (
+            None if self.lower == self.natural_lower else self.lower,
+            None if self.upper == self.natural_upper else self.upper,
+        )
+
+    @property
+    def effective(self) -> Specification:
+        """The same without a limit that is a natural bound, which no value can fail [iso-22514-2]."""
+        lower, upper = self.effective_limits
+        if (lower, upper) == (self.lower, self.upper):
+            return self
+        return replace(self, lower=lower, upper=upper)
 
     @property
     def two_sided(self) -> bool:
