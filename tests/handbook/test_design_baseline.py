@@ -8,7 +8,7 @@ import time
 import pytest
 from scipy.special import ndtr
 
-from assignable.spc.design.baseline import Enough, assess, enough, table
+from assignable.spc.design.baseline import SufficientBaseline, assess, enough, table
 from assignable.spc.errors import UnusableParameter
 from assignable.spc.runlength import estimated
 
@@ -104,7 +104,7 @@ def test_refusals() -> None:
             call()
         assert caught.value.faults[0].where == (where,)
     assert assess(25, 2, share_of_nominal=0.99, risk=0.001).enough is None
-    assert isinstance(enough(5, multiple=0.5, share_of_nominal=0.05), Enough)
+    assert isinstance(enough(5, multiple=0.5, share_of_nominal=0.05), SufficientBaseline)
 
 
 def test_it_is_quick() -> None:

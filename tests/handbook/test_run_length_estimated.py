@@ -14,7 +14,7 @@ from scipy.special import ndtr
 from assignable.spc.errors import UnusableParameter
 from assignable.spc.factors import c4, c4_of_freedom, d2
 from assignable.spc.runlength.estimated import (
-    Baseline,
+    BaselineKnowledge,
     SigmaEstimator,
     _mean_alarm,
     _moments,
@@ -186,7 +186,7 @@ def test_effective_degrees_of_freedom() -> None:
         assert baseline(2, 2, estimator).degrees_of_freedom == pytest.approx(  # type: ignore[arg-type]
             2.0 if estimator == "pooled-sd" else baseline(2, 2, "mean-sd").degrees_of_freedom
         )
-    assert baseline(2, 1, "mean-moving-range") == Baseline(2.0, pytest.approx(1.0), True)
+    assert baseline(2, 1, "mean-moving-range") == BaselineKnowledge(2.0, pytest.approx(1.0), True)
     # Patnaik (1950), as in tables of d2* and ν: 25 ranges of 5, from memory 90.8 or 91.
     assert baseline(25, 5, "mean-range").degrees_of_freedom == pytest.approx(90.8, abs=0.3)
 

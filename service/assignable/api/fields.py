@@ -272,8 +272,12 @@ class Choice(Field):
         if type(value) is not str:
             raise ValidationError(_wrong_type("not-text", "text", value))
         if value not in self._known:
-            raise self.fail_with("unknown-choice", f"This must be one of: {', '.join(self.choices)}.")
+            raise ValidationError(self.unknown())
         return value
+
+    def unknown(self) -> Coded:
+        """The fault of a text that is none of them."""
+        return Coded("unknown-choice", f"This must be one of: {', '.join(self.choices)}.")
 
     def json_schema(self) -> Json:
         return {"type": "string", "enum": list(self.choices)}
@@ -574,6 +578,25 @@ class StringList(_Texts):
         return _text_schema(self._min_length, self._max_length)
 
 
+class ChoiceList(_Texts):
+    """A list of some of a few texts."""
+
+    def __init__(self, *choices: str, **kwargs: Any) -> None:
+        super().__init__(**{"max_items": len(choices), **kwargs})
+        self._choice = Choice(*choices)
+
+    def _all_good(self, texts: list[str]) -> bool:
+        return set(texts) <= set(self._choice.choices)
+
+    def _fault(self, text: Any) -> Coded | None:
+        if type(text) is not str:
+            return _wrong_type("not-text", "text", text)
+        return None if text in self._choice.choices else self._choice.unknown()
+
+    def _items_schema(self) -> Json:
+        return self._choice.json_schema()
+
+
 _DAYS_OF_MONTH = (
     "(?:0[13578]|1[02])-(?:0[1-9]|[12][0-9]|3[01])"
     "|(?:0[469]|11)-(?:0[1-9]|[12][0-9]|30)"
@@ -669,6 +692,55 @@ class RequestShape(_Shape):
 
     class Meta:
         unknown = ma.RAISE
+
+    def __init__(self, **kwargs: Any) -> None:
+        super().__init__(**kwargs)
+        self._plan = [
+            (name, field.data_key or name, field, field.load_default is not ma.missing)
+            for name, field in self.load_fields.items()
+        ]
+        self._keys = frozenset(key for _, key, _, _ in self._plan)
+        self._makes = bool(self._hooks["post_load"])
+
+    def load(self, data: Any, **kwargs: Any) -> Any:
+        """What the base does for one object with no options, at a third of its cost; a test holds the two equal.
+
+        Reading shapes is the largest part of a small request that is no arithmetic.
+        """
+        if type(data) is not dict:
+            raise ValidationError({HERE: [self.error_messages["type"]]})
+        loaded: dict[str, Any] = {}
+        faults: dict[str, Any] = {}
+        for name, key, field, has_default in self._plan:
+            if key not in data:
+                if field.required:
+                    faults[key] = [field.error_messages["required"]]
+                elif has_default:
+                    loaded[name] = field.load_default
+                continue
+            value = data[key]
+            if value is None:
+                if field.allow_none:
+                    loaded[name] = None
+                else:
+                    faults[key] = [field.error_messages["null"]]
+                continue
+            try:
+                loaded[name] = field._deserialize(value, key, data)
+            except ValidationError as error:
+                faults[key] = error.messages
+        if not data.keys() <= self._keys:
+            for key in data.keys() - self._keys:
+                faults[key] = [self.error_messages["unknown"]]
+        if faults:
+            failed = ValidationError(faults, data=data, valid_data=loaded)
+            self.handle_error(failed, data, many=False)
+            raise failed
+        if self._makes:
+            return self._invoke_load_processors(
+                "post_load", loaded, many=False, original_data=data, unknown=self.unknown, partial=None
+            )
+        return loaded
 
     def handle_error(self, error: ValidationError, data: Any, *, many: bool, **kwargs: Any) -> None:
         """Puts the nearest known name beside an unknown one, in a stable order."""

@@ -254,5 +254,89 @@ METHODS = (
         ("designSubgroups",),
         ("montgomery-2013", "reynolds-1988"),
     ),
+    Method(
+        "count-chart-design",
+        "Design of charts of counts",
+        "limits on whole counts decided in exact arithmetic; P(signal) = P(X < fewest) + P(X > most) of the binomial "
+        "or Poisson law; every size tried; the usual formula n = ((k sqrt(v0) + z sqrt(v1))/shift)^2 beside it.",
+        ("designAttributes",),
+        ("montgomery-2013", "duncan-1986"),
+    ),
+    Method(
+        "baseline-design",
+        "Trust in limits from a baseline",
+        "conditional in-control ARL 1/p, p = Phi(-k W + Z/sqrt(m)) + Phi(-k W - Z/sqrt(m)), over the errors Z of the "
+        "centre and W of sigma; the multiple k at which P(ARL >= target) is the confidence asked.",
+        ("designBaseline",),
+        ("jensen-2006", "gandy-kvaloy-2013", "goedhart-2017", "jardim-2020", "patnaik-1950"),
+    ),
+    Method(
+        "economic-design",
+        "Economic design of a mean chart",
+        "least expected cost an hour = cost of a cycle / hours of a cycle over size, interval and limit multiple, "
+        "subject to statistical requirements.",
+        ("designEconomic",),
+        ("lorenzen-vance-1986", "duncan-1956", "saniga-1989"),
+    ),
+    Method(
+        "chart-comparison",
+        "Charts side by side",
+        "hours from a shift at a random moment to its signal, interval (steady-state ARL - 1/2), at equal hours between "
+        "false alarms and equal pieces an hour.",
+        ("compareDesigns",),
+        ("reynolds-1988", "champ-woodall-1987", "lucas-saccucci-1990"),
+    ),
+    Method(
+        "crossed-study",
+        "Crossed gauge study",
+        "MS of a balanced two-way random model; repeatability = MS_E, part x appraiser = (MS_PA - MS_E)/r, "
+        "appraiser = (MS_A - MS_PA)/(p r), part = (MS_P - MS_PA)/(o r); negative components count as zero; modified "
+        "large-sample intervals; the interaction pooled where its p-value exceeds alpha.",
+        ("analyseCrossedStudy",),
+        (
+            "aiag-msa-2010",
+            "burdick-borror-montgomery-2005",
+            "burdick-borror-montgomery-2003",
+            "ting-1990",
+            "graybill-wang-1980",
+            "leiva-graybill-1986",
+        ),
+    ),
+    Method(
+        "nested-study",
+        "Nested gauge study",
+        "MS of a balanced two-stage nested random model; repeatability = MS_E, part = (MS_P(A) - MS_E)/r, "
+        "appraiser = (MS_A - MS_P(A))/(b r); negative components count as zero.",
+        ("analyseNestedStudy",),
+        (
+            "searle-casella-mcculloch-1992",
+            "burdick-borror-montgomery-2005",
+            "ting-1990",
+            "graybill-wang-1980",
+        ),
+    ),
+    Method(
+        "agreement-study",
+        "Agreement of appraisers who sort",
+        "kappa = (observed - expected)/(1 - expected): Cohen's for pairs, by items as the sampling unit, and "
+        "Fleiss' over all ratings; shares with exact binomial intervals.",
+        ("analyseAgreementStudy",),
+        (
+            "aiag-msa-2010",
+            "cohen-1960",
+            "fleiss-1971",
+            "fleiss-cohen-everitt-1969",
+            "fleiss-levin-paik-2003",
+            "clopper-pearson-1934",
+        ),
+    ),
+    Method(
+        "bias-study",
+        "Bias and linearity of a gauge",
+        "bias = mean - reference with its t interval; least-squares line of the single biases on the reference, F test "
+        "of its lack of fit.",
+        ("analyseBiasStudy",),
+        ("aiag-msa-2010", "iso-22514-7-2021"),
+    ),
 )
 """Every method, in the order in which they are listed."""

@@ -673,6 +673,63 @@ _LISTED = (
         "Control charts - Part 1: General guidelines",
         "ISO 7870-1:2019",
     ),
+    Reference(
+        "lorenzen-vance-1986",
+        "Lorenzen, T. J.; Vance, L. C.",
+        1986,
+        "The economic design of control charts: a unified approach",
+        "Technometrics 28(1), 3-10",
+    ),
+    Reference(
+        "duncan-1956",
+        "Duncan, A. J.",
+        1956,
+        "The economic design of X-bar charts used to maintain current control of a process",
+        "Journal of the American Statistical Association 51(274), 228-242",
+    ),
+    Reference(
+        "duncan-1986",
+        "Duncan, A. J.",
+        1986,
+        "Quality control and industrial statistics, 5th edition",
+        "Irwin, Homewood",
+    ),
+    Reference(
+        "saniga-1989",
+        "Saniga, E. M.",
+        1989,
+        "Economic statistical control-chart designs with an application to X-bar and R charts",
+        "Technometrics 31(3), 313-320",
+    ),
+    Reference(
+        "jensen-2006",
+        "Jensen, W. A.; Jones-Farmer, L. A.; Champ, C. W.; Woodall, W. H.",
+        2006,
+        "Effects of parameter estimation on control chart properties: a literature review",
+        "Journal of Quality Technology 38(4), 349-364",
+    ),
+    Reference(
+        "gandy-kvaloy-2013",
+        "Gandy, A.; Kvaløy, J. T.",
+        2013,
+        "Guaranteed conditional performance of control charts via bootstrap methods",
+        "Scandinavian Journal of Statistics 40(4), 647-668",
+    ),
+    Reference(
+        "goedhart-2017",
+        "Goedhart, R.; Schoonhoven, M.; Does, R. J. M. M.",
+        2017,
+        "Guaranteed in-control performance for the Shewhart X and X-bar control charts",
+        "Journal of Quality Technology 49(2), 155-171",
+    ),
+    Reference(
+        "jardim-2020",
+        "Jardim, F. S.; Chakraborti, S.; Epprecht, E. K.",
+        2020,
+        "Two perspectives for designing a phase II control chart with estimated parameters: the case of the "
+        "Shewhart X-bar chart",
+        "Journal of Quality Technology 52(2), 198-217",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(

@@ -42,6 +42,19 @@ GROUPS = (
             ("POST", "/v1/designs/run-length", "computeRunLength"),
             ("POST", "/v1/designs/ewma", "designEwma"),
             ("POST", "/v1/designs/cusum", "designCusum"),
+            ("POST", "/v1/designs/attributes", "designAttributes"),
+            ("POST", "/v1/designs/baseline", "designBaseline"),
+            ("POST", "/v1/designs/economic", "designEconomic"),
+            ("POST", "/v1/designs/comparison", "compareDesigns"),
+        ),
+    ),
+    Group(
+        "studies",
+        (
+            ("POST", "/v1/measurement-studies/crossed", "analyseCrossedStudy"),
+            ("POST", "/v1/measurement-studies/nested", "analyseNestedStudy"),
+            ("POST", "/v1/measurement-studies/attributes", "analyseAgreementStudy"),
+            ("POST", "/v1/measurement-studies/bias", "analyseBiasStudy"),
         ),
     ),
     Group(

@@ -11,13 +11,22 @@ import numpy as np
 from ...spc import runlength
 from ...spc.charts.counts import count_law, count_lines
 from ...spc.charts.lattice import run_law
+from ...spc.design import attributes, baseline, comparison, economic, subgroups
 from ...spc.design import memory as designs
-from ...spc.design import subgroups
 from ...spc.errors import UnusableParameter, Where
 from ...spc.runlength import memory
+from ...spc.runlength.estimated import PERCENTILES
 from .. import problems
 from ..contract import Contract
 from ..schemas.common import located, rules_of
+from ..schemas.design_cases import (
+    AttributeDesignAnswer,
+    AttributeDesignRequest,
+    BaselineDesignAnswer,
+    BaselineDesignRequest,
+    ComparisonAnswer,
+    ComparisonRequest,
+)
 from ..schemas.designs import (
     USUAL_SHIFTS,
     CusumDesignAnswer,
@@ -33,9 +42,16 @@ from ..schemas.designs import (
     one_chart,
     shifts_of,
 )
+from ..schemas.economic import (
+    EconomicDesignAnswer,
+    EconomicDesignRequest,
+    ProcessEconomicsRequest,
+    requirements_of,
+)
 
 TAG = "Chart design"
 USUAL_FACTORS = (1.0, 0.5, 1.5, 2.0, 3.0)
+USUAL_LEVELS = (0.5, 0.75, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0)
 
 
 def _plan(loaded: dict[str, Any]) -> subgroups.SamplingPlan:
@@ -244,6 +260,107 @@ def _table(loaded: dict[str, Any]) -> tuple[float, ...] | None:
     return tuple(loaded["shifts"].tolist()) if "shifts" in loaded else None
 
 
+def design_attributes(loaded: dict[str, Any]) -> dict[str, Any]:
+    """The design of a chart of counts."""
+    if not (loaded["lower_limit_size"] or "size" in loaded or "detect" in loaded):
+        raise UnusableParameter.of(
+            "nothing-asked",
+            "Give the size you inspect, or ask for one with `detect` or `lower_limit_size`.",
+            "size",
+        )
+    chart, level = loaded["chart"], loaded["level"]
+    limits = {name: loaded.get(name) for name in ("sigma_multiple", "false_alarm_probability")}
+    detection = lower = None
+    if "detect" in loaded:
+        asked = loaded["detect"]
+        with located(shifted_level=("detect", "shifted_level"), power=("detect", "power")):
+            detection = attributes.detection_size(
+                chart, level, asked["shifted_level"], asked["power"], **limits
+            )
+    if loaded["lower_limit_size"]:
+        lower = attributes.lower_limit_size(chart, level, **limits)
+    found = detection or lower
+    size = loaded["size"] if "size" in loaded or found is None else float(found.size)
+    levels = loaded["levels"].tolist() if "levels" in loaded else _usual_levels(chart, level, size)
+    return {
+        "detection": detection,
+        "lower_limit": lower,
+        "characteristics": attributes.characteristics(chart, level, size, levels, **limits),
+    }
+
+
+def _usual_levels(chart: str, level: float, size: float) -> list[float]:
+    most = 1.0 - attributes.SMALLEST_LEVEL if chart in ("p", "np") else attributes.LARGEST_MEAN / size
+    return [
+        factor * level
+        for factor in USUAL_LEVELS
+        if attributes.SMALLEST_LEVEL <= factor * level <= most or factor == 1.0
+    ]
+
+
+def design_baseline(loaded: dict[str, Any]) -> dict[str, Any]:
+    """How far limits from a baseline can be trusted."""
+    estimator, multiple = loaded.get("sigma_estimator"), loaded["sigma_multiple"]
+    percentiles = loaded.get("percentiles", np.array(PERCENTILES))
+    with located(estimator=("sigma_estimator",), multiple=("sigma_multiple",)):
+        assessment = baseline.assess(
+            loaded["subgroups"],
+            loaded["size"],
+            sigma_estimator=estimator,
+            multiple=multiple,
+            in_control_arl=loaded.get("in_control_arl"),
+            confidence=loaded["confidence"],
+            share_of_nominal=loaded["share_of_nominal"],
+            risk=loaded["risk"],
+            percentiles=percentiles.tolist(),
+        )
+    table = None
+    if "table" in loaded:
+        asked = loaded["table"]
+        with located(
+            subgroups=("table", "subgroups"),
+            sizes=("table", "sizes"),
+            size=("table", "sizes"),
+            multiple=("sigma_multiple",),
+        ):
+            table = baseline.table(
+                asked["subgroups"].tolist(),
+                asked["sizes"].tolist(),
+                sigma_estimator=estimator,
+                multiple=multiple,
+                risk=loaded["risk"],
+                confidence=loaded["confidence"],
+            )
+    return {"assessment": assessment, "table": table}
+
+
+def design_economic(loaded: dict[str, Any]) -> dict[str, Any]:
+    """The sampling plan of least cost."""
+    rules = rules_of(loaded.get("rules")) or None
+    names: dict[str, Where] = {name: ("process", name) for name in ProcessEconomicsRequest._declared_fields}
+    with located(**names):
+        found = economic.design(
+            economic.ProcessEconomics(**loaded["process"]),
+            requirements=requirements_of(loaded),
+            present=_plan(loaded["present"]) if "present" in loaded else None,
+            rules=rules,
+        )
+    return {"design": found}
+
+
+def compare_designs(loaded: dict[str, Any]) -> dict[str, Any]:
+    """Charts side by side for one shift."""
+    with located(kinds=("charts",)):
+        found = comparison.compare(
+            loaded["shift"],
+            pieces_per_hour=loaded["pieces_per_hour"],
+            hours_between_false_alarms=loaded["hours_between_false_alarms"],
+            sizes=tuple(loaded["sizes"].tolist()) if "sizes" in loaded else (1, 5),
+            kinds=tuple(loaded.get("charts", comparison.KINDS)),
+        )
+    return {"comparison": found}
+
+
 def _of_counts(
     loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...], hours: float | None
 ) -> list[dict[str, Any]]:
@@ -354,3 +471,68 @@ def register(contract: Contract) -> None:
         example="designs-cusum",
         provenance="cusum-design",
     )(design_cusum)
+    contract.operation(
+        "POST",
+        "/v1/designs/attributes",
+        operation_id="designAttributes",
+        tag=TAG,
+        summary="Design of a chart of counts",
+        description="How many to inspect: the least sample whose lower limit works, the least sample that finds a "
+        "stated level with a stated power (exact, beside what the usual formula says and what that really gives); and "
+        "the exact operating characteristics and run lengths of a sample, its limits decided on whole counts in exact "
+        "arithmetic. Sources: montgomery-2013, duncan-1986.",
+        request=AttributeDesignRequest(),
+        response=AttributeDesignAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example=("designs-attributes", "designs-attributes-plan"),
+        provenance="count-chart-design",
+    )(design_attributes)
+    contract.operation(
+        "POST",
+        "/v1/designs/baseline",
+        operation_id="designBaseline",
+        tag=TAG,
+        summary="Trust in the limits of a baseline",
+        description="Limits from a baseline are estimates, and so is the false-alarm rate they give. States what the "
+        "in-control run length is likely to be over the baselines that might have been taken, how many subgroups keep "
+        "it near what the limits promise, and the wider limits that guarantee it with a stated confidence. Sources: "
+        "jensen-2006, gandy-kvaloy-2013, goedhart-2017, jardim-2020.",
+        request=BaselineDesignRequest(),
+        response=BaselineDesignAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example=("designs-baseline", "designs-baseline-table"),
+        provenance="baseline-design",
+    )(design_baseline)
+    contract.operation(
+        "POST",
+        "/v1/designs/economic",
+        operation_id="designEconomic",
+        tag=TAG,
+        summary="Sampling plan of least cost",
+        description="Size, interval and limits of a mean chart that cost least an hour, by the model of Lorenzen and "
+        "Vance with all its parameters (Duncan's is the one in which production always goes on), within statistical "
+        "requirements where there are any; the cost of your present plan, of having no chart, and around the optimum; "
+        "what each part costs, and which parameter matters most. Where sampling is never worth while the answer says "
+        "so. Sources: lorenzen-vance-1986, duncan-1956, saniga-1989.",
+        request=EconomicDesignRequest(),
+        response=EconomicDesignAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example=("designs-economic", "designs-economic-duncan", "designs-economic-rules"),
+        provenance="economic-design",
+    )(design_economic)
+    contract.operation(
+        "POST",
+        "/v1/designs/comparison",
+        operation_id="compareDesigns",
+        tag=TAG,
+        summary="Charts side by side for one shift",
+        description="For one process and the shift that matters: a chart of means, the same with run rules, an EWMA "
+        "and a CUSUM, each the best of its kind, by their time to signal at the same false-alarm rate and the same pieces "
+        "measured an hour, with a plain recommendation. Sources: champ-woodall-1987, lucas-saccucci-1990, "
+        "reynolds-1988.",
+        request=ComparisonRequest(),
+        response=ComparisonAnswer(),
+        problems=(problems.NOT_COMPUTABLE,),
+        example="designs-comparison",
+        provenance="chart-comparison",
+    )(compare_designs)

@@ -24,7 +24,8 @@ def answer(
 ) -> type[f.AnswerShape]:
     """The open shape of a result dataclass, or of a generic one with its argument.
 
-    ``name``, ``text`` and the members of ``frame`` are for one that is shown within something more.
+    ``name``, ``text`` and the members of ``frame`` are for one that is shown within something more. A member
+    of ``frame`` stands in the place of one of the dataclass's own of that name; with ``None`` it is not shown.
     """
     if name is None:
         return _plain_answer(result)
@@ -51,6 +52,12 @@ def document(
 @cache
 def _plain_document(result: Any) -> type[f.RequestShape]:
     return _shape(result, f.RequestShape, f"{_name(result)}Document", None, {}, document, _class(result))
+
+
+def text_of(result: Any, name: str) -> dict[str, str]:
+    """The metadata of a field of a request that becomes this field of a dataclass: what it says of itself."""
+    _, text, *_ = get_args(get_type_hints(result, include_extras=True)[name])
+    return {"description": text}
 
 
 def meta(base: Any, text: str) -> type:
@@ -86,8 +93,13 @@ def _shape(
     cls = _class(result)
     given = dict(zip(getattr(cls, "__parameters__", ()), get_args(result), strict=True))
     hints = get_type_hints(cls, include_extras=True)
-    own = {entry.name: _field(hints[entry.name], given, nested, load is not None) for entry in fields(cls)}
-    members: dict[str, Any] = {**frame, **own}
+    own = {
+        entry.name: _field(hints[entry.name], given, nested, load is not None)
+        for entry in fields(cls)
+        if load is not None or entry.name not in frame
+    }
+    shown = {member: field for member, field in frame.items() if field is not None}
+    members: dict[str, Any] = {**shown, **own}
     members["Meta"] = meta(base, text or " ".join((cls.__doc__ or "").split("\n\n")[0].split()))
     if load is not None:
         names = tuple(own)

@@ -18,7 +18,7 @@ import scipy
 
 from ..errors import UnusableParameter
 from ..runlength import estimated
-from ..runlength.estimated import Baseline, ConditionalRunLength, SigmaEstimator
+from ..runlength.estimated import BaselineKnowledge, ConditionalRunLength, SigmaEstimator
 
 SHIFTS = (0.5, 1.0, 1.5, 2.0, 3.0)
 TABLE_SUBGROUPS = (10, 20, 25, 30, 50, 75, 100, 200, 300, 500, 1000)
@@ -41,7 +41,7 @@ class ShiftCost:
 
 
 @dataclass(frozen=True, slots=True)
-class Guarantee:
+class GuaranteedLimits:
     """Limits that hold the in-control average run length with a stated confidence, whatever the baseline drew."""
 
     multiple: Annotated[float, "The limit multiple of the estimated sigma that does so."]
@@ -53,7 +53,7 @@ class Guarantee:
 
 
 @dataclass(frozen=True, slots=True)
-class Enough:
+class SufficientBaseline:
     """The smallest baseline whose limits can be trusted as asked."""
 
     subgroups: Annotated[int, "Subgroups (values, for a chart of single values)."]
@@ -102,14 +102,14 @@ class BaselineDesign:
         Literal["mean-range", "mean-sd", "pooled-sd", "mean-moving-range"], "Estimator of sigma."
     ]
     multiple: Annotated[float, "Limits at this many standard deviations."]
-    knowledge: Annotated[Baseline, "How well such a baseline knows its centre and sigma."]
+    knowledge: Annotated[BaselineKnowledge, "How well such a baseline knows its centre and sigma."]
     conditional: Annotated[
         ConditionalRunLength,
         "The in-control average run length over the baselines that might have been taken.",
     ]
-    guarantee: Annotated[Guarantee, "Wider limits that hold the run length with a stated confidence."]
+    guarantee: Annotated[GuaranteedLimits, "Wider limits that hold the run length with a stated confidence."]
     enough: Annotated[
-        Enough | None,
+        SufficientBaseline | None,
         "The smallest baseline that can be trusted as asked; null if a million subgroups are not.",
     ]
     trusted: Annotated[bool, "Whether this baseline is as large as that."]
@@ -143,7 +143,7 @@ def assess(
     target = conditional.nominal_arl if in_control_arl is None else in_control_arl
     wider = estimated.guaranteed_multiple(knows, target, confidence)
     root = math.sqrt(size)
-    guarantee = Guarantee(
+    guarantee = GuaranteedLimits(
         multiple=wider,
         in_control_arl=target,
         confidence=confidence,
@@ -198,7 +198,7 @@ def enough(
     multiple: float = 3.0,
     share_of_nominal: float = 0.8,
     risk: float = 0.1,
-) -> Enough:
+) -> SufficientBaseline:
     """The fewest subgroups with P(conditional in-control ARL < share · nominal ARL) ≤ risk.
 
     share_of_nominal: 0.05 to 0.99; risk: 0.001 to 0.4. Every number up to 64 is tried, then bisection, the
@@ -244,7 +244,7 @@ def enough(
         found = high
     knows = estimated.baseline(found, size, estimator)
     at = estimated.percentile(knows, multiple, risk)
-    return Enough(found, found * size, share_of_nominal, risk, at, nominal)
+    return SufficientBaseline(found, found * size, share_of_nominal, risk, at, nominal)
 
 
 def table(
@@ -314,8 +314,8 @@ def _conclusion(
     size: int,
     multiple: float,
     conditional: ConditionalRunLength,
-    guarantee: Guarantee,
-    least: Enough | None,
+    guarantee: GuaranteedLimits,
+    least: SufficientBaseline | None,
     share: float,
     risk: float,
 ) -> str:

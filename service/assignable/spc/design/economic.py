@@ -232,7 +232,8 @@ class EconomicDesign:
         tuple[str, ...], "Choices that ended at a bound, by name: the cost would still fall beyond it."
     ]
     without_requirements: Annotated[
-        PricedPlan | None, "The plan of least cost were nothing required; null if nothing was."
+        PricedPlan | None,
+        "The plan of least cost were nothing required (with rules, sizes are kept to); null if nothing was.",
     ]
     price_of_requirements_per_hour: Annotated[
         float | None, "What the requirements cost an hour; null if nothing was required."
@@ -688,7 +689,12 @@ def design(
     )
     free = None
     if requirements != Requirements(multiple=requirements.multiple):
-        nothing = Requirements(multiple=requirements.multiple)
+        # With rules each size needs a chain: no more of them are tried than were asked.
+        nothing = Requirements(
+            multiple=requirements.multiple,
+            smallest_size=1 if given is None else requirements.smallest_size,
+            largest_size=LARGEST_SIZE if given is None else requirements.largest_size,
+        )
         free_found = _search(economics, nothing, laws)
         at = int(np.argmin(free_found.cost))
         free = _plan(
@@ -760,7 +766,7 @@ def _at_bounds(plan: PricedPlan, r: Requirements, found: _Best, held: bool) -> t
     if plan.interval_hours * near >= found.longest:
         reached.append("longest-interval")
     if not held and plan.multiple <= found.lowest * near:
-        reached.append("smallest-multiple")
+        reached.append("smallest-multiple" if r.smallest_in_control_arl is None else "in-control-run-length")
     if not held and plan.multiple * near >= LARGEST_MULTIPLE:
         reached.append("largest-multiple")
     between, most = plan.hours_between_false_alarms, r.longest_ats_hours

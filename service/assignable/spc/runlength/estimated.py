@@ -50,7 +50,7 @@ _LARGEST = 690.0  # logarithm of the largest mean that is told
 
 
 @dataclass(frozen=True, slots=True)
-class Baseline:
+class BaselineKnowledge:
     """How well a baseline knows its centre and sigma."""
 
     means: Annotated[float, "Plotted statistics that the centre line is the mean of."]
@@ -59,7 +59,7 @@ class Baseline:
 
 
 @dataclass(frozen=True, slots=True)
-class Percentile:
+class ArlPercentile:
     """A percentile of the conditional in-control average run length, over baselines."""
 
     probability: Annotated[float, "Share of baselines with a shorter average run length."]
@@ -85,7 +85,7 @@ class ConditionalRunLength:
     ]
     mean_false_alarm_probability: Annotated[float, "Mean probability that a point gives a false alarm."]
     sd_false_alarm_probability: Annotated[float, "Its standard deviation over baselines."]
-    percentiles: Annotated[tuple[Percentile, ...], "Percentiles of the conditional average run length."]
+    percentiles: Annotated[tuple[ArlPercentile, ...], "Percentiles of the conditional average run length."]
     probability_below_nominal: Annotated[
         float, "Share of baselines whose average run length is shorter than nominal."
     ]
@@ -99,7 +99,7 @@ class ConditionalRunLength:
 
 
 @lru_cache(maxsize=4096)
-def baseline(subgroups: int, size: int, estimator: SigmaEstimator) -> Baseline:
+def baseline(subgroups: int, size: int, estimator: SigmaEstimator) -> BaselineKnowledge:
     """What ``subgroups`` (2 to 1e6) subgroups of ``size`` values tell, none missing.
 
     size: 2 to 1000; 1 with ``mean-moving-range`` (span 2) and only then: subgroups then counts the values.
@@ -125,7 +125,7 @@ def baseline(subgroups: int, size: int, estimator: SigmaEstimator) -> Baseline:
         )
     m = subgroups
     if estimator == "pooled-sd":
-        return Baseline(float(m), float(m * (size - 1)), True)
+        return BaselineKnowledge(float(m), float(m * (size - 1)), True)
     if estimator == "mean-moving-range":
         relative = _moving_mean_variance(m - 1, 2) / d2(2) ** 2
     else:
@@ -134,10 +134,10 @@ def baseline(subgroups: int, size: int, estimator: SigmaEstimator) -> Baseline:
         )
         relative = (deviation / expected) ** 2 / m
     # Two values have one range and one deviation, which is a chi whatever it is called.
-    return Baseline(float(m), freedom_of_relative_variance(relative), size <= 2 and m * size == 2)
+    return BaselineKnowledge(float(m), freedom_of_relative_variance(relative), size <= 2 and m * size == 2)
 
 
-def known(means: float, degrees_of_freedom: float, *, exact: bool = True) -> Baseline:
+def known(means: float, degrees_of_freedom: float, *, exact: bool = True) -> BaselineKnowledge:
     """A baseline stated by the weight of its centre (1 to 1e9) and its degrees of freedom (0.1 to 1e12)."""
     for value, low, high, name in (
         (means, 1.0, 1e9, "means"),
@@ -145,7 +145,7 @@ def known(means: float, degrees_of_freedom: float, *, exact: bool = True) -> Bas
     ):
         if not low <= value <= high:
             raise UnusableParameter.of("out-of-range", f"{name} must be from {low:g} to {high:g}.", name)
-    return Baseline(float(means), float(degrees_of_freedom), exact)
+    return BaselineKnowledge(float(means), float(degrees_of_freedom), exact)
 
 
 # ---------------------------------------------------------------------------------------------------
@@ -198,7 +198,7 @@ def _probability_sigma_below(ratio: Floats, freedom: float) -> Floats:
     return below
 
 
-def probability_shorter(known_by: Baseline, multiple: float, arl: float) -> float:
+def probability_shorter(known_by: BaselineKnowledge, multiple: float, arl: float) -> float:
     """Share of baselines whose conditional in-control average run length is less than ``arl`` (above 1).
 
     multiple: of the limits, 0.5 to 6. Raises UnusableParameter outside these ranges.
@@ -210,14 +210,14 @@ def probability_shorter(known_by: Baseline, multiple: float, arl: float) -> floa
     return _shorter(known_by, multiple, 1.0 / arl)
 
 
-def _shorter(known_by: Baseline, multiple: float, alarm: float) -> float:
+def _shorter(known_by: BaselineKnowledge, multiple: float, alarm: float) -> float:
     z, weight = _over_centre()
     u = _reach(z / math.sqrt(known_by.means), alarm)
     below = float(weight @ _probability_sigma_below(u / multiple, known_by.degrees_of_freedom))
     return min(max(below, 0.0), 1.0)
 
 
-def _moments(known_by: Baseline, multiple: float, power: int) -> float | None:
+def _moments(known_by: BaselineKnowledge, multiple: float, power: int) -> float | None:
     """E[p^power] over baselines; None where it is infinite or beyond 1e299. power: -2, -1, 1 or 2."""
     freedom = known_by.degrees_of_freedom
     scale = _chi_scale(freedom)
@@ -260,7 +260,7 @@ def _moments(known_by: Baseline, multiple: float, power: int) -> float | None:
     return math.exp(total) if total < _LARGEST else None
 
 
-def _mean_alarm(known_by: Baseline, multiple: float) -> float:
+def _mean_alarm(known_by: BaselineKnowledge, multiple: float) -> float:
     # A new point's distance from the estimated centre, over the estimated sigma, is Student's t.
     c = math.exp(log_c4_of_freedom(known_by.degrees_of_freedom))
     t = multiple / (c * math.sqrt(1.0 + 1.0 / known_by.means))
@@ -295,7 +295,7 @@ def rising_root(miss: Callable[[float], float], low: float, high: float, width: 
     return x
 
 
-def _percentile(known_by: Baseline, multiple: float, probability: float) -> float:
+def _percentile(known_by: BaselineKnowledge, multiple: float, probability: float) -> float:
     """The logarithm of the ARL that a share of baselines falls short of."""
     freedom = known_by.degrees_of_freedom
     goal = float(scipy.special.ndtri(probability))
@@ -322,7 +322,7 @@ def _percentile(known_by: Baseline, multiple: float, probability: float) -> floa
     return rising_root(miss, low, high, 1e-11)
 
 
-def percentile(known_by: Baseline, multiple: float, probability: float) -> float:
+def percentile(known_by: BaselineKnowledge, multiple: float, probability: float) -> float:
     """The conditional in-control ARL that a share of baselines (0.001 to 0.999) falls short of.
 
     multiple: of the limits, 0.5 to 6. Raises UnusableParameter outside these ranges.
@@ -332,8 +332,8 @@ def percentile(known_by: Baseline, multiple: float, probability: float) -> float
 
 @lru_cache(maxsize=2048)
 def conditional_percentiles(
-    known_by: Baseline, multiple: float, percentiles: tuple[float, ...]
-) -> tuple[Percentile, ...]:
+    known_by: BaselineKnowledge, multiple: float, percentiles: tuple[float, ...]
+) -> tuple[ArlPercentile, ...]:
     """Several percentiles; ranges and errors as for :func:`conditional`."""
     _check_multiple(multiple)
     if len(percentiles) > MOST_PERCENTILES or not all(0.001 <= q <= 0.999 for q in percentiles):
@@ -345,13 +345,13 @@ def conditional_percentiles(
     found = []
     for q in percentiles:
         arl = math.exp(_percentile(known_by, multiple, q))
-        found.append(Percentile(q, arl, 1.0 / arl))
+        found.append(ArlPercentile(q, arl, 1.0 / arl))
     return tuple(found)
 
 
 @lru_cache(maxsize=512)
 def conditional(
-    known_by: Baseline, multiple: float, percentiles: tuple[float, ...] = PERCENTILES
+    known_by: BaselineKnowledge, multiple: float, percentiles: tuple[float, ...] = PERCENTILES
 ) -> ConditionalRunLength:
     """The distribution of the conditional in-control average run length over baselines.
 
@@ -385,7 +385,7 @@ def conditional(
 
 
 @lru_cache(maxsize=4096)
-def guaranteed_multiple(known_by: Baseline, in_control_arl: float, confidence: float) -> float:
+def guaranteed_multiple(known_by: BaselineKnowledge, in_control_arl: float, confidence: float) -> float:
     """The limit multiple at which P(conditional in-control ARL ≥ in_control_arl) = confidence.
 
     in_control_arl: 2 to 1e8; confidence: 0.5 to 0.999. It is the factor of a two-sided tolerance interval
