@@ -1,11 +1,13 @@
 """The quick reader of carries takes what their shape takes, to the same object, and nothing else."""
 
 import copy
+import functools
 import json
 import random
 
+import numpy as np
 import pytest
-from marshmallow import ValidationError
+from marshmallow import Schema, ValidationError
 
 from assignable.api.app import create_app
 from assignable.api.contract import examples_directory
@@ -13,6 +15,7 @@ from assignable.api.operations import charts as operations
 from assignable.api.schemas import derive, quick
 from assignable.api.settings import Settings
 from assignable.spc.charts import CHARTS
+from assignable.spc.errors import SpcError
 
 PALETTE = (
     None,
@@ -75,3 +78,53 @@ def test_quick_and_shape_agree(name):
         except ValidationError as error:
             # A chart's name of another chart is the one text that only the shape knows.
             assert set(error.messages) <= {"chart"}
+
+
+def _fault_or_value(load, data):
+    try:
+        return "loaded", _plain(load(data))
+    except ValidationError as error:
+        return "faults", json.loads(json.dumps(error.messages))
+
+
+def _plain(value):
+    if isinstance(value, np.ndarray):
+        return [str(each) for each in value.reshape(-1)]
+    if isinstance(value, dict):
+        return {key: _plain(inner) for key, inner in value.items()}
+    if isinstance(value, (list, tuple)):
+        return [_plain(inner) for inner in value]
+    return value
+
+
+@pytest.mark.parametrize(
+    "operation",
+    create_app(Settings(log="off")).extensions["assignable.contract"].operations.values(),
+    ids=lambda operation: operation.operation_id,
+)
+def test_shapes_read_as_the_library_reads_them(operation):
+    if operation.request is None:
+        pytest.skip("takes no body")
+    draw = random.Random(2)
+    slow = functools.partial(Schema.load, operation.request)
+    for name in operation.examples:
+        whole = json.loads((examples_directory() / f"{name}.request.json").read_text())
+        assert _fault_or_value(slow, whole) == _fault_or_value(operation.request.load, whole)
+        paths = [path for path in _nodes(whole) if path]
+        for _ in range(40):
+            changed = copy.deepcopy(whole)
+            *steps, last = draw.choice(paths)
+            here = changed
+            for step in steps:
+                here = here[step]
+            if draw.random() < 0.3:
+                del here[last]
+            else:
+                here[last if draw.random() < 0.8 else "another"] = draw.choice(PALETTE)
+            found = []
+            for load in (slow, operation.request.load):
+                try:
+                    found.append(_fault_or_value(load, copy.deepcopy(changed)))
+                except SpcError as error:
+                    found.append(("faults", str(error)))
+            assert found[0] == found[1]

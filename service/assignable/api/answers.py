@@ -58,7 +58,10 @@ def refuse_not_finite(result: Any) -> None:
             stack.extend(value)
         elif kind is np.ndarray:
             if value.dtype.kind == "f":
-                if not np.isfinite(value).all():
+                # Bounded numbers have a finite sum, and one that is none shows in it; one number seen many
+                # times is looked at once.
+                total = value[0] if value.strides == (0,) and len(value) else np.add.reduce(value, axis=None)
+                if not isfinite(total) and not np.isfinite(value).all():
                     break
             elif value.dtype.kind == "O":
                 stack.append(value.tolist())

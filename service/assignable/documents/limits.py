@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+import orjson
+
 from ..spc.errors import DocumentMismatch
 from .canonical import digest, plain
 
@@ -23,6 +25,11 @@ def limits_document(chart: str, limits: object, characteristic: Mapping[str, Any
     document["digest"] = digest(document)
     document["seal"] = None
     return document
+
+
+def written(document: Mapping[str, Any]) -> orjson.Fragment:
+    """A document as it goes into an answer; every number of it was looked at when it was made."""
+    return orjson.Fragment(orjson.dumps(document))
 
 
 def check_limits(chart: str, document: Mapping[str, Any]) -> None:

@@ -113,7 +113,7 @@ class Subgroups:
                 square -= np.add.reduce(residual, axis=1) ** 2 / n
             sd = np.sqrt(np.maximum(square, 0.0) / (n - 1)) * unit
             return SubgroupStatistics(size, mean, spread, np.where(spread > 0, sd, 0.0))
-        present: Booleans = np.asarray(x == x)
+        present = x == x
         size = present.sum(axis=1)
         filled = np.where(present, x, 0.0)
         some = np.maximum(size, 1)
@@ -203,7 +203,7 @@ class Vectors:
     def present(self) -> Booleans:
         """(m,), False at gaps."""
         flat = self.values.reshape(len(self.values), -1)
-        present: Booleans = np.asarray(~np.isnan(flat).any(axis=1))
+        present: Booleans = np.logical_not(np.isnan(flat).any(axis=1))
         return present
 
     def means(self) -> Floats:

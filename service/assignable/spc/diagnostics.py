@@ -20,6 +20,7 @@ from .sigma import moving_ranges
 FEWEST_VALUES = 8
 FEWEST_RANGE_VALUES = 5
 MOST_LAGS = 10
+_SHORT = 200
 
 CountDistribution: TypeAlias = Literal["binomial", "poisson"]
 
@@ -62,11 +63,15 @@ def autocorrelation(values: Floats) -> Autocorrelation | None:
     lag1 = 0.0
     statistic = 0.0
     lags = 0
-    for lag in range(1, min(MOST_LAGS, n // 4) + 1):
+    most = min(MOST_LAGS, n // 4)
+    # All lags of a short series in one call; of a long one only those that are needed.
+    products = np.correlate(z, z, "full")[len(z) :] if len(z) <= _SHORT else None
+    for lag in range(1, most + 1):
         pairs = int(np.count_nonzero(present[lag:] & present[:-lag])) if gaps else n - lag
         if not pairs:
             continue
-        r = float(z[lag:] @ z[:-lag]) / total
+        product = float(z[lag:] @ z[:-lag]) if products is None else float(products[lag - 1])
+        r = product / total
         if lag == 1:
             lag1 = r
         statistic += r * r / pairs

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from contextlib import suppress
-from functools import lru_cache, partial
+from dataclasses import dataclass
+from functools import cache, lru_cache, partial
 from typing import Any
 
 import orjson
+from marshmallow import ValidationError
 
-from ...documents.limits import carry_document, check_carry, check_limits, limits_document
+from ...documents.limits import carry_document, check_carry, check_limits, limits_document, written
 from ...spc.charts import CHARTS, Chart
 from ...spc.charts.common import Performance
 from ...spc.errors import DocumentMismatch, SpcError
@@ -104,36 +106,44 @@ class LimitsField(f.Object):
     def __init__(self, chart: Chart, shape: type[f.RequestShape], **kwargs: Any) -> None:
         super().__init__(shape, **kwargs)
 
+        @lru_cache(1024)
+        def opened(blob: bytes) -> tuple[str, Any]:
+            document = orjson.loads(blob)
+            try:
+                loaded = super(LimitsField, self)._deserialize(document, None, None)
+            except SpcError:  # no document of ours holds what its own objects refuse
+                check_limits(chart.name, document)
+                raise
+            check_limits(chart.name, document)
+            if document["seal"] is not None:
+                raise DocumentMismatch.of(
+                    "seal-not-known",
+                    "This server has no key to check the seal of these limits with.",
+                    "limits",
+                    "seal",
+                )
+            return document["digest"], loaded
+
+        self._opened = opened
         self._chart = chart
-        self._opened = lru_cache(1024)(lambda blob: self._open(orjson.loads(blob)))
 
     def _deserialize(  # type: ignore[override]
         self, value: Any, attr: str | None, data: Any, **kwargs: Any
     ) -> tuple[str, Any]:
-        named = value.get("chart") if type(value) is dict else None
-        if type(named) is str and named in CHARTS and named != self._chart.name:
-            check_limits(self._chart.name, value)
-        try:
-            blob = orjson.dumps(value)
-        except TypeError:  # half a character, or an integer beyond 64 bits
-            return self._open(value)
-        return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._open(value)
-
-    def _open(self, document: Any) -> tuple[str, Any]:
-        try:
-            loaded = super()._deserialize(document, None, None)
-        except SpcError:  # no document of ours holds what its own objects refuse
-            check_limits(self._chart.name, document)
-            raise
-        check_limits(self._chart.name, document)
-        if document["seal"] is not None:
-            raise DocumentMismatch.of(
-                "seal-not-known",
-                "This server has no key to check the seal of these limits with.",
-                "limits",
-                "seal",
-            )
-        return document["digest"], loaded
+        if type(value) is dict:
+            named = value.get("chart")
+            if type(named) is str and named in CHARTS and named != self._chart.name:
+                check_limits(self._chart.name, value)
+            try:
+                blob = orjson.dumps(value)
+            except TypeError:  # what cannot be written again has faults, which the shape tells
+                super()._deserialize(value, attr, data, **kwargs)
+                raise ValidationError(
+                    f.Coded("not-a-document", "This holds a number that no limits document holds.")
+                ) from None
+            return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._opened.__wrapped__(blob)
+        loaded: tuple[str, Any] = super()._deserialize(value, attr, data, **kwargs)
+        return loaded
 
 
 class CarryField(f.Object):
@@ -154,6 +164,44 @@ class CarryField(f.Object):
         except SpcError:
             check_carry(value["chart"], value["limits"], value)
             raise
+
+
+@dataclass(frozen=True, slots=True)
+class Documents:
+    """What reads the documents of a chart, wherever they are sent."""
+
+    limits: LimitsField
+    carry: CarryField
+
+
+@cache
+def documents_of(name: str) -> Documents:
+    """The fields that read limits documents and carries of the chart of this name."""
+    chart = CHARTS[name]
+    kept = derive.document(
+        chart.limits,
+        f"{chart.stem}LimitsDocument",
+        "A limits document exactly as it was received.",
+        _envelope(chart, Characteristic, Seal, kept=True),
+    )
+    carry = derive.document(
+        chart.carry, f"{chart.stem}CarryDocument", "A carry exactly as it was received.", _carry_frame(chart)
+    )
+    return Documents(
+        LimitsField(
+            chart,
+            kept,
+            required=True,
+            metadata={"description": "The limits document, exactly as received."},
+        ),
+        CarryField(
+            chart,
+            carry,
+            allow_none=True,
+            load_default=None,
+            metadata={"description": "As it came with the last answer; null or absent to start afresh."},
+        ),
+    )
 
 
 # ---------------------------------------------------------------------------------------------------
@@ -203,18 +251,12 @@ def _judged(chart: Chart, panels: type) -> dict[str, Any]:
 
 def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
     """The shapes of both operations: fit request and answer, judge request and answer."""
-    stem = chart.stem
+    stem, documents = chart.stem, documents_of(chart.name)
     limits_answer = derive.answer(
         chart.limits,
         f"{stem}Limits",
         "Frozen limits. Keep the document beside the characteristic, and send it back as it is.",
         _envelope(chart, CharacteristicAnswer, SealAnswer, kept=False),
-    )
-    kept = derive.document(
-        chart.limits,
-        f"{stem}LimitsDocument",
-        "A limits document exactly as it was received.",
-        _envelope(chart, Characteristic, Seal, kept=True),
     )
     panels = derive.answer(chart.plotted)
     baseline = _extend(
@@ -249,9 +291,6 @@ def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
             "provenance": PROVENANCE,
         },
     )
-    carry_kept = derive.document(
-        chart.carry, f"{stem}CarryDocument", "A carry exactly as it was received.", _carry_frame(chart)
-    )
     carry_answer = derive.answer(
         chart.carry,
         f"{stem}Carry",
@@ -263,22 +302,11 @@ def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
         f"{stem}Judge",
         "New data under frozen limits.",
         {
-            "limits": LimitsField(
-                chart,
-                kept,
-                required=True,
-                metadata={"description": "The limits document, exactly as received."},
-            ),
+            "limits": documents.limits,
             "data": f.Object(
                 takes.data, required=True, metadata={"description": "The new data, in time order."}
             ),
-            "carry": CarryField(
-                chart,
-                carry_kept,
-                allow_none=True,
-                load_default=None,
-                metadata={"description": "As it came with the last answer; null or absent to start afresh."},
-            ),
+            "carry": documents.carry,
         },
     )
     judge_answer = _extend(
@@ -333,7 +361,7 @@ def fit(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, 
     baseline = result.baseline
     labels = {} if posted is None else labels_of(posted)
     return {
-        "limits": limits_document(chart.name, result.limits, loaded.get("characteristic")),
+        "limits": written(limits_document(chart.name, result.limits, loaded.get("characteristic"))),
         "baseline": None
         if baseline is None
         else {
@@ -366,7 +394,7 @@ def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str
         "signals_found": result.signals_found,
         **labels,
         **_besides(chart, result),
-        "carry": carry_document(chart.name, digest, result.carry),
+        "carry": written(carry_document(chart.name, digest, result.carry)),
         "cautions": cautions(result.cautions),
     }
 

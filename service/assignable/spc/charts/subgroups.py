@@ -207,25 +207,14 @@ def subgroup_plots(
     assert values is not None
     size, multiple = statistics.common_size, basis.multiple
 
+    if size is not None and size > 1:
+        return _plots_of_one_size(size, statistics.mean, values, spread, centre, sigma, basis)
+
     def lines(n: int) -> SpreadLines:
         return spread_lines(spread, n, basis.sigma_multiple, basis.tail)
 
-    if size is not None and size > 1:
-        of_mean: float | Floats = sigma / math.sqrt(size)
-        at = lines(size)
-        return (
-            Plot(statistics.mean, centre, of_mean, centre - multiple * of_mean, centre + multiple * of_mean),
-            Plot(
-                values,
-                at.centre * sigma,
-                at.sd * sigma,
-                None if at.lower is None else at.lower * sigma,
-                at.upper * sigma,
-                floor=0.0,
-            ),
-        )
     sizes = statistics.size
-    of_mean = sigma / np.sqrt(np.maximum(sizes, 1))
+    of_mean: Floats = sigma / np.sqrt(np.maximum(sizes, 1))
 
     def by_size(line: str) -> Floats:
         def one(n: int) -> float:
@@ -240,15 +229,34 @@ def subgroup_plots(
     )
 
 
+def _plots_of_one_size(
+    size: int, means: Floats, spreads: Floats, spread: Spread, centre: float, sigma: float, basis: LimitBasis
+) -> tuple[Plot, Plot]:
+    of_mean = sigma / math.sqrt(size)
+    reach = basis.multiple * of_mean
+    at = spread_lines(spread, size, basis.sigma_multiple, basis.tail)
+    return (
+        Plot(means, centre, of_mean, centre - reach, centre + reach),
+        Plot(
+            spreads,
+            at.centre * sigma,
+            at.sd * sigma,
+            None if at.lower is None else at.lower * sigma,
+            at.upper * sigma,
+            floor=0.0,
+        ),
+    )
+
+
+_NO_POINTS: Floats = np.empty(0)
+
+
 def _frozen_lines(size: int | None, spread: Spread, centre: float, sigma: float, basis: LimitBasis) -> object:
     """The panels of the limits document."""
     if size is None:
         following = PanelLimits(None, None, None)
         return _PANELS[spread](PanelLimits(centre, None, None), following)
-    some = np.full(1, np.nan)
-    plots = subgroup_plots(
-        SubgroupStatistics(np.array([size]), some, some, some), spread, centre, sigma, basis
-    )
+    plots = _plots_of_one_size(size, _NO_POINTS, _NO_POINTS, spread, centre, sigma, basis)
     return _PANELS[spread](plots[0].limits(), plots[1].limits())
 
 
@@ -431,8 +439,11 @@ def _beyond(
 
 def grand_mean(used: SubgroupStatistics, total: int) -> float:
     """The mean of all ``total`` values; a second pass restores the digits that the first one lost."""
-    weights = used.size
-    mean = np.where(weights > 0, used.mean, 0.0)
+    weights, mean, m = used.size, used.mean, len(used.size)
+    if total == m * int(weights[0]) == m * int(weights.max()):
+        first = float(np.add.reduce(mean)) / m
+        return first + float(np.add.reduce(mean - first)) / m
+    mean = np.where(weights > 0, mean, 0.0)
     first = float(weights @ mean) / total
     return first + float(weights @ np.where(weights > 0, mean - first, 0.0)) / total
 
