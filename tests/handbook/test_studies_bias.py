@@ -99,7 +99,7 @@ def test_aiag_bias() -> None:
     assert level.upper - level.bias == pytest.approx(2.144787 * error, rel=1e-6)
     assert level.p_value == pytest.approx(2 * (1 - scipy.special.stdtr(14, level.t)), rel=1e-9)
     assert study.linearity is None
-    assert [note.code for note in study.notes] == ["one-reference"]
+    assert [note.code for note in study.cautions] == ["one-reference"]
 
 
 def test_probe_against_the_mean_of_five() -> None:
@@ -116,7 +116,7 @@ def test_probe_against_the_mean_of_five() -> None:
     assert study.levels[0].p_value is None
     assert study.linearity is not None
     assert study.linearity.lack_of_fit_f is None
-    assert [note.code for note in study.notes] == ["nothing-repeated"]
+    assert [note.code for note in study.cautions] == ["nothing-repeated"]
 
 
 def test_levels_with_the_same_reference_count_together() -> None:
@@ -144,7 +144,7 @@ class TestDegenerate:
         assert study.linearity.r_squared is None
         assert study.linearity.slope.p_value is None
         assert study.repeatability_sd == 0
-        assert [note.code for note in study.notes] == ["no-gauge-variation"]
+        assert [note.code for note in study.cautions] == ["no-gauge-variation"]
 
     def test_exact_offset(self) -> None:
         study = bias(_levels([1.0, 2.0, 4.0], [[1.25, 1.25], [2.25, 2.25], [4.25, 4.25]]))
@@ -157,7 +157,7 @@ class TestDegenerate:
     def test_two_measurements_make_no_line(self) -> None:
         study = bias(_levels([1.0, 2.0], [[1.1], [2.1]]))
         assert study.linearity is None
-        assert "too-few-measurements" in [note.code for note in study.notes]
+        assert "too-few-measurements" in [note.code for note in study.cautions]
 
     def test_faults_are_each_named(self) -> None:
         levels = _levels([1.0, math.nan, 3.0], [[1.0, math.nan], [2.0], []])

@@ -151,7 +151,7 @@ class TestAiag:
     def test_pooled_components(self) -> None:
         assert self.study.interaction_pooled
         assert self.study.model == "without-interaction"
-        assert [note.code for note in self.study.notes] == ["interaction-pooled"]
+        assert [note.code for note in self.study.cautions] == ["interaction-pooled"]
         found = self.study.components
         assert found.part_by_appraiser is None
         assert found.appraiser is not None
@@ -185,7 +185,7 @@ class TestAiag:
         # By definition: (0.0199435 - 0.0459822) / 3.
         assert kept.components.part_by_appraiser.estimate == pytest.approx(-0.00867959, abs=1e-8)
         assert kept.components.part_by_appraiser.variance == 0
-        assert "negative-component" in [note.code for note in kept.notes]
+        assert "negative-component" in [note.code for note in kept.cautions]
 
 
 class TestPartsAndOperators:
@@ -224,13 +224,15 @@ class TestPartsAndOperators:
         gauge = self.study.components.gauge
         assert gauge.tolerance_percent == pytest.approx(100 * 6 * gauge.sd / 55)
         total, part = self.study.components.total, self.study.components.part
-        assert self.study.capability.observed == pytest.approx(55 / 6 / total.sd)
-        assert self.study.capability.true == pytest.approx(55 / 6 / part.sd)
+        assert self.study.capability.observed_index == pytest.approx(55 / 6 / total.sd)
+        assert self.study.capability.true_index == pytest.approx(55 / 6 / part.sd)
         # 1/Cp(observed)² = 1/Cp(true)² + (share of tolerance)²: variances add.
         share = 6 * gauge.sd / 55
-        assert self.study.capability.observed is not None
-        assert self.study.capability.true is not None
-        assert self.study.capability.observed**-2 == pytest.approx(self.study.capability.true**-2 + share**2)
+        assert self.study.capability.observed_index is not None
+        assert self.study.capability.true_index is not None
+        assert self.study.capability.observed_index**-2 == pytest.approx(
+            self.study.capability.true_index**-2 + share**2
+        )
 
 
 def test_one_operator() -> None:
@@ -313,7 +315,7 @@ class TestIndependently:
         assert study.table_with_interaction is None
         assert study.interaction_p_value is None
         assert not study.interaction_pooled
-        assert study.notes[0].code == "interaction-not-estimable"
+        assert study.cautions[0].code == "interaction-not-estimable"
         assert _row(study.table, "repeatability").sum_of_squares == pytest.approx(
             _projections(x)["part-by-appraiser"], rel=1e-9
         )
@@ -485,16 +487,16 @@ class TestEffects:
             100 * 3 * upper.components.gauge.sd / room
         )
         assert upper.capability.index == "cpu"
-        assert upper.capability.observed == pytest.approx(room / 3 / upper.components.total.sd)
+        assert upper.capability.observed_index == pytest.approx(room / 3 / upper.components.total.sd)
         lower = crossed(_PARTS_OPERATORS, tolerance=OneSidedTolerance(5.0, "lower"))
         assert lower.capability.index == "cpl"
-        assert lower.capability.observed == pytest.approx(
+        assert lower.capability.observed_index == pytest.approx(
             (lower.grand_mean - 5) / 3 / lower.components.total.sd
         )
         beyond = crossed(_PARTS_OPERATORS, tolerance=OneSidedTolerance(20.0, "upper"))
         assert beyond.components.gauge.tolerance_percent is None
-        assert beyond.capability.observed is None
-        assert "mean-beyond-limit" in [note.code for note in beyond.notes]
+        assert beyond.capability.observed_index is None
+        assert "mean-beyond-limit" in [note.code for note in beyond.cautions]
 
     def test_study_multiple(self) -> None:
         old = crossed(_AIAG, study_multiple=5.15).components.gauge
@@ -512,9 +514,9 @@ class TestDegenerate:
         assert study.components.gauge.tolerance_percent == 0
         assert study.discrimination.distinct_categories is None
         assert study.discrimination.gauge_contribution_percent is None
-        assert study.capability.observed is None
+        assert study.capability.observed_index is None
         assert study.chart is None
-        assert "no-variation" in [note.code for note in study.notes]
+        assert "no-variation" in [note.code for note in study.cautions]
 
     @pytest.mark.parametrize("shift", [0.0, 1e7])
     def test_gauge_without_variation(self, shift: float) -> None:
@@ -527,7 +529,7 @@ class TestDegenerate:
         assert study.discrimination.distinct_categories_ratio_upper is None
         assert _row(study.table, "part").f_ratio is None
         assert _row(study.table, "part").p_value == 0
-        assert "no-gauge-variation" in [note.code for note in study.notes]
+        assert "no-gauge-variation" in [note.code for note in study.cautions]
 
     def test_equal_trials_keep_the_interaction(self) -> None:
         rng = np.random.default_rng(3)
@@ -552,8 +554,8 @@ class TestDegenerate:
         with pytest.raises(UnusableData) as caught:
             crossed(x)
         assert [fault.where for fault in caught.value.faults] == [
-            ("data", "measurements", 2, 1, 0),
-            ("data", "measurements", 9, 2, 2),
+            ("data", "values", 2, 1, 0),
+            ("data", "values", 9, 2, 2),
         ]
         assert {fault.code for fault in caught.value.faults} == {"missing-measurement"}
 
@@ -583,7 +585,7 @@ class TestDegenerate:
                 process_sd=0.0,
             )
         assert [fault.where[0] for fault in caught.value.faults] == [
-            "tolerance",
+            "specification",
             "study_multiple",
             "process_sd",
             "chart_subgroup_size",

@@ -85,7 +85,7 @@ def test_purity_has_a_negative_component() -> None:
     assert study.components.appraiser.estimate == pytest.approx((7.527778 - 7.768519) / 12, abs=1e-6)
     assert study.components.appraiser.variance == 0
     assert study.components.gauge.variance == study.components.repeatability.variance
-    assert "negative-component" in [note.code for note in study.notes]
+    assert "negative-component" in [note.code for note in study.cautions]
 
 
 def test_resistivity_probe() -> None:
@@ -127,7 +127,7 @@ def test_one_appraiser_is_the_one_way_analysis() -> None:
     assert ours.discrimination == other.discrimination
     assert ours.table == other.table
     assert ours.components.appraiser is None
-    assert [note.code for note in ours.notes] == ["one-appraiser"]
+    assert [note.code for note in ours.cautions] == ["one-appraiser"]
 
 
 @pytest.mark.parametrize(("appraiser", "part"), [(0.5, 10.0), (2.0, 1.0)])
@@ -166,7 +166,7 @@ def test_missing_cells_are_named() -> None:
     x[3, 2, 1] = np.nan
     with pytest.raises(UnusableData) as caught:
         nested(x)
-    assert caught.value.faults[0].where == ("data", "measurements", 3, 2, 1)
+    assert caught.value.faults[0].where == ("data", "values", 3, 2, 1)
 
 
 def test_no_variation() -> None:

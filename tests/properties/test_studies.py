@@ -33,7 +33,15 @@ def _measurements(draw: st.DrawFn, *, least: tuple[int, int, int] = (2, 1, 2)) -
 _SQUARED = {"estimate", "variance", "variance_lower", "variance_upper", "sum_of_squares", "mean_square"}
 _PLAIN = {"sd", "sd_lower", "sd_upper", "study_variation"}
 # What moves with the zero, or is prose.
-_APART = {"grand_mean", "part_means", "appraiser_means", "cell_means", "notes", "cell_ranges", "part_ranges"}
+_APART = {
+    "grand_mean",
+    "part_means",
+    "appraiser_means",
+    "cell_means",
+    "cautions",
+    "cell_ranges",
+    "part_ranges",
+}
 
 
 def _numbers(result: Any, unit: float = 1.0, path: str = "") -> Iterator[tuple[str, float | None]]:
@@ -135,8 +143,10 @@ def test_agreement_knows_no_names(case: tuple[np.ndarray, np.ndarray, int], chan
     ratings, reference, categories = case
     renamed = np.array(chance.sample(range(categories), categories))
     order = chance.sample(range(len(reference)), len(reference))
-    one = agreement(ratings, reference=reference, categories=categories)
-    other = agreement(renamed[ratings][order], reference=renamed[reference][order], categories=categories)
+    one = agreement(ratings, reference=reference, categories="abcd"[:categories])
+    other = agreement(
+        renamed[ratings][order], reference=renamed[reference][order], categories="abcd"[:categories]
+    )
     for mine, theirs in zip(one.by_appraiser, other.by_appraiser, strict=True):
         assert mine.repeated == theirs.repeated
         assert mine.matched == theirs.matched

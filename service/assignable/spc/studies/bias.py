@@ -7,13 +7,15 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Annotated
 
 import numpy as np
 import scipy
 
+from ..cautions import Caution
 from ..data import Floats
 from ..errors import Fault, UnusableData, UnusableParameter
-from .variance_components import StudyNote, confidence_faults
+from .variance_components import confidence_faults, noted
 
 # Beyond these a square leaves the range of double precision.
 _LARGEST = 1e140
@@ -22,90 +24,92 @@ _SMALLEST_SPREAD = 1e-140
 
 @dataclass(frozen=True, slots=True, eq=False)
 class ReferenceLevel:
-    """A reference part: its reference value, and measurements (k,) of it in the same unit."""
+    """A reference part: its reference value, measurements (k,) of it in the same unit, and its name if any."""
 
     reference: float
     values: Floats
+    part: str | None = None
 
 
 @dataclass(frozen=True, slots=True)
 class LevelBias:
-    """Bias at one reference value: mean of the measurements less the reference.
+    """Bias at one reference value: mean of the measurements less the reference, with its t interval."""
 
-    sd: of the measurements; ``None`` with one measurement, as are standard_error, lower and upper.
-    lower, upper: t interval of the bias, with degrees_of_freedom = size - 1.
-    t, p_value: two-sided test of no bias; ``None`` with one measurement; with no spread at all t is
-        ``None`` and the p-value 0, or ``None`` when the bias is zero too.
-    """
-
-    reference: float
-    size: int
-    mean: float
-    bias: float
-    sd: float | None
-    standard_error: float | None
-    degrees_of_freedom: int
-    lower: float | None
-    upper: float | None
-    t: float | None
-    p_value: float | None
+    part: Annotated[str | None, "Name of the reference part, where one was given."]
+    reference: Annotated[float, "Its reference value."]
+    size: Annotated[int, "Measurements of it."]
+    mean: Annotated[float, "Their mean."]
+    bias: Annotated[float, "Mean less reference, in the unit of the measurements."]
+    sd: Annotated[
+        float | None,
+        "Standard deviation of the measurements; with one measurement null, as what follows from it.",
+    ]
+    standard_error: Annotated[float | None, "Of the bias."]
+    degrees_of_freedom: Annotated[int, "Measurements less one."]
+    lower: Annotated[float | None, "Lower confidence bound of the bias."]
+    upper: Annotated[float | None, "Upper confidence bound of the bias."]
+    t: Annotated[float | None, "Bias over its standard error; null without spread."]
+    p_value: Annotated[
+        float | None,
+        "Two-sided test of no bias; without spread 0, or null where the bias is zero too.",
+    ]
 
 
 @dataclass(frozen=True, slots=True)
 class LineCoefficient:
-    """A coefficient of the line with its t interval and two-sided test of zero.
+    """A coefficient of the line with its t interval and two-sided test of zero."""
 
-    t and p_value as in :class:`LevelBias` when the points lie exactly on the line.
-    """
-
-    estimate: float
-    standard_error: float
-    lower: float
-    upper: float
-    t: float | None
-    p_value: float | None
+    estimate: Annotated[float, "By least squares."]
+    standard_error: Annotated[float, "Of the estimate."]
+    lower: Annotated[float, "Lower confidence bound."]
+    upper: Annotated[float, "Upper confidence bound."]
+    t: Annotated[float | None, "Estimate over standard error; null where the points lie exactly on a line."]
+    p_value: Annotated[
+        float | None,
+        "Two-sided test of zero; with points exactly on a line 0, or null where the estimate is zero too.",
+    ]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Linearity:
+class BiasLinearity:
     """Least-squares line of the individual biases on the reference value.
 
-    slope: bias gained for each unit of reference; intercept: at reference zero.
-    r_squared: ``None`` when all biases are equal.
-    residual_sd: with degrees_of_freedom = measurements - 2.
-    fitted, fitted_lower, fitted_upper: (levels,) the line at each reference value, and its pointwise
-        confidence band; a gauge without linearity error has zero inside the band throughout.
-    lack_of_fit_f, lack_of_fit_p_value: test of a straight line against one mean a reference value;
-        ``None`` without three different reference values and repeated measurements with spread.
+    A gauge without linearity error has zero inside the band throughout.
     """
 
-    slope: LineCoefficient
-    intercept: LineCoefficient
-    r_squared: float | None
-    residual_sd: float
-    degrees_of_freedom: int
-    fitted: Floats
-    fitted_lower: Floats
-    fitted_upper: Floats
-    lack_of_fit_f: float | None
-    lack_of_fit_p_value: float | None
+    slope: Annotated[LineCoefficient, "Bias gained for each unit of reference."]
+    intercept: Annotated[LineCoefficient, "Bias of the line at reference zero."]
+    r_squared: Annotated[
+        float | None, "Share of the biases' variation that the line explains; null where all are equal."
+    ]
+    residual_sd: Annotated[float, "Standard deviation about the line."]
+    degrees_of_freedom: Annotated[int, "Of it: measurements less two."]
+    fitted: Annotated[Floats, "The line at each level, in their order."]
+    fitted_lower: Annotated[Floats, "Its pointwise lower confidence bound."]
+    fitted_upper: Annotated[Floats, "Its pointwise upper confidence bound."]
+    lack_of_fit_f: Annotated[
+        float | None,
+        "F test of a straight line against one mean a reference value; null without three different reference "
+        "values and repeated measurements with spread.",
+    ]
+    lack_of_fit_p_value: Annotated[float | None, "Its upper tail; null where F is."]
 
 
 @dataclass(frozen=True, slots=True)
 class BiasStudy:
-    """The analysis of a bias study.
+    """The analysis of a bias study."""
 
-    mean_bias: over all measurements. repeatability_sd: pooled within levels, ``None`` when nothing is
-    repeated. linearity: ``None`` with one reference value, or with two measurements in all.
-    """
-
-    confidence: float
-    levels: tuple[LevelBias, ...]
-    mean_bias: float
-    repeatability_sd: float | None
-    repeatability_degrees_of_freedom: int
-    linearity: Linearity | None
-    notes: tuple[StudyNote, ...]
+    confidence: Annotated[float, "Of each interval by itself."]
+    levels: Annotated[tuple[LevelBias, ...], "Each reference part, in the order given."]
+    mean_bias: Annotated[float, "Over all measurements."]
+    repeatability_sd: Annotated[
+        float | None, "Pooled standard deviation within levels; null where nothing was repeated."
+    ]
+    repeatability_degrees_of_freedom: Annotated[int, "Of it."]
+    linearity: Annotated[
+        BiasLinearity | None, "Null with one reference value, or with two measurements in all."
+    ]
+    cautions: tuple[Caution, ...]
 
 
 def bias(levels: tuple[ReferenceLevel, ...], *, confidence: float = 0.95) -> BiasStudy:
@@ -117,7 +121,7 @@ def bias(levels: tuple[ReferenceLevel, ...], *, confidence: float = 0.95) -> Bia
     if wrong := confidence_faults(confidence):
         raise UnusableParameter(*wrong)
     _check(levels)
-    notes: list[StudyNote] = []
+    notes: list[Caution] = []
     by_level = tuple(_level(level, confidence) for level in levels)
     df = sum(level.degrees_of_freedom for level in by_level)
     within = sum(level.degrees_of_freedom * (level.sd or 0.0) ** 2 for level in by_level)
@@ -128,24 +132,22 @@ def bias(levels: tuple[ReferenceLevel, ...], *, confidence: float = 0.95) -> Bia
     linearity = None
     if float(np.ptp(references)) < _SMALLEST_SPREAD:
         notes.append(
-            StudyNote("one-reference", "There is one reference value only, so linearity cannot be judged.")
+            noted("one-reference", "There is one reference value only, so linearity cannot be judged.")
         )
     elif count < 3:
-        notes.append(
-            StudyNote("too-few-measurements", "Two measurements leave nothing to judge a line with.")
-        )
+        notes.append(noted("too-few-measurements", "Two measurements leave nothing to judge a line with."))
     else:
         linearity = _line(references, biases, sizes, within, df, confidence)
     if df == 0:
         notes.append(
-            StudyNote(
+            noted(
                 "nothing-repeated",
                 "No part was measured more than once, so repeatability is unknown and no bias can be tested.",
             )
         )
     elif within == 0:
         notes.append(
-            StudyNote(
+            noted(
                 "no-gauge-variation",
                 "Repeated measurements agree to the last digit; check the resolution of the gauge.",
             )
@@ -201,19 +203,32 @@ def _level(level: ReferenceLevel, confidence: float) -> LevelBias:
     shift = float(deviations[0]) if spread == 0 else float(deviations.mean())
     mean = level.reference + shift
     if size < 2:
-        return LevelBias(level.reference, size, mean, shift, None, None, 0, None, None, None, None)
+        return LevelBias(
+            level.part, level.reference, size, mean, shift, None, None, 0, None, None, None, None
+        )
     sd = float(np.std(deviations, ddof=1)) if spread > 0 else 0.0
     error = sd / math.sqrt(size)
     reach = _t_quantile(size - 1, confidence) * error
     t, p_value = _t_test(shift, error, size - 1)
     return LevelBias(
-        level.reference, size, mean, shift, sd, error, size - 1, shift - reach, shift + reach, t, p_value
+        level.part,
+        level.reference,
+        size,
+        mean,
+        shift,
+        sd,
+        error,
+        size - 1,
+        shift - reach,
+        shift + reach,
+        t,
+        p_value,
     )
 
 
 def _line(
     references: Floats, biases: Floats, sizes: Floats, within: float, within_df: int, confidence: float
-) -> Linearity:
+) -> BiasLinearity:
     """The line through the individual biases, from the levels' sizes, means and pooled squares."""
     count = int(sizes.sum())
     centre = float(sizes @ references) / count
@@ -258,7 +273,7 @@ def _line(
             lack_df = int(distinct.size) - 2
             f_ratio = max(between + within - pure, 0.0) / lack_df / (pure / pure_df)
             p_value = float(scipy.special.fdtrc(lack_df, pure_df, f_ratio))
-    return Linearity(
+    return BiasLinearity(
         coefficient(slope, 1 / sxx),
         coefficient(intercept, 1 / count + centre**2 / sxx),
         1 - (between + within) / total if total > floor else None,

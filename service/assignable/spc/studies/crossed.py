@@ -3,25 +3,27 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
+from typing import Annotated, Literal
 
 import numpy as np
 
+from ..cautions import Caution
 from ..data import Floats
 from ..errors import UnusableData, UnusableParameter
 from .variance_components import (
     ONE_APPRAISER,
     AnovaRow,
-    CapabilityEffect,
-    ChartEffect,
-    Discrimination,
     GaugeComponents,
+    GaugeDiscrimination,
+    GaugeOnCapability,
+    GaugeOnChart,
     Model,
     OneSidedTolerance,
-    StudyNote,
+    Source,
     anova_row,
     assemble,
     complete,
+    noted,
     rounding_sum_of_squares,
     terms,
     total_row,
@@ -30,20 +32,20 @@ from .variance_components import (
 StudyModel = Literal["with-interaction", "without-interaction", "one-appraiser"]
 
 
-_NOT_ESTIMABLE = StudyNote(
+_NOT_ESTIMABLE = noted(
     "interaction-not-estimable",
     "Each appraiser measured each part once, so the interaction of part and appraiser cannot be told from "
     "repeatability and is contained in it.",
 )
 
 
-def _pooled(p_value: float | None, alpha: float | None) -> StudyNote:
+def _pooled(p_value: float | None, alpha: float | None) -> Caution:
     why = (
         "neither shows any variation."
         if p_value is None
         else f"its p-value, {p_value:.3g}, is above {alpha:g}."
     )
-    return StudyNote(
+    return noted(
         "interaction-pooled",
         f"The interaction of part and appraiser was pooled into repeatability: {why}",
     )
@@ -53,37 +55,43 @@ def _pooled(p_value: float | None, alpha: float | None) -> StudyNote:
 class CrossedStudy:
     """The analysis of a crossed study.
 
-    model: the model the components come from.
-    interaction_pooled: whether the interaction was pooled into repeatability, because its p-value is
-        above ``pooling_alpha``.
-    table: the analysis of variance used; table_with_interaction: the one with the interaction kept,
-        ``None`` when the design cannot estimate it (one trial, or one appraiser).
     part_means (parts,), appraiser_means (appraisers,), cell_means and cell_ranges (parts, appraisers):
-        what pictures of the study show; ranges are zero with one trial.
-    chart: ``None`` when there is no variation at all.
+    what pictures of the study show.
     """
 
-    parts: int
-    appraisers: int
-    trials: int
-    grand_mean: float
-    model: StudyModel
-    pooling_alpha: float | None
-    interaction_p_value: float | None
-    interaction_pooled: bool
-    table: tuple[AnovaRow, ...]
-    table_with_interaction: tuple[AnovaRow, ...] | None
-    confidence: float
-    study_multiple: float
-    components: GaugeComponents
-    discrimination: Discrimination
-    capability: CapabilityEffect
-    chart: ChartEffect | None
-    part_means: Floats
-    appraiser_means: Floats
+    parts: Annotated[int, "Number of parts."]
+    appraisers: Annotated[int, "Number of appraisers."]
+    trials: Annotated[int, "Measurements of each part by each appraiser."]
+    grand_mean: Annotated[float, "Mean of all measurements."]
+    model: Annotated[StudyModel, "The model the components come from."]
+    pooling_alpha: Annotated[
+        float | None,
+        "The interaction is pooled where its p-value is above this; null where it is always kept.",
+    ]
+    interaction_p_value: Annotated[
+        float | None,
+        "Of the F test of the interaction; null where the design cannot estimate it, and where neither it nor "
+        "repeatability shows variation.",
+    ]
+    interaction_pooled: Annotated[bool, "Whether the interaction was pooled into repeatability."]
+    table: Annotated[tuple[AnovaRow, ...], "The analysis of variance used."]
+    table_with_interaction: Annotated[
+        tuple[AnovaRow, ...] | None,
+        "The one with the interaction kept; null where the design cannot estimate it (one trial, one appraiser).",
+    ]
+    confidence: Annotated[float, "Of each interval by itself."]
+    study_multiple: Annotated[float, "Standard deviations that make up the study variation."]
+    components: Annotated[GaugeComponents, "The components of the variation."]
+    discrimination: Annotated[GaugeDiscrimination, "How finely the gauge tells parts apart."]
+    capability: Annotated[GaugeOnCapability, "What the gauge does to a capability index."]
+    chart: Annotated[
+        GaugeOnChart | None, "What the gauge does to a chart of means; null where nothing varies at all."
+    ]
+    part_means: Annotated[Floats, "Mean of each part."]
+    appraiser_means: Annotated[Floats, "Mean of each appraiser."]
     cell_means: Floats
     cell_ranges: Floats
-    notes: tuple[StudyNote, ...]
+    cautions: tuple[Caution, ...]
 
 
 def crossed(
@@ -138,14 +146,14 @@ def crossed(
             "too-few-parts",
             "A study of the gauge needs at least two parts; ten are usual.",
             "data",
-            "measurements",
+            "values",
         )
     if o * r < 2:
         raise UnusableData.of(
             "nothing-repeated",
             "Each part was measured once by one appraiser, which says nothing about the gauge.",
             "data",
-            "measurements",
+            "values",
         )
     centre = float(measurements.mean())
     x = measurements - centre
@@ -194,7 +202,7 @@ def crossed(
 
     def interactive() -> tuple[tuple[AnovaRow, ...], Model]:
         between, within = ss_interaction / df_interaction, ss_error / df_error
-        against = ("part-by-appraiser", between, df_interaction)
+        against: tuple[Source, float, int] = ("part-by-appraiser", between, df_interaction)
         rows = (
             anova_row("part", ss_part, df_part, *against),
             anova_row("appraiser", ss_appraiser, df_appraiser, *against),
@@ -211,7 +219,7 @@ def crossed(
             (0.0, 0.0, 1 / r, -1 / r),
         )
 
-    notes: list[StudyNote] = []
+    notes: list[Caution] = []
     full: tuple[AnovaRow, ...] | None = None
     p_interaction: float | None = None
     pooled = False
@@ -255,5 +263,5 @@ def crossed(
         appraiser_means + grand_mean,
         cells + grand_mean,
         np.ptp(measurements, axis=2),
-        (*notes, *made.notes),
+        (*notes, *made.cautions),
     )

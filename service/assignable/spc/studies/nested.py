@@ -3,21 +3,22 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Annotated
 
 import numpy as np
 
+from ..cautions import Caution
 from ..data import Floats
 from ..errors import UnusableData
 from .variance_components import (
     ONE_APPRAISER,
     AnovaRow,
-    CapabilityEffect,
-    ChartEffect,
-    Discrimination,
     GaugeComponents,
+    GaugeDiscrimination,
+    GaugeOnCapability,
+    GaugeOnChart,
     Model,
     OneSidedTolerance,
-    StudyNote,
     anova_row,
     assemble,
     complete,
@@ -31,27 +32,29 @@ from .variance_components import (
 class NestedStudy:
     """The analysis of a nested study.
 
-    components: ``appraiser`` and ``reproducibility`` are one and the same, ``None`` with one appraiser;
-        there is no interaction.
+    Of the components, ``appraiser`` and ``reproducibility`` are one and the same, null with one appraiser;
+    there is no interaction.
+
     appraiser_means (appraisers,), part_means and part_ranges (appraisers, parts).
-    chart: ``None`` when there is no variation at all.
     """
 
-    appraisers: int
-    parts: int
-    trials: int
-    grand_mean: float
-    table: tuple[AnovaRow, ...]
-    confidence: float
-    study_multiple: float
-    components: GaugeComponents
-    discrimination: Discrimination
-    capability: CapabilityEffect
-    chart: ChartEffect | None
-    appraiser_means: Floats
+    appraisers: Annotated[int, "Number of appraisers."]
+    parts: Annotated[int, "Number of parts of each appraiser."]
+    trials: Annotated[int, "Measurements of each part."]
+    grand_mean: Annotated[float, "Mean of all measurements."]
+    table: Annotated[tuple[AnovaRow, ...], "The analysis of variance."]
+    confidence: Annotated[float, "Of each interval by itself."]
+    study_multiple: Annotated[float, "Standard deviations that make up the study variation."]
+    components: Annotated[GaugeComponents, "The components of the variation."]
+    discrimination: Annotated[GaugeDiscrimination, "How finely the gauge tells parts apart."]
+    capability: Annotated[GaugeOnCapability, "What the gauge does to a capability index."]
+    chart: Annotated[
+        GaugeOnChart | None, "What the gauge does to a chart of means; null where nothing varies at all."
+    ]
+    appraiser_means: Annotated[Floats, "Mean of each appraiser."]
     part_means: Floats
     part_ranges: Floats
-    notes: tuple[StudyNote, ...]
+    cautions: tuple[Caution, ...]
 
 
 def nested(
@@ -91,14 +94,14 @@ def nested(
             "too-few-parts",
             "Each appraiser needs at least two parts, or parts and appraisers cannot be told apart.",
             "data",
-            "measurements",
+            "values",
         )
     if r < 2:
         raise UnusableData.of(
             "nothing-repeated",
             "Each part was measured once, so the spread of the parts and of the gauge cannot be told apart.",
             "data",
-            "measurements",
+            "values",
         )
     centre = float(measurements.mean())
     x = measurements - centre
@@ -124,7 +127,7 @@ def nested(
         anova_row("part", ss_part, df_part, "repeatability", ms_error, df_error),
         anova_row("repeatability", ss_error, df_error, None, 0.0, 0),
     )
-    notes: list[StudyNote] = []
+    notes: list[Caution] = []
     if a == 1:
         notes.append(ONE_APPRAISER)
         model = Model(
@@ -156,5 +159,5 @@ def nested(
         appraisers + grand_mean,
         parts + grand_mean,
         np.ptp(measurements, axis=2),
-        (*notes, *made.notes),
+        (*notes, *made.cautions),
     )

@@ -10,11 +10,12 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Literal
+from typing import Annotated, Literal
 
 import numpy as np
 import scipy
 
+from ..cautions import Caution
 from ..data import Floats
 from ..errors import Fault, UnusableData, UnusableParameter
 
@@ -27,12 +28,12 @@ _SMALLEST_SPREAD = 1e-60
 _CATEGORIES_RULE = 1.41
 
 
-@dataclass(frozen=True, slots=True)
-class StudyNote:
-    """Something a reader of the study must know: a stable code and a plain sentence."""
+Source = Literal["part", "appraiser", "part-by-appraiser", "repeatability", "total"]
 
-    code: str
-    detail: str
+
+def noted(code: str, sentence: str, *, reference: str = "aiag-msa-2010") -> Caution:
+    """A caution about the measurements of a study."""
+    return Caution(code, sentence, ("data",), reference)
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,132 +46,143 @@ class OneSidedTolerance:
 
 @dataclass(frozen=True, slots=True)
 class AnovaRow:
-    """One source of variation.
+    """One source of variation in an analysis of variance."""
 
-    source: ``part``, ``appraiser``, ``part-by-appraiser``, ``repeatability`` or ``total``.
-    mean_square: ``None`` in the total row.
-    f_ratio: against the mean square of ``tested_against``; ``None`` in rows without a test, and when
-        that mean square is zero.
-    p_value: upper tail of F; 0 when only the denominator is zero, ``None`` when both are, and in
-        rows without a test.
-    """
-
-    source: str
-    sum_of_squares: float
-    degrees_of_freedom: int
-    mean_square: float | None
-    tested_against: str | None
-    f_ratio: float | None
-    p_value: float | None
+    source: Annotated[Source, "What varies."]
+    sum_of_squares: Annotated[float, "In squared units of the measurements."]
+    degrees_of_freedom: Annotated[int, "Of the sum of squares."]
+    mean_square: Annotated[float | None, "Sum of squares over degrees of freedom; null in the total row."]
+    tested_against: Annotated[
+        Source | None, "The source whose mean square divides in the F test; null in rows without a test."
+    ]
+    f_ratio: Annotated[
+        float | None, "Null in rows without a test, and where the mean square that divides is zero."
+    ]
+    p_value: Annotated[
+        float | None,
+        "Upper tail of F; 0 where only the mean square that divides is zero, null where both are, and in rows "
+        "without a test.",
+    ]
 
 
 @dataclass(frozen=True, slots=True)
 class VarianceComponent:
-    """One component of the variation, with everything said about it.
+    """One component of the variation, with everything said about it."""
 
-    estimate: as the analysis of variance gives it, in squared units; may be negative.
-    variance: the estimate with negative components set to zero (a sum adds the parts so treated).
-    variance_lower, variance_upper: confidence bounds of the variance, not below zero.
-    sd, sd_lower, sd_upper: their square roots, in the unit of measurement.
-    contribution_percent: share of the total variance; ``None`` when there is no variation at all.
-    study_variation: the study multiple times sd.
-    study_variation_percent: sd over the total sd; these shares do not add up to 100. ``None`` as above.
-    tolerance_percent: study variation over the width of the tolerance, or half of it over the distance
-        from the mean to the only limit; ``None`` without a tolerance, or with the mean beyond that limit.
-    """
-
-    estimate: float
-    variance: float
-    variance_lower: float
-    variance_upper: float
-    sd: float
-    sd_lower: float
-    sd_upper: float
-    contribution_percent: float | None
-    study_variation: float
-    study_variation_percent: float | None
-    tolerance_percent: float | None
+    estimate: Annotated[
+        float, "As the analysis of variance gives it, in squared units; negative where chance makes it so."
+    ]
+    variance: Annotated[
+        float,
+        "The estimate with negative components as zero; a sum adds the parts so treated. Squared units.",
+    ]
+    variance_lower: Annotated[float, "Lower confidence bound of the variance, not below zero; squared units."]
+    variance_upper: Annotated[float, "Upper confidence bound of the variance, not below zero; squared units."]
+    sd: Annotated[float, "Standard deviation: the root of the variance, in the unit of the measurements."]
+    sd_lower: Annotated[float, "Its lower confidence bound."]
+    sd_upper: Annotated[float, "Its upper confidence bound."]
+    contribution_percent: Annotated[
+        float | None, "Share of the total variance, in percent; null where nothing varies at all."
+    ]
+    study_variation: Annotated[
+        float, "The study multiple times the standard deviation, in the unit of the measurements."
+    ]
+    study_variation_percent: Annotated[
+        float | None,
+        "Standard deviation over the total standard deviation, in percent; these do not add up to 100. Null where "
+        "nothing varies at all.",
+    ]
+    tolerance_percent: Annotated[
+        float | None,
+        "Study variation over the width of the specification, in percent; with one limit, half of it over the "
+        "distance from the mean to that limit. Null without a specification, or with the mean beyond its only limit.",
+    ]
 
 
 @dataclass(frozen=True, slots=True)
 class GaugeComponents:
-    """The components of a gauge study; ``None`` for one that the design or the model has not got.
+    """The components of a gauge study; null for one that the design or the model has not got.
 
     gauge = repeatability + reproducibility; reproducibility = appraiser + part_by_appraiser;
     total = gauge + part.
     """
 
-    repeatability: VarianceComponent
-    appraiser: VarianceComponent | None
-    part_by_appraiser: VarianceComponent | None
-    reproducibility: VarianceComponent | None
-    gauge: VarianceComponent
-    part: VarianceComponent
-    total: VarianceComponent
+    repeatability: Annotated[VarianceComponent, "The same appraiser measuring the same part again."]
+    appraiser: Annotated[VarianceComponent | None, "Differences between appraisers."]
+    part_by_appraiser: Annotated[
+        VarianceComponent | None, "Differences between appraisers that depend on the part."
+    ]
+    reproducibility: Annotated[VarianceComponent | None, "Appraiser and interaction together."]
+    gauge: Annotated[VarianceComponent, "The measurement system: repeatability and reproducibility together."]
+    part: Annotated[VarianceComponent, "True differences between the parts of the study."]
+    total: Annotated[VarianceComponent, "Gauge and part together."]
 
 
 @dataclass(frozen=True, slots=True)
-class Discrimination:
+class GaugeDiscrimination:
     """How finely the gauge tells parts apart.
 
-    basis: ``study`` when the spread of the parts is the study's own, ``process`` when it comes from the
-        process standard deviation given.
-    distinct_categories: 1.41 times part sd over gauge sd, cut to a whole number (AIAG manual, 4th ed.);
-        ``None`` when the gauge shows no variation (there is no bound).
-    distinct_categories_ratio: √2 times that ratio, not cut; with confidence bounds.
-    gauge_contribution_percent: gauge variance over total variance; with confidence bounds.
-    part_contribution_percent: its complement to 100 (the intraclass correlation); with confidence bounds.
-    Bounds are ``None`` where the design has none in closed form, and with basis ``process``.
+    Bounds are null where the design has none in closed form, and with the basis ``process``.
     """
 
-    basis: Literal["study", "process"]
-    distinct_categories: int | None
-    distinct_categories_ratio: float | None
-    distinct_categories_ratio_lower: float | None
-    distinct_categories_ratio_upper: float | None
-    gauge_contribution_percent: float | None
-    gauge_contribution_percent_lower: float | None
-    gauge_contribution_percent_upper: float | None
-    part_contribution_percent: float | None
-    part_contribution_percent_lower: float | None
-    part_contribution_percent_upper: float | None
+    basis: Annotated[
+        Literal["study", "process"],
+        "Whose spread of parts: the study's own, or that of the process standard deviation given.",
+    ]
+    distinct_categories: Annotated[
+        int | None,
+        "1.41 times part over gauge standard deviation, cut to a whole number; null where the gauge shows no "
+        "variation.",
+    ]
+    distinct_categories_ratio: Annotated[float | None, "The root of 2 times that ratio, not cut."]
+    distinct_categories_ratio_lower: Annotated[float | None, "Lower confidence bound of the ratio."]
+    distinct_categories_ratio_upper: Annotated[float | None, "Upper confidence bound of the ratio."]
+    gauge_contribution_percent: Annotated[float | None, "Gauge variance over total variance, in percent."]
+    gauge_contribution_percent_lower: Annotated[float | None, "Its lower confidence bound."]
+    gauge_contribution_percent_upper: Annotated[float | None, "Its upper confidence bound."]
+    part_contribution_percent: Annotated[
+        float | None, "Its complement to 100: the intraclass correlation, in percent."
+    ]
+    part_contribution_percent_lower: Annotated[float | None, "Its lower confidence bound."]
+    part_contribution_percent_upper: Annotated[float | None, "Its upper confidence bound."]
 
 
 @dataclass(frozen=True, slots=True)
-class CapabilityEffect:
+class GaugeOnCapability:
     """What the gauge does to a capability index.
 
-    index: ``cp``, or ``cpu``/``cpl`` (from the mean of the study) with one limit; ``None`` without tolerance.
-    observed: with the variance of part and gauge together; ``true``: with that of the parts alone.
-    ratio: observed over true, √(part variance / total variance); needs no tolerance.
-    ``None`` where a variance that divides is zero, or the mean is beyond the only limit.
+    Null where a variance that divides is zero, or the mean is beyond the only limit.
     """
 
-    index: Literal["cp", "cpu", "cpl"] | None
-    observed: float | None
-    true: float | None
-    ratio: float | None
+    index: Annotated[
+        Literal["cp", "cpu", "cpl"] | None,
+        "`cp`, or with one limit `cpu` or `cpl` from the mean of the study; null without a specification.",
+    ]
+    observed_index: Annotated[float | None, "With the variance of part and gauge together."]
+    true_index: Annotated[float | None, "With the variance of the parts alone."]
+    ratio: Annotated[
+        float | None, "Observed over true: the root of part over total variance; needs no specification."
+    ]
 
 
 @dataclass(frozen=True, slots=True)
-class ChartEffect:
+class GaugeOnChart:
     """What the gauge does to a three-sigma chart of means, each piece measured once.
 
     The gauge's errors count as independent from piece to piece, and the limits as made with them in.
-
-    shift_factor: a shift of one product sigma looks like this many observed sigmas.
-    shift: the shift looked at, in product sigmas; subgroup_size: pieces a subgroup.
-    arl_perfect_gauge, arl_with_gauge: average number of subgroups to the first point beyond a limit.
-    subgroup_size_factor: how many times larger a subgroup restores the lost power; ``None`` when
-        the parts show no variation.
     """
 
-    shift_factor: float
-    shift: float
-    subgroup_size: int
-    arl_perfect_gauge: float
-    arl_with_gauge: float
-    subgroup_size_factor: float | None
+    shift_factor: Annotated[float, "A shift of one product sigma looks like this many observed sigmas."]
+    shift: Annotated[float, "The shift looked at, in product sigmas."]
+    subgroup_size: Annotated[int, "Pieces in a subgroup."]
+    arl_perfect_gauge: Annotated[
+        float, "Average number of subgroups to the first point beyond a limit, were the gauge perfect."
+    ]
+    arl_with_gauge: Annotated[float, "The same with this gauge."]
+    subgroup_size_factor: Annotated[
+        float | None,
+        "How many times larger a subgroup restores the lost power; null where the parts show no variation.",
+    ]
 
 
 # -- what is asked -----------------------------------------------------------------------------------
@@ -216,9 +228,9 @@ def terms(
     if isinstance(tolerance, OneSidedTolerance):
         if not abs(tolerance.limit) < _LARGEST:
             detail = "The specification limit must be a finite number."
-            faults.append(Fault("out-of-range", detail, ("tolerance", "limit")))
+            faults.append(Fault("out-of-range", detail, ("specification", tolerance.side)))
     elif tolerance is not None:
-        positive(tolerance, "tolerance", "The width of the tolerance")
+        positive(tolerance, "specification", "The width of the tolerance")
     positive(study_multiple, "study_multiple", "The study multiple")
     if process_sd is not None:
         positive(process_sd, "process_sd", "The standard deviation of the process")
@@ -239,7 +251,7 @@ def complete(measurements: Floats, *, axes: str) -> None:
     """
     if measurements.ndim != 3 or measurements.size == 0:
         raise UnusableData.of(
-            "empty", f"The measurements must form a full table of {axes}.", "data", "measurements"
+            "empty", f"The measurements must form a full table of {axes}.", "data", "values"
         )
     bad = np.argwhere(~np.isfinite(measurements))
     if bad.size:
@@ -249,7 +261,7 @@ def complete(measurements: Floats, *, axes: str) -> None:
                     "missing-measurement",
                     f"The measurement at {axes} {i + 1}, {j + 1}, {k + 1} is missing; this analysis needs "
                     "every cell filled. Measure it again, or leave that part out of the study.",
-                    ("data", "measurements", i, j, k),
+                    ("data", "values", i, j, k),
                 )
                 for i, j, k in bad[:_MOST_FAULTS].tolist()
             )
@@ -261,7 +273,7 @@ def complete(measurements: Floats, *, axes: str) -> None:
             "The measurements are too large, or differ too little, for their squares to be computed; "
             "use another unit.",
             "data",
-            "measurements",
+            "values",
         )
 
 
@@ -282,7 +294,7 @@ def f_upper_quantile(tail: float, df1: int, df2: int) -> float:
 
 
 def anova_row(
-    source: str, square: float, df: int, against: str | None, denominator: float, denominator_df: int
+    source: Source, square: float, df: int, against: Source | None, denominator: float, denominator_df: int
 ) -> AnovaRow:
     """A row with its F test against a denominator mean square; ``against`` is ``None`` for no test."""
     mean_square = square / df
@@ -392,7 +404,7 @@ def ratio_interval(
     return bounds[0], bounds[1]
 
 
-ONE_APPRAISER = StudyNote(
+ONE_APPRAISER = noted(
     "one-appraiser",
     "One appraiser took part, so reproducibility is unknown and the gauge variation is repeatability alone.",
 )
@@ -428,10 +440,10 @@ class Assembled:
     """What :func:`assemble` makes of a model."""
 
     components: GaugeComponents
-    discrimination: Discrimination
-    capability: CapabilityEffect
-    chart: ChartEffect | None
-    notes: tuple[StudyNote, ...]
+    discrimination: GaugeDiscrimination
+    capability: GaugeOnCapability
+    chart: GaugeOnChart | None
+    cautions: tuple[Caution, ...]
 
 
 def _estimate(coefficients: Sequence[float], model: Model) -> float:
@@ -466,7 +478,7 @@ def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
     Raises :class:`UnusableParameter` when the process standard deviation given is not larger than the
     gauge's.
     """
-    notes: list[StudyNote] = []
+    notes: list[Caution] = []
     own = {
         "repeatability": model.repeatability,
         "appraiser": model.appraiser,
@@ -478,7 +490,7 @@ def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
     for name, estimate in estimates.items():
         if estimate < 0:
             notes.append(
-                StudyNote(
+                noted(
                     "negative-component",
                     f"The estimated variance of {name.replace('_', ' ')} is negative ({estimate:.6g}); it "
                     "counts as zero. This happens by chance when the component is small.",
@@ -542,13 +554,11 @@ def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
     )
     if total_variance == 0:
         notes.append(
-            StudyNote(
-                "no-variation", "All measurements are equal, so no share of the variation can be stated."
-            )
+            noted("no-variation", "All measurements are equal, so no share of the variation can be stated.")
         )
     elif gauge_variance == 0:
         notes.append(
-            StudyNote(
+            noted(
                 "no-gauge-variation",
                 "Repeated measurements agree to the last digit; check the resolution of the gauge, and that "
                 "the values were measured and not copied.",
@@ -566,7 +576,7 @@ def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
 
 
 def _distance(
-    tolerance: float | OneSidedTolerance | None, grand_mean: float, notes: list[StudyNote]
+    tolerance: float | OneSidedTolerance | None, grand_mean: float, notes: list[Caution]
 ) -> float | None:
     """The width of the tolerance, or twice the room between the mean and the only limit."""
     if not isinstance(tolerance, OneSidedTolerance):
@@ -575,7 +585,7 @@ def _distance(
     if room > 0:
         return 2 * room
     notes.append(
-        StudyNote(
+        noted(
             "mean-beyond-limit",
             f"The mean of the measurements, {grand_mean:.6g}, is not inside the {tolerance.side} limit "
             f"{tolerance.limit:g}, so there is no tolerance to take a share of.",
@@ -586,10 +596,10 @@ def _distance(
 
 def _discrimination(
     part: float, gauge: float, total: float, asked: Terms, ratio: tuple[float, float] | None
-) -> Discrimination:
+) -> GaugeDiscrimination:
     lower, upper = ratio if ratio is not None and asked.process_sd is None else (None, None)
     times = math.sqrt(part / gauge) if gauge > 0 else None
-    return Discrimination(
+    return GaugeDiscrimination(
         "study" if asked.process_sd is None else "process",
         None if times is None else int(_CATEGORIES_RULE * times),
         None if times is None else math.sqrt(2) * times,
@@ -604,13 +614,13 @@ def _discrimination(
     )
 
 
-def _capability(part: float, total: float, asked: Terms, distance: float | None) -> CapabilityEffect:
+def _capability(part: float, total: float, asked: Terms, distance: float | None) -> GaugeOnCapability:
     index: Literal["cp", "cpu", "cpl"] | None = None
     if isinstance(asked.tolerance, OneSidedTolerance):
         index = "cpu" if asked.tolerance.side == "upper" else "cpl"
     elif asked.tolerance is not None:
         index = "cp"
-    return CapabilityEffect(
+    return GaugeOnCapability(
         index,
         distance / (6 * math.sqrt(total)) if distance is not None and total > 0 else None,
         distance / (6 * math.sqrt(part)) if distance is not None and part > 0 else None,
@@ -618,7 +628,7 @@ def _capability(part: float, total: float, asked: Terms, distance: float | None)
     )
 
 
-def _chart(part: float, total: float, asked: Terms) -> ChartEffect | None:
+def _chart(part: float, total: float, asked: Terms) -> GaugeOnChart | None:
     if total == 0:
         return None
     factor = math.sqrt(part / total)
@@ -627,7 +637,7 @@ def _chart(part: float, total: float, asked: Terms) -> ChartEffect | None:
         away = shift * math.sqrt(asked.chart_subgroup_size)
         return float(1 / (scipy.special.ndtr(away - 3) + scipy.special.ndtr(-away - 3)))
 
-    return ChartEffect(
+    return GaugeOnChart(
         factor,
         asked.chart_shift,
         asked.chart_subgroup_size,
