@@ -139,7 +139,7 @@ class LimitsField(f.Object):
             except TypeError:  # what cannot be written again has faults, which the shape tells
                 super()._deserialize(value, attr, data, **kwargs)
                 raise ValidationError(
-                    f.Coded("not-a-document", "This holds a number that no limits document holds.")
+                    problems.Coded("not-a-document", "This holds a number that no limits document holds.")
                 ) from None
             return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._opened.__wrapped__(blob)
         loaded: tuple[str, Any] = super()._deserialize(value, attr, data, **kwargs)
