@@ -169,7 +169,7 @@ def capability(
     Raises UnusableParameter ``confidence-out-of-range`` or ``limits-too-far``; UnusableData ``no-variation``
     (and what ``sigma.overall`` raises), ``count-out-of-range``, ``no-sigma``, ``not-finite``.
     """
-    _check_confidence(confidence)
+    check_confidence(confidence)
     summary, values = _summarised(data, within)
     _check_summary(summary)
     _check_distances(summary, specification)
@@ -211,7 +211,7 @@ def machine_capability(
     Arguments, intervals and errors as for :func:`capability`; a summary must hold the overall standard
     deviation. Source: [iso-22514-3].
     """
-    _check_confidence(confidence)
+    check_confidence(confidence)
     summary, values = _summarised(data, None)
     _check_summary(summary)
     total = summary.total
@@ -255,7 +255,8 @@ def _summarised(
     return NormalSummary(mean, within, total, flat.size), flat
 
 
-def _check_confidence(confidence: float) -> None:
+def check_confidence(confidence: float) -> None:
+    """Raises UnusableParameter ``confidence-out-of-range`` unless above 0.5 and at most 0.999999."""
     if not LEAST_CONFIDENCE < confidence <= MOST_CONFIDENCE:
         raise UnusableParameter.of(
             "confidence-out-of-range",
