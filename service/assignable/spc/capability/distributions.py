@@ -26,11 +26,12 @@ MOST_VALUES = 100_000
 _LOG_ROOT_2PI = 0.5 * math.log(2.0 * math.pi)
 _TINY = 1e-300
 _NEWTON_CAP = 60
-_CLIMB_CAP = 80
+CLIMB_CAP = 80
 _GRID = 28
 # A threshold so far away that the law is a normal (lognormal) or an extreme-value one (Weibull) to the eye.
 _FARTHEST = 300.0
 _NEAREST = 1e-3
+_PART = 4000
 # A folded normal whose mean is nearer its fold than this, in sigma, cannot be told from a half normal.
 _FOLDED_APART = 0.3
 _TAKING_BOUND = ("half-normal", "folded-normal", "exponential")
@@ -222,7 +223,7 @@ class _Located(Law):
         least = float(u.min())
         reach = float(np.quantile(u, 0.75) - least) or float(u.max() - least)
 
-        def profile(log_gap: float) -> tuple[float, Floats]:
+        def profile(log_gap: float, u: Floats = u) -> tuple[float, Floats]:
             above = u - (least - reach * math.exp(log_gap))
             y = np.log(above)
             theta = self._fit_located(y)
@@ -231,7 +232,9 @@ class _Located(Law):
             return value, theta
 
         gaps = np.linspace(math.log(_FARTHEST), math.log(_NEAREST), _GRID)
-        values = [profile(float(gap))[0] for gap in gaps]
+        # A part of many values shows where the maximum is, or that there is none.
+        part = np.sort(u)[:: u.size // _PART] if u.size > 2 * _PART else u
+        values = [profile(float(gap), part)[0] for gap in gaps]
         inner = [i for i in range(1, _GRID - 1) if values[i - 1] < values[i] >= values[i + 1]]
         if not inner:
             raise UnusableData.of(
@@ -809,10 +812,10 @@ def _inverse_information(f: Callable[[Floats], float], at: Floats, units: Floats
     return inverse
 
 
-def climb(law: Law, f: Callable[[Floats], float], start: Floats, u: Floats) -> Floats:
+def climb(law: Law, f: Callable[[Floats], float], start: Floats, u: Floats, steps: int = CLIMB_CAP) -> Floats:
     """The maximum of f by damped Newton steps. Raises UnusableData ``no-maximum``."""
     at = start
-    for _ in range(_CLIMB_CAP):
+    for _ in range(steps):
         units = law.units(at, u)
         value, gradient, hessian = _derivatives(f, at, units)
         eigen, vectors = np.linalg.eigh(-hessian)

@@ -13,7 +13,7 @@ import scipy
 
 from ..data import Floats
 from ..errors import UnusableData
-from .distributions import LAWS, DistributionParameter, Law, climb, threshold_normal
+from .distributions import CLIMB_CAP, LAWS, DistributionParameter, Law, climb, threshold_normal
 
 _LOG_ROOT_2PI = 0.5 * math.log(2.0 * math.pi)
 _TINY = 1e-300
@@ -21,6 +21,8 @@ _FARTHEST_POWER = 5.0
 _NO_POWER = 1e-8
 _NEAREST_BOUND, _FARTHEST_BOUND = math.log(1e-3), math.log(100.0)
 _STEEPEST = math.log(40.0)
+_PART = 4000
+_FEW_STEPS = 8
 
 
 def _quantile(p: Floats, q: Floats) -> Floats:
@@ -174,7 +176,18 @@ class _Unbounded(_ToNormal):
         quarter, half, three = np.quantile(u, [0.25, 0.5, 0.75])
         spread = max(float(three - quarter) / 1.35, 1e-3 * float(np.ptp(u)))
         start = np.array([0.0, math.log(1.5), float(half), math.log(1.5 * spread)])
-        theta = climb(self, lambda at: float(self.log_density(u, at).sum()), start, u)
+        try:
+            theta = start
+            # A part of many values shows where the maximum is, or that there is none.
+            if u.size > 2 * _PART:
+                theta = self._climbed(theta, np.sort(u)[:: u.size // _PART], CLIMB_CAP)
+                return self._climbed(theta, u, _FEW_STEPS)
+            return self._climbed(theta, u, CLIMB_CAP)
+        except UnusableData:
+            raise self._no_maximum() from None
+
+    def _climbed(self, start: Floats, u: Floats, steps: int) -> Floats:
+        theta = climb(self, lambda at: float(self.log_density(u, at).sum()), start, u, steps)
         if not -3.0 < float(theta[1]) < _STEEPEST:
             raise self._no_maximum()
         return theta
