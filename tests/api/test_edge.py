@@ -275,7 +275,8 @@ def test_a_fault_of_the_service_tells_nothing(client: FlaskClient, log: Logged) 
 
 
 def test_nan_is_never_answered(client: FlaskClient) -> None:
-    is_problem(post(client, GOOD, "/v1/notfinite"), problems.INTERNAL)
+    told = is_problem(post(client, GOOD, "/v1/notfinite"), problems.NOT_COMPUTABLE)
+    assert [entry["code"] for entry in told["errors"]] == ["out-of-scale"]
 
 
 def test_busy_is_said_at_once(app: Flask) -> None:

@@ -14,18 +14,13 @@ from typing import Any
 import numpy as np
 import orjson
 
+from ..documents.canonical import NotFinite
+
 JSON = "application/json"
+SVG = "image/svg+xml"
 CONTRACT_VERSION = "1.0.0"
 
 _OPTIONS = orjson.OPT_SERIALIZE_NUMPY
-
-
-class NotFinite(Exception):
-    """A result holds NaN or infinity at ``path``: a fault of the service, never an answer."""
-
-    def __init__(self, path: str) -> None:
-        super().__init__(f"not finite: {path}")
-        self.path = path
 
 
 def dumps(result: Any) -> bytes:

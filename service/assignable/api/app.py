@@ -34,8 +34,8 @@ def create_app(
 
     def failed(error: Exception) -> Response:
         problem = problems.of(error)
-        if problem.kind in (problems.INTERNAL, problems.NOT_READY):
-            log.failure(error.__cause__ or error, request.environ)
+        if (unforeseen := problems.unforeseen(error)) is not None:
+            log.failure(unforeseen, request.environ)
         return Response(
             problem.body(request.environ[REQUEST_ID]),
             status=problem.kind.status,

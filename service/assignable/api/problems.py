@@ -15,6 +15,7 @@ import orjson
 from marshmallow import ValidationError
 from werkzeug.exceptions import HTTPException
 
+from ..documents.canonical import NotFinite
 from ..spc.errors import DocumentMismatch, SpcError, UnusableData, UnusableParameter
 from .strict_json import BadJson
 
@@ -274,9 +275,28 @@ def of(error: Exception) -> Problem:
         return _listed(
             kind, (Entry(fault.code, fault.detail, pointer(fault.where)) for fault in error.faults)
         )
+    if isinstance(error, NotFinite):
+        return Problem(NOT_COMPUTABLE, _OUT_OF_SCALE, errors=(Entry("out-of-scale", _OUT_OF_SCALE, "#"),))
     if isinstance(error, HTTPException):
         return _of_http(error)
     return Problem(INTERNAL)
+
+
+_OUT_OF_SCALE = (
+    "A result cannot be represented as a number: the values are too large, too small, or too far apart. Check "
+    "their unit, and send them in one that keeps them nearer to 1."
+)
+
+
+def unforeseen(error: Exception) -> Exception | None:
+    """What went wrong where no layer expected it: something to be logged, whatever the caller is told."""
+    cause = error.__cause__
+    if isinstance(error, DocumentMismatch) and isinstance(cause, Exception):
+        return None if isinstance(cause, (SpcError, ValidationError)) else cause
+    if isinstance(error, NotFinite):
+        return error
+    kind = of(error).kind
+    return (cause if isinstance(cause, Exception) else error) if kind in (INTERNAL, NOT_READY) else None
 
 
 def _kind_of(entries: tuple[Entry | int, ...]) -> ProblemType:

@@ -16,7 +16,11 @@ UNSIGNED = ("digest", "seal")
 
 
 class NotFinite(Exception):
-    """A number of a document is NaN or infinite: a fault of the service, never a document."""
+    """A result holds NaN or infinity, at ``path`` where that is known: never an answer, never a document."""
+
+    def __init__(self, path: str = "$") -> None:
+        super().__init__(f"not finite: {path}")
+        self.path = path
 
 
 def plain(value: Any) -> Any:

@@ -30,7 +30,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .data import Booleans, Floats, Integers
-from .errors import UnusableParameter
+from .errors import DocumentMismatch, UnusableParameter
 
 Form = Literal["zone", "mixture", "stratification", "trend", "alternation"]
 Severity = Literal["action", "warning"]
@@ -252,6 +252,15 @@ class Tail:
     value: Annotated[tuple[float, ...], "As plotted, in the unit of the chart."] = ()
     z: Annotated[tuple[float, ...], "Signed distances from the centre line, in each point's own sigma."] = ()
     sigma: Annotated[tuple[float, ...], "Of each point, in the unit of the chart."] = ()
+
+    def __post_init__(self) -> None:
+        if not len(self.value) == len(self.z) == len(self.sigma) < LONGEST_WINDOW:
+            raise DocumentMismatch.of(
+                "carry-not-usable",
+                "The points that the carry remembers do not fit each other. Send the carry exactly as it was "
+                "received, or leave it out to start afresh.",
+                "carry",
+            )
 
 
 @dataclass(frozen=True, slots=True, eq=False)

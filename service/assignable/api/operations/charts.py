@@ -9,7 +9,6 @@ from functools import cache, lru_cache, partial
 from typing import Any
 
 import orjson
-from marshmallow import ValidationError
 
 from ...documents.limits import carry_document, check_carry, check_limits, limits_document, written
 from ...spc.charts import CHARTS, Chart
@@ -100,50 +99,54 @@ def _extend(base: Any, name: str, text: str, members: Mapping[str, Any]) -> Any:
     return type(name, (base,), {**members, "Meta": derive.meta(base, text)})
 
 
+class Kept(tuple[str, Any]):
+    """The digest and the limits of a document; beside them, what they are of."""
+
+    characteristic: Mapping[str, Any]
+
+    @classmethod
+    def of(cls, digest: str, limits: Any, characteristic: Mapping[str, Any]) -> Kept:
+        made = cls((digest, limits))
+        made.characteristic = characteristic
+        return made
+
+
 class LimitsField(f.Object):
     """A limits document, checked against its digest; documents seen lately are kept parsed."""
 
     def __init__(self, chart: Chart, shape: type[f.RequestShape], **kwargs: Any) -> None:
         super().__init__(shape, **kwargs)
 
-        @lru_cache(1024)
-        def opened(blob: bytes) -> tuple[str, Any]:
-            document = orjson.loads(blob)
-            try:
-                loaded = super(LimitsField, self)._deserialize(document, None, None)
-            except SpcError:  # no document of ours holds what its own objects refuse
-                check_limits(chart.name, document)
-                raise
-            check_limits(chart.name, document)
-            if document["seal"] is not None:
-                raise DocumentMismatch.of(
-                    "seal-not-known",
-                    "This server has no key to check the seal of these limits with.",
-                    "limits",
-                    "seal",
-                )
-            return document["digest"], loaded
-
-        self._opened = opened
         self._chart = chart
+        self._opened = lru_cache(1024)(lambda blob: self._open(orjson.loads(blob)))
 
     def _deserialize(  # type: ignore[override]
         self, value: Any, attr: str | None, data: Any, **kwargs: Any
     ) -> tuple[str, Any]:
-        if type(value) is dict:
-            named = value.get("chart")
-            if type(named) is str and named in CHARTS and named != self._chart.name:
-                check_limits(self._chart.name, value)
-            try:
-                blob = orjson.dumps(value)
-            except TypeError:  # what cannot be written again has faults, which the shape tells
-                super()._deserialize(value, attr, data, **kwargs)
-                raise ValidationError(
-                    problems.Coded("not-a-document", "This holds a number that no limits document holds.")
-                ) from None
-            return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._opened.__wrapped__(blob)
-        loaded: tuple[str, Any] = super()._deserialize(value, attr, data, **kwargs)
-        return loaded
+        named = value.get("chart") if type(value) is dict else None
+        if type(named) is str and named in CHARTS and named != self._chart.name:
+            check_limits(self._chart.name, value)
+        try:
+            blob = orjson.dumps(value)
+        except TypeError:  # half a character, or an integer beyond 64 bits
+            return self._open(value)
+        return self._opened(blob) if len(blob) <= LARGEST_KEPT else self._open(value)
+
+    def _open(self, document: Any) -> tuple[str, Any]:
+        try:
+            loaded = super()._deserialize(document, None, None)
+        except SpcError:  # no document of ours holds what its own objects refuse
+            check_limits(self._chart.name, document)
+            raise
+        check_limits(self._chart.name, document)
+        if document["seal"] is not None:
+            raise DocumentMismatch.of(
+                "seal-not-known",
+                "This server has no key to check the seal of these limits with.",
+                "limits",
+                "seal",
+            )
+        return Kept.of(document["digest"], loaded, document["characteristic"])
 
 
 class CarryField(f.Object):
@@ -354,10 +357,36 @@ def _besides(chart: Chart, judged: Any) -> dict[str, Any]:
     return {} if chart.details is None else {"details": judged.details}
 
 
+def fitted(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> Any:
+    """The chart's own result of a fit."""
+    posted = loaded.get("data")
+    return chart.fit(None if posted is None else takes.read(posted), takes.options(loaded))
+
+
+def judged(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> Any:
+    """The chart's own judgement of new data."""
+    digest, limits = loaded["limits"]
+    carry = None
+    if loaded["carry"] is not None:
+        document, carry = loaded["carry"]
+        check_carry(chart.name, digest, document)
+    data = takes.read(loaded["data"])
+    try:
+        return chart.judge(limits, data, carry)
+    except _ARITHMETIC as error:
+        # Documents of ours never lead here; one made by hand, with a digest of its own, may.
+        raise DocumentMismatch.of(
+            "document-not-usable",
+            "These limits, or this carry, hold numbers that the chart cannot be computed with. Send both exactly as "
+            "they were received, or fit new limits.",
+            "limits",
+        ) from error
+
+
 def fit(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, Any]:
     """Limits from a baseline, or from standards."""
     posted = loaded.get("data")
-    result = chart.fit(None if posted is None else takes.read(posted), takes.options(loaded))
+    result = fitted(chart, takes, loaded)
     baseline = result.baseline
     labels = {} if posted is None else labels_of(posted)
     return {
@@ -380,12 +409,8 @@ def fit(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, 
 
 def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, Any]:
     """New data under frozen limits."""
-    digest, limits = loaded["limits"]
-    carry = None
-    if loaded["carry"] is not None:
-        document, carry = loaded["carry"]
-        check_carry(chart.name, digest, document)
-    result = chart.judge(limits, takes.read(loaded["data"]), carry)
+    digest, _ = loaded["limits"]
+    result = judged(chart, takes, loaded)
     labels = labels_of(loaded["data"])
     return {
         "verdict": result.verdict,
@@ -397,6 +422,9 @@ def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str
         "carry": written(carry_document(chart.name, digest, result.carry)),
         "cautions": cautions(result.cautions),
     }
+
+
+_ARITHMETIC = (ArithmeticError, ValueError, IndexError, KeyError, TypeError, AssertionError, RuntimeWarning)
 
 
 # ---------------------------------------------------------------------------------------------------
