@@ -179,6 +179,22 @@ METHODS = (
         ),
     ),
     Method(
+        "individuals-from-distribution",
+        "Single values that are not normal",
+        "limits F^-1(Phi(+-k)) and rules on z = Phi^-1(F(x)) of a distribution fitted by maximum likelihood; moving "
+        "ranges by the distribution of the range of its values.",
+        ("individuals",),
+        ("iso-7870-2", "dagostino-stephens-1986", "hurvich-tsai-1989"),
+    ),
+    Method(
+        "estimated-limits",
+        "What limits from estimates deliver",
+        "mean, deviation and tenth percentile of the average run length over baselines; the multiple that holds one "
+        "with a stated confidence.",
+        ("xbar-r", "xbar-s", "individuals"),
+        ("jensen-2006", "gandy-kvaloy-2013"),
+    ),
+    Method(
         "change-point",
         "Steps of level and spread within a baseline",
         "largest likelihood ratio over all splits; p-value of the whole search by the normal scores' crossing rate.",
@@ -337,6 +353,15 @@ METHODS = (
         "of its lack of fit.",
         ("analyseBiasStudy",),
         ("aiag-msa-2010", "iso-22514-7-2021"),
+    ),
+    Method(
+        "release-check",
+        "Results of a batch against specification, guard band and own limits",
+        "value = result, or exact mean of replicates; rounded once to the decimals stated, halves up in magnitude or to "
+        "even; out of specification if value < L or value > U; in the guard band if the unrounded value < L + w or "
+        "> U - w, with w stated, r u, or from Phi(w/u) + Phi((U-L-w)/u) - 1 = 1 - risk.",
+        ("checkRelease",),
+        ("astm-e29", "iso-80000-1", "jcgm-106", "iso-14253-1"),
     ),
 )
 """Every method, in the order in which they are listed."""

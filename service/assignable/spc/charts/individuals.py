@@ -12,11 +12,13 @@ import numpy as np
 from .. import cautions as caution
 from .. import diagnostics
 from ..baseline import change_points, estimation, joint, screening
+from ..capability.nonnormal import DistributionChoice
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals
-from ..errors import UnusableData, UnusableParameter
+from ..errors import Fault, UnusableData, UnusableParameter
 from ..rules import Rule, Signal, Tail, watched
 from ..sigma import moving_range, moving_ranges
+from . import nonnormal
 from .common import (
     AT_THREE_SIGMA,
     NO_STANDARDS,
@@ -65,13 +67,16 @@ class IndividualsOptions:
     guarantee: estimation.Guarantee | None = None
     joint_false_alarm_probability: float | None = None
     screening: screening.Screening | None = None
+    distribution: str = "normal"
 
 
 @dataclass(frozen=True, slots=True)
 class IndividualsLimits:
     """The frozen parameters of a chart of single values."""
 
-    centre: Annotated[float, "Centre line of the values, in the unit of the characteristic."]
+    centre: Annotated[
+        float, "Mean of the values, in the unit of the characteristic; their centre line if they are normal."
+    ]
     sigma: Annotated[float, "Standard deviation of single values, from successive differences."]
     sigma_estimator: Annotated[str, "How sigma was estimated; `given` where it was a standard."]
     degrees_of_freedom: Annotated[
@@ -86,6 +91,10 @@ class IndividualsLimits:
     baseline: Annotated[
         BaselineRecord | None, "What the limits were computed from; null for standards alone."
     ]
+    distribution: Annotated[
+        nonnormal.FrozenDistribution | None,
+        "The distribution that the limits are quantiles of; null for the normal one, whose limits lie about the mean.",
+    ] = None
 
     @property
     def basis(self) -> LimitBasis:
@@ -125,6 +134,10 @@ class IndividualsDiagnostics:
     screening: Annotated[
         screening.Screened | None, "What automatic screening did; null where not asked for."
     ] = None
+    distribution: Annotated[
+        DistributionChoice | None,
+        "The distributions tried and the choice among them; null where the normal one was asked for.",
+    ] = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -137,6 +150,8 @@ class _Known:
     sigma: float
     estimator: str
     freedom: float | None
+    choice: DistributionChoice | None = None
+    shaped: nonnormal.Shaped | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -198,6 +213,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
     A guarantee sets the multiple. A joint false-alarm probability widens the limits (and replaces the rules)
     by which the baseline itself is judged and screened, and leaves the frozen limits as they are. Screening
     looks at the values alone: a wide moving range does not say which of its values is to blame.
+    With another distribution than the normal, named or ``auto``, see :mod:`.nonnormal`.
 
     Raises UnusableData for fewer than two values or no variation; UnusableParameter for options that
     do not fit. Source: [iso-7870-2], [astm-e2587].
@@ -207,6 +223,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
     if data is None:
         faults = standards_alone(given, options.exclude)
         faults += baseline_alone(options.guarantee, options.joint_false_alarm_probability, options.screening)
+        faults += _not_normal_faults(options, data=False)
         if faults:
             raise UnusableParameter(*faults)
         assert given.mean is not None
@@ -214,6 +231,8 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
         limits = _limits(options, rules, _Known(np.empty(0), 0, given.mean, given.sigma, "given", None), None)
         return IndividualsFit(limits, None, None, mean_performance(rules, basis, 1.0, None), ())
 
+    if faults := _not_normal_faults(options, data=True):
+        raise UnusableParameter(*faults)
     values = data.values
     kept = exclusion_mask(len(values), options.exclude)
     screened = None
@@ -238,25 +257,32 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
         change_points.of_values(used),
         judged_by,
         screened,
+        known.choice,
     )
-    delivered = estimation.performance(
-        filled,
-        known.freedom,
-        basis.multiple,
-        centre_known=given.mean is not None,
-        guarantee=options.guarantee,
-    )
+    performance = mean_performance(rules, basis, 1.0, None)
+    if known.shaped is None:
+        delivered = estimation.performance(
+            filled,
+            known.freedom,
+            basis.multiple,
+            centre_known=given.mean is not None,
+            guarantee=options.guarantee,
+        )
+        performance = replace(performance, estimated=delivered)
+    else:
+        performance = replace(performance, shift_unit="normal scores of the fitted distribution")
     return IndividualsFit(
         limits,
         Baseline(
             seen.verdict, ValueMovingRange(plots[0].panel(), plots[1].panel()), seen.signals, seen.found
         ),
         found,
-        replace(mean_performance(rules, basis, 1.0, None), estimated=delivered),
+        performance,
         caution.collect(
             caution.few_individuals(filled),
             caution.autocorrelated(found.autocorrelation),
-            caution.not_normal(found.normality),
+            caution.not_normal(found.normality) if known.shaped is None else None,
+            *nonnormal.cautions(known.choice, filled),
             caution.coarse_resolution(found.resolution),
             change_points.caution_of_level(found.change_point),
             change_points.caution_of_spread(found.change_point),
@@ -286,7 +312,44 @@ def _estimate(values: Floats, kept: Booleans | None, options: IndividualsOptions
         "median" if options.sigma_estimator == "median-moving-range" else "mean"
     )
     found = moving_range(used, span=options.span, statistic=statistic)
-    return _Known(used, filled, mean, found.sigma, found.estimator, found.degrees_of_freedom)
+    choice = shaped = None
+    if options.distribution != "normal":
+        choice, shaped = nonnormal.shaped(used, options.distribution, options.basis, options.span)
+    return _Known(used, filled, mean, found.sigma, found.estimator, found.degrees_of_freedom, choice, shaped)
+
+
+def _not_normal_faults(options: IndividualsOptions, *, data: bool) -> list[Fault]:
+    """The faults of asking for what limits of another distribution than the normal cannot have."""
+    if options.distribution == "normal":
+        return []
+    faults = []
+    if not data:
+        faults.append(
+            Fault(
+                "data-missing",
+                "A distribution is fitted to a baseline, and there is none.",
+                ("distribution",),
+            )
+        )
+    for name, asked, where in (
+        ("A known mean", options.standards.mean, ("standards", "mean")),
+        ("A known sigma", options.standards.sigma, ("standards", "sigma")),
+        ("A guarantee", options.guarantee, ("guarantee",)),
+        (
+            "A joint false-alarm probability",
+            options.joint_false_alarm_probability,
+            ("joint_false_alarm_probability",),
+        ),
+    ):
+        if asked is not None:
+            faults.append(
+                Fault(
+                    "normal-alone",
+                    f"{name} is for limits of normal values; leave it out, or ask for the normal distribution.",
+                    where,
+                )
+            )
+    return faults
 
 
 def _guaranteed(known: _Known, options: IndividualsOptions) -> LimitBasis:
@@ -304,6 +367,11 @@ def _judged(
     span = options.span
     ranges = moving_ranges(known.used, span)
     probability = options.joint_false_alarm_probability
+    if known.shaped is not None:
+        shape = known.shaped
+        return nonnormal.shaped_plots(
+            values, ranges, shape.distribution, shape.value, shape.moving_range, known.sigma
+        ), None
     if probability is None:
         return individual_plots(values, ranges, known.mean, known.sigma, span, basis), None
     limits = joint.of_values(
@@ -348,7 +416,12 @@ def _limits(
     if not (math.isfinite(centre) and math.isfinite(sigma) and sigma > 0):
         raise UnusableData.of("out-of-scale", "The spread of the values cannot be represented.", "data")
     basis, nothing = options.basis, np.empty(0)
-    plots = individual_plots(nothing, nothing, centre, sigma, options.span, basis)
+    if known.shaped is None:
+        plots = individual_plots(nothing, nothing, centre, sigma, options.span, basis)
+        panels, distribution = ValueMovingRange(plots[0].limits(), plots[1].limits()), None
+    else:
+        panels = ValueMovingRange(known.shaped.value, known.shaped.moving_range)
+        distribution = known.shaped.distribution
     return IndividualsLimits(
         centre,
         sigma,
@@ -358,9 +431,10 @@ def _limits(
         basis.limit_basis,
         basis.sigma_multiple,
         basis.false_alarm_probability,
-        ValueMovingRange(plots[0].limits(), plots[1].limits()),
+        panels,
         rules,
         record,
+        distribution,
     )
 
 
@@ -375,7 +449,13 @@ def judge(
     values, recent = data.values, before.recent
     series = np.concatenate((recent, values)) if recent else values
     ranges = moving_ranges(series, limits.span)[len(recent) :]
-    plots = individual_plots(values, ranges, limits.centre, limits.sigma, limits.span, limits.basis)
+    if limits.distribution is None:
+        plots = individual_plots(values, ranges, limits.centre, limits.sigma, limits.span, limits.basis)
+    else:
+        lines = limits.panels
+        plots = nonnormal.shaped_plots(
+            values, ranges, limits.distribution, lines.value, lines.moving_range, limits.sigma
+        )
     seen, tail = _watch(plots, limits.rules, before.value, None)
     return IndividualsJudgement(
         seen.verdict,

@@ -6,6 +6,7 @@ from typing import Any
 
 from ....spc.charts.common import Standards
 from ....spc.charts.individuals import IndividualsOptions
+from ....spc.charts.nonnormal import NAMES
 from ....spc.data import Individuals
 from ....spc.errors import UnusableData
 from ....spc.sigma import LARGEST_SPAN
@@ -63,6 +64,16 @@ class IndividualsFit(StudyRequest):
         load_default=2,
         metadata={"description": "Successive values in a moving range; 2 unless given."},
     )
+    distribution = f.Choice(
+        *NAMES,
+        "auto",
+        load_default="normal",
+        metadata={
+            "description": "`normal` unless given. Another: limits are its quantiles, fitted by maximum likelihood, at "
+            "the false-alarm probability of the limits chosen. `auto`: chosen by AICc among those that the "
+            "Anderson-Darling test does not reject; the answer tells every one tried."
+        },
+    )
     standards = f.Object(StandardsRequest, metadata={"description": "Values known in advance."})
 
 
@@ -78,6 +89,7 @@ def individuals_options(loaded: dict[str, Any]) -> IndividualsOptions:
         guarantee(loaded),
         loaded.get("joint_false_alarm_probability"),
         screening(loaded),
+        loaded["distribution"],
     )
 
 
