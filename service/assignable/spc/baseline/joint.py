@@ -36,6 +36,7 @@ from ..errors import UnusableParameter
 from ..factors import c4, c4_of_freedom, d2, gauss_legendre, range_sf
 
 _NODES = 48
+_FARTHEST = 1e4
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,7 +77,7 @@ def of_subgroups(
     def location(multiple: float) -> float:
         return _all_within(2.0 * scipy.special.ndtr(-multiple * inflated * ratio), m, weight)
 
-    multiple = _solve(location, goal, 0.1, 60.0)
+    multiple = _solve(location, goal, 0.01, 60.0)
     centre = d2(size) if spread == "range" else c4(size)
     others, weight = _sigma_ratios(None if freedom is None else freedom * (m - 1) / m)
 
@@ -88,7 +89,7 @@ def of_subgroups(
             return 1.0
         return _all_within(_beyond_spread(apart * others, size, spread), m, weight)
 
-    line = _solve(spreads, goal, centre, centre + 40.0)
+    line = _solve(spreads, goal, 0.01, centre + 40.0)
     tail = float(_beyond_spread(np.array([line]), size, spread)[0])
     return JointLimits(probability, m, multiple, tail)
 
@@ -103,10 +104,8 @@ def of_values(
     value far out by d adds about d to each of the ``span`` ranges that hold it. Raises UnusableParameter
     for too few values.
     """
-    m = _enough(points)
-    ranges = m - span + 1
-    if ranges < 3:
-        _enough(2)
+    m = points
+    ranges = _enough(m - span + 1)
     goal = _goal(probability)
     inflated = math.sqrt(m / (m - 1))
     expected = d2(span)
@@ -131,15 +130,15 @@ def of_values(
             apart = line * (ranges - 1) / ranges / left
         return _all_within(_beyond_spread(apart * ratio, span, "range"), ranges, weight)
 
-    line = _solve(spreads, goal, expected, expected + 40.0)
-    return JointLimits(probability, m, _solve(location, goal, 0.1, 60.0), range_sf(line, span))
+    line = _solve(spreads, goal, 0.01, expected + 40.0)
+    return JointLimits(probability, m, _solve(location, goal, 0.01, 60.0), range_sf(line, span))
 
 
 def _enough(points: int) -> int:
     if points < 3:
         raise UnusableParameter.of(
             "too-few-points",
-            "A joint false-alarm probability needs a baseline of three points or more.",
+            "A joint false-alarm probability needs a baseline of three subgroups, or three moving ranges, or more.",
             "joint_false_alarm_probability",
         )
     return points
@@ -188,7 +187,17 @@ def _without_own(line: float, centre: float, m: int, estimator: str, freedom: fl
 
 def _solve(quiet: Callable[[float], float], goal: float, low: float, high: float) -> float:
     """Where a panel is quiet with the logarithm of probability ``goal``; ``quiet`` rises with the line."""
-    found: float = scipy.optimize.brentq(
-        lambda line: math.log(max(quiet(line), 1e-300)) - goal, low, high, xtol=1e-10, maxiter=200
-    )
+
+    def miss(line: float) -> float:
+        return math.log(max(quiet(line), 1e-300)) - goal
+
+    while miss(high) <= 0.0:
+        low, high = high, 2.0 * high
+        if high > _FARTHEST:
+            raise UnusableParameter.of(
+                "no-such-limits",
+                "This baseline is too small: no usable limits have so small a joint false-alarm probability.",
+                "joint_false_alarm_probability",
+            )
+    found: float = scipy.optimize.brentq(miss, low, high, xtol=1e-10, maxiter=200)
     return found

@@ -480,7 +480,8 @@ CHARTS = (
         title="Single values and moving ranges",
         purpose="Watches a measured characteristic of which only one value comes at a time.",
         takes="Single values in time order.",
-        beware="Values that depend on their neighbours, or are far from normal, give wrong limits: heed the cautions.",
+        beware="Values that depend on their neighbours give wrong limits, and so do values far from normal unless a "
+        "`distribution` is asked for: heed the cautions.",
         panels=("value", "moving_range"),
         references=("iso-7870-2", "astm-e2587"),
         fit=fit,
