@@ -71,6 +71,39 @@ def test_limits_are_the_quantiles_of_scipys_own_fit(name: str, law: object) -> N
     )
 
 
+# Endurance of 23 deep-groove ball bearings, millions of revolutions (Lieblein & Zelen 1956): open data, from memory.
+BEARINGS = """17.88 28.92 33.00 41.52 42.12 45.60 48.48 51.84 51.96 54.12 55.56 67.80 68.64 68.64 68.88 84.12 93.12
+98.64 105.12 105.84 127.92 128.04 173.40"""
+
+
+def test_ball_bearings() -> None:
+    x = np.array(BEARINGS.split(), dtype=float)
+    weibull = _fit(x, distribution="weibull").limits
+    assert weibull.distribution is not None
+    told = {one.name: one.value for one in weibull.distribution.parameters}
+    # Shape 2.10, scale 81.9 (Thoman, Bain & Antle 1969; Lawless 2003; from memory).
+    assert told["shape"] == pytest.approx(2.10, abs=0.005)
+    assert told["scale"] == pytest.approx(81.9, abs=0.05)
+    # By hand: the quantiles of that distribution.
+    assert weibull.panels.value.upper == pytest.approx(
+        told["scale"] * (-math.log(TAIL)) ** (1 / told["shape"]), rel=1e-9
+    )
+    lognormal = _fit(x, distribution="lognormal").limits
+    assert lognormal.distribution is not None
+    told = {one.name: one.value for one in lognormal.distribution.parameters}
+    # Mean 4.15, deviation 0.522 of the logarithms (Lawless 2003; from memory).
+    assert told["log-mean"] == pytest.approx(4.15, abs=0.005)
+    assert told["log-sd"] == pytest.approx(0.522, abs=0.0005)
+    chosen = _fit(x, distribution="auto")
+    assert chosen.diagnostics is not None
+    assert chosen.diagnostics.distribution is not None
+    criteria = {one.distribution: one.aicc for one in chosen.diagnostics.distribution.candidates}
+    # Log-likelihoods -113.691 (Weibull) and -113.128 (lognormal) (Lawless 2003; from memory).
+    small = 4 + 12 / 20
+    assert criteria["weibull"] == pytest.approx(2 * 113.691 + small, abs=0.002)
+    assert criteria["lognormal"] == pytest.approx(2 * 113.128 + small, abs=0.005)
+
+
 def test_probability_limits_and_longer_spans() -> None:
     x = np.random.default_rng(5).weibull(1.4, 90)
     found = _fit(x, distribution="weibull", basis=LimitBasis("probability", None, 0.01), span=4)

@@ -281,7 +281,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
         caution.collect(
             caution.few_individuals(filled),
             caution.autocorrelated(found.autocorrelation),
-            caution.not_normal(found.normality) if known.shaped is None else None,
+            _not_normal(found) if known.shaped is None else None,
             *nonnormal.cautions(known.choice, filled),
             caution.coarse_resolution(found.resolution),
             change_points.caution_of_level(found.change_point),
@@ -316,6 +316,15 @@ def _estimate(values: Floats, kept: Booleans | None, options: IndividualsOptions
     if options.distribution != "normal":
         choice, shaped = nonnormal.shaped(used, options.distribution, options.basis, options.span)
     return _Known(used, filled, mean, found.sigma, found.estimator, found.degrees_of_freedom, choice, shaped)
+
+
+def _not_normal(found: IndividualsDiagnostics) -> Caution | None:
+    told = caution.not_normal(found.normality)
+    if told is None:
+        return None
+    return replace(
+        told, sentence=f"{told.sentence} In the latter case ask for limits from a fitted `distribution`."
+    )
 
 
 def _not_normal_faults(options: IndividualsOptions, *, data: bool) -> list[Fault]:
