@@ -269,6 +269,13 @@ def test_with_more_data_the_guarantee_costs_less() -> None:
     assert multiples[-1] == pytest.approx(3.0, abs=0.02)
 
 
+def test_a_guarantee_no_baseline_so_small_can_give() -> None:
+    with pytest.raises(UnusableParameter) as error:
+        estimation.multiple_of(estimation.Guarantee(370.0, 0.99), 2, 1.0, centre_known=False)
+    assert error.value.faults[0].code == "no-such-multiple"
+    assert error.value.faults[0].where[0] == "guarantee"
+
+
 def test_what_is_known_is_not_estimated() -> None:
     x = Individuals(np.random.default_rng(0).normal(0.0, 1.0, 30))
     both = individuals.fit(x, individuals.IndividualsOptions(standards=Standards(0.0, 1.0)))

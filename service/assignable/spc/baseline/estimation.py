@@ -16,6 +16,8 @@ from ..runlength import estimated
 # As good as known: the largest that the numerics take.
 _KNOWN_CENTRE, _KNOWN_SIGMA = 1e9, 1e12
 _TENTH = 0.1
+LARGEST_MULTIPLE = 100.0
+"""Limits farther out watch nothing."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,7 +89,7 @@ def _performance(
 def multiple_of(guarantee: Guarantee, points: int, freedom: float | None, *, centre_known: bool) -> float:
     """The multiple at which the average run length is as guaranteed, ``points`` and ``freedom`` as above.
 
-    Raises UnusableParameter where nothing was estimated, or no multiple up to 1e6 does.
+    Raises UnusableParameter where nothing was estimated, or no multiple up to 100 does.
     """
     if centre_known and freedom is None:
         raise UnusableParameter.of(
@@ -100,8 +102,16 @@ def multiple_of(guarantee: Guarantee, points: int, freedom: float | None, *, cen
         _KNOWN_SIGMA if freedom is None else max(freedom, 0.1),
     )
     try:
-        return estimated.guaranteed_multiple(known_by, guarantee.in_control_arl, guarantee.confidence)
+        found = estimated.guaranteed_multiple(known_by, guarantee.in_control_arl, guarantee.confidence)
     except UnusableParameter as error:
         raise UnusableParameter(
             *(Fault(fault.code, fault.detail, ("guarantee", *fault.where)) for fault in error.faults)
         ) from None
+    if found > LARGEST_MULTIPLE:
+        raise UnusableParameter.of(
+            "no-such-multiple",
+            f"The baseline is too small: the guarantee would need limits {found:.3g} sigma out. Give more data, or "
+            "ask for less.",
+            "guarantee",
+        )
+    return found
