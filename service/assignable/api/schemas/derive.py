@@ -6,6 +6,7 @@ loads such an object back from what a caller kept. Descriptions come from ``Anno
 
 from __future__ import annotations
 
+import math
 import types
 from collections.abc import Callable, Mapping
 from dataclasses import fields, is_dataclass
@@ -166,7 +167,7 @@ def _field(hint: Any, given: dict[Any, Any], nested: Callable[[Any], Any], loadi
     if hint is float:
         return f.StrictNumber(**bounds, **options_)
     if hint is int:
-        return f.StrictInteger(**bounds, **options_)
+        return f.StrictInteger(**_whole(bounds), **options_)
     if hint is bool:
         return f.StrictBoolean(**options_)
     if hint is str:
@@ -190,6 +191,16 @@ def _field(hint: Any, given: dict[Any, Any], nested: Callable[[Any], Any], loadi
 def _bounds(bound: Bound) -> dict[str, Any]:
     given = {name: getattr(bound, name) for name in ("least", "most", "above", "below")}
     return {name: value for name, value in given.items() if value is not None}
+
+
+def _whole(bounds: dict[str, Any]) -> dict[str, int]:
+    """The same range of whole numbers, both ends inside."""
+    whole = {name: int(value) for name, value in bounds.items() if name in ("least", "most")}
+    if "above" in bounds:
+        whole["least"] = math.floor(bounds["above"]) + 1
+    if "below" in bounds:
+        whole["most"] = math.ceil(bounds["below"]) - 1
+    return whole
 
 
 def _bound(hint: Any, given: dict[Any, Any]) -> Any:

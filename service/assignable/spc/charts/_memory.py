@@ -17,6 +17,7 @@ import numpy as np
 from .. import cautions as caution
 from .. import diagnostics
 from ..baseline import change_points
+from ..bounds import POSITIVE, SIGMA, SIZE
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..design.memory import SMALLEST_SHIFT
@@ -75,13 +76,15 @@ class Parameters:
     """The mean and sigma that a chart with memory stands on."""
 
     centre: Annotated[float, "In-control mean, or target, in the unit of the characteristic."]
-    sigma: Annotated[float, "Standard deviation of single values, in the unit of the characteristic."]
+    sigma: Annotated[float, "Standard deviation of single values, in the unit of the characteristic.", SIGMA]
     sigma_estimator: Annotated[str, "How sigma was estimated; `given` where it was a standard."]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of sigma; null where it was a standard."
+        float | None, "Effective degrees of freedom of sigma; null where it was a standard.", POSITIVE
     ]
     subgroup_size: Annotated[
-        int | None, "Values behind a point, 1 for single values; null where the baseline's points differ."
+        int | None,
+        "Values behind a point, 1 for single values; null where the baseline's points differ.",
+        SIZE,
     ]
     baseline: Annotated[
         BaselineRecord | None, "What the limits were computed from; null for standards alone."

@@ -18,6 +18,7 @@ import scipy
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..bounds import MULTIPLE, POSITIVE, SIGMA
 from ..capability.specification import Specification
 from ..cautions import Caution
 from ..data import Booleans, Floats, Subgroups, SubgroupStatistics, SubgroupSummary
@@ -110,7 +111,7 @@ class OperatingPoint:
 class AcceptanceLimits:
     """The frozen parameters of an ``acceptance`` chart."""
 
-    sample_size: Annotated[int, "n, the values of a subgroup that the limits and risks are for."]
+    sample_size: Annotated[int, "n, the values of a subgroup that the limits and risks are for.", POSITIVE]
     exact_sample_size: Annotated[float, "The n, not whole, at which both risks would be met exactly."]
     lower: Annotated[SideLevels | None, "Levels at the lower specification limit; null where there is none."]
     upper: Annotated[SideLevels | None, "Levels at the upper specification limit; null where there is none."]
@@ -124,13 +125,15 @@ class AcceptanceLimits:
         "From inside the acceptable level to beyond the rejectable one, at the upper limit, or the lower where it is "
         "the only one; between two limits the other side mirrors it.",
     ]
-    sigma: Annotated[float, "Within-subgroup standard deviation, in the unit of the characteristic."]
+    sigma: Annotated[float, "Within-subgroup standard deviation, in the unit of the characteristic.", SIGMA]
     sigma_estimator: Annotated[str, "How sigma was estimated; `given` where it was a standard."]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of sigma; null where it was a standard."
+        float | None, "Effective degrees of freedom of sigma; null where it was a standard.", POSITIVE
     ]
     within_statistic: Annotated[Literal["range", "sd"], "What the panel of the spread within plots."]
-    sigma_multiple: Annotated[float, "The limits of the spread lie this many of its standard deviations out."]
+    sigma_multiple: Annotated[
+        float, "The limits of the spread lie this many of its standard deviations out.", MULTIPLE
+    ]
     panels: Annotated[AcceptancePanels[PanelLimits], "The lines of each panel, for n."]
     baseline: Annotated[BaselineRecord | None, "What sigma was computed from; null for a standard alone."]
 

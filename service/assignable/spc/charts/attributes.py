@@ -17,6 +17,7 @@ import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..bounds import MULTIPLE, POSITIVE, PROBABILITY
 from ..cautions import Caution
 from ..data import Counts, Floats
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -102,11 +103,14 @@ class AttributeLimits(Generic[P]):
         float | None,
         "Units inspected, or area of opportunity, of every sample; null where the limits follow each "
         "sample's own.",
+        POSITIVE,
     ]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
-    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
+    sigma_multiple: Annotated[
+        float | None, "Limits lie this many sigma out; null under `probability`.", MULTIPLE
+    ]
     false_alarm_probability: Annotated[
-        float | None, "At most this, half beyond each limit; null under `sigma`."
+        float | None, "At most this, half beyond each limit; null under `sigma`.", PROBABILITY
     ]
     panels: Annotated[P, "The lines of the panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]

@@ -16,6 +16,7 @@ import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIZE
 from ..cautions import Caution
 from ..components import VarianceComponents, components
 from ..data import Booleans, Floats, Integers, Subgroups, SubgroupStatistics, SubgroupSummary
@@ -107,18 +108,23 @@ class BetweenWithinLimits:
         float | None, "Effective degrees of freedom of the deviation of means; null where it was a standard."
     ]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of sigma within; null where it was a standard."
+        float | None, "Effective degrees of freedom of sigma within; null where it was a standard.", POSITIVE
     ]
-    span: Annotated[int, "How many successive means a moving range spans."]
+    span: Annotated[int, "How many successive means a moving range spans.", SIZE]
     within_statistic: Annotated[Literal["range", "sd"], "What the panel of the spread within plots."]
     subgroup_size: Annotated[
         int | None,
         "The commonest size, which the lines within are for; those of a subgroup of another size follow its own. "
         "Null where no subgroup holds two values.",
+        SIZE,
     ]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
-    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
-    false_alarm_probability: Annotated[float | None, "Of each panel and point; null under `sigma`."]
+    sigma_multiple: Annotated[
+        float | None, "Limits lie this many sigma out; null under `probability`.", MULTIPLE
+    ]
+    false_alarm_probability: Annotated[
+        float | None, "Of each panel and point; null under `sigma`.", PROBABILITY
+    ]
     panels: Annotated[BetweenWithinPanels[PanelLimits], "The lines of each panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
     baseline: Annotated[

@@ -20,6 +20,7 @@ from typing import Annotated, Generic, Literal, TypeVar
 import numpy as np
 
 from .. import factors
+from ..bounds import NOT_NEGATIVE, POSITIVE
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals, Integers, SubgroupStatistics
 from ..design import memory as design
@@ -94,8 +95,8 @@ class CusumOptions:
 class CusumLimits(Parameters):
     """The frozen parameters of a CUSUM chart."""
 
-    reference: Annotated[float, "Reference value k, in standard deviations of a point."]
-    decision: Annotated[float, "Decision interval h, in standard deviations of a point."]
+    reference: Annotated[float, "Reference value k, in standard deviations of a point.", NOT_NEGATIVE]
+    decision: Annotated[float, "Decision interval h, in standard deviations of a point.", POSITIVE]
     head_start: Annotated[float, "Where the sums start, as a fraction of the decision interval."]
     after_signal: Annotated[
         AfterSignal,

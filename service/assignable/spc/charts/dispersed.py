@@ -18,6 +18,7 @@ import numpy as np
 
 from .. import cautions as caution
 from .. import diagnostics, runlength
+from ..bounds import MULTIPLE, POSITIVE, SIGMA
 from ..cautions import Caution
 from ..data import Counts, Floats
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -93,20 +94,22 @@ class DispersedLimits(Generic[P]):
         float,
         "Standard deviation of the standardised points: 1 where chance alone makes the counts vary, more under "
         "over-dispersion, less under under-dispersion.",
+        SIGMA,
     ]
     sigma_z_source: Annotated[
         Literal["estimated", "given"], "Whether `sigma_z` is an estimate or a standard."
     ]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of `sigma_z`; null where it was a standard."
+        float | None, "Effective degrees of freedom of `sigma_z`; null where it was a standard.", POSITIVE
     ]
     sample_size: Annotated[
         float | None,
         "Units inspected, or area of opportunity, of every sample; null where the limits follow each "
         "sample's own.",
+        POSITIVE,
     ]
     sigma_multiple: Annotated[
-        float, "Limits lie this many times `sigma_z` times the binomial or Poisson deviation out."
+        float, "Limits lie this many times `sigma_z` times the binomial or Poisson deviation out.", MULTIPLE
     ]
     panels: Annotated[P, "The lines of the panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]

@@ -15,6 +15,7 @@ from typing import Annotated, Generic, Literal, TypeVar
 import numpy as np
 import scipy
 
+from ..bounds import MULTIPLE, WEIGHT
 from ..cautions import Caution
 from ..data import SubgroupStatistics
 from ..design import memory as design
@@ -76,8 +77,8 @@ class EwmaOptions:
 class EwmaLimits(Parameters):
     """The frozen parameters of an EWMA chart."""
 
-    smoothing: Annotated[float, "Weight of the newest point, λ."]
-    limit: Annotated[float, "Limits lie this many standard deviations of the average out, L."]
+    smoothing: Annotated[float, "Weight of the newest point, λ.", WEIGHT]
+    limit: Annotated[float, "Limits lie this many standard deviations of the average out, L.", MULTIPLE]
     limit_variance: Annotated[
         Variance,
         "`time-varying`: the exact variance of each average since the start. `asymptotic`: the variance it settles at.",

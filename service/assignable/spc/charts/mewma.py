@@ -14,6 +14,7 @@ from typing import Annotated, Generic, Literal, TypeVar
 import numpy as np
 import scipy
 
+from ..bounds import MULTIPLE, POSITIVE, SIZE, WEIGHT
 from ..cautions import Caution
 from ..data import Booleans, Floats, Vectors
 from ..errors import UnusableData, UnusableParameter
@@ -103,16 +104,18 @@ class MewmaLimits:
         "How the covariance was estimated; `given` where it was a standard.",
     ]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of the covariance; null where it was a standard."
+        float | None,
+        "Effective degrees of freedom of the covariance; null where it was a standard.",
+        POSITIVE,
     ]
-    subgroup_size: Annotated[int, "Pieces in a subgroup; 1 for single observations."]
-    smoothing: Annotated[float, "Weight of the newest point, λ."]
+    subgroup_size: Annotated[int, "Pieces in a subgroup; 1 for single observations.", SIZE]
+    smoothing: Annotated[float, "Weight of the newest point, λ.", WEIGHT]
     limit_covariance: Annotated[
         Covariance,
         "`time-varying`: the exact covariance of each smoothed vector since the start. `asymptotic`: the one "
         "it settles at.",
     ]
-    limit: Annotated[float, "The upper limit h."]
+    limit: Annotated[float, "The upper limit h.", MULTIPLE]
     panels: Annotated[MewmaPanels[PanelLimits], "The lines. The centre is the mean of the statistic."]
     baseline: Annotated[
         BaselineRecord | None, "What the limits were computed from; null for standards alone."

@@ -15,6 +15,7 @@ from typing import Annotated, Generic, TypeVar
 import numpy as np
 
 from .. import runlength
+from ..bounds import MULTIPLE, SIZE
 from ..cautions import Caution
 from ..data import Floats, SubgroupStatistics
 from ..errors import UnusableData
@@ -72,8 +73,8 @@ class MovingAverageOptions:
 class MovingAverageLimits(Parameters):
     """The frozen parameters of a chart of moving averages."""
 
-    span: Annotated[int, "Points in a full window."]
-    sigma_multiple: Annotated[float, "Limits lie this many standard deviations of the average out."]
+    span: Annotated[int, "Points in a full window.", SIZE]
+    sigma_multiple: Annotated[float, "Limits lie this many standard deviations of the average out.", MULTIPLE]
     panels: Annotated[
         MovingAveragePanels[PanelLimits], "The lines of a full window; null where sizes differ."
     ]

@@ -14,6 +14,7 @@ from typing import Annotated, Generic, Literal, TypeVar
 import numpy as np
 import scipy
 
+from ..bounds import POSITIVE, PROBABILITY, SIZE
 from ..cautions import Caution
 from ..data import Floats, Vectors
 from ..errors import Fault, UnusableParameter
@@ -95,10 +96,12 @@ class TSquaredLimits:
         "How the covariance was estimated; `given` where it was a standard.",
     ]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of the covariance; null where it was a standard."
+        float | None,
+        "Effective degrees of freedom of the covariance; null where it was a standard.",
+        POSITIVE,
     ]
-    subgroup_size: Annotated[int, "Pieces in a subgroup; 1 for single observations."]
-    false_alarm_probability: Annotated[float, "That a point in control lies beyond its limit."]
+    subgroup_size: Annotated[int, "Pieces in a subgroup; 1 for single observations.", SIZE]
+    false_alarm_probability: Annotated[float, "That a point in control lies beyond its limit.", PROBABILITY]
     baseline_upper: Annotated[
         float | None,
         "Limit of the points the estimates rest on; null where it follows each point's position, and without "

@@ -24,6 +24,7 @@ import scipy
 
 from .. import cautions as caution
 from .. import diagnostics, runlength
+from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, WEIGHT
 from ..cautions import Caution
 from ..data import Booleans, Floats, Intervals
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -172,7 +173,7 @@ class OpportunityLimits:
     """The frozen parameters of a ``g`` chart."""
 
     mean: Annotated[float, "Mean number of opportunities between events, counted from `starts_at`."]
-    event_probability: Annotated[float, "Probability of an event at an opportunity."]
+    event_probability: Annotated[float, "Probability of an event at an opportunity.", WEIGHT]
     estimator: Annotated[
         Literal["maximum-likelihood", "unbiased", "given"],
         "How the probability was estimated. `maximum-likelihood`: 1/(1 + ȳ) of the n intervals y counted from "
@@ -181,9 +182,11 @@ class OpportunityLimits:
     ]
     starts_at: Annotated[int, "The smallest possible interval: that of two events in a row."]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
-    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
+    sigma_multiple: Annotated[
+        float | None, "Limits lie this many sigma out; null under `probability`.", MULTIPLE
+    ]
     false_alarm_probability: Annotated[
-        float | None, "At most this, half beyond each limit; null under `sigma`."
+        float | None, "At most this, half beyond each limit; null under `sigma`.", PROBABILITY
     ]
     panels: Annotated[BetweenEvents[PanelLimits], "The lines of the panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
@@ -529,12 +532,13 @@ class TimeLimits:
         float,
         "Shape of the Weibull distribution: 1 is the exponential one (events at a constant rate), below 1 events "
         "come in clusters, above 1 they keep a distance.",
+        POSITIVE,
     ]
     shape_source: Annotated[
         Literal["maximum-likelihood", "given", "exponential"], "Where the shape comes from."
     ]
-    scale: Annotated[float, "Scale of the distribution: 63.2 % of the times are shorter."]
-    false_alarm_probability: Annotated[float, "Of a point in control, half beyond each limit."]
+    scale: Annotated[float, "Scale of the distribution: 63.2 % of the times are shorter.", SIGMA]
+    false_alarm_probability: Annotated[float, "Of a point in control, half beyond each limit.", PROBABILITY]
     panels: Annotated[BetweenEvents[PanelLimits], "The lines of the panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
     baseline: Annotated[

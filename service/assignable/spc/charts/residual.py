@@ -17,6 +17,7 @@ import scipy
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA
 from ..cautions import Caution
 from ..data import Floats, Individuals
 from ..errors import Fault, SpcError, UnusableData, UnusableParameter
@@ -92,15 +93,17 @@ class ResidualLimits:
     order: Annotated[int, "p: how many values before each the model looks at."]
     mean: Annotated[float, "Mean of the process, in the unit of the characteristic."]
     coefficients: Annotated[tuple[float, ...], "φ₁ … φₚ, the nearest value first."]
-    sigma: Annotated[float, "Standard deviation of the residuals, in the unit of the characteristic."]
+    sigma: Annotated[float, "Standard deviation of the residuals, in the unit of the characteristic.", SIGMA]
     process_sigma: Annotated[
         float, "Standard deviation of the values themselves that the model leads to, in the same unit."
     ]
     source: Annotated[Literal["estimated", "given"], "Whether the model is an estimate or was known."]
-    degrees_of_freedom: Annotated[float | None, "Of sigma; null where the model was known."]
+    degrees_of_freedom: Annotated[float | None, "Of sigma; null where the model was known.", POSITIVE]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
-    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
-    false_alarm_probability: Annotated[float | None, "Of each point; null under `sigma`."]
+    sigma_multiple: Annotated[
+        float | None, "Limits lie this many sigma out; null under `probability`.", MULTIPLE
+    ]
+    false_alarm_probability: Annotated[float | None, "Of each point; null under `sigma`.", PROBABILITY]
     panels: Annotated[ResidualLines, "The lines of the panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
     baseline: Annotated[

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, SIZE
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals, Integers, Subgroups, SubgroupStatistics
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -118,24 +119,32 @@ class ShortRunLimits:
     scale: Annotated[
         Scale,
         "`deviation`: from target, in the unit. `standardised`: the deviation over the part's sigma, no unit.",
+        SIGMA,
     ]
     form: Annotated[Form, "Whether a point is a single value or a subgroup."]
     centre: Annotated[float, "Centre line of the level, in what the level is plotted in."]
-    sigma: Annotated[float, "Standard deviation of a single plotted value; 1 where standardised."]
+    sigma: Annotated[float, "Standard deviation of a single plotted value; 1 where standardised.", SIGMA]
     sigma_estimator: Annotated[
         str, "How sigma was estimated; `given` where known, `of-each-part` where standardised."
     ]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of the common sigma; null where given or of each part."
+        float | None,
+        "Effective degrees of freedom of the common sigma; null where given or of each part.",
+        POSITIVE,
     ]
     parts: Annotated[tuple[Part, ...], "The parts that have a target."]
     subgroup_size: Annotated[
         int | None,
         "The commonest size, which the lines are for; null for single values, or where none holds two.",
+        SIZE,
     ]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
-    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
-    false_alarm_probability: Annotated[float | None, "Of each panel and point; null under `sigma`."]
+    sigma_multiple: Annotated[
+        float | None, "Limits lie this many sigma out; null under `probability`.", MULTIPLE
+    ]
+    false_alarm_probability: Annotated[
+        float | None, "Of each panel and point; null under `sigma`.", PROBABILITY
+    ]
     panels: Annotated[LevelSpread[PanelLimits], "The lines of each panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
     baseline: Annotated[

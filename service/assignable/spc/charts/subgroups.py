@@ -18,6 +18,7 @@ import numpy as np
 from .. import cautions as caution
 from .. import diagnostics, factors
 from ..baseline import change_points, estimation, joint, screening
+from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, SIZE
 from ..cautions import Caution
 from ..data import Booleans, Floats, Integers, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -91,19 +92,24 @@ class SubgroupLimits(Generic[P]):
     """The frozen parameters of a chart of subgroups."""
 
     centre: Annotated[float, "Centre line of the means, in the unit of the characteristic."]
-    sigma: Annotated[float, "Within-subgroup standard deviation, in the unit of the characteristic."]
+    sigma: Annotated[float, "Within-subgroup standard deviation, in the unit of the characteristic.", SIGMA]
     sigma_estimator: Annotated[str, "How sigma was estimated; `given` where it was a standard."]
     degrees_of_freedom: Annotated[
-        float | None, "Effective degrees of freedom of sigma; null where it was a standard."
+        float | None, "Effective degrees of freedom of sigma; null where it was a standard.", POSITIVE
     ]
     subgroup_size: Annotated[
         int | None,
         "The commonest size, which the panels' limits are for; the limits of a subgroup of another size follow "
         "its own. Null where no subgroup holds two values.",
+        SIZE,
     ]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
-    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
-    false_alarm_probability: Annotated[float | None, "Of each panel and point; null under `sigma`."]
+    sigma_multiple: Annotated[
+        float | None, "Limits lie this many sigma out; null under `probability`.", MULTIPLE
+    ]
+    false_alarm_probability: Annotated[
+        float | None, "Of each panel and point; null under `sigma`.", PROBABILITY
+    ]
     panels: Annotated[P, "The lines of each panel."]
     rules: Annotated[tuple[Rule, ...], "The rules in force, the limit first."]
     baseline: Annotated[

@@ -15,6 +15,7 @@ import scipy
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, SIZE
 from ..cautions import Caution
 from ..data import Floats, SubgroupStatistics
 from ..errors import Fault, UnusableData, UnusableParameter
@@ -147,10 +148,10 @@ class TrendLimits:
     ]
     first_position: Annotated[float, "Position of the baseline's first point."]
     last_position: Annotated[float, "Position of the baseline's last point; `order` goes on after it."]
-    sigma: Annotated[float, "Standard deviation of single values about the line."]
+    sigma: Annotated[float, "Standard deviation of single values about the line.", SIGMA]
     sigma_estimator: Annotated[str, "How sigma was estimated; `given` where it was known."]
     degrees_of_freedom: Annotated[
-        float | None, "(Effective) degrees of freedom of sigma; null where it was known."
+        float | None, "(Effective) degrees of freedom of sigma; null where it was known.", POSITIVE
     ]
     adjustment: Annotated[
         AdjustmentPlan | None, "Where the line meets an adjustment limit; null where none was given."
@@ -158,10 +159,15 @@ class TrendLimits:
     subgroup_size: Annotated[
         int | None,
         "The commonest size, which the lines are for; null for single values, or where none holds two.",
+        SIZE,
     ]
     limit_basis: Annotated[Literal["sigma", "probability"], "How the limits were placed."]
-    sigma_multiple: Annotated[float | None, "Limits lie this many sigma out; null under `probability`."]
-    false_alarm_probability: Annotated[float | None, "Of each panel and point; null under `sigma`."]
+    sigma_multiple: Annotated[
+        float | None, "Limits lie this many sigma out; null under `probability`.", MULTIPLE
+    ]
+    false_alarm_probability: Annotated[
+        float | None, "Of each panel and point; null under `sigma`.", PROBABILITY
+    ]
     panels: Annotated[LevelSpread[PanelLimits], "The lines of each panel; null where they follow the line."]
     rules: Annotated[
         tuple[Rule, ...], "The rules in force, the limit first; they watch the distance from the line."
