@@ -1,4 +1,4 @@
-"""The command: ``assignable serve | demo | compute | contract``.
+"""The command: ``assignable serve | demo | compute | verify | contract``.
 
 Nothing heavy is imported before :func:`main` has set how many threads linear algebra may start: a worker
 does one calculation at a time, and the same sum in another order is another answer in its last digit.
@@ -75,6 +75,18 @@ def _parser() -> argparse.ArgumentParser:
     )
     compute.set_defaults(run=_compute)
 
+    verify = commands.add_parser(
+        "verify",
+        help="compute the published cases on this installation",
+        description="Computes every published case through the road of a request and prints what was published "
+        "beside what comes out; exit status 1 where a figure differs.",
+    )
+    verify.add_argument(
+        "--json", action="store_true", help="print the answer of GET /v1/verification instead"
+    )
+    verify.add_argument("--html", metavar="FILE", help="also write a page to read and to print")
+    verify.set_defaults(run=_verify)
+
     contract = commands.add_parser(
         "contract",
         help="make or check the committed contract",
@@ -114,6 +126,12 @@ def _compute(given: argparse.Namespace) -> int:
     from .computing import compute
 
     return compute(given.operation, given.file)
+
+
+def _verify(given: argparse.Namespace) -> int:
+    from .verifying import verify
+
+    return verify(as_json=given.json, html=given.html)
 
 
 def _contract(given: argparse.Namespace) -> int:

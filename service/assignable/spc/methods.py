@@ -363,5 +363,12 @@ METHODS = (
         ("checkRelease",),
         ("astm-e29", "iso-80000-1", "jcgm-106", "iso-14253-1"),
     ),
+    Method(
+        "verification",
+        "Published cases",
+        "a figure agrees where |obtained - published| <= half a unit of the last digit of the published one.",
+        ("getVerification",),
+        (),
+    ),
 )
 """Every method, in the order in which they are listed."""

@@ -1,0 +1,1 @@
+"""Verification: published cases as data, and the runner that tries them on this installation."""

@@ -66,6 +66,7 @@ GROUPS = (
             ("GET", "/v1/methods", "getMethods"),
         ),
     ),
+    Group("verification", (("GET", "/v1/verification", "getVerification"),)),
     Group(
         "health",
         (("GET", "/health/live", "getLiveness"), ("GET", "/health/ready", "getReadiness")),

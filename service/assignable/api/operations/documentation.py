@@ -50,6 +50,13 @@ def register(contract: Contract) -> None:
             raise Problem(NOT_FOUND, "There is no such problem.")
         return _page(kind.title, _described(kind))
 
+    def verification() -> Response:
+        from ...verification.page import page
+        from .verification import verified
+
+        link = f"docs/assets/{_edition()}/verification.css"
+        return _html(page(verified(contract)(), service_version(), link=link), seconds=0)
+
     def asset(edition: str, name: str) -> Response:
         if edition != _edition() or name not in _assets():
             raise Problem(NOT_FOUND)
@@ -65,6 +72,7 @@ def register(contract: Contract) -> None:
         ("/docs/assets/<edition>/<name>", "asset", asset),
         ("/problems", "problems", listing),
         ("/problems/<code>", "problem", problem),
+        ("/verification", "verification", verification),
     ):
         contract.app.add_url_rule(path, f"pages.{name}", view, methods=["GET"])
 
@@ -73,11 +81,16 @@ def _web(name: str) -> bytes:
     return files("assignable.web").joinpath(name).read_bytes()
 
 
+def _verification(name: str) -> bytes:
+    return files("assignable.verification").joinpath(name).read_bytes()
+
+
 @cache
 def _assets() -> dict[str, tuple[bytes, str]]:
     """The only files served: ours by name, and two of the reference page's library."""
     theirs = files("flask_swagger_ui").joinpath("dist")
     found = {name: (_web(name), f"{kind}; charset=utf-8") for name, kind in _OURS.items()}
+    found["verification.css"] = (_verification("page.css"), "text/css; charset=utf-8")
     for name, kind in _THEIRS.items():
         found[name] = (theirs.joinpath(name).read_bytes(), f"{kind}; charset=utf-8")
     return found
@@ -92,8 +105,8 @@ def _edition() -> str:
     return together.hexdigest()[:16]
 
 
-def _html(text: str) -> Response:
-    answer = cacheable(text.encode(), HTML, 300)
+def _html(text: str, seconds: int = 300) -> Response:
+    answer = cacheable(text.encode(), HTML, seconds)
     answer.headers["Content-Security-Policy"] = POLICY
     answer.headers["Referrer-Policy"] = "no-referrer"
     return answer
@@ -115,6 +128,7 @@ def _start() -> Markup:
         '<ul><li><a href="docs">Reference, to read and to try</a></li>'
         '<li><a href="openapi.json">The contract as an OpenAPI document</a></li>'
         '<li><a href="problems">Problems and what to do about each</a></li>'
+        '<li><a href="verification">Published cases, computed on this installation</a></li>'
         '<li><a href="health/ready">Whether it is ready</a></li></ul>'
     ).format(version=service_version())
 
