@@ -488,7 +488,7 @@ def test_moving_average_run_length_by_quadrature(monkeypatch: pytest.MonkeyPatch
         return original(told, **kwargs)
 
     monkeypatch.setattr(moving, "follow", spy)
-    moving.moving_average.__wrapped__(span=2, limit=k)
+    moving.moving_average_law.__wrapped__(span=2, limit=k)
     assert seen[0] == pytest.approx((1 - one, one), rel=1e-10)
     assert seen[1][1] == pytest.approx(two, rel=1e-10)
     assert seen[1][0] == pytest.approx(one - two, rel=1e-9)

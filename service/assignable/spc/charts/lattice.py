@@ -16,7 +16,7 @@ import numpy as np
 
 from ..data import Floats
 from ..rules import TOLERANCE, Rule, watched
-from ..runlength.of_rules import continuous_law, discrete_law
+from ..runlength.of_rules import continuous_law, discrete_law, steady_discrete_law
 from ..runlength.survival import Decay, geometric
 
 MOST_ORDERED = 200
@@ -47,7 +47,41 @@ def run_law(
     Exact unless its method says otherwise. Raises UnusableParameter as ``runlength.discrete``.
     Source: [champ-woodall-1987].
     """
+    found = _run_law(rules, law, None, centre, sigma, lower, upper)
+    assert found is not None
+    return found
+
+
+def steady_run_law(
+    rules: Sequence[Rule],
+    law: WholeLaw,
+    calm: WholeLaw,
+    *,
+    centre: float,
+    sigma: float,
+    lower: float,
+    upper: float,
+) -> Decay | None:
+    """The same from where long operation under ``calm`` without a signal has led.
+
+    ``calm`` is of the same range. None where that does not settle, and where the numbers are so large that
+    they are taken as continuous and rules look back.
+    """
+    return _run_law(rules, law, calm, centre, sigma, lower, upper)
+
+
+def _run_law(
+    rules: Sequence[Rule],
+    law: WholeLaw,
+    calm: WholeLaw | None,
+    centre: float,
+    sigma: float,
+    lower: float,
+    upper: float,
+) -> Decay | None:
     if max(centre, law.middle) > LARGEST_WHOLE:
+        if calm is not None:
+            return None
         return _as_continuous(rules, law, centre, sigma, lower, upper, "taken as continuous", "relative 0.03")
     acting = tuple(rule for rule in watched(rules) if rule.severity == "action")
     if len(acting) == 1:
@@ -55,6 +89,8 @@ def run_law(
     if any(rule.distance is None for rule in acting):
         least, most = max(lower, law.least), min(upper, law.most)
         if most - least > MOST_ORDERED:
+            if calm is not None:
+                return None
             return _as_continuous(rules, law, centre, sigma, lower, upper, "ties neglected", "relative 0.06")
         # Every number within the limits, and one beyond each for all that lie there.
         edges = np.arange(math.floor(least) - 1.0, math.ceil(most) + 2.0)
@@ -66,9 +102,20 @@ def run_law(
         # A line may fall on a number, and rounding may move it: such numbers stand alone.
         edges = np.concatenate((at - 1.0, at, at + 1.0))
     support, probability = _gathered(law, edges)
-    return discrete_law(
+    if calm is None:
+        return discrete_law(
+            rules,
+            support=support,
+            probability=probability,
+            centre=centre,
+            sigma=sigma,
+            lower=lower,
+            upper=upper,
+        )
+    return steady_discrete_law(
         rules,
         support=support,
+        calm=_gathered(calm, edges)[1],
         probability=probability,
         centre=centre,
         sigma=sigma,

@@ -16,16 +16,12 @@ from dataclasses import dataclass
 from functools import lru_cache
 from typing import Annotated, Literal, TypeAlias
 
-import numpy as np
 import scipy
 
-from ..data import Floats
 from ..errors import UnusableParameter
 from ..rules import LIMIT, Rule
-from ..runlength import shewhart
-from ..runlength.automaton import compile_watches, watches
+from ..runlength import shewhart, steady_state_arl
 from ..runlength.estimated import rising_root
-from ..runlength.survival import follow
 from .memory import optimal_cusum, optimal_ewma
 
 ChartKind: TypeAlias = Literal["mean", "mean-with-rules", "ewma", "cusum"]
@@ -42,7 +38,6 @@ SIMPLER_IF_WITHIN = 0.1
 _FACTORS = (0.5, 1.0, 1.5, 2.0, 3.0)
 _SHORTEST_RUN, _LONGEST_RUN = 8, 20
 _NARROWEST, _WIDEST = 0.4, 2.0
-_CALM_STEPS = 2000
 
 
 @dataclass(frozen=True, slots=True)
@@ -252,61 +247,12 @@ def _mean_with_rules(distance: float, distances: tuple[float, ...], target: floa
     )
 
 
-@lru_cache(maxsize=64)
 def _steady_with_rules(
     rules: tuple[Rule, ...], multiple: float, distances: tuple[float, ...]
 ) -> tuple[float, ...]:
-    """ARL at each distance after long in-control operation without a signal, exactly, for rules on zones.
-
-    The windows' states are followed in control until their conditional law stands still to 1e-13 (at most
-    2000 points), and from there with the shift.
-    """
-    lines = {sign * rule.distance for rule in rules[1:] if rule.distance is not None for sign in (-1.0, 1.0)}
-    cuts = np.array(sorted({-multiple, multiple, *(line for line in lines if abs(line) < multiple)}))
-    z = 0.5 * (cuts[1:] + cuts[:-1])
-    seen = tuple(watch for watch in watches(rules, z) if watch.k > 1)
-    automaton = compile_watches(seen, len(z))
-    states, target = automaton.states, automaton.follow.ravel()
-
-    def letters(distance: float) -> tuple[Floats, float]:
-        low, high = cuts[:-1] - distance, cuts[1:] - distance
-        flip = low > 0
-        between = scipy.special.ndtr(np.where(flip, -low, high)) - scipy.special.ndtr(
-            np.where(flip, -high, low)
-        )
-        return between, float(
-            scipy.special.ndtr(cuts[0] - distance) + scipy.special.ndtr(distance - cuts[-1])
-        )
-
-    def step(mass: Floats, probability: Floats) -> Floats:
-        reached = np.bincount(target, np.multiply.outer(mass, probability).ravel(), states + 1)
-        return reached.astype(np.float64, copy=False)
-
-    calm: Floats = np.zeros(states)
-    calm[0] = 1.0
-    probability, _ = letters(0.0)
-    for _ in range(_CALM_STEPS):
-        after = step(calm, probability)[:states]
-        after = after / after.sum()
-        moved = float(np.abs(after - calm).sum())
-        calm = after
-        if moved < 1e-13:
-            break
-    found = []
-    for distance in distances:
-        probability, beyond = letters(distance)
-        mass = calm
-
-        def advance(probability: Floats = probability, beyond: float = beyond) -> tuple[float, float]:
-            nonlocal mass
-            alive = float(mass.sum())
-            reached = step(mass, probability)
-            mass = reached[:states]
-            return beyond * alive + float(reached[states]), float(mass.sum())
-
-        memory = max(rule.window for rule in rules)
-        found.append(follow(advance, memory=memory, work=4 * states * len(z), method="").run_length().arl)
-    return tuple(found)
+    """ARL at each distance after long in-control operation without a signal, exactly, for rules on zones."""
+    found = (steady_state_arl(rules, lower=-multiple, upper=multiple, shift=at) for at in distances)
+    return tuple(one for one in found if one is not None)
 
 
 def _told(value: float | None, otherwise: float) -> float:

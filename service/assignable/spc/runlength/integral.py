@@ -15,7 +15,7 @@ A statistic on a lattice keeps the probability of each of its values instead, an
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 
@@ -25,7 +25,7 @@ import scipy
 from ..data import Floats, Integers
 from ..rules import Rule
 from .automaton import Automaton, explore, too_many_states
-from .survival import Decay, follow
+from .survival import Decay, follow, settle
 
 METHOD = "Markov chain with the last value expanded in Legendre polynomials"
 LATTICE_METHOD = "Markov chain with the last value"
@@ -168,6 +168,74 @@ def _integrate(density: Floats) -> Floats:
     return risen
 
 
+class _Walk:
+    """The survivors, point by point: for each place the Legendre coefficients of the last point's density."""
+
+    __slots__ = (
+        "_beyond",
+        "_falling",
+        "_own",
+        "_places",
+        "_probability",
+        "_rising",
+        "_to",
+        "_turn",
+        "alive",
+        "density",
+        "started",
+    )
+
+    def __init__(self, places: _Places, probability: Floats, beyond: float, terms: int) -> None:
+        n = len(places.region)
+        own = probability[places.region]
+        # A fall is what a rise leaves of the mass: the two differ in sign, and in the mass itself.
+        self._turn = _adder(places.rise, own, n) - _adder(places.fall, own, n)
+        self._to = np.concatenate((places.away.ravel(), places.fall))
+        self._rising = np.flatnonzero(places.rise == n)
+        self._falling = np.flatnonzero(places.fall == n)
+        self._places, self._probability, self._own, self._beyond = places, probability, own, beyond
+        self.density: Floats = np.zeros((n, terms))
+        self.alive, self.started = 1.0, False
+
+    def __call__(self) -> tuple[float, float]:
+        n, probability, own = len(self._own), self._probability, self._own
+        signal = self._beyond * self.alive
+        if not self.started:
+            self.started = True
+            mass = np.bincount(self._places.first, probability, n + 2)
+            self.density[:, 0] = mass[:n]
+        else:
+            held = self.density[:, 0]
+            mass = np.bincount(
+                self._to, np.concatenate((np.multiply.outer(held, probability).ravel(), held * own)), n + 2
+            )
+            risen = _integrate(self.density)
+            signal += float(np.dot(risen[self._rising, 0], own[self._rising]))
+            signal -= float(np.dot(risen[self._falling, 0], own[self._falling]))
+            self.density = self._turn @ risen
+            self.density[:, 0] += mass[:n]
+        self.alive = float(self.density[:, 0].sum())
+        return signal + float(mass[n]), self.alive
+
+
+def _terms(places: _Places, order: Order, terms: int | None) -> int:
+    if terms is None:
+        terms = max(TERMS, order.trend + 2)
+    if len(places.region) * terms > _MOST_UNKNOWNS:
+        raise too_many_states()
+    return terms
+
+
+def _order_work(places: _Places, terms: int) -> int:
+    n, regions = places.away.shape
+    return n * (12 * terms + 8 * regions)
+
+
+def _told(law: Decay) -> Decay:
+    # So rare a signal is the difference of masses that nearly cancel.
+    return law if law.hazard > 1e-15 else replace(law, accuracy="relative 1e-6")
+
+
 def order_law(
     automaton: Automaton,
     order: Order,
@@ -184,45 +252,107 @@ def order_law(
     Raises ``UnusableParameter`` (``too-many-states``).
     """
     places = _places(automaton, order)
-    n, regions = places.away.shape
-    if terms is None:
-        terms = max(TERMS, order.trend + 2)
-    if n * terms > _MOST_UNKNOWNS:
-        raise too_many_states()
-    own = probability[places.region]
-    # A fall is what a rise leaves of the mass: the two differ in sign, and in the mass itself.
-    turn = _adder(places.rise, own, n) - _adder(places.fall, own, n)
-    to = np.concatenate((places.away.ravel(), places.fall))
-    rising_signal = np.flatnonzero(places.rise == n)
-    falling_signal = np.flatnonzero(places.fall == n)
-    density = np.zeros((n, terms))
-    alive = 1.0
-    started = False
+    terms = _terms(places, order, terms)
+    walk = _Walk(places, probability, beyond, terms)
+    work = _order_work(places, terms)
+    return _told(follow(walk, memory=memory, work=work, method=METHOD, accuracy="relative 1e-11"))
 
-    def advance() -> tuple[float, float]:
-        nonlocal density, alive, started
-        signal = beyond * alive
-        if not started:
-            started = True
-            mass = np.bincount(places.first, probability, n + 2)
-            density[:, 0] = mass[:n]
+
+@lru_cache(maxsize=4)
+def _calm(automaton: Automaton, order: Order, probability: tuple[float, ...], terms: int) -> Floats | None:
+    places = _places(automaton, order)
+    walk = _Walk(places, np.array(probability), 0.0, terms)
+
+    def state() -> Floats:
+        return walk.density
+
+    return settle(walk, state, work=_order_work(places, terms))
+
+
+def steady_order_law(
+    automaton: Automaton,
+    order: Order,
+    calm: Floats,
+    probability: Floats,
+    beyond: float,
+    *,
+    carry: Callable[[int], Floats],
+    memory: int,
+    terms: int | None = None,
+) -> Decay | None:
+    """The same from where long operation with the probabilities ``calm``, without a signal, has led.
+
+    carry: for so many terms, (regions, terms, terms): what takes the coefficients of a density that is read
+    as the old distribution function to those read as the new one, by which all that follows is compared.
+    None where that state does not settle within the steps allowed.
+    """
+    places = _places(automaton, order)
+    terms = _terms(places, order, terms)
+    start = _calm(automaton, order, tuple(calm.tolist()), terms)
+    if start is None:
+        return None
+    walk = _Walk(places, probability, beyond, terms)
+    walk.started = True
+    matrices = carry(terms)
+    walk.density = np.empty_like(start)
+    for region, matrix in enumerate(matrices):
+        here = np.flatnonzero(places.region == region)
+        walk.density[here] = start[here] @ matrix
+    work = _order_work(places, terms)
+    return _told(follow(walk, memory=memory, work=work, method=METHOD, accuracy="relative 1e-8"))
+
+
+class _LatticeWalk:
+    """The survivors, point by point: for each place the probability of each value of the last point."""
+
+    __slots__ = ("_beyond", "_entry", "_places", "_steps", "_stops", "_total", "alive", "held", "started")
+
+    def __init__(self, places: _Places, probability: Floats, region: Integers, beyond: float) -> None:
+        n, regions = places.away.shape
+        sizes = np.bincount(region, minlength=regions)
+        width = int(sizes.max())
+        if n * width > _MOST_UNKNOWNS:
+            raise too_many_states()
+        each = np.zeros((regions, width))
+        each[region, np.arange(len(region)) - (np.cumsum(sizes) - sizes)[region]] = probability
+        one = np.ones(n)
+        self._entry = each[places.region]
+        self._steps = tuple(_adder(to, one, n) for to in (places.rise, places.fall, places.tie))
+        self._stops = [np.flatnonzero(to == n) for to in (places.rise, places.fall, places.tie)]
+        self._total = each.sum(axis=1)
+        self._places, self._beyond = places, beyond
+        self.held: Floats = np.zeros((n, width))
+        self.alive, self.started = 1.0, False
+
+    @property
+    def work(self) -> int:
+        """Operations of one step."""
+        return len(self.held) * (8 * self.held.shape[1] + 4 * len(self._total))
+
+    def __call__(self) -> tuple[float, float]:
+        n, regions = self._places.away.shape
+        places, entry, total = self._places, self._entry, self._total
+        signal = self._beyond * self.alive
+        if not self.started:
+            self.started = True
+            come = np.bincount(places.first, np.ones(regions), n + 2)
+            signal += float(total[places.first == n].sum())
+            self.held = entry * come[:n, None]
         else:
-            held = density[:, 0]
-            mass = np.bincount(
-                to, np.concatenate((np.multiply.outer(held, probability).ravel(), held * own)), n + 2
-            )
-            risen = _integrate(density)
-            signal += float(np.dot(risen[rising_signal, 0], own[rising_signal]))
-            signal -= float(np.dot(risen[falling_signal, 0], own[falling_signal]))
-            density = turn @ risen
-            density[:, 0] += mass[:n]
-        alive = float(density[:, 0].sum())
-        return signal + float(mass[n]), alive
-
-    work = n * (12 * terms + 8 * regions)
-    law = follow(advance, memory=memory, work=work, method=METHOD, accuracy="relative 1e-11")
-    # So rare a signal is the difference of masses that nearly cancel.
-    return law if law.hazard > 1e-15 else replace(law, accuracy="relative 1e-6")
+            held = self.held
+            mass = held.sum(axis=1)
+            # Weighted by the mass alone: what enters a place spreads as its region does.
+            flow = np.multiply.outer(mass, np.ones(regions)).ravel()
+            come = np.bincount(places.away.ravel(), flow, n + 2)
+            signal += float(((places.away == n) * total[None, :] * mass[:, None]).sum())
+            below = np.cumsum(held, axis=1)
+            steps = (below - held) * entry, (mass[:, None] - below) * entry, held * entry
+            for step, stop in zip(steps, self._stops, strict=True):
+                signal += float(step[stop].sum())
+            rise, fall, tie = self._steps
+            self.held = rise @ steps[0] + fall @ steps[1] + tie @ steps[2] + entry * come[:n, None]
+        self.alive = float(self.held.sum())
+        return signal, self.alive
 
 
 def lattice_law(
@@ -240,45 +370,30 @@ def lattice_law(
     letter of each; beyond, memory: as in ``order_law``.
     Raises ``UnusableParameter`` (``too-many-states``).
     """
+    walk = _LatticeWalk(_places(automaton, order), probability, region, beyond)
+    return follow(walk, memory=memory, work=walk.work, method=LATTICE_METHOD)
+
+
+def steady_lattice_law(
+    automaton: Automaton,
+    order: Order,
+    calm: Floats,
+    probability: Floats,
+    region: Integers,
+    beyond: float,
+    *,
+    memory: int,
+) -> Decay | None:
+    """The same from where long operation with the probabilities ``calm``, without a signal, has led."""
     places = _places(automaton, order)
-    n, regions = places.away.shape
-    sizes = np.bincount(region, minlength=regions)
-    width = int(sizes.max())
-    if n * width > _MOST_UNKNOWNS:
-        raise too_many_states()
-    each = np.zeros((regions, width))
-    each[region, np.arange(len(region)) - (np.cumsum(sizes) - sizes)[region]] = probability
-    entry = each[places.region]
-    one = np.ones(n)
-    rise, fall, tie = (_adder(to, one, n) for to in (places.rise, places.fall, places.tie))
-    stops = [np.flatnonzero(to == n) for to in (places.rise, places.fall, places.tie)]
-    to = places.away.ravel()
-    total = each.sum(axis=1)
-    held = np.zeros((n, width))
-    alive = 1.0
-    started = False
+    before = _LatticeWalk(places, calm, region, 0.0)
 
-    def advance() -> tuple[float, float]:
-        nonlocal held, alive, started
-        signal = beyond * alive
-        if not started:
-            started = True
-            come = np.bincount(places.first, np.ones(regions), n + 2)
-            signal += float(total[places.first == n].sum())
-            held = entry * come[:n, None]
-        else:
-            mass = held.sum(axis=1)
-            # Weighted by the mass alone: what enters a place spreads as its region does.
-            flow = np.multiply.outer(mass, np.ones(regions)).ravel()
-            come = np.bincount(to, flow, n + 2)
-            signal += float(((places.away == n) * total[None, :] * mass[:, None]).sum())
-            below = np.cumsum(held, axis=1)
-            steps = (below - held) * entry, (mass[:, None] - below) * entry, held * entry
-            for step, stop in zip(steps, stops, strict=True):
-                signal += float(step[stop].sum())
-            held = rise @ steps[0] + fall @ steps[1] + tie @ steps[2] + entry * come[:n, None]
-        alive = float(held.sum())
-        return signal, alive
+    def state() -> Floats:
+        return before.held
 
-    work = n * (8 * width + 4 * regions)
-    return follow(advance, memory=memory, work=work, method=LATTICE_METHOD)
+    start = settle(before, state, work=before.work)
+    if start is None:
+        return None
+    walk = _LatticeWalk(places, probability, region, beyond)
+    walk.held, walk.started = start, True
+    return follow(walk, memory=memory, work=walk.work, method=LATTICE_METHOD)

@@ -5,13 +5,55 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
+
 import numpy as np
 
 from ..data import Floats
 from .automaton import Automaton
-from .survival import Decay, follow
+from .survival import Decay, follow, settle
 
 METHOD = "Markov chain (Brook & Evans 1972; Champ & Woodall 1987)"
+
+
+class _Walk:
+    """The survivors' law over the states, point by point."""
+
+    __slots__ = ("_beyond", "_probability", "_target", "mass")
+
+    def __init__(self, automaton: Automaton, probability: Floats, beyond: float, mass: Floats) -> None:
+        self._target = automaton.follow.ravel()
+        self._probability, self._beyond, self.mass = probability, beyond, mass
+
+    def __call__(self) -> tuple[float, float]:
+        n = len(self.mass)
+        alive = float(self.mass.sum())
+        reached = np.bincount(
+            self._target, np.multiply.outer(self.mass, self._probability).ravel(), n + 1
+        ).astype(np.float64, copy=False)
+        self.mass = reached[:n]
+        return self._beyond * alive + float(reached[n]), float(self.mass.sum())
+
+
+def _fresh(automaton: Automaton) -> Floats:
+    mass: Floats = np.zeros(automaton.states)
+    mass[0] = 1.0
+    return mass
+
+
+def _work(automaton: Automaton, letters: int) -> int:
+    return 4 * automaton.states * letters
+
+
+@lru_cache(maxsize=8)
+def _calm(automaton: Automaton, probability: tuple[float, ...]) -> Floats | None:
+    """The law over the states after long operation without a signal; None where it does not settle."""
+    walk = _Walk(automaton, np.array(probability), 0.0, _fresh(automaton))
+
+    def state() -> Floats:
+        return walk.mass
+
+    return settle(walk, state, work=_work(automaton, len(probability)))
 
 
 def chain_law(automaton: Automaton, probability: Floats, beyond: float, *, memory: int) -> Decay:
@@ -20,19 +62,19 @@ def chain_law(automaton: Automaton, probability: Floats, beyond: float, *, memor
     probability: (letters,) of each letter; beyond: of a point that signals at once; memory: the
     longest window.
     """
-    n = automaton.states
-    letters = len(probability)
-    target = automaton.follow.ravel()
-    mass: Floats = np.zeros(n)
-    mass[0] = 1.0
+    walk = _Walk(automaton, probability, beyond, _fresh(automaton))
+    return follow(walk, memory=memory, work=_work(automaton, len(probability)), method=METHOD)
 
-    def advance() -> tuple[float, float]:
-        nonlocal mass
-        alive = float(mass.sum())
-        reached = np.bincount(target, np.multiply.outer(mass, probability).ravel(), n + 1).astype(
-            np.float64, copy=False
-        )
-        mass = reached[:n]
-        return beyond * alive + float(reached[n]), float(mass.sum())
 
-    return follow(advance, memory=memory, work=4 * n * letters, method=METHOD)
+def steady_chain_law(
+    automaton: Automaton, calm: Floats, probability: Floats, beyond: float, *, memory: int
+) -> Decay | None:
+    """The same from where long operation with the probabilities ``calm``, without a signal, has led.
+
+    None where that state does not settle within the steps allowed.
+    """
+    start = _calm(automaton, tuple(calm.tolist()))
+    if start is None:
+        return None
+    walk = _Walk(automaton, probability, beyond, start)
+    return follow(walk, memory=memory, work=_work(automaton, len(probability)), method=METHOD)

@@ -15,6 +15,7 @@ from __future__ import annotations
 
 import math
 from functools import lru_cache
+from itertools import pairwise
 
 import numpy as np
 import scipy
@@ -22,6 +23,7 @@ import scipy
 from ..data import Floats
 from ..errors import UnusableParameter
 from .quadrature import StoppedChain, gauss_legendre
+from .survival import Decay, follow, geometric, settle
 
 METHOD = "integral equation (Rigdon 1995; Runger & Prabhu 1996) on Gauss–Legendre nodes"
 ACCURACY = "relative 1e-6"
@@ -246,6 +248,25 @@ class _Step:
     def along(self, shift: float) -> Floats:
         return self._ahead.along(self._keep, self._now.y, shift)
 
+    def ahead(self, along: Floats, mass: Floats) -> Floats:
+        """Where the ``mass`` over this disc goes: that over the next one; the transpose of a call."""
+        radii = np.matmul(mass[:, None, :], self._reading)[:, 0, :]
+        there: Floats = np.matmul((along.T @ radii)[:, None, :], self._rest)[:, 0, :]
+        return there
+
+    def exits(self, p: int, shift: float) -> Floats:
+        """The chance of a signal at the next point from each state of this disc."""
+        disc, bound = self._now, self._ahead.bound
+        centre = np.hypot(self._keep * disc.y[:, None] + shift, self._keep * disc.w)
+        farthest = float(centre.max())
+        reach = _SEEN + max(0.0, math.sqrt(farthest**2 + p) - bound)
+        beyond, weight = _on(bound, bound + reach, _nodes(reach, 3.0, 24))
+        # A smooth function of one radius, whose logarithm is known from few of them.
+        nodes, share = _interpolation(farthest)
+        known = _radial_density(beyond[None, :], nodes[:, None], p) @ weight
+        exits: Floats = np.exp(_reading(nodes, share, centre) @ np.log(np.maximum(known, 1e-300)))
+        return np.minimum(exits, 1.0)
+
     def __call__(self, along: Floats, later: Floats) -> Floats:
         """Expected ``later`` (over the next disc) from each state of this one."""
         rest = np.matmul(self._rest, later[:, :, None])[:, :, 0]
@@ -313,3 +334,103 @@ def arls(
         1.0 + float((disc.along(keep, np.zeros(1), shift)[0] @ (start * mean)).sum())
         for shift, mean in zip(shifts, means, strict=True)
     )
+
+
+@lru_cache(maxsize=2)
+def _steps(p: int, smoothing: float, limit: float, growing: int) -> tuple[_Disc, tuple[_Step, ...]]:
+    """The disc of the first point, and the steps from there on: the last one is that of the settled limits."""
+    keep, bound = 1.0 - smoothing, _bound(smoothing, limit)
+    settled = _Disc(bound)
+    discs = [_Disc(bound * math.sqrt(1.0 - keep ** (2 * point))) for point in range(1, growing + 1)]
+    discs += [settled, settled]
+    return discs[0], tuple(_Step(now, ahead, keep, p) for now, ahead in pairwise(discs))
+
+
+class _Walk:
+    """The survivors after a shift, point by point, on the grid of each point's limit."""
+
+    __slots__ = ("_along", "_exits", "_first", "_keep", "_p", "_point", "_shift", "_steps", "mass")
+
+    def __init__(self, p: int, smoothing: float, limit: float, shift: float, *, growing: int) -> None:
+        self._p, self._keep, self._shift = p, 1.0 - smoothing, shift
+        self._first, self._steps = _steps(p, smoothing, limit, growing)
+        self._point = 0
+        self._along = self._exits = self.mass = np.zeros(self._first.shape)
+
+    def __call__(self) -> tuple[float, float]:
+        self._point += 1
+        if self._point == 1:
+            start = self._first.rest(self._keep, np.zeros(1), self._p)[0]
+            self.mass = self._first.along(self._keep, np.zeros(1), self._shift)[0][:, None] * start
+            signal = chi_square_tail(self._first.bound**2, self._p, self._shift**2)
+        else:
+            at = self._point - 2
+            step = self._steps[min(at, len(self._steps) - 1)]
+            if at < len(self._steps):
+                self._along, self._exits = step.along(self._shift), step.exits(self._p, self._shift)
+            signal = float((self.mass * self._exits).sum())
+            self.mass = step.ahead(self._along, self.mass)
+        return signal, float(self.mass.sum())
+
+
+def _check_several(p: int) -> None:
+    if p < 2:
+        raise UnusableParameter.of(
+            "variables-out-of-range", "Several variables are 2 or more; one has an EWMA.", "variables"
+        )
+
+
+@lru_cache(maxsize=64)
+def mewma_law(p: int, smoothing: float, limit: float, shift: float = 0.0, *, exact: bool = False) -> Decay:
+    """The law of the run length of a MEWMA of p ≥ 2 variables after a lasting shift from the first point on.
+
+    The survivors are followed on the grid of :func:`arls`, whose arguments and accuracy these are; to that
+    accuracy its mean is that of :func:`arls`.
+    """
+    _check_several(p)
+    _check(p, smoothing, limit, exact)
+    if smoothing == 1.0:
+        return geometric(chi_square_tail(limit, p, shift * shift))
+    walk = _Walk(p, smoothing, limit, shift, growing=_points_followed(smoothing) if exact else 0)
+    return follow(
+        walk,
+        memory=math.ceil(1.0 / smoothing),
+        work=_step_work(smoothing, limit),
+        method=METHOD,
+        accuracy="relative 1e-4" if exact else ACCURACY,
+    )
+
+
+def _step_work(smoothing: float, limit: float) -> int:
+    """Operations of one point on the grid of the settled limits."""
+    along, across = _shape(_bound(smoothing, limit))
+    return along * across * (along + 2 * across)
+
+
+@lru_cache(maxsize=8)
+def _calm(p: int, smoothing: float, limit: float) -> Floats | None:
+    walk = _Walk(p, smoothing, limit, 0.0, growing=0)
+
+    def state() -> Floats:
+        return walk.mass
+
+    return settle(walk, state, work=_step_work(smoothing, limit))
+
+
+@lru_cache(maxsize=256)
+def steady_state_arl(p: int, smoothing: float, limit: float, shift: float = 0.0) -> float | None:
+    """Mean points from a shift to the signal after long operation in control without one; to a relative 1e-6.
+
+    The limits have settled by then. None where the law of the smoothed vector does not settle within the
+    steps allowed. Arguments as for :func:`mewma_law`.
+    """
+    _check_several(p)
+    _check(p, smoothing, limit, False)
+    if smoothing == 1.0:
+        return 1.0 / max(chi_square_tail(limit, p, shift * shift), 1e-300)
+    start = _calm(p, smoothing, limit)
+    if start is None:
+        return None
+    disc, steps = _steps(p, smoothing, limit, 0)
+    step = steps[-1]
+    return float((start * _settled(step, disc, step.along(shift))).sum())

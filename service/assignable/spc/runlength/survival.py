@@ -45,13 +45,15 @@ class RunLength:
 @dataclass(frozen=True, slots=True, eq=False)
 class Decay:
     """survival: (T + 1,), the probability of no signal among the first t points, t = 0..T; hazard:
-    of a signal at each point after T, given none before; method, accuracy: as in ``RunLength``.
+    of a signal at each point after T, given none before; method, accuracy: as in ``RunLength``;
+    operations: about how many it took, some 2e9 of them a second.
     """
 
     survival: Floats
     hazard: float
     method: str
     accuracy: str
+    operations: int = 0
 
     def run_length(self) -> RunLength:
         """Mean, standard deviation and percentiles.
@@ -128,18 +130,39 @@ def follow(
         alive = left
         survival.append(alive)
         if alive < _GONE:
-            return Decay(np.array(survival), 1.0, method, accuracy)
+            return Decay(np.array(survival), 1.0, method, accuracy, work * len(hazards))
         if len(hazards) > span + 1:
             recent = hazards[-span:]
             high, low = max(recent), min(recent)
             if high - low <= SETTLED * high:
-                return Decay(np.array(survival), hazards[-1], method, accuracy)
+                return Decay(np.array(survival), hazards[-1], method, accuracy, work * len(hazards))
             varied = (high - low) / high
     if varied > 1e-6:
         raise UnusableParameter.of(
             "not-settled", "The run length of these rules takes longer to compute than is allowed.", "rules"
         )
-    return Decay(np.array(survival), hazards[-1], method, f"relative {10 * varied:.0e}")
+    return Decay(np.array(survival), hazards[-1], method, f"relative {10 * varied:.0e}", work * len(hazards))
+
+
+def settle(
+    advance: Callable[[], tuple[float, float]], state: Callable[[], Floats], *, work: int
+) -> Floats | None:
+    """The law of the state after long operation without a signal, read-only; None where it does not settle.
+
+    advance: as in :func:`follow`; state: the survivors' law as it stands. It has settled when a point
+    moves it by less than 1e-12 in all, as a share of the survivors.
+    """
+    before: Floats | None = None
+    for _ in range(min(_MOST_STEPS, max(_MOST_WORK // max(work, 1), 16))):
+        _, alive = advance()
+        if alive < _GONE:
+            return None
+        now = state() / alive
+        if before is not None and float(np.abs(now - before).sum()) < SETTLED:
+            now.flags.writeable = False
+            return now
+        before = now
+    return None
 
 
 def geometric(p: float) -> Decay:
