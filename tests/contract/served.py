@@ -108,10 +108,12 @@ def steps_of(pointer: str) -> list[str]:
 
 
 def is_of_contract(pointer: str, schema: dict[str, Any]) -> bool:
-    """Whether a pointer leads to a place that a request's schema knows."""
+    """Whether a pointer leads to a place that a request's schema knows; an open object may hold any."""
     here = [schema]
     for step in steps_of(pointer):
         inner = []
+        if any(one.get("additionalProperties") is True and step not in one["properties"] for one in here):
+            return True
         for one in here:
             if step in one.get("properties", {}):
                 inner.append(one["properties"][step])

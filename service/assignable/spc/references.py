@@ -730,6 +730,34 @@ _LISTED = (
         "Shewhart X-bar chart",
         "Journal of Quality Technology 52(2), 198-217",
     ),
+    Reference(
+        "astm-e29",
+        "ASTM International",
+        2013,
+        "Standard practice for using significant digits in test data to determine conformance with specifications",
+        "ASTM E29",
+    ),
+    Reference(
+        "iso-80000-1",
+        "ISO",
+        2009,
+        "Quantities and units - Part 1: General",
+        "ISO 80000-1:2009",
+    ),
+    Reference(
+        "jcgm-106",
+        "Joint Committee for Guides in Metrology",
+        2012,
+        "Evaluation of measurement data - The role of measurement uncertainty in conformity assessment",
+        "JCGM 106:2012",
+    ),
+    Reference(
+        "iso-14253-1",
+        "ISO",
+        2017,
+        "Geometrical product specifications - Inspection by measurement - Part 1: Decision rules for verifying conformity",
+        "ISO 14253-1:2017",
+    ),
 )
 
 REFERENCES: Mapping[str, Reference] = MappingProxyType(

@@ -35,6 +35,7 @@ GROUPS = (
     Group("charts", _of_charts(name for names in MODULES.values() for name in names)),
     Group("recommendation", (("POST", "/v1/charts/recommendation", "recommendChart"),)),
     Group("capability", (("POST", "/v1/capability/measurements", "assessMeasurements"),)),
+    Group("release", (("POST", "/v1/release-checks", "checkRelease"),)),
     Group(
         "designs",
         (
