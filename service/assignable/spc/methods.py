@@ -158,9 +158,10 @@ METHODS = (
     Method(
         "run-length",
         "Run lengths of rules with known parameters",
-        "absorbing Markov chain of the rules' automaton; with rules on order, times the last value.",
+        "absorbing Markov chain of the rules' automaton; with rules on order, times the last value; moving averages and "
+        "smoothed vectors by their survivors on a grid. Steady state: from the conditional law in control.",
         ("computeRunLength", "designSubgroups"),
-        ("brook-evans-1972", "champ-woodall-1987"),
+        ("brook-evans-1972", "champ-woodall-1987", "rigdon-1995", "runger-prabhu-1996"),
     ),
     Method(
         "baseline-diagnostics",
@@ -362,6 +363,72 @@ METHODS = (
         "> U - w, with w stated, r u, or from Phi(w/u) + Phi((U-L-w)/u) - 1 = 1 - risk.",
         ("checkRelease",),
         ("astm-e29", "iso-80000-1", "jcgm-106", "iso-14253-1"),
+    ),
+    Method(
+        "capability-by-quantiles",
+        "Capability of characteristics that are not normal",
+        "Pp = (U-L)/(X99.865-X0.135), Ppk = min((U-X50)/(X99.865-X50), (X50-L)/(X50-X0.135)) of a distribution fitted "
+        "by maximum likelihood; results below a limit enter as log F(limit); Anderson-Darling p-values for estimated "
+        "parameters; AICc.",
+        ("assessMeasurements",),
+        (
+            "iso-22514-2",
+            "clements-1989",
+            "johnson-kotz-balakrishnan-1994",
+            "cohen-1959",
+            "cohen-whitten-1980",
+            "lawless-2003",
+            "leone-nelson-nottingham-1961",
+            "box-cox-1964",
+            "johnson-1949",
+            "anderson-darling-1952",
+            "durbin-1973",
+            "stephens-1976",
+            "davies-1973",
+            "dagostino-stephens-1986",
+            "hurvich-tsai-1989",
+            "burnham-anderson-2002",
+            "david-nagaraja-2003",
+        ),
+    ),
+    Method(
+        "capability-of-attributes",
+        "Capability of counted characteristics",
+        "rate = events/inspected with its exact interval; equivalent index = -Phi^-1(p)/3, p the share of "
+        "nonconforming units, 1 - exp(-rate) for nonconformities.",
+        ("assessAttributes",),
+        ("clopper-pearson-1934", "garwood-1936", "iso-22514-1"),
+    ),
+    Method(
+        "capability-of-several",
+        "Several characteristics of one product",
+        "1 - P(all within their limits) of a multivariate normal, by randomly shifted lattices; its interval by a "
+        "generalised pivot of mean and covariance.",
+        ("assessSeveral",),
+        ("iso-22514-6", "genz-1992", "weerahandi-1993"),
+    ),
+    Method(
+        "tolerance-interval",
+        "Statistical tolerance intervals",
+        "mean +- k s with the exact k of the integral equation, or of non-central t for one side; Howe's "
+        "approximation; or order statistics.",
+        ("computeToleranceInterval",),
+        (
+            "wald-wolfowitz-1946",
+            "johnson-welch-1940",
+            "howe-1969",
+            "iso-16269-6",
+            "wilks-1941",
+            "faulkenberry-weeks-1968",
+        ),
+    ),
+    Method(
+        "conformance",
+        "Conformance under measurement uncertainty",
+        "P(conforming) = Phi((U-m)/v) - Phi((L-m)/v), m and v mean and standard deviation of the true value given the "
+        "result; acceptance limits at a stated risk; consumer's and producer's risk by quadrature over the process.",
+        ("assessConformance",),
+        ("jcgm-106", "iso-14253-1"),
     ),
     Method(
         "verification",

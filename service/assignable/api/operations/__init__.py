@@ -34,7 +34,16 @@ def _of_charts(names: Iterable[str]) -> tuple[Route, ...]:
 GROUPS = (
     Group("charts", _of_charts(name for names in MODULES.values() for name in names)),
     Group("recommendation", (("POST", "/v1/charts/recommendation", "recommendChart"),)),
-    Group("capability", (("POST", "/v1/capability/measurements", "assessMeasurements"),)),
+    Group(
+        "capability",
+        (
+            ("POST", "/v1/capability/measurements", "assessMeasurements"),
+            ("POST", "/v1/capability/attributes", "assessAttributes"),
+            ("POST", "/v1/capability/several", "assessSeveral"),
+            ("POST", "/v1/capability/conformance", "assessConformance"),
+        ),
+    ),
+    Group("tolerance", (("POST", "/v1/tolerance-intervals", "computeToleranceInterval"),)),
     Group("release", (("POST", "/v1/release-checks", "checkRelease"),)),
     Group(
         "designs",

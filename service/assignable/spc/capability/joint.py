@@ -17,6 +17,9 @@ from typing import Annotated
 import numpy as np
 import scipy
 
+from .. import cautions as caution
+from .. import diagnostics
+from ..cautions import Caution
 from ..data import Floats
 from ..errors import Fault, UnusableData, UnusableParameter
 from .indices import check_confidence
@@ -25,7 +28,8 @@ from .specification import Specification
 MOST_CHARACTERISTICS = 8
 MOST_ITEMS = 200_000
 FEWEST_ITEMS = 10
-_POINTS = 2048
+_FEW_ITEMS = 100
+_POINTS = 4096
 _SHIFTS = 12
 _DRAWS = 600
 _DRAW_POINTS = 256
@@ -94,7 +98,7 @@ def assess(
     if n < max(FEWEST_ITEMS, 2 * k + 2):
         raise UnusableData.of(
             "too-few-values",
-            f"Several characteristics together need {max(FEWEST_ITEMS, 2 * k + 2)} items with every value; there are {n}.",
+            f"{k} characteristics together need {max(FEWEST_ITEMS, 2 * k + 2)} items with every value; there are {n}.",
             "data",
             "values",
         )
@@ -116,6 +120,7 @@ def assess(
     scaled = centred / unit
     sd = np.sqrt((scaled * scaled).sum(axis=0) / (n - 1))
     correlation = (scaled / sd).T @ (scaled / sd) / (n - 1)
+    np.fill_diagonal(correlation, 1.0)
     if float(np.linalg.eigvalsh(correlation)[0]) < _SINGULAR:
         raise UnusableData.of(
             "collinear",
@@ -274,3 +279,49 @@ def _interval(
     tail = 0.5 * (1.0 - confidence)
     ends = np.quantile(shares, [tail, 1.0 - tail, confidence])
     return float(ends[0]), float(ends[1]), float(ends[2])
+
+
+def cautions_of(values: Floats, found: JointCapability) -> tuple[Caution, ...]:
+    """What is to be known about a joint share of items (m, k)."""
+    return caution.collect(_left_out(values.shape[0], found.count), _not_normal(values), _few(found.count))
+
+
+def _left_out(items: int, used: int) -> Caution | None:
+    if items == used:
+        return None
+    return Caution(
+        "items-left-out",
+        f"{items - used} of {items} items lack a value and were left out.",
+        ("data", "values"),
+        caution.COMMON_PRACTICE,
+    )
+
+
+def _not_normal(values: Floats) -> Caution | None:
+    rejected = []
+    for i in range(values.shape[1]):
+        test = diagnostics.normality(values[:, i])
+        if test is not None and test.anderson_darling.p_value < caution.SIGNIFICANCE / values.shape[1]:
+            rejected.append(i)
+    if not rejected:
+        return None
+    which = ", ".join(str(i + 1) for i in rejected)
+    return Caution(
+        "not-normal",
+        f"The values of characteristic {which} (counted from 1) do not follow a normal distribution (Anderson-Darling "
+        "test), and the joint share leans on it in the tails. Assess such a characteristic by itself.",
+        ("data", "values"),
+        "dagostino-stephens-1986",
+    )
+
+
+def _few(count: int) -> Caution | None:
+    if count >= _FEW_ITEMS:
+        return None
+    return Caution(
+        "few-values",
+        f"The share rests on {count} items; with fewer than {_FEW_ITEMS} its interval is wide. Judge by the bound. "
+        "Whether the process was in control is not assessed here: chart its values first.",
+        ("data", "values"),
+        caution.COMMON_PRACTICE,
+    )

@@ -438,7 +438,7 @@ def _empirical(sample: Sample, specification: Specification, confidence: float) 
         )
 
     def index(level: float, side: str) -> tuple[float | None, float | None]:
-        # Two quantiles, each at half the risk, together hold at the level asked [bonferroni].
+        # Two quantiles, each at half the risk, together hold at the level asked.
         part = 0.5 + 0.5 * level
         if side == "both":
             assert lower is not None

@@ -173,7 +173,7 @@ def _by_distribution(
         None,
         found,
         None,
-        CapabilityDiagnostics(diagnostics.normality(data), resolution),
+        CapabilityDiagnostics(None if sample.below.size else diagnostics.normality(data), resolution),
         caution.collect(
             _not_in_control(signals),
             _few(found.count),

@@ -14,6 +14,8 @@ from typing import Annotated, Literal, TypeAlias
 import numpy as np
 import scipy
 
+from .. import cautions as caution
+from ..cautions import Caution
 from ..data import Floats
 from ..errors import Fault, UnusableParameter
 from ..factors import gauss_legendre
@@ -25,6 +27,7 @@ ConformanceVerdict: TypeAlias = Literal["conforming", "nonconforming", "undecide
 _NODES = 64
 _REACH = 8.5
 _STEPS = 200
+_COARSE = 3.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -55,7 +58,7 @@ class ResultConformance:
 
 
 @dataclass(frozen=True, slots=True)
-class AcceptanceLimits:
+class GuardedLimits:
     """Limits within which a measured value may be accepted with a stated consumer's risk."""
 
     consumer_risk: Annotated[
@@ -115,7 +118,7 @@ def product_distribution(mean: float, observed_sd: float, uncertainty: float) ->
     if not ratio < 1.0:
         raise UnusableParameter.of(
             "uncertainty-exceeds-spread",
-            f"The standard uncertainty, {uncertainty:g}, is no less than the standard deviation of the measured values, "
+            f"The standard uncertainty, {uncertainty:g}, is no less than the standard deviation of the values, "
             f"{observed_sd:g}: nothing is left for the product, so one of the two is wrong.",
             "process",
             "sd",
@@ -204,7 +207,7 @@ def acceptance_limits(
     consumer_risk: float,
     *,
     process: ProcessDistribution | None = None,
-) -> AcceptanceLimits | None:
+) -> GuardedLimits | None:
     """The widest limits for measured values at which an item is nonconforming with the risk stated.
 
     With one limit and no process the guard band is u·Φ⁻¹(1 - risk) [jcgm-106], section 8.3; with two limits
@@ -235,7 +238,7 @@ def acceptance_limits(
 
     low_limit = None if lower is None else measured(lower + guard)
     high_limit = None if upper is None else measured(upper - guard)
-    return AcceptanceLimits(
+    return GuardedLimits(
         consumer_risk,
         low_limit,
         high_limit,
@@ -312,3 +315,70 @@ def _between(low: Floats, high: Floats) -> Floats:
     first = np.where(right, -high, low)
     second = np.where(right, -low, high)
     return scipy.special.ndtr(second) - scipy.special.ndtr(first)
+
+
+def cautions_of(
+    uncertainty: float,
+    specification: Specification,
+    consumer_risk: float | None,
+    limits: GuardedLimits | None,
+    process: ProcessDistribution | None,
+) -> tuple[Caution, ...]:
+    """What is to be known about a decision under this uncertainty."""
+    return caution.collect(
+        _no_zone(consumer_risk, limits),
+        _reaches_beyond(limits),
+        _coarse(uncertainty, specification),
+        _leans(process),
+    )
+
+
+def _no_zone(consumer_risk: float | None, limits: GuardedLimits | None) -> Caution | None:
+    if consumer_risk is None or limits is not None:
+        return None
+    return Caution(
+        "no-acceptance-zone",
+        "No measured value is so safe: the uncertainty is too large for this specification and risk. Measure better, "
+        "average repeats, or agree on another risk.",
+        ("consumer_risk",),
+        "jcgm-106",
+    )
+
+
+def _reaches_beyond(limits: GuardedLimits | None) -> Caution | None:
+    if limits is None or min(limits.guard_lower or 0.0, limits.guard_upper or 0.0) >= 0.0:
+        return None
+    return Caution(
+        "acceptance-beyond-specification",
+        "An acceptance limit lies beyond the specification's, for the process is trusted more than the measured value. "
+        "Such acceptance needs the consumer's agreement.",
+        ("process",),
+        "jcgm-106",
+    )
+
+
+def _coarse(uncertainty: float, specification: Specification) -> Caution | None:
+    if specification.lower is None or specification.upper is None:
+        return None
+    width = 0.5 * specification.upper - 0.5 * specification.lower
+    if 2.0 * width >= 4.0 * _COARSE * uncertainty:
+        return None
+    return Caution(
+        "coarse-measurement",
+        f"The specification is {2.0 * width / uncertainty:.2g} standard uncertainties wide; below {4 * _COARSE:g} the "
+        "measurement decides much of what is accepted.",
+        ("standard_uncertainty",),
+        "common practice",
+    )
+
+
+def _leans(process: ProcessDistribution | None) -> Caution | None:
+    if process is None:
+        return None
+    return Caution(
+        "process-supposed",
+        "The risks suppose a normal process in control with the mean and standard deviation given; they mislead where "
+        "it has drifted or has tails of its own.",
+        ("process",),
+        "jcgm-106",
+    )
