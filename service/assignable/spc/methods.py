@@ -158,8 +158,8 @@ METHODS = (
     Method(
         "run-length",
         "Run lengths of rules with known parameters",
-        "absorbing Markov chain of the rules' automaton; with rules on order, times the last value; moving averages and "
-        "smoothed vectors by their survivors on a grid. Steady state: from the conditional law in control.",
+        "absorbing Markov chain of the rules' automaton; with rules on order, times the last value; moving averages "
+        "and smoothed vectors by their survivors on a grid. Steady state: from the conditional law in control.",
         ("computeRunLength", "designSubgroups"),
         ("brook-evans-1972", "champ-woodall-1987", "rigdon-1995", "runger-prabhu-1996"),
     ),
@@ -298,8 +298,8 @@ METHODS = (
     Method(
         "chart-comparison",
         "Charts side by side",
-        "hours from a shift at a random moment to its signal, interval (steady-state ARL - 1/2), at equal hours between "
-        "false alarms and equal pieces an hour.",
+        "hours from a shift at a random moment to its signal, interval (steady-state ARL - 1/2), at equal hours "
+        "between false alarms and equal pieces an hour.",
         ("compareDesigns",),
         ("reynolds-1988", "champ-woodall-1987", "lucas-saccucci-1990"),
     ),

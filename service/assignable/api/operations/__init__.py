@@ -45,11 +45,11 @@ GROUPS = (
     ),
     Group("tolerance", (("POST", "/v1/tolerance-intervals", "computeToleranceInterval"),)),
     Group("release", (("POST", "/v1/release-checks", "checkRelease"),)),
+    Group("run_length", (("POST", "/v1/designs/run-length", "computeRunLength"),)),
     Group(
         "designs",
         (
             ("POST", "/v1/designs/subgroups", "designSubgroups"),
-            ("POST", "/v1/designs/run-length", "computeRunLength"),
             ("POST", "/v1/designs/ewma", "designEwma"),
             ("POST", "/v1/designs/cusum", "designCusum"),
             ("POST", "/v1/designs/attributes", "designAttributes"),

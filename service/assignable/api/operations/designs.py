@@ -2,19 +2,13 @@
 
 from __future__ import annotations
 
-import math
-from collections.abc import Callable, Iterable, Sequence
 from typing import Any
 
 import numpy as np
 
-from ...spc import runlength
-from ...spc.charts.counts import count_law, count_lines
-from ...spc.charts.lattice import run_law
 from ...spc.design import attributes, baseline, comparison, economic, subgroups
 from ...spc.design import memory as designs
 from ...spc.errors import UnusableParameter, Where
-from ...spc.runlength import memory
 from ...spc.runlength.estimated import PERCENTILES
 from .. import problems
 from ..contract import Contract
@@ -34,13 +28,8 @@ from ..schemas.designs import (
     DetectRequest,
     EwmaDesignAnswer,
     EwmaDesignRequest,
-    RunLengthRequest,
-    RunLengthsAnswer,
     SubgroupDesignAnswer,
     SubgroupDesignRequest,
-    count_basis,
-    one_chart,
-    shifts_of,
 )
 from ..schemas.economic import (
     EconomicDesignAnswer,
@@ -48,9 +37,9 @@ from ..schemas.economic import (
     ProcessEconomicsRequest,
     requirements_of,
 )
+from .run_length import TAG, TAG_TEXT
+from .run_length import run_length as run_length
 
-TAG = "Chart design"
-USUAL_FACTORS = (1.0, 0.5, 1.5, 2.0, 3.0)
 USUAL_LEVELS = (0.5, 0.75, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0)
 
 
@@ -99,102 +88,6 @@ def design_subgroups(loaded: dict[str, Any]) -> dict[str, Any]:
             [_plan(one) for one in loaded["candidates"]], shift, shift_moment=moment
         )
     return {"plan": plan, "characteristics": found, "present": present, "comparison": comparison}
-
-
-def _told(
-    found: runlength.RunLength | memory.MemoryRunLength,
-    within: Sequence[int],
-    probability: Iterable[float],
-    hours: float | None,
-    **at: float | None,
-) -> dict[str, Any]:
-    return {
-        "shift": at.get("shift"),
-        "scale": at.get("scale"),
-        "factor": at.get("factor"),
-        "arl": found.arl,
-        "sd": found.sd,
-        "percentiles": [{"probability": q, "points": points} for q, points in found.percentiles],
-        "within": [
-            {"points": points, "probability": p} for points, p in zip(within, probability, strict=True)
-        ],
-        "steady_state_arl": getattr(found, "steady_state_arl", None),
-        "ats_hours": None if hours is None else hours * found.arl,
-        "method": found.method,
-        "accuracy": found.accuracy,
-    }
-
-
-_KINDS = ("shewhart", "ewma", "cusum", "counts")
-_Lawful = Callable[[float, float], tuple[Any, Iterable[float]]]
-
-
-def run_length(loaded: dict[str, Any]) -> dict[str, Any]:
-    """Run lengths of a chart with known parameters."""
-    kind = one_chart(loaded, _KINDS)
-    within = tuple(loaded.get("within_points", np.empty(0, dtype=np.int64)).tolist())
-    hours = loaded.get("interval_hours")
-    chart = loaded[kind]
-    if kind == "counts":
-        return {"run_lengths": _of_counts(loaded, chart, within, hours)}
-    if "factors" in loaded:
-        raise UnusableParameter.of("not-for-this-chart", "Factors are for charts of counts.", "factors")
-    law = {"shewhart": _shewhart, "ewma": _ewma, "cusum": _cusum}[kind](chart, within)
-    root = math.sqrt(chart["subgroup_size"])
-    told = []
-    for at, (shift, scale) in enumerate(shifts_of(loaded)):
-        places: dict[str, Where] = {name: (kind, name) for name in chart}
-        with located(shift=("shifts", at), scale=("scales", at), rules=(kind, "rules"), **places):
-            found, probability = law(shift * root, scale)
-        told.append(_told(found, within, probability, hours, shift=shift, scale=scale))
-    return {"run_lengths": told}
-
-
-def _shewhart(chart: dict[str, Any], within: tuple[int, ...]) -> _Lawful:
-    rules = rules_of(chart.pop("rules", None), "shewhart", "rules")
-    reach = chart["sigma_multiple"]
-    lower = -reach if chart["sides"] != "upper" else -math.inf
-    upper = reach if chart["sides"] != "lower" else math.inf
-
-    def law(shift: float, scale: float) -> tuple[Any, Iterable[float]]:
-        found = runlength.shewhart(rules, lower=lower, upper=upper, shift=shift, scale=scale)
-        reached = runlength.signal_probability(
-            np.array(within, dtype=np.float64), rules, lower=lower, upper=upper, shift=shift, scale=scale
-        )
-        return found, reached.tolist()
-
-    return law
-
-
-def _ewma(chart: dict[str, Any], within: tuple[int, ...]) -> _Lawful:
-    def law(shift: float, scale: float) -> tuple[Any, Iterable[float]]:
-        given = {
-            "smoothing": chart["smoothing"],
-            "limit": chart["limit"],
-            "shift": shift,
-            "scale": scale,
-            "two_sided": chart["sides"] == "two",
-            "start": chart["start"],
-            "time_varying": chart["limits"] == "time-varying",
-        }
-        return memory.ewma(**given), memory.ewma_signalled_by(points=within, **given) if within else ()
-
-    return law
-
-
-def _cusum(chart: dict[str, Any], within: tuple[int, ...]) -> _Lawful:
-    def law(shift: float, scale: float) -> tuple[Any, Iterable[float]]:
-        given = {
-            "reference": chart["reference"],
-            "decision": chart["decision"],
-            "shift": shift,
-            "scale": scale,
-            "sides": chart["sides"],
-            "head_start": chart["head_start"],
-        }
-        return memory.cusum(**given), memory.cusum_signalled_by(points=within, **given) if within else ()
-
-    return law
 
 
 def design_ewma(loaded: dict[str, Any]) -> dict[str, Any]:
@@ -361,49 +254,9 @@ def compare_designs(loaded: dict[str, Any]) -> dict[str, Any]:
     return {"comparison": found}
 
 
-def _of_counts(
-    loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...], hours: float | None
-) -> list[dict[str, Any]]:
-    for name in ("shifts", "scales"):
-        if name in loaded:
-            raise UnusableParameter.of(
-                "not-for-this-chart", "Counts shift by factors on their mean; give `factors`.", name
-            )
-    binomial, mean, size = chart["law"] == "binomial", chart["mean"], chart["size"]
-    if binomial and not (mean < 1 and size == int(size)):
-        raise UnusableParameter.of(
-            "not-binomial",
-            "A binomial chart needs a proportion below 1 and a whole number of units.",
-            "counts",
-            "mean" if mean >= 1 else "size",
-        )
-    rules = rules_of(chart.get("rules"), "counts", "rules")
-    lines = count_lines(binomial, mean, np.array([float(size)]), count_basis(chart))
-    told = []
-    for at, factor in enumerate(loaded.get("factors", np.array(USUAL_FACTORS)).tolist()):
-        if binomial and mean * factor >= 1:
-            if "factors" not in loaded:
-                continue
-            raise UnusableParameter.of(
-                "proportion-above-one", f"{factor:g} times {mean:g} is no proportion below 1.", "factors", at
-            )
-        with located(rules=("counts", "rules")):
-            law = run_law(
-                rules,
-                count_law(binomial, mean * factor, float(size)),
-                centre=float(lines.centre[0]),
-                sigma=float(lines.sd[0]),
-                lower=float(lines.lower[0]),
-                upper=float(lines.upper[0]),
-            )
-            reached = law.probability(np.array(within, dtype=np.float64)).tolist()
-            told.append(_told(law.run_length(), within, reached, hours, factor=factor))
-    return told
-
-
 def register(contract: Contract) -> None:
     """Binds the operations of chart design."""
-    contract.tag(TAG, "How many pieces, how often, which limits, and what they cost in false alarms.")
+    contract.tag(TAG, TAG_TEXT)
     contract.operation(
         "POST",
         "/v1/designs/subgroups",
@@ -419,27 +272,6 @@ def register(contract: Contract) -> None:
         example="designs-subgroups",
         provenance="mean-chart-design",
     )(design_subgroups)
-    contract.operation(
-        "POST",
-        "/v1/designs/run-length",
-        operation_id="computeRunLength",
-        tag=TAG,
-        summary="Run lengths of a chart",
-        description="Average, standard deviation and percentiles of the number of points until the first signal, "
-        "and the probability of a signal within so many points, with any mix of rules: exact by a Markov chain "
-        "for rules on zones, by a spectral method with rules on order; of EWMA and CUSUM charts by Nystrom's method; "
-        "of counts exactly. Sources: brook-evans-1972, champ-woodall-1987, crowder-1987, vance-1986.",
-        request=RunLengthRequest(),
-        response=RunLengthsAnswer(),
-        problems=(problems.NOT_COMPUTABLE,),
-        example=(
-            "designs-run-length",
-            "designs-run-length-ewma",
-            "designs-run-length-cusum",
-            "designs-run-length-counts",
-        ),
-        provenance="run-length",
-    )(run_length)
     contract.operation(
         "POST",
         "/v1/designs/ewma",
@@ -527,8 +359,8 @@ def register(contract: Contract) -> None:
         tag=TAG,
         summary="Charts side by side for one shift",
         description="For one process and the shift that matters: a chart of means, the same with run rules, an EWMA "
-        "and a CUSUM, each the best of its kind, by their time to signal at the same false-alarm rate and the same pieces "
-        "measured an hour, with a plain recommendation. Sources: champ-woodall-1987, lucas-saccucci-1990, "
+        "and a CUSUM, each the best of its kind, by their time to signal at the same false-alarm rate and the same "
+        "pieces measured an hour, with a plain recommendation. Sources: champ-woodall-1987, lucas-saccucci-1990, "
         "reynolds-1988.",
         request=ComparisonRequest(),
         response=ComparisonAnswer(),

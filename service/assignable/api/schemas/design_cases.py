@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 from ...spc.design import attributes, baseline, comparison
 from ...spc.factors import LARGEST_SIZE
 from ...spc.runlength import estimated
@@ -10,7 +12,7 @@ from . import derive
 from .designs import PROVENANCE
 
 MOST_LEVELS = 100
-_LEVEL = {"least": attributes.SMALLEST_LEVEL, "most": attributes.LARGEST_MEAN}
+_LEVEL: dict[str, Any] = {"least": attributes.SMALLEST_LEVEL, "most": attributes.LARGEST_MEAN}
 
 
 class CountDetectRequest(f.RequestShape):
