@@ -248,6 +248,19 @@ def test_results_that_a_chart_cannot_take(
     assert code in (None, said)
 
 
+def test_limits_of_another_characteristic_and_repeated_names_are_cautioned() -> None:
+    trend = {"limits": limits_of("individuals"), "point": "average"}
+    sent = body(thickness(), thickness(trend=trend))
+    found = served.answer_of(CHECK, sent)["cautions"]
+    assert [(each["pointer"], each["code"]) for each in found] == [
+        ("#/characteristics/1/name", "repeated-name"),
+        ("#/characteristics/1/trend/limits/characteristic/name", "limits-of-another-characteristic"),
+        ("#/characteristics/1/trend/limits/characteristic/unit", "limits-of-another-characteristic"),
+    ]
+    assert all(served.resolves(each["pointer"], sent) for each in found)
+    assert served.answer_of(CHECK, body(thickness(trend={"limits": limits_of("xbar-r")})))["cautions"] == []
+
+
 # Trends ---------------------------------------------------------------------------------------------
 
 

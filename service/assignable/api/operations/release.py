@@ -14,7 +14,7 @@ from marshmallow import ValidationError
 
 from ...documents.limits import carry_document, check_carry
 from ...spc import release
-from ...spc.cautions import Caution
+from ...spc.cautions import COMMON_PRACTICE, Caution
 from ...spc.charts import CHARTS
 from ...spc.data import Floats
 from ...spc.errors import DocumentMismatch, Fault, SpcError, UnusableData, UnusableParameter, Where
@@ -46,7 +46,7 @@ def check(loaded: dict[str, Any]) -> dict[str, Any]:
     errors: list[SpcError] = []
     checked: list[release.Checked] = []
     told: list[dict[str, Any]] = []
-    found: list[Caution] = []
+    found: list[Caution] = list(_repeated(posted))
     for position, one in enumerate(posted):
         place: Where = ("characteristics", position)
         try:
@@ -74,6 +74,21 @@ def check(loaded: dict[str, Any]) -> dict[str, Any]:
         "characteristics": told,
         "cautions": cautions(found),
     }
+
+
+def _repeated(posted: list[dict[str, Any]]) -> Iterator[Caution]:
+    """Characteristics under a name that was there before."""
+    first: dict[str, int] = {}
+    for position, one in enumerate(posted):
+        name = one["name"]
+        if first.setdefault(name, position) != position:
+            yield Caution(
+                "repeated-name",
+                f"There are two characteristics named {name}, at {first[name]} and {position} from 0: make sure that "
+                "both are meant.",
+                ("characteristics", position, "name"),
+                COMMON_PRACTICE,
+            )
 
 
 def _told(result: release.Checked, trend: _Trend | None, place: Where) -> dict[str, Any]:
@@ -224,11 +239,27 @@ class _Trend:
                 "signals_found": result.signals_found,
                 "carry": carry_document(name, digest, result.carry),
             },
-            tuple(
-                Caution(each.code, each.sentence, _mapped_to(each.where), each.reference)
-                for each in result.cautions
+            (
+                *_of_another(posted, asked["limits"]["characteristic"]),
+                *(
+                    Caution(each.code, each.sentence, _mapped_to(each.where), each.reference)
+                    for each in result.cautions
+                ),
             ),
         )
+
+
+def _of_another(posted: Mapping[str, Any], known: Mapping[str, str]) -> Iterator[Caution]:
+    """Limits whose document names another characteristic, or another unit."""
+    for member in ("name", "unit"):
+        here, there = posted.get(member), known.get(member)
+        if here is not None and there is not None and here != there:
+            yield Caution(
+                "limits-of-another-characteristic",
+                f"The limits state the {member} {there}, and the batch {here}: make sure that they belong together.",
+                ("trend", "limits", "characteristic", member),
+                COMMON_PRACTICE,
+            )
 
 
 def _opened(name: str, asked: Mapping[str, Any]) -> tuple[str, Any, Any]:
