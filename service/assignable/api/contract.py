@@ -19,7 +19,7 @@ import orjson
 from flask import Flask, Response, request
 from marshmallow import Schema, ValidationError
 
-from . import answers, bodies, problems, strict_json
+from . import answers, bodies, explaining, problems, strict_json
 from .fields import AnswerShape, ObjectList, StrictInteger, StrictString, known_names
 from .problems import Entry, Problem, ProblemType
 from .settings import Settings
@@ -31,6 +31,8 @@ Route = tuple[str, str, str]
 """Method, path and operation id."""
 
 OPERATION = "assignable.operation"  # the environ's key for the id of the operation that answers
+
+_OF_A_PICTURE = (("Content-Security-Policy", "default-src 'none'; style-src 'unsafe-inline'"),)
 
 _CAMEL = re.compile(r"[a-z][A-Za-z0-9]*")
 _PARAMETER = re.compile(r"\{([a-z_]+)\}")
@@ -142,6 +144,11 @@ class Contract:
         order = [rule.endpoint for rule in self._app.url_map.iter_rules() if rule.endpoint in self._bound]
         return {operation_id: self._bound[operation_id] for operation_id in dict.fromkeys(order)}
 
+    def bound(self, operation_id: str) -> Operation:
+        """An operation by its id, bound now where it was only announced."""
+        self._bind_announced(operation_id)
+        return self._bound[operation_id]
+
     def announce(self, routes: Iterable[Route], register: Callable[[Contract], None]) -> None:
         """Takes up routes now whose operations ``register`` binds when one of them is first needed.
 
@@ -191,6 +198,7 @@ class Contract:
         example: str | tuple[str, ...] = (),
         links: Mapping[str, Link] | None = None,
         provenance: str | None = None,
+        explain: explaining.Explain | None = None,
         computes: bool = True,
         cache_seconds: int | None = 300,
     ) -> Callable[[View], View]:
@@ -201,11 +209,17 @@ class Contract:
         returns plain values, arrays or dataclasses, or text for another ``media_type``. ``problems`` are
         those beyond the ones every such operation can answer. ``example`` names files of
         ``openapi/examples``. ``provenance`` is the method's name; with it the answer gets that member.
+        ``explain`` gives the worked steps; with it a request may ask for them, and the answer then has them.
         ``computes`` takes a compute slot. ``cache_seconds`` is how long a GET may be kept, None not at all.
         """
         _check(method, path, operation_id, self._bound, self._tags, tag, links)
 
+        if explain is not None and request is not None and response is not None:
+            request, response = explaining.asking(request), explaining.telling(response)
+
         def bind(view: View) -> View:
+            if explain is not None:
+                view = explaining.with_steps(view, explain)
             operation = Operation(
                 method=method,
                 path=path,
@@ -318,9 +332,11 @@ def cacheable(body: bytes, content_type: str, seconds: int, tag: str | None = No
 
 
 def _response(body: bytes, content_type: str, headers: tuple[tuple[str, str], ...]) -> Response:
+    # A picture opened by itself is a document: it may draw, and nothing else.
+    policy = _OF_A_PICTURE if content_type == answers.SVG else ()
     return Response(
         body,
-        headers=[("Content-Digest", answers.content_digest(body)), *headers],
+        headers=[("Content-Digest", answers.content_digest(body)), *headers, *policy],
         content_type=content_type,
     )
 

@@ -14,6 +14,8 @@ from ...documents.limits import carry_document, check_carry, check_limits, limit
 from ...spc.charts import CHARTS, Chart
 from ...spc.charts.common import Performance
 from ...spc.errors import DocumentMismatch, SpcError
+from ...spc.explain import charts as worked
+from ...spc.explain.steps import Step
 from ...spc.rules import Signal
 from .. import fields as f
 from .. import problems
@@ -424,6 +426,26 @@ def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str
     }
 
 
+def explain_fit(
+    chart: Chart, takes: ChartRequest, loaded: dict[str, Any], answer: Mapping[str, Any]
+) -> tuple[Step, ...]:
+    """The worked steps of a fit."""
+    posted = loaded.get("data")
+    data, options = None if posted is None else takes.read(posted), takes.options(loaded)
+    return worked.of_fit(chart.name, data, options, chart.fit(data, options))
+
+
+def explain_judge(
+    chart: Chart, takes: ChartRequest, loaded: dict[str, Any], answer: Mapping[str, Any]
+) -> tuple[Step, ...]:
+    """The worked steps of a judgement."""
+    _, limits = loaded["limits"]
+    carry = None if loaded["carry"] is None else loaded["carry"][1]
+    return worked.of_judgement(
+        chart.name, limits, takes.read(loaded["data"]), carry, judged(chart, takes, loaded)
+    )
+
+
 _ARITHMETIC = (ArithmeticError, ValueError, IndexError, KeyError, TypeError, AssertionError, RuntimeWarning)
 
 
@@ -464,6 +486,7 @@ def register(contract: Contract) -> None:
                 }
             },
             provenance=chart.name,
+            explain=partial(explain_fit, chart, takes),
         )(partial(fit, chart, takes))
         contract.operation(
             "POST",
@@ -486,4 +509,5 @@ def register(contract: Contract) -> None:
                 }
             },
             provenance=chart.name,
+            explain=partial(explain_judge, chart, takes),
         )(partial(judge, chart, takes))
