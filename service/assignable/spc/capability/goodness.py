@@ -88,7 +88,10 @@ def _known(name: str, key: tuple[float, ...], scores: Scores) -> tuple[float, ..
     p, q, weight, polynomials = _grid()
     score = scores(p, q, np.array(key))
     information = (score * weight) @ score.T
-    root = np.linalg.inv(np.linalg.cholesky(information))
+    # At the edge of a family two scores may say the same: what they span counts, however many span it.
+    scale, directions = np.linalg.eigh(information)
+    told = scale > 1e-12 * scale[-1]
+    root = (directions[:, told] / np.sqrt(scale[told])).T
     explained = (polynomials * weight) @ (root @ score).T
     order = np.arange(1, _TERMS + 1)
     spread = 1.0 / np.sqrt(order * (order + 1.0))
