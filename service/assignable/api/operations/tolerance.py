@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from typing import Any
 
 from ...spc import cautions as caution
@@ -58,9 +57,12 @@ def interval(loaded: dict[str, Any]) -> dict[str, Any]:
         )
         return _answer(found, None)
     spread = overall(values)
+    # Divided before they are added up, so that no size of value overflows; the second pass restores the digits.
+    mean = float((values / values.size).sum())
+    mean += float(((values - mean) / values.size).sum())
     found = tolerance.normal_interval(
         values.size,
-        float(math.fsum(values) / values.size),
+        mean,
         spread.sigma,
         coverage=coverage,
         confidence=confidence,

@@ -31,6 +31,7 @@ _GRID = 28
 # A threshold so far away that the law is a normal (lognormal) or an extreme-value one (Weibull) to the eye.
 _FARTHEST = 300.0
 _NEAREST = 1e-3
+_NO_DISTANCE = 1e-100
 _PART = 4000
 # A folded normal whose mean is nearer its fold than this, in sigma, cannot be told from a half normal.
 _FOLDED_APART = 0.3
@@ -656,7 +657,11 @@ def _frame(law: Law, sample: Sample) -> tuple[float, float, int]:
         if sample.natural_lower is None and sample.natural_upper is not None:
             direction, origin = -1, sample.natural_upper
         u = direction * (everything - origin)
+        unit = float(u.mean()) or 1.0
         least = float(u.min())
+        # So near its bound that it is there to rounding, and its logarithm would rule everything.
+        if 0.0 < least < _NO_DISTANCE * unit:
+            least = 0.0
         takes_bound = law.name in _TAKING_BOUND and not (below.size and float(below.min()) <= origin)
         if least < 0.0 or (least == 0.0 and not takes_bound):
             side = "above" if direction > 0 else "below"
@@ -674,7 +679,7 @@ def _frame(law: Law, sample: Sample) -> tuple[float, float, int]:
                 "data",
                 "below",
             )
-        return origin, float(u.mean()) or 1.0, direction
+        return origin, unit, direction
     shift = float(np.median(everything))
     u = everything - shift
     unit = float(np.abs(u).mean()) or 1.0
@@ -721,11 +726,19 @@ def fit_law(law: Law, sample: Sample) -> Fitted:
             total += float(law.log_cdf(limits, at).sum())
         return total
 
-    if limits.size:
-        theta = climb(law, likelihood, theta, u)
-    gradient_units = law.units(theta, u)
-    covariance = _inverse_information(likelihood, theta, gradient_units)
-    value = likelihood(theta) - u.size * math.log(unit)
+    # Far from its maximum a likelihood may overflow; what comes of it is refused below.
+    with np.errstate(all="ignore"):
+        if limits.size:
+            theta = climb(law, likelihood, theta, u)
+        covariance = _inverse_information(likelihood, theta, law.units(theta, u))
+        value = likelihood(theta) - u.size * math.log(unit)
+    if not (math.isfinite(value) and np.isfinite(theta).all()):
+        raise UnusableData.of(
+            "no-maximum",
+            f"The likelihood of the distribution {name} cannot be computed for these values; choose another.",
+            "data",
+            "values",
+        )
     return Fitted(law, theta, shift, unit, direction, sample.count, value, covariance)
 
 

@@ -28,6 +28,7 @@ _STEP = 0.35
 _POINTS = 900
 _LARGEST_STATISTIC = 12.0
 _LEAST_P = 1e-6
+_LEAST_INFORMATION = 1e-9
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,10 +89,12 @@ def _known(name: str, key: tuple[float, ...], scores: Scores) -> tuple[float, ..
     p, q, weight, polynomials = _grid()
     score = scores(p, q, np.array(key))
     information = (score * weight) @ score.T
-    # At the edge of a family two scores may say the same: what they span counts, however many span it.
-    scale, directions = np.linalg.eigh(information)
-    told = scale > 1e-12 * scale[-1]
-    root = (directions[:, told] / np.sqrt(scale[told])).T
+    size = np.sqrt(np.diag(information))
+    size = np.where(size > 0.0, size, 1.0)
+    eigen, vectors = np.linalg.eigh(information / np.outer(size, size))
+    # A direction without information explains nothing.
+    told = eigen > _LEAST_INFORMATION
+    root = (vectors[:, told] / np.sqrt(eigen[told])).T / size
     explained = (polynomials * weight) @ (root @ score).T
     order = np.arange(1, _TERMS + 1)
     spread = 1.0 / np.sqrt(order * (order + 1.0))

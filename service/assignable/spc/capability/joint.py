@@ -38,6 +38,7 @@ _PRIMES = (2.0, 3.0, 5.0, 7.0, 11.0, 13.0, 17.0)
 _MILLION = 1e6
 _TINY = 1e-300
 _SINGULAR = 1e-10
+_LARGEST = 1e150
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,7 +83,7 @@ def assess(
     """Joint conforming proportion of items (m, k), NaN where missing, against k specifications.
 
     Items with a missing value are left out. Raises UnusableData ``too-few-values``, ``no-variation``,
-    ``collinear``; UnusableParameter ``unequal-length``, ``confidence-out-of-range``.
+    ``collinear``, ``too-large``; UnusableParameter ``unequal-length``, ``confidence-out-of-range``.
     """
     check_confidence(confidence)
     k = len(specifications)
@@ -101,6 +102,10 @@ def assess(
             f"{k} characteristics together need {max(FEWEST_ITEMS, 2 * k + 2)} items with every value; there are {n}.",
             "data",
             "values",
+        )
+    if float(np.abs(rows).max()) > _LARGEST:
+        raise UnusableData.of(
+            "too-large", "The values are too large; choose a larger unit.", "data", "values"
         )
     mean = rows.mean(axis=0)
     centred = rows - mean
@@ -129,8 +134,12 @@ def assess(
             "values",
         )
     sd = sd * unit
-    lower = np.array([_limit(one.lower, mean[i], sd[i], -1.0) for i, one in enumerate(specifications)])
-    upper = np.array([_limit(one.upper, mean[i], sd[i], 1.0) for i, one in enumerate(specifications)])
+    lower = np.array(
+        [_limit(one.lower, float(mean[i]), float(sd[i]), -1.0) for i, one in enumerate(specifications)]
+    )
+    upper = np.array(
+        [_limit(one.upper, float(mean[i]), float(sd[i]), 1.0) for i, one in enumerate(specifications)]
+    )
     own = scipy.special.ndtr(lower) + scipy.special.ndtr(-upper)
     # The characteristic that fails most goes first: its part is then had without sampling.
     joint, error = _outside_with_error(lower, upper, correlation)

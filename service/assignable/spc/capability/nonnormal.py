@@ -26,6 +26,7 @@ from ..data import Floats
 from ..errors import SpcError, UnusableData, UnusableParameter
 from .distributions import LAWS, DistributionParameter, Fitted, Sample, fit_law
 from .goodness import GoodnessOfFit
+from .indices import LARGEST_INDEX
 from .nonconforming import ObservedNonconforming, clopper_pearson, observed
 from .specification import Specification
 from .transforms import ALL_LAWS, TRANSFORMS
@@ -38,10 +39,11 @@ TAIL = 0.00135
 SIGNIFICANCE = 0.05
 # A normal is kept where its criterion is within this of the least [burnham-anderson-2002].
 AS_GOOD = 2.0
-MOST_FOR_CHOICE = 20_000
+MOST_FOR_CHOICE = 10_000
 _MILLION = 1e6
 _TINY = 1e-300
 _STEP = 1e-4
+_LARGEST_ERROR = 100.0
 
 _P = np.array([TAIL, 0.5, 1.0 - TAIL])
 _Q = np.array([1.0 - TAIL, 0.5, TAIL])
@@ -176,10 +178,10 @@ def choose(asked: str, sample: Sample) -> tuple[DistributionChoice, Fitted | Non
             "distribution",
         )
     tried, fits = _try(tuple(LAWS), sample)
-    used, reason = _best(tried, sample)
+    used, reason = _best(tried, fits, sample)
     if used is None and not sample.below.size:
         more, more_fits = _try(tuple(TRANSFORMS), sample)
-        used, reason = _best(more, sample)
+        used, reason = _best(more, more_fits, sample)
         tried, fits = tried + more, {**fits, **more_fits}
     if used is None:
         if sample.below.size:
@@ -228,11 +230,15 @@ def _try(names: Sequence[str], sample: Sample) -> tuple[list[DistributionCandida
     return tried, fits
 
 
-def _best(tried: list[DistributionCandidate], sample: Sample) -> tuple[str | None, str]:
+def _best(
+    tried: list[DistributionCandidate], fits: dict[str, Fitted], sample: Sample
+) -> tuple[str | None, str]:
     left = {
         one.distribution: one.aicc
         for one in tried
-        if one.aicc is not None and (one.goodness is None or one.goodness.p_value >= SIGNIFICANCE)
+        if one.aicc is not None
+        and one.distribution in fits
+        and (one.goodness is None or one.goodness.p_value >= SIGNIFICANCE)
     }
     if not left:
         return None, ""
@@ -260,8 +266,10 @@ def by_quantiles(
     """Indices, intervals and nonconforming product by the quantiles of a fit, or of the values (``None``).
 
     specification: with at least one limit that is no natural bound. confidence: of each interval by
-    itself, above 0.5. Raises UnusableData ``no-quantile`` where the distribution has no such quantile.
+    itself, above 0.5. Raises UnusableData ``no-quantile`` where the distribution has no such quantile;
+    UnusableParameter ``limits-too-far``.
     """
+    _check_limits(sample, specification)
     if found is None:
         return _empirical(sample, specification, confidence)
     theta = found.theta
@@ -274,16 +282,8 @@ def by_quantiles(
             "values",
         )
     half = bound = None
-    if found.covariance is not None:
-        sizes = np.sqrt(np.diag(found.covariance))
-        slopes = np.empty((theta.size, centre.size))
-        for k, size in enumerate(sizes):
-            step = np.zeros(theta.size)
-            step[k] = _STEP * size
-            slopes[k] = (
-                _figures(found, specification, theta + step) - _figures(found, specification, theta - step)
-            ) / (2.0 * step[k])
-        error = np.sqrt(np.maximum(np.einsum("ki,kl,li->i", slopes, found.covariance, slopes), 0.0))
+    error = _errors(found, specification, centre)
+    if error is not None:
         freedom = max(found.count - found.law.parameters, 1)
         half = error * float(scipy.special.stdtrit(freedom, 0.5 + 0.5 * confidence))
         bound = error * float(scipy.special.stdtrit(freedom, confidence))
@@ -325,6 +325,39 @@ def by_quantiles(
         observed=_observed(sample, specification, confidence),
         method="delta-method",
     )
+
+
+def _errors(found: Fitted, specification: Specification, centre: Floats) -> Floats | None:
+    """Standard errors of the figures by the delta method; ``None`` where the information does not give them."""
+    if found.covariance is None:
+        return None
+    theta = found.theta
+    slopes = np.empty((theta.size, centre.size))
+    with np.errstate(all="ignore"):
+        for k, size in enumerate(np.sqrt(np.diag(found.covariance))):
+            step = np.zeros(theta.size)
+            step[k] = _STEP * size
+            ahead, behind = (_figures(found, specification, theta + sign * step) for sign in (1.0, -1.0))
+            slopes[k] = (ahead - behind) / (2.0 * step[k])
+        error = np.sqrt(np.maximum(np.einsum("ki,kl,li->i", slopes, found.covariance, slopes), 0.0))
+    # An index so uncertain that its interval says nothing.
+    return error if bool((error < _LARGEST_ERROR * (1.0 + np.abs(centre))).all()) else None
+
+
+def _check_limits(sample: Sample, specification: Specification) -> None:
+    values = sample.values
+    # Halved, because the difference of two allowed numbers may overflow.
+    middle = 0.5 * float(np.median(values))
+    spread = float(values.max()) * 0.5 - float(values.min()) * 0.5
+    for name, limit in (("lower", specification.lower), ("upper", specification.upper)):
+        if limit is not None and abs(0.5 * limit - middle) > LARGEST_INDEX * spread:
+            raise UnusableParameter.of(
+                "limits-too-far",
+                f"The {name} limit, {limit:g}, is out of all proportion to the values, which spread over "
+                f"{2.0 * spread:g}; check that limits and values have the same unit, and that the values vary.",
+                "specification",
+                name,
+            )
 
 
 def _ppm(probit: float) -> float:

@@ -76,7 +76,7 @@ class _BoxCox(_ToNormal):
     def _power(self, log_u: Floats, power: float) -> Floats:
         if abs(power) < _NO_POWER:
             return log_u
-        found: Floats = np.expm1(np.clip(power * log_u, -690.0, 690.0)) / power
+        found: Floats = np.expm1(np.clip(power * log_u, -300.0, 300.0)) / power
         return found
 
     def _z(self, u: Floats, theta: Floats) -> Floats:

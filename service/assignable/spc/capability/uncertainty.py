@@ -19,7 +19,7 @@ from ..cautions import Caution
 from ..data import Floats
 from ..errors import Fault, UnusableParameter
 from ..factors import gauss_legendre
-from .indices import chi_factors
+from .indices import LARGEST_INDEX, chi_factors
 from .specification import Specification
 
 ConformanceVerdict: TypeAlias = Literal["conforming", "nonconforming", "undecided"]
@@ -28,6 +28,7 @@ _NODES = 64
 _REACH = 8.5
 _STEPS = 200
 _COARSE = 3.0
+_LEAST_RATIO = 1e-6
 
 
 @dataclass(frozen=True, slots=True)
@@ -135,8 +136,20 @@ def product_capability(
     count: int | None = None,
     confidence: float = 0.95,
 ) -> ProductCapability:
-    """Pp and Ppk with and without the measurement's share of the spread; see :func:`product_distribution`."""
+    """Pp and Ppk with and without the measurement's share of the spread; see :func:`product_distribution`.
+
+    Raises UnusableParameter ``limits-too-far`` too.
+    """
     own = product_distribution(mean, observed_sd, uncertainty).sd
+    for name, limit in (("lower", specification.lower), ("upper", specification.upper)):
+        if limit is not None and abs(0.5 * limit - 0.5 * mean) > LARGEST_INDEX * own:
+            raise UnusableParameter.of(
+                "limits-too-far",
+                f"The {name} limit, {limit:g}, is out of all proportion to the mean, {mean:g}, and the spread; "
+                "check that they have the same unit.",
+                "specification",
+                name,
+            )
     low = high = None
     if count is not None:
         factors = chi_factors(count - 1.0, confidence)
@@ -171,6 +184,14 @@ def _shrinkage(uncertainty: float, process: ProcessDistribution | None) -> tuple
     """Weight of the measured value in the true one's expectation, and the true one's standard uncertainty."""
     if process is None:
         return 1.0, uncertainty
+    if process.sd < _LEAST_RATIO * uncertainty:
+        raise UnusableParameter.of(
+            "process-too-narrow",
+            f"The process's own spread, {process.sd:g}, is so small beside the uncertainty, {uncertainty:g}, that a "
+            "result says nothing; check that both have the same unit.",
+            "process",
+            "sd",
+        )
     both = math.hypot(uncertainty, process.sd)
     return (process.sd / both) ** 2, uncertainty * (process.sd / both)
 
@@ -257,7 +278,8 @@ def global_risks(
     """Consumer's and producer's risk of accepting measured values within limits [jcgm-106], section 9.
 
     ∫ f(x) P(accepted | x) dx over nonconforming x, and its complement over conforming x, by Gauss–Legendre rules
-    between the places where either changes. Raises UnusableParameter ``limits-crossed``, ``no-limit``.
+    between the places where either changes. Raises UnusableParameter ``limits-crossed``,
+    ``no-limit``, ``uncertainty-out-of-proportion``.
     """
     faults = []
     if accept_lower is None and accept_upper is None:
@@ -277,6 +299,14 @@ def global_risks(
     lower, upper = scaled(specification.lower, -40.0), scaled(specification.upper, 40.0)
     a, b = scaled(accept_lower, -math.inf), scaled(accept_upper, math.inf)
     error = uncertainty / sd
+    if not _LEAST_RATIO <= error <= 1.0 / _LEAST_RATIO:
+        raise UnusableParameter.of(
+            "uncertainty-out-of-proportion",
+            f"The uncertainty, {uncertainty:g}, and the process's own spread, {sd:g}, differ so much that the plan has "
+            "no risk worth computing; check that both have the same unit.",
+            "process",
+            "sd",
+        )
     marks = {-_REACH, _REACH, 0.0, lower, upper}
     for limit in (a, b):
         if math.isfinite(limit):
