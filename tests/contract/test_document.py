@@ -16,13 +16,15 @@ from jsonschema import Draft202012Validator
 from marshmallow import ValidationError
 from openapi_spec_validator import validate
 
-from assignable.api import openapi, problems
+from assignable.api import answers, openapi, problems
 from assignable.api.contract import Operation
 from assignable.spc.charts import CHARTS
 from contract import served
 
 OPERATIONS = tuple(served.operations())
 TAKING_BODY = tuple(name for name, found in served.operations().items() if found.request is not None)
+PICTURES = tuple(name for name, found in served.operations().items() if found.media_type == answers.SVG)
+OWN_BODY = tuple(name for name in TAKING_BODY if name not in PICTURES)
 REFERENCE = "#/components/schemas/"
 Path = tuple[str | int, ...]
 
@@ -94,6 +96,20 @@ def test_every_chart_has_its_operations() -> None:
     for chart in CHARTS.values():
         for verb, name in (("limits", f"fit{chart.stem}Limits"), ("signals", f"judge{chart.stem}")):
             assert served.operations()[name].path == f"/v1/charts/{chart.name}/{verb}"
+            picture = served.operations()[f"draw{chart.stem}{verb.capitalize()}"]
+            assert picture.path == f"/v1/charts/{chart.name}/{verb}/picture"
+
+
+@pytest.mark.parametrize("operation_id", PICTURES)
+def test_a_picture_takes_what_its_operation_takes(operation_id: str) -> None:
+    picture = served.operations()[operation_id]
+    (source,) = (found for found in served.operations().values() if picture.path == f"{found.path}/picture")
+    assert picture.request is source.request
+    assert picture.examples == source.examples
+    assert set(picture.problems) == set(source.problems)
+    assert answer_schema(operation_id) == {"type": "string"}
+    (content,) = served.described(operation_id)["responses"]["200"]["content"].values()
+    assert not {"example", "examples"} & set(content)
 
 
 @pytest.mark.parametrize("operation_id", OPERATIONS)
@@ -213,7 +229,9 @@ def test_names_are_lower_case_with_underscores() -> None:
 # Examples -------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize(("operation_id", "name"), served.examples())
+@pytest.mark.parametrize(
+    ("operation_id", "name"), [(found, name) for found, name in served.examples() if found not in PICTURES]
+)
 def test_an_example_is_answered_as_the_contract_says(operation_id: str, name: str) -> None:
     sent = served.example(name)
     validator(served.request_schema(operation_id)).validate(sent)
@@ -302,7 +320,7 @@ def faults(operation: Operation, body: Any) -> dict[str, set[str]]:
     return {}
 
 
-@pytest.mark.parametrize("operation_id", TAKING_BODY)
+@pytest.mark.parametrize("operation_id", OWN_BODY)
 def test_bounds_of_numbers(operation_id: str) -> None:
     operation = served.operations()[operation_id]
     tried = 0
@@ -329,7 +347,7 @@ def test_bounds_of_numbers(operation_id: str) -> None:
     assert tried >= 2
 
 
-@pytest.mark.parametrize("operation_id", TAKING_BODY)
+@pytest.mark.parametrize("operation_id", OWN_BODY)
 def test_bounds_of_lists_texts_and_choices(operation_id: str) -> None:
     operation = served.operations()[operation_id]
     for path, schema, example in places(operation_id):

@@ -31,6 +31,14 @@ def _of_charts(names: Iterable[str]) -> tuple[Route, ...]:
     )
 
 
+def _pictures_of_charts(names: Iterable[str]) -> tuple[Route, ...]:
+    return tuple(
+        ("POST", f"/v1/charts/{name}/{verb}/picture", f"draw{stem_of(name)}{verb.capitalize()}")
+        for name in names
+        for verb in ("limits", "signals")
+    )
+
+
 GROUPS = (
     Group("charts", _of_charts(name for names in MODULES.values() for name in names)),
     Group("recommendation", (("POST", "/v1/charts/recommendation", "recommendChart"),)),
@@ -65,6 +73,15 @@ GROUPS = (
             ("POST", "/v1/measurement-studies/nested", "analyseNestedStudy"),
             ("POST", "/v1/measurement-studies/attributes", "analyseAgreementStudy"),
             ("POST", "/v1/measurement-studies/bias", "analyseBiasStudy"),
+        ),
+    ),
+    Group(
+        "pictures",
+        (
+            *_pictures_of_charts(name for names in MODULES.values() for name in names),
+            ("POST", "/v1/capability/measurements/picture", "drawMeasurements"),
+            ("POST", "/v1/designs/subgroups/picture", "drawSubgroupDesign"),
+            ("POST", "/v1/designs/run-length/picture", "drawRunLength"),
         ),
     ),
     Group(
