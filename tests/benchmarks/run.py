@@ -88,9 +88,7 @@ def judge_body() -> bytes:
 
     limits = orjson.loads(post("/v1/charts/xbar-r/limits", fit_body()))["limits"]
     data = {"values": [[2.51, 2.49, 2.5, 2.5, 2.52]]}
-    first = orjson.loads(
-        post("/v1/charts/xbar-r/signals", orjson.dumps({"limits": limits, "data": data}))
-    )
+    first = orjson.loads(post("/v1/charts/xbar-r/signals", orjson.dumps({"limits": limits, "data": data})))
     return orjson.dumps({"limits": limits, "data": data, "carry": first["carry"]})
 
 
@@ -183,7 +181,10 @@ def _rate_by_sockets(port: int, path: str, body: bytes) -> float:
     until = time.monotonic() + SECONDS
 
     def client(at: int) -> None:
-        with socket.create_connection(("127.0.0.1", port)) as connection, connection.makefile("rb") as answers:
+        with (
+            socket.create_connection(("127.0.0.1", port)) as connection,
+            connection.makefile("rb") as answers,
+        ):
             while time.monotonic() < until:
                 connection.sendall(request)
                 length = 0
@@ -213,7 +214,13 @@ def http() -> None:
             (folder / f"answer{at}").write_bytes(post(path, body))
         with _server(BARE, *(str(folder / f"answer{at}") for at in (0, 1))) as floor, _server(OURS) as ours:
             for at, title, path, body, aim in (
-                (0, "http: xbar-r limits, 25x5, all diagnostics", "/v1/charts/xbar-r/limits", fit, "aim ≥ 0.4"),
+                (
+                    0,
+                    "http: xbar-r limits, 25x5, all diagnostics",
+                    "/v1/charts/xbar-r/limits",
+                    fit,
+                    "aim ≥ 0.4",
+                ),
                 (1, "http: one subgroup judged with carry", "/v1/charts/xbar-r/signals", judge, "aim ≥ 0.6"),
             ):
                 ratios = []
@@ -331,7 +338,38 @@ def start() -> None:
     row("start: import to ready", f"{a * 1e3:.0f} of {b * 1e3:.0f} ms CPU", a / b, "aim ≤ 1.5")
 
 
-ROWS = {"http": http, "large": large, "memory": memory, "runs": runs, "start": start}
+def pictures() -> None:
+    """Drawing alone: the picture of a chart whose result is there, of few points and of very many."""
+    import numpy as np
+
+    from assignable.pictures import charts
+    from assignable.spc.charts import CHARTS
+    from assignable.spc.charts.common import PanelLimits
+    from assignable.spc.charts.subgroups import SubgroupOptions
+    from assignable.spc.data import Subgroups
+    from assignable.spc.rules import PUBLISHED
+
+    options = SubgroupOptions("mean-range", rules=PUBLISHED["western-electric-1956"].rules)
+    for points, aim in ((25, "aim < 5 ms"), (200_000, "aim < 60 ms")):
+        values = np.random.default_rng(2).normal(2.5, 0.012, (points, 5)).round(4)
+        found = CHARTS["xbar-r"].fit(Subgroups(values), options)
+        lines = dict(charts.panels_of(found.limits.panels))
+        charted = charts.Charted(
+            chart=CHARTS["xbar-r"],
+            name="wall thickness",
+            unit="mm",
+            new=False,
+            panels=found.baseline.panels,
+            frozen={name: PanelLimits(one.centre, one.lower, one.upper) for name, one in lines.items()},
+            verdict=found.baseline.verdict,
+            signals=found.baseline.signals,
+            signals_found=found.baseline.signals_found,
+        )
+        seconds = _cpu(lambda charted=charted: charts.draw(charted), 15)
+        row(f"pictures: xbar-r, {points:,} points", f"{seconds * 1e3:.1f} ms CPU", None, aim)
+
+
+ROWS = {"http": http, "large": large, "memory": memory, "runs": runs, "start": start, "pictures": pictures}
 
 
 def main(words: list[str]) -> None:

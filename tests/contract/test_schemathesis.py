@@ -114,7 +114,9 @@ FOLLOWED: Counter[str] = Counter()
 def machine(chart: str) -> Any:
     """Limits are fitted, and go with data into the operation that judges; the carry goes into the next."""
 
-    class Following(generated(coverage=False).include(path_regex=f"/v1/charts/{chart}/[a-z]+$").as_state_machine()):  # type: ignore[misc]
+    class Following(
+        generated(coverage=False).include(path_regex=f"/v1/charts/{chart}/[a-z]+$").as_state_machine()
+    ):  # type: ignore[misc]
         def validate_response(self, response: Any, case: Any, *_: Any, **__: Any) -> None:
             if response.status_code == 200:
                 body = case.body if isinstance(case.body, dict) else {}
