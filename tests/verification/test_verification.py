@@ -69,6 +69,7 @@ def test_the_cases_are_many_and_of_every_group() -> None:
     for name in ("p", "np", "c", "u", "g", "ewma", "cusum", "moving-average", "t-squared", "mewma"):
         assert f"fit{CHARTS[name].stem}Limits" in operations
     assert {"getFactors", "computeRunLength", "assessMeasurements", "designEconomic"} <= operations
+    assert "computeToleranceInterval" in operations
     assert {"analyseCrossedStudy", "analyseNestedStudy", "analyseAgreementStudy", "analyseBiasStudy"} <= (
         operations
     )

@@ -61,8 +61,8 @@ def _parts(verification: Verification, version: str) -> Iterator[str]:
         f'<p class="{"good" if verification.passed else "bad"} outcome">{outcome}; '
         f"{verification.checks_run} figures were compared.</p>\n"
         "<p>Each case was computed on this installation, through the same road as a request. A figure agrees "
-        "where it lies within half a unit of the last digit of its published value. This is evidence for a "
-        "site's own validation, and does not replace it.</p>\n"
+        "where it lies within the distance stated, half a unit of the last digit of print unless its note says "
+        "more. This is evidence for a site's own validation, and does not replace it.</p>\n"
         "<dl>\n"
     )
     for trust, meaning in MEANING.items():
