@@ -43,7 +43,7 @@ _ROOT_TAU = math.sqrt(2.0 * math.pi)
 
 
 @dataclass(frozen=True, slots=True)
-class Step:
+class BaselineStep:
     """The most likely single step of a level or of a spread, with a p-value that accounts for the search."""
 
     index: Annotated[int, "Position in the baseline, from 0, of the first point after the step."]
@@ -59,10 +59,10 @@ class Step:
 class ChangePoint:
     """A step of the level and of the spread, each looked for by itself in normal points of one process."""
 
-    mean: Annotated[Step | None, "Step of the level of the plotted points; null where there are too few."]
+    mean: Annotated[BaselineStep | None, "BaselineStep of the level of the plotted points; null where there are too few."]
     variance: Annotated[
-        Step | None,
-        "Step of the standard deviation: within subgroups, or of single values (a step of their mean that is "
+        BaselineStep | None,
+        "BaselineStep of the standard deviation: within subgroups, or of single values (a step of their mean that is "
         "significant at 0.01 taken out first); null where there are too few points, or none that vary.",
     ]
 
@@ -134,9 +134,9 @@ def _centred(values: Floats) -> tuple[float, float, Floats] | None:
     return first + middle, scale, z
 
 
-def _told(step: Step, at: Integers | None, scale: float, centre: float) -> Step:
+def _told(step: BaselineStep, at: Integers | None, scale: float, centre: float) -> BaselineStep:
     """The step in the unit and positions of the data."""
-    return Step(
+    return BaselineStep(
         step.index if at is None else int(at[step.index]),
         centre + scale * step.before,
         centre + scale * step.after,
@@ -152,8 +152,8 @@ def _counts(m: int) -> tuple[Floats, Floats]:
     return k, k * (m - k) / m
 
 
-def _step_of_mean(z: Floats, weights: Floats | None) -> tuple[Step | None, int]:
-    """Step of the mean of centred values (m,) of one variance over their weights."""
+def _step_of_mean(z: Floats, weights: Floats | None) -> tuple[BaselineStep | None, int]:
+    """BaselineStep of the mean of centred values (m,) of one variance over their weights."""
     m = len(z)
     mean = 0.0
     inside = slice(SHORTEST_LEVEL - 1, m - SHORTEST_LEVEL)
@@ -180,11 +180,11 @@ def _step_of_mean(z: Floats, weights: Floats | None) -> tuple[Step | None, int]:
     p = _of_search(2.0 * float(scipy.special.stdtr(m - 2, -t)), m, SHORTEST_LEVEL, 1.0 + 2.5 / m)
     s = float(sums[best])
     w = split if weights is None else float(before[best])
-    return Step(split, mean + s / w, mean - s / (m - w), -m * math.log(rest), p), split
+    return BaselineStep(split, mean + s / w, mean - s / (m - w), -m * math.log(rest), p), split
 
 
-def _step_of_spread_of_values(z: Floats) -> Step | None:
-    """Step of the standard deviation of centred values (m,), each side about its own mean."""
+def _step_of_spread_of_values(z: Floats) -> BaselineStep | None:
+    """BaselineStep of the standard deviation of centred values (m,), each side about its own mean."""
     m = len(z)
     edge = int(LEAST_FREEDOM) + 1
     if m < 2 * edge:
@@ -198,8 +198,8 @@ def _step_of_spread_of_values(z: Floats) -> Step | None:
     return _step_of_variance(before, after, k - 1.0, (m - 1.0) - k, edge, m)
 
 
-def _step_within(statistics: SubgroupStatistics, smallest: int, largest: int) -> Step | None:
-    """Step of the standard deviation within subgroups."""
+def _step_within(statistics: SubgroupStatistics, smallest: int, largest: int) -> BaselineStep | None:
+    """BaselineStep of the standard deviation within subgroups."""
     if largest < 2:
         return None
     size, at = statistics.size, None
@@ -265,7 +265,7 @@ def _of_range(n: int) -> tuple[float, float]:
 
 def _step_of_variance(
     before: Floats, after: Floats, nu1: Floats, nu2: Floats, edge: int, m: int
-) -> Step | None:
+) -> BaselineStep | None:
     """The best split by Bartlett's corrected ratio, from the sums of squares and freedoms on both sides."""
     s1, s2 = before / nu1, after / nu2
     # What cancellation leaves of a constant stretch is no variance.
@@ -284,7 +284,7 @@ def _step_of_variance(
     one, two = float(s1[best]), float(s2[best])
     tail = scipy.special.fdtr(a, b, one / two) if one < two else scipy.special.fdtr(b, a, two / one)
     p = _of_search(min(2.0 * float(tail), 1.0), m, edge)
-    return Step(best + edge, math.sqrt(one), math.sqrt(two), max(float(ratio[best]), 0.0), p)
+    return BaselineStep(best + edge, math.sqrt(one), math.sqrt(two), max(float(ratio[best]), 0.0), p)
 
 
 @lru_cache(256)
