@@ -655,7 +655,7 @@ def _line(points: Floats) -> tuple[Drift | None, Floats]:
     return Drift(slope * scale, explained, p), rest
 
 
-def _steep(drift: Drift, step: change_points.Step | None, points: int) -> bool:
+def _steep(drift: Drift, step: change_points.BaselineStep | None, points: int) -> bool:
     """A line that explains half of the variation, and more than a step does."""
     if drift.p_value >= SIGNIFICANCE or drift.explained < 0.5:
         return False
