@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
@@ -11,6 +12,8 @@ from ...spc.capability import joint, uncertainty
 from ...spc.capability.specification import Specification
 from ...spc.capability.study import study
 from ...spc.errors import UnusableParameter
+from ...spc.explain import capability as worked
+from ...spc.explain.steps import Step
 from .. import problems
 from ..contract import Contract
 from ..schemas.capability import (
@@ -133,6 +136,43 @@ def _plan(
     return uncertainty.global_risks(given, specification, lower, upper, process)
 
 
+def explain_measurements(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of indices."""
+    return worked.of_measurements(
+        measurements_of(loaded),
+        specification_of(loaded["specification"]).effective,
+        answer["capability"],
+        answer["machine"],
+        answer["quantiles"],
+    )
+
+
+def explain_attributes(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a rate."""
+    return worked.of_counts(counted(loaded["data"])[0], answer["capability"])
+
+
+def explain_several(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of one of several characteristics, and of all together."""
+    asked = [specification_of(one["specification"]).effective for one in loaded["characteristics"]]
+    return worked.of_several(loaded["data"]["values"], asked, answer["joint"])
+
+
+def explain_conformance(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of one measured value, of acceptance limits and of a plan."""
+    process = process_of(loaded)
+    return worked.of_conformance(
+        loaded["standard_uncertainty"],
+        specification_of(loaded["specification"]).effective,
+        process if loaded["use_process"] else None,
+        answer["results"],
+        answer["acceptance_limits"],
+        process,
+        answer["plan"],
+        answer["product"],
+    )
+
+
 def register(contract: Contract) -> None:
     """Binds the capability operations."""
     contract.tag(TAG, "What a process can hold, against what its specification asks.")
@@ -153,6 +193,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example=("capability-measurements", "capability-below-limits", "capability-chosen-distribution"),
         provenance="capability-of-measurements",
+        explain=explain_measurements,
     )(measurements)
     contract.operation(
         "POST",
@@ -168,6 +209,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="capability-attributes",
         provenance="capability-of-attributes",
+        explain=explain_attributes,
     )(attributes)
     contract.operation(
         "POST",
@@ -183,6 +225,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="capability-several",
         provenance="capability-of-several",
+        explain=explain_several,
     )(several)
     contract.operation(
         "POST",
@@ -199,4 +242,5 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="capability-conformance",
         provenance="conformance",
+        explain=explain_conformance,
     )(conformance)

@@ -18,6 +18,8 @@ from ...spc.cautions import COMMON_PRACTICE, Caution
 from ...spc.charts import CHARTS
 from ...spc.data import Floats
 from ...spc.errors import DocumentMismatch, Fault, SpcError, UnusableData, UnusableParameter, Where
+from ...spc.explain import release as worked
+from ...spc.explain.steps import Step
 from .. import fields as f
 from .. import problems
 from ..contract import Contract
@@ -383,6 +385,16 @@ def _mapped_to(where: Where) -> Where:
     return ("trend", *where)
 
 
+def explain(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of each characteristic against its specification; its chart's are told by the chart."""
+    return worked.of_check(
+        [
+            (characteristic, release.check(characteristic).figures)
+            for characteristic in (characteristic_of(one, None) for one in loaded["characteristics"])
+        ]
+    )
+
+
 def register(contract: Contract) -> None:
     """Binds the release check."""
     contract.tag(TAG, "What speaks for and against releasing a batch.")
@@ -405,4 +417,5 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE, problems.DOCUMENT_MISMATCH),
         example="release-checks",
         provenance="release-check",
+        explain=explain,
     )(check)

@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import fields
 from typing import Any
 
-from ...spc.studies.agreement import agreement
+from ...spc.explain import studies as worked
+from ...spc.explain.steps import Step
+from ...spc.studies.agreement import AgreementStudy, agreement
 from ...spc.studies.bias import bias
-from ...spc.studies.columns import crossed_table, nested_table, rating_table
+from ...spc.studies.columns import RatingTable, crossed_table, nested_table, rating_table
 from ...spc.studies.crossed import crossed
 from ...spc.studies.nested import nested
 from .. import problems
@@ -64,8 +67,7 @@ def nested_study(loaded: dict[str, Any]) -> dict[str, Any]:
     )
 
 
-def agreement_study(loaded: dict[str, Any]) -> dict[str, Any]:
-    """Agreement of appraisers who sort."""
+def _agreement_of(loaded: dict[str, Any]) -> tuple[RatingTable, AgreementStudy]:
     right = loaded.get("reference")
     table = rating_table(
         **loaded["data"],
@@ -73,7 +75,7 @@ def agreement_study(loaded: dict[str, Any]) -> dict[str, Any]:
         reference=None if right is None else (right["items"], right["ratings"]),
         nonconforming=loaded.get("nonconforming"),
     )
-    found = agreement(
+    return table, agreement(
         table.ratings,
         categories=table.categories,
         appraisers=table.appraisers,
@@ -81,6 +83,11 @@ def agreement_study(loaded: dict[str, Any]) -> dict[str, Any]:
         nonconforming=table.nonconforming,
         confidence=loaded["confidence"],
     )
+
+
+def agreement_study(loaded: dict[str, Any]) -> dict[str, Any]:
+    """Agreement of appraisers who sort."""
+    table, found = _agreement_of(loaded)
     return _answer(
         found,
         appraisers=table.appraisers,
@@ -93,6 +100,31 @@ def bias_study(loaded: dict[str, Any]) -> dict[str, Any]:
     """Bias and linearity of a gauge."""
     found = bias(levels_of(loaded["data"]), confidence=loaded["confidence"])
     return _answer(found, cautions=cautions(found.cautions))
+
+
+def explain_crossed(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a crossed study."""
+    values, asked = crossed_table(**loaded["data"]).measurements, terms_of(loaded)
+    found = crossed(values, pooling_alpha=loaded["pooling_alpha"], **asked)
+    return worked.of_crossed(values, found, asked["tolerance"], asked.get("process_sd"))
+
+
+def explain_nested(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a nested study."""
+    values, asked = nested_table(**loaded["data"]).measurements, terms_of(loaded)
+    return worked.of_nested(values, nested(values, **asked), asked["tolerance"], asked.get("process_sd"))
+
+
+def explain_agreement(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of an agreement study."""
+    table, found = _agreement_of(loaded)
+    return worked.of_agreement(table.ratings, found)
+
+
+def explain_bias(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a bias study."""
+    levels = levels_of(loaded["data"])
+    return worked.of_bias(levels, bias(levels, confidence=loaded["confidence"]))
 
 
 def register(contract: Contract) -> None:
@@ -114,6 +146,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="measurement-studies-crossed",
         provenance="crossed-study",
+        explain=explain_crossed,
     )(crossed_study)
     contract.operation(
         "POST",
@@ -129,6 +162,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="measurement-studies-nested",
         provenance="nested-study",
+        explain=explain_nested,
     )(nested_study)
     contract.operation(
         "POST",
@@ -144,6 +178,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="measurement-studies-attributes",
         provenance="agreement-study",
+        explain=explain_agreement,
     )(agreement_study)
     contract.operation(
         "POST",
@@ -159,4 +194,5 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="measurement-studies-bias",
         provenance="bias-study",
+        explain=explain_bias,
     )(bias_study)

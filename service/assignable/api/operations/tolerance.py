@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 from ...spc import cautions as caution
@@ -9,6 +10,8 @@ from ...spc import diagnostics
 from ...spc.capability import tolerance
 from ...spc.cautions import Caution
 from ...spc.errors import UnusableParameter
+from ...spc.explain import tolerance as worked
+from ...spc.explain.steps import Step
 from ...spc.sigma import overall
 from .. import problems
 from ..contract import Contract
@@ -132,6 +135,14 @@ def _answer(
     return {"interval": found, "sample_size": size, "normality": normality, "cautions": cautions(told)}
 
 
+def explain(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of the interval, or of the sample size."""
+    if answer["interval"] is None:
+        return worked.of_sample_size(answer["sample_size"])
+    values = loaded["data"]["values"] if "data" in loaded else None
+    return worked.of_interval(None if values is None else values[values == values], answer["interval"])
+
+
 def register(contract: Contract) -> None:
     """Binds the operation of tolerance intervals."""
     contract.tag(TAG, "Between which values a stated share of the product lies, with a stated confidence.")
@@ -150,4 +161,5 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example=("tolerance-interval", "tolerance-sample-size"),
         provenance="tolerance-interval",
+        explain=explain,
     )(interval)
