@@ -10,6 +10,7 @@ from ...spc.design import attributes, baseline, comparison, economic, subgroups
 from ...spc.design import memory as designs
 from ...spc.errors import UnusableParameter, Where
 from ...spc.runlength.estimated import PERCENTILES
+from ...spc.runlength.memory import SMALLEST_SMOOTHING
 from .. import problems
 from ..contract import Contract
 from ..schemas.common import located, rules_of
@@ -95,7 +96,14 @@ def design_ewma(loaded: dict[str, Any]) -> dict[str, Any]:
     _asked(loaded, "smoothing")
     varying, two = loaded["limits"] == "time-varying", loaded["sides"] == "two"
     limit = best = None
+    least = _smallest_smoothing(varying, loaded["in_control_arl"])
     if "smoothing" in loaded:
+        if loaded["smoothing"] < least:
+            raise UnusableParameter.of(
+                "too-much-work",
+                f"With time-varying limits and so few false alarms the smoothing constant must be {least:g} or more.",
+                "smoothing",
+            )
         limit = designs.ewma_limit(
             smoothing=loaded["smoothing"],
             in_control_arl=loaded["in_control_arl"],
@@ -111,8 +119,16 @@ def design_ewma(loaded: dict[str, Any]) -> dict[str, Any]:
             two_sided=two,
             interval_hours=loaded.get("interval_hours"),
             shifts=_table(loaded),
+            smallest_smoothing=least,
         )
     return {"limit": limit, "optimal": best}
+
+
+def _smallest_smoothing(varying: bool, in_control_arl: float) -> float:
+    """Growing limits take the longer, the longer the memory and the rarer the false alarms."""
+    if not varying:
+        return SMALLEST_SMOOTHING
+    return 0.01 if in_control_arl <= 1_000 else 0.02 if in_control_arl <= 1_000_000 else 0.05
 
 
 def design_cusum(loaded: dict[str, Any]) -> dict[str, Any]:
@@ -195,7 +211,9 @@ def design_baseline(loaded: dict[str, Any]) -> dict[str, Any]:
     """How far limits from a baseline can be trusted."""
     estimator, multiple = loaded.get("sigma_estimator"), loaded["sigma_multiple"]
     percentiles = loaded.get("percentiles", np.array(PERCENTILES))
-    with located(estimator=("sigma_estimator",), multiple=("sigma_multiple",)):
+    # A run length that was not asked for is what the multiple promises.
+    promised = "in_control_arl" if "in_control_arl" in loaded else "sigma_multiple"
+    with located(estimator=("sigma_estimator",), multiple=("sigma_multiple",), in_control_arl=(promised,)):
         assessment = baseline.assess(
             loaded["subgroups"],
             loaded["size"],
@@ -214,7 +232,9 @@ def design_baseline(loaded: dict[str, Any]) -> dict[str, Any]:
             subgroups=("table", "subgroups"),
             sizes=("table", "sizes"),
             size=("table", "sizes"),
+            estimator=("sigma_estimator",),
             multiple=("sigma_multiple",),
+            in_control_arl=("sigma_multiple",),
         ):
             table = baseline.table(
                 asked["subgroups"].tolist(),

@@ -13,7 +13,7 @@ from ...spc.charts.counts import count_law, count_lines
 from ...spc.charts.lattice import run_law, steady_run_law
 from ...spc.errors import UnusableParameter, Where
 from ...spc.runlength import memory, mewma, moving, of_rules
-from ...spc.runlength.survival import Decay, RunLength
+from ...spc.runlength.survival import MOST_OPERATIONS, Allowance, Decay, RunLength
 from .. import problems
 from ..contract import Contract
 from ..schemas.common import located, rules_of
@@ -22,10 +22,8 @@ from ..schemas.run_length import RunLengthRequest, RunLengthsAnswer, count_basis
 TAG = "Chart design"
 TAG_TEXT = "How many pieces, how often, which limits, and what they cost in false alarms."
 USUAL_FACTORS = (1.0, 0.5, 1.5, 2.0, 3.0)
-MOST_OPERATIONS = 1_500_000_000
-"""Operations that one request may take: about a second."""
+_MOST_POINTS = 14.0  # times the memory of a smoothed vector: until its law stands still
 _MOST_FOR_STEADY = MOST_OPERATIONS // 8
-_KERNEL = 600  # operations of one value of the kernel of several variables
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,26 +39,6 @@ class _Found:
 _At: TypeAlias = Callable[[float, float], _Found]
 
 
-class _Allowance:
-    """What a request may still take. It is counted in operations, so that the same request always fares alike."""
-
-    def __init__(self, asked: int, where: str) -> None:
-        self._left = float(MOST_OPERATIONS)
-        self._done, self._asked, self._where = 0, asked, where
-
-    def take(self, operations: float) -> None:
-        """Takes note of one more run length."""
-        self._left -= operations
-        self._done += 1
-        if self._left < 0 and self._done < self._asked:
-            raise UnusableParameter.of(
-                "too-much-work",
-                f"With this chart {self._done} of the {self._asked} {self._where} are as many as one request may "
-                "compute; ask for the others in further requests.",
-                self._where,
-            )
-
-
 def run_length(loaded: dict[str, Any]) -> dict[str, Any]:
     """Run lengths of a chart with known parameters."""
     kind = one_chart(loaded)
@@ -74,10 +52,12 @@ def run_length(loaded: dict[str, Any]) -> dict[str, Any]:
     shifts = shifts_of(loaded)
     at = _ROADS[kind](loaded, chart, within, len(shifts))
     root = math.sqrt(chart["subgroup_size"])
-    allowance = _Allowance(len(shifts), "shifts" if "shifts" in loaded else "scales")
+    allowance = Allowance(len(shifts), "shifts" if "shifts" in loaded else "scales")
     told = []
     for index, (shift, scale) in enumerate(shifts):
-        places: dict[str, Where] = {name: (kind, name) for name in (*chart, "rules")}
+        places: dict[str, Where] = {name: (kind, name) for name in chart}
+        # What never signals, or does not settle, is told of the rules; without any it is the limits.
+        places["rules"] = (kind, "rules" if kind == "shewhart" else _LIMITS[kind])
         with located(shift=("shifts", index), scale=("scales", index), **places):
             found = at(shift * root, scale)
         told.append(_told(found, within, hours, shift=shift, scale=scale))
@@ -110,7 +90,7 @@ def _of_law(law: Decay, within: tuple[int, ...], steady: Callable[[], float | No
     run = law.run_length()
     reached = law.probability(np.array(within, dtype=np.float64)).tolist()
     slow = law.operations > _MOST_FOR_STEADY
-    return _Found(run, reached, None if slow else steady(), law.operations * (1 if slow else 3))
+    return _Found(run, reached, None if slow else steady(), law.operations * (1 if slow else 2))
 
 
 def _shewhart(loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...], _: int) -> _At:
@@ -172,7 +152,7 @@ def _moving_average(loaded: dict[str, Any], chart: dict[str, Any], within: tuple
         given = {"span": chart["span"], "limit": chart["sigma_multiple"], "shift": shift, "scale": scale}
         found = _of_law(moving.moving_average_law(**given), within, lambda: moving.steady_state_arl(**given))
         # The weights of a step take more than the steps themselves.
-        return _Found(found.run, found.within, found.steady_state_arl, 8 * found.operations)
+        return _Found(found.run, found.within, found.steady_state_arl, 28 * found.operations)
 
     return at
 
@@ -200,7 +180,8 @@ def _mewma(loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...
         )
 
     def check(limit: float) -> float:
-        kernel = _KERNEL * float(mewma.work(smoothing, limit, exact=exact))
+        kernel = (350.0 + 6.0 * p) * mewma.work(smoothing, limit, exact=exact)
+        kernel += _MOST_POINTS / smoothing * mewma.step_work(smoothing, limit)
         if kernel > MOST_OPERATIONS:
             raise UnusableParameter.of(
                 "too-much-work",
@@ -223,12 +204,13 @@ def _mewma(loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...
         law = mewma.mewma_law(p, smoothing, limit, shift, exact=exact)
         found = _of_law(law, within, lambda: mewma.steady_state_arl(p, smoothing, limit, shift))
         return _Found(
-            found.run, found.within, found.steady_state_arl, 2 * found.operations + kernel / max(asked, 1)
+            found.run, found.within, found.steady_state_arl, found.operations + kernel / max(asked, 1)
         )
 
     return at
 
 
+_LIMITS = {"ewma": "limit", "cusum": "decision", "moving_average": "sigma_multiple", "mewma": "smoothing"}
 _ROADS = {
     "shewhart": _shewhart,
     "ewma": _ewma,
@@ -266,7 +248,7 @@ def _of_counts(
     factors = loaded.get("factors", np.array(USUAL_FACTORS)).tolist()
     if "factors" not in loaded and binomial:
         factors = [factor for factor in factors if mean * factor < 1]
-    allowance = _Allowance(len(factors), "factors")
+    allowance = Allowance(len(factors), "factors")
     told = []
     for at, factor in enumerate(factors):
         if binomial and mean * factor >= 1:
@@ -280,7 +262,8 @@ def _of_counts(
             return None if law is None else law.run_length().arl
 
         with located(rules=("counts", "rules")):
-            found = _of_law(run_law(rules, shifted, **drawn), within, steady)
+            law = run_law(rules, shifted, **drawn)
+            found = _of_law(law, within, steady)
         told.append(_told(found, within, hours, factor=factor))
         allowance.take(found.operations)
     return told

@@ -25,7 +25,8 @@ import scipy
 from ..data import Booleans, Floats
 from ..errors import UnusableParameter
 from ..rules import Rule
-from ..runlength import shewhart
+from ..runlength.of_rules import shewhart_law
+from ..runlength.survival import MOST_OPERATIONS, Allowance
 
 ShiftMoment: TypeAlias = Literal["after-sample", "random"]
 
@@ -156,7 +157,7 @@ def operating_characteristics(
     Arguments as for :func:`oc_curve`; interval_hours: between samples, 1e-6 to 1e6. rules: further rules,
     with which at most 50 shifts are taken, since each needs a Markov chain of its own; the run length is
     then from a chart without history at the shift. beta and power are of the first sample's own limits.
-    Raises UnusableParameter: an argument out of its range, or what ``runlength.shewhart`` raises.
+    Raises UnusableParameter: an argument out of its range, ``too-much-work``, or what ``runlength.shewhart`` raises.
     Source: [montgomery-2013], sections 6.2.6 and 6.2.7; [champ-woodall-1987] with rules.
     """
     _check_size(size)
@@ -173,10 +174,13 @@ def operating_characteristics(
     else:
         given = tuple(rules)
         root = math.sqrt(size)
-        found = [
-            shewhart(given, lower=-multiple, upper=multiple, shift=shift * root)
-            for shift in (0.0, *shifts.tolist())
-        ]
+        # Half of what a request may take: two plans are described at most.
+        allowance = Allowance(1 + len(shifts), "shifts", 0.5 * MOST_OPERATIONS)
+        found = []
+        for shift in (0.0, *shifts.tolist()):
+            law = shewhart_law(given, lower=-multiple, upper=multiple, shift=shift * root)
+            found.append(law.run_length())
+            allowance.take(law.operations)
         arl = np.array([one.arl for one in found[1:]])
         spread = np.array([one.sd for one in found[1:]])
         in_control, in_control_spread = found[0].arl, found[0].sd

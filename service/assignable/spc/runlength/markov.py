@@ -42,7 +42,7 @@ def _fresh(automaton: Automaton) -> Floats:
 
 
 def _work(automaton: Automaton, letters: int) -> int:
-    return 4 * automaton.states * letters
+    return 6 * automaton.states * letters
 
 
 @lru_cache(maxsize=8)

@@ -395,13 +395,13 @@ def mewma_law(p: int, smoothing: float, limit: float, shift: float = 0.0, *, exa
     return follow(
         walk,
         memory=math.ceil(1.0 / smoothing),
-        work=_step_work(smoothing, limit),
+        work=step_work(smoothing, limit),
         method=METHOD,
         accuracy="relative 1e-4" if exact else ACCURACY,
     )
 
 
-def _step_work(smoothing: float, limit: float) -> int:
+def step_work(smoothing: float, limit: float) -> int:
     """Operations of one point on the grid of the settled limits."""
     along, across = _shape(_bound(smoothing, limit))
     return along * across * (along + 2 * across)
@@ -414,7 +414,7 @@ def _calm(p: int, smoothing: float, limit: float) -> Floats | None:
     def state() -> Floats:
         return walk.mass
 
-    return settle(walk, state, work=_step_work(smoothing, limit))
+    return settle(walk, state, work=step_work(smoothing, limit))
 
 
 @lru_cache(maxsize=256)

@@ -165,6 +165,35 @@ def settle(
     return None
 
 
+MOST_OPERATIONS = 1_800_000_000
+"""Operations that the run lengths of one request may take: about a second."""
+
+
+class Allowance:
+    """What a list of run lengths may still take.
+
+    Counted in operations and not in seconds, so that the same request always fares alike.
+    """
+
+    __slots__ = ("_asked", "_done", "_left", "_where")
+
+    def __init__(self, asked: int, where: str, most: float = MOST_OPERATIONS) -> None:
+        self._left = float(most)
+        self._done, self._asked, self._where = 0, asked, where
+
+    def take(self, operations: float) -> None:
+        """Takes note of one more. Raises ``UnusableParameter`` (``too-much-work``) when others are to come."""
+        self._left -= operations
+        self._done += 1
+        if self._left < 0 and self._done < self._asked:
+            raise UnusableParameter.of(
+                "too-much-work",
+                f"With this chart {self._done} of the {self._asked} {self._where} are as many as one request may "
+                "compute; ask for the others in further requests.",
+                self._where,
+            )
+
+
 def geometric(p: float) -> Decay:
     """The law when each point signals with probability p, whatever came before."""
     return Decay(np.ones(1), min(p, 1.0), "closed form (geometric)", "exact")
