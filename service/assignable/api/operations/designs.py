@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
@@ -9,6 +10,8 @@ import numpy as np
 from ...spc.design import attributes, baseline, comparison, economic, subgroups
 from ...spc.design import memory as designs
 from ...spc.errors import UnusableParameter, Where
+from ...spc.explain import designs as worked
+from ...spc.explain.steps import Step
 from ...spc.runlength.estimated import PERCENTILES
 from ...spc.runlength.memory import SMALLEST_SMOOTHING
 from .. import problems
@@ -274,6 +277,62 @@ def compare_designs(loaded: dict[str, Any]) -> dict[str, Any]:
     return {"comparison": found}
 
 
+def explain_subgroups(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a plan."""
+    rules = rules_of(loaded.get("rules")) or None
+    return worked.of_subgroups(answer["plan"], answer["present"], answer["comparison"], rules)
+
+
+def explain_ewma(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of an EWMA."""
+    return worked.of_ewma_design(
+        loaded.get("smoothing"),
+        answer["limit"],
+        loaded["in_control_arl"],
+        loaded["sides"] == "two",
+        answer["optimal"],
+        loaded.get("interval_hours"),
+    )
+
+
+def explain_cusum(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a CUSUM."""
+    return worked.of_cusum_design(
+        loaded.get("reference"),
+        answer["decision"],
+        loaded["in_control_arl"],
+        loaded["head_start_fraction"],
+        loaded["sides"] == "two",
+        answer["optimal"],
+        loaded.get("interval_hours"),
+    )
+
+
+def explain_attributes(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a chart of counts."""
+    basis = attributes.limit_basis(
+        sigma_multiple=loaded.get("sigma_multiple"),
+        false_alarm_probability=loaded.get("false_alarm_probability"),
+    )
+    return worked.of_attributes(answer["characteristics"], answer["detection"], basis)
+
+
+def explain_baseline(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a baseline."""
+    return worked.of_baseline(answer["assessment"], answer["table"])
+
+
+def explain_economic(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of a cost."""
+    rules = bool(rules_of(loaded.get("rules")))
+    return worked.of_economic(economic.ProcessEconomics(**loaded["process"]), answer["design"], rules=rules)
+
+
+def explain_comparison(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of the quickest chart."""
+    return worked.of_comparison(answer["comparison"])
+
+
 def register(contract: Contract) -> None:
     """Binds the operations of chart design."""
     contract.tag(TAG, TAG_TEXT)
@@ -291,6 +350,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="designs-subgroups",
         provenance="mean-chart-design",
+        explain=explain_subgroups,
     )(design_subgroups)
     contract.operation(
         "POST",
@@ -306,6 +366,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="designs-ewma",
         provenance="ewma-design",
+        explain=explain_ewma,
     )(design_ewma)
     contract.operation(
         "POST",
@@ -322,6 +383,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="designs-cusum",
         provenance="cusum-design",
+        explain=explain_cusum,
     )(design_cusum)
     contract.operation(
         "POST",
@@ -338,6 +400,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example=("designs-attributes", "designs-attributes-plan"),
         provenance="count-chart-design",
+        explain=explain_attributes,
     )(design_attributes)
     contract.operation(
         "POST",
@@ -354,6 +417,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example=("designs-baseline", "designs-baseline-table"),
         provenance="baseline-design",
+        explain=explain_baseline,
     )(design_baseline)
     contract.operation(
         "POST",
@@ -371,6 +435,7 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example=("designs-economic", "designs-economic-duncan", "designs-economic-rules"),
         provenance="economic-design",
+        explain=explain_economic,
     )(design_economic)
     contract.operation(
         "POST",
@@ -387,4 +452,5 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example="designs-comparison",
         provenance="chart-comparison",
+        explain=explain_comparison,
     )(compare_designs)

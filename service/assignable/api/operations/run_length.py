@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, TypeAlias
 
@@ -12,6 +12,9 @@ import numpy as np
 from ...spc.charts.counts import count_law, count_lines
 from ...spc.charts.lattice import run_law, steady_run_law
 from ...spc.errors import UnusableParameter, Where
+from ...spc.explain import designs as worked
+from ...spc.explain.steps import Pad, Step
+from ...spc.rules import Rule
 from ...spc.runlength import memory, mewma, moving, of_rules
 from ...spc.runlength.survival import MOST_OPERATIONS, Allowance, Decay, RunLength
 from .. import problems
@@ -269,6 +272,46 @@ def _of_counts(
     return told
 
 
+def explain(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The worked steps of the last run length asked for."""
+    pad, kind = Pad(), one_chart(loaded)
+    chart, place = loaded[kind], len(answer["run_lengths"]) - 1
+    told, at = answer["run_lengths"][place], f"#/run_lengths/{place}"
+    rules = rules_of(chart.get("rules"), kind, "rules")
+    arl, geometric = told["arl"], kind in ("shewhart", "counts") and not rules
+    if kind == "counts":
+        given = chart["law"] == "binomial", chart["mean"], float(chart["size"]), told["factor"]
+        worked.of_counts(pad, *given, count_basis(chart), not rules, arl, f"{at}/arl")
+    else:
+        _explain(pad, kind, chart, rules, told, at)
+    within = [(one["points"], one["probability"]) for one in told["within"]]
+    worked.times(pad, at, arl, loaded.get("interval_hours"), told["steady_state_arl"], within, geometric)
+    return pad.steps
+
+
+def _explain(
+    pad: Pad, kind: str, chart: dict[str, Any], rules: tuple[Rule, ...], told: Mapping[str, Any], at: str
+) -> None:
+    shift, scale, arl = told["shift"] * math.sqrt(chart["subgroup_size"]), told["scale"], told["arl"]
+    if kind == "shewhart":
+        reach, sides = chart["sigma_multiple"], chart["sides"]
+        lower, upper = -reach if sides != "upper" else -math.inf, reach if sides != "lower" else math.inf
+        worked.of_rules(pad, rules, lower, upper, shift, scale, arl, told["sd"], at)
+    elif kind == "ewma":
+        worked.of_ewma(pad, chart["smoothing"], chart["limit"], shift, scale, arl, f"{at}/arl")
+    elif kind == "cusum":
+        each = None
+        if chart["sides"] == "two" and not chart["head_start"]:
+            given = {"reference": chart["reference"], "decision": chart["decision"], "scale": scale}
+            upper, lower = (memory.cusum(sides="upper", shift=sign * shift, **given).arl for sign in (1.0, -1.0))
+            each = upper, lower
+        worked.of_cusum(pad, chart["reference"], chart["decision"], shift, scale, arl, each, f"{at}/arl")
+    elif kind == "moving_average":
+        worked.of_moving_average(pad, chart["span"], chart["sigma_multiple"], shift, scale, arl, f"{at}/arl")
+    else:
+        worked.of_mewma(pad, chart["variables"], chart["smoothing"], chart.get("limit"), shift, arl, f"{at}/arl")
+
+
 def register(contract: Contract) -> None:
     """Binds the operation of run lengths."""
     contract.tag(TAG, TAG_TEXT)
@@ -296,4 +339,5 @@ def register(contract: Contract) -> None:
             "designs-run-length-counts",
         ),
         provenance="run-length",
+        explain=explain,
     )(run_length)
