@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
+from ...spc.explain import recommendation as worked
+from ...spc.explain.steps import Step
 from ...spc.recommendation import of_sample, recommend
 from .. import problems
 from ..contract import Contract
@@ -32,6 +35,13 @@ def recommendation(loaded: dict[str, Any]) -> dict[str, Any]:
     }
 
 
+def explain(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
+    """The evidence of the sample in figures, and the choice."""
+    about, sample = asked(loaded)
+    told = recommend(about) if sample is None else of_sample(sample, about)[0]
+    return worked.of_choice(told, sample, answer["evidence"])
+
+
 def register(contract: Contract) -> None:
     """Binds the recommendation."""
     contract.tag(TAG, "Which chart answers to the data there is, and why.")
@@ -50,4 +60,5 @@ def register(contract: Contract) -> None:
         problems=(problems.NOT_COMPUTABLE,),
         example=("charts-recommendation", "charts-recommendation-sample"),
         provenance="chart-recommendation",
+        explain=explain,
     )(recommendation)
