@@ -11,6 +11,8 @@ from .contract import Contract
 from .cors import Cors
 from .observability import REQUEST_ID, Edge, Log
 from .operations import announce, documentation
+from .sealing import seals_in
+from .security import access_of, guard
 from .settings import Settings
 
 Register = Callable[[Contract], None]
@@ -29,7 +31,8 @@ def create_app(
     log = Log(settings.log) if log is None else log
     app = Flask("assignable", static_folder=None, template_folder=None)
     app.json.sort_keys = False  # type: ignore[attr-defined]
-    contract = Contract(app, settings)
+    access = access_of(settings)
+    contract = Contract(app, settings, seals_in(settings), access)
     app.extensions["assignable.contract"] = contract
 
     def failed(error: Exception) -> Response:
@@ -44,6 +47,8 @@ def create_app(
         )
 
     app.register_error_handler(Exception, failed)
+    if access is not None:
+        guard(app, access)
     for register in operations:
         register(contract)
     app.wsgi_app = Edge(app.wsgi_app, log, Cors(settings.cors_origins))  # type: ignore[method-assign]

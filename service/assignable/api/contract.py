@@ -13,17 +13,21 @@ from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import orjson
 from flask import Flask, Response, request
 from marshmallow import Schema, ValidationError
 
+from ..documents.seal import UNSEALED, Seals
 from . import answers, bodies, explaining, problems, strict_json
 from .fields import AnswerShape, ObjectList, StrictInteger, StrictString, known_names
 from .problems import Entry, Problem, ProblemType
 from .settings import Settings
 from .shedding import Slots
+
+if TYPE_CHECKING:
+    from .security import Access
 
 View = Callable[..., Any]
 Link = Mapping[str, Any]
@@ -122,7 +126,11 @@ class Operation:
 class Contract:
     """All operations of an application, in the order in which they were bound."""
 
-    def __init__(self, app: Flask, settings: Settings) -> None:
+    def __init__(
+        self, app: Flask, settings: Settings, seals: Seals = UNSEALED, access: Access | None = None
+    ) -> None:
+        self.seals = seals
+        self._access = access
         self._app = app
         self._settings = settings
         self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds)
@@ -319,7 +327,7 @@ class Contract:
     def _document(self) -> bytes:
         from .openapi import describe
 
-        return describe(tuple(self.operations.values()), self._tags)
+        return describe(tuple(self.operations.values()), self._tags, self._access)
 
 
 def cacheable(body: bytes, content_type: str, seconds: int, tag: str | None = None) -> Response:

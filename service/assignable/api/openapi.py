@@ -19,6 +19,7 @@ from . import answers, problems
 from .contract import _PARAMETER, Operation, ProblemDetails, examples_directory
 from .fields import json_schema_of, list_bounds_of
 from .problems import ProblemType
+from .security import OPEN, Access
 
 _HEADERS = {
     "X-Request-ID": "The request's id: the one that was sent, or one made for it.",
@@ -27,6 +28,9 @@ _HEADERS = {
     "Cache-Control": "Whether, and for how long, the answer may be kept.",
     "Retry-After": "Seconds after which to send the same request again.",
 }
+
+_CHALLENGE = "What the service takes as a credential (RFC 9110, 11.6.1)."
+_HEADER_OF_STATUS = {401: ("WWW-Authenticate",), 503: ("Retry-After",)}
 
 _OF_EVERY_OPERATION = (problems.NOT_ACCEPTABLE, problems.INTERNAL)
 _OF_A_BODY = (
@@ -64,9 +68,11 @@ def _text_of(shape: Any) -> str:
     return " ".join(text.replace("``", "`").split())
 
 
-def problems_of(operation: Operation) -> tuple[ProblemType, ...]:
+def problems_of(operation: Operation, access: Access | None = None) -> tuple[ProblemType, ...]:
     """Every problem an operation can answer, by status and in the order of the table."""
     possible = set(operation.problems) | set(_OF_EVERY_OPERATION)
+    if access is not None and operation.operation_id not in OPEN:
+        possible |= set(access.problems())
     if operation.request is not None:
         possible |= set(_OF_A_BODY)
     if operation.query is not None:
@@ -78,7 +84,7 @@ def problems_of(operation: Operation) -> tuple[ProblemType, ...]:
     return tuple(kind for kind in problems.TYPES.values() if kind in possible)
 
 
-def describe(operations: Iterable[Operation], tags: Mapping[str, str]) -> bytes:
+def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: Access | None = None) -> bytes:
     """The document of these operations; equal calls give equal bytes."""
     plugin = _Plugin(schema_name_resolver=lambda shape: _name_of(shape))
     operations = tuple(operations)
@@ -101,9 +107,14 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str]) -> bytes:
     add(lambda _, field, ret, **__: list_bounds_of(field, ret))  # type: ignore[no-untyped-call]
     for name, text in _HEADERS.items():
         spec.components.header(name, {"description": text, "schema": {"type": "string"}})
+    if access is not None:
+        spec.components.header("WWW-Authenticate", {"description": _CHALLENGE, "schema": {"type": "string"}})
+        for name, scheme in access.schemes().items():
+            spec.components.security_scheme(name, scheme)
     spec.components.schema("Problem", schema=ProblemDetails)
     for operation in operations:
-        spec.path(path=operation.path, operations={operation.method.lower(): _operation(operation)})
+        described = _operation(operation, access)
+        spec.path(path=operation.path, operations={operation.method.lower(): described})
     return orjson.dumps(spec.to_dict(), option=orjson.OPT_INDENT_2 | orjson.OPT_NON_STR_KEYS)
 
 
@@ -112,7 +123,7 @@ def _name_of(shape: Any) -> str:
     return "Problem" if cls is ProblemDetails else cls.__name__
 
 
-def _operation(operation: Operation) -> dict[str, Any]:
+def _operation(operation: Operation, access: Access | None) -> dict[str, Any]:
     described: dict[str, Any] = {
         "operationId": operation.operation_id,
         "tags": [operation.tag],
@@ -132,7 +143,9 @@ def _operation(operation: Operation) -> dict[str, Any]:
         if examples := _examples(operation, "request", required=True):
             content["examples"] = examples
         described["requestBody"] = {"required": True, "content": {answers.JSON: content}}
-    described["responses"] = {"200": _success(operation), **_failures(operation)}
+    described["responses"] = {"200": _success(operation), **_failures(operation, access)}
+    if access is not None and operation.operation_id not in OPEN:
+        described["security"] = [{name: []} for name in access.schemes()]
     return described
 
 
@@ -157,14 +170,14 @@ def _success(operation: Operation) -> dict[str, Any]:
     return success
 
 
-def _failures(operation: Operation) -> dict[str, Any]:
+def _failures(operation: Operation, access: Access | None) -> dict[str, Any]:
     by_status: dict[int, list[ProblemType]] = {}
-    for kind in problems_of(operation):
+    for kind in problems_of(operation, access):
         by_status.setdefault(kind.status, []).append(kind)
     return {
         str(status): {
             "description": " ".join(f"{kind.code}: {kind.meaning}" for kind in kinds),
-            "headers": _header_references(["X-Request-ID", *(["Retry-After"] if status == 503 else [])]),
+            "headers": _header_references(["X-Request-ID", *_HEADER_OF_STATUS.get(status, ())]),
             "content": {problems.MEDIA_TYPE: {"schema": ProblemDetails}},
         }
         for status, kinds in sorted(by_status.items())

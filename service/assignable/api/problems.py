@@ -56,6 +56,21 @@ BAD_REQUEST = ProblemType(
     "The request itself cannot be understood.",
     "Check how the request is put together and sent.",
 )
+NOT_AUTHENTICATED = ProblemType(
+    "not-authenticated",
+    401,
+    "Not authenticated",
+    "The service admits callers with a credential only, and the request has none that is good.",
+    "Send an API key in X-API-Key, or a token as Authorization: Bearer, whichever the service takes; whoever runs it "
+    "gives out keys.",
+)
+NOT_ADMITTED = ProblemType(
+    "not-admitted",
+    403,
+    "Not admitted",
+    "The credential is good, and is not one for this service.",
+    "Ask the issuer for a token with this service's audience.",
+)
 NOT_FOUND = ProblemType(
     "not-found",
     404,
@@ -146,6 +161,8 @@ TYPES: dict[str, ProblemType] = {
     for kind in (
         NOT_JSON,
         BAD_REQUEST,
+        NOT_AUTHENTICATED,
+        NOT_ADMITTED,
         NOT_FOUND,
         METHOD_NOT_ALLOWED,
         NOT_ACCEPTABLE,
@@ -174,6 +191,8 @@ BEYOND_SCHEMAS = frozenset(("unequal-length", "too-many-values"))
 
 _OF_STATUS = {
     400: BAD_REQUEST,
+    401: NOT_AUTHENTICATED,
+    403: NOT_ADMITTED,
     404: NOT_FOUND,
     405: METHOD_NOT_ALLOWED,
     406: NOT_ACCEPTABLE,

@@ -8,6 +8,7 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Mapping
 from dataclasses import MISSING, dataclass, field, fields
+from pathlib import Path
 from typing import Any
 
 PREFIX = "ASSIGNABLE_"
@@ -71,6 +72,18 @@ def _origins(text: str) -> tuple[str, ...]:
     return origins
 
 
+def _path(text: str) -> str:
+    if not text or "\x00" in text:
+        raise ValueError("the path of a file")
+    return text
+
+
+def _name(text: str) -> str:
+    if not text or text != text.strip():
+        raise ValueError("a name, without blanks around it")
+    return text
+
+
 def _setting(default: Any, description: str, read: Callable[[str], Any]) -> Any:
     return field(default=default, metadata={"description": description, "read": read})
 
@@ -86,9 +99,33 @@ class Settings:
         "Whether it may listen where other machines reach it, though it asks nobody who they are: yes or no.",
         _yes_or_no,
     )
+    api_keys: str = _setting(
+        "",
+        "File of the API keys that are admitted: a JSON object with the SHA-256 of each by its name, as `assignable "
+        "keys api` prints them. With keys, of this or the next kind, every caller needs one.",
+        _path,
+    )
+    jwt_keys: str = _setting(
+        "",
+        "File of the public keys, a JWK set, whose bearer tokens are admitted: JWTs by EdDSA (Ed25519), ES256 or "
+        "RS256. Needs audience and issuer.",
+        _path,
+    )
+    jwt_audience: str = _setting("", "Audience that a token must be made for.", _name)
+    jwt_issuer: str = _setting("", "Issuer that a token must name.", _name)
+    sealing_keys: str = _setting(
+        "",
+        "File of the Ed25519 keys of limits documents, a JWK set or one JWK: the first private key seals what is "
+        "issued, all of them check what comes back.",
+        _path,
+    )
+    require_seal: bool = _setting(
+        False, "Whether limits documents are taken only with a good seal: yes or no.", _yes_or_no
+    )
     workers: int = _setting(
         len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1,
-        "Worker processes; as many as processors unless set.", _whole(1, 256)
+        "Worker processes; as many as processors unless set.",
+        _whole(1, 256),
     )
     threads: int = _setting(8, "Threads of a worker, which wait on clients.", _whole(1, 256))
     compute_slots: int = _setting(1, "Calculations a worker does at once.", _whole(1, 64))
@@ -109,6 +146,11 @@ class Settings:
     cors_origins: tuple[str, ...] = _setting(
         (), "Origins whose pages may call the service from a browser, separated by commas.", _origins
     )
+
+    @property
+    def asks_who(self) -> bool:
+        """Whether callers need a credential."""
+        return bool(self.api_keys or self.jwt_keys)
 
     @classmethod
     def from_environment(cls, environment: Mapping[str, str] | None = None) -> Settings:
@@ -132,6 +174,14 @@ class Settings:
         if faults:
             raise BadSettings("\n".join(faults))
         return cls(**values)
+
+
+def contents_of(setting: str, path: str) -> bytes:
+    """The file that a setting names. Raises :class:`BadSettings`."""
+    try:
+        return Path(path).read_bytes()
+    except OSError as error:
+        raise BadSettings(f"{PREFIX}{setting.upper()}: {path} cannot be read ({error.strerror}).") from None
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,4 +1,4 @@
-"""The command: ``assignable serve | demo | compute | verify | contract``.
+"""The command: ``assignable serve | demo | compute | verify | keys | contract``.
 
 Nothing heavy is imported before :func:`main` has set how many threads linear algebra may start: a worker
 does one calculation at a time, and the same sum in another order is another answer in its last digit.
@@ -87,6 +87,42 @@ def _parser() -> argparse.ArgumentParser:
     verify.add_argument("--html", metavar="FILE", help="also write a page to read and to print")
     verify.set_defaults(run=_verify)
 
+    keys = commands.add_parser(
+        "keys",
+        help="make keys: of seals, and of callers",
+        description="Makes the keys that seal limits documents, and the API keys of callers.",
+    )
+    kinds = keys.add_subparsers(title="what", required=True, metavar="WHAT")
+    new = kinds.add_parser(
+        "new",
+        help="a key that seals limits documents",
+        description="Makes an Ed25519 key for the variable ASSIGNABLE_SEALING_KEYS, writes it where only its owner can "
+        "read it, and prints its public half.",
+    )
+    new.add_argument("--id", required=True, help="its name in every seal, for example 2026-03")
+    new.add_argument("--out", required=True, metavar="FILE", help="the file to make; none there is replaced")
+    new.add_argument(
+        "--keep",
+        metavar="FILE",
+        help="the keys used so far: their public halves go into the file too, to check what they sealed",
+    )
+    new.set_defaults(run=_keys_new)
+    public = kinds.add_parser(
+        "public",
+        help="the public half of such keys",
+        description="Prints the public half of a key, or of each in a set.",
+    )
+    public.add_argument("file", metavar="FILE")
+    public.set_defaults(run=_keys_public)
+    api = kinds.add_parser(
+        "api",
+        help="a key that admits a caller",
+        description="Prints a new random API key, this once, and the line that admits it for the JSON object in the "
+        "file of the variable ASSIGNABLE_API_KEYS; the file holds no key.",
+    )
+    api.add_argument("--name", required=True, help="who is to use it")
+    api.set_defaults(run=_keys_api)
+
     contract = commands.add_parser(
         "contract",
         help="make or check the committed contract",
@@ -132,6 +168,24 @@ def _verify(given: argparse.Namespace) -> int:
     from .verifying import verify
 
     return verify(as_json=given.json, html=given.html)
+
+
+def _keys_new(given: argparse.Namespace) -> int:
+    from .keys import new
+
+    return new(given.id, given.out, given.keep)
+
+
+def _keys_public(given: argparse.Namespace) -> int:
+    from .keys import public
+
+    return public(given.file)
+
+
+def _keys_api(given: argparse.Namespace) -> int:
+    from .keys import api
+
+    return api(given.name)
 
 
 def _contract(given: argparse.Namespace) -> int:

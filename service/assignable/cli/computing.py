@@ -16,10 +16,9 @@ from ..api.settings import BadSettings, Settings
 def compute(operation_id: str, file: str | None) -> int:
     """Prints the answer to a file's body; a problem goes to standard error, with status 1."""
     try:
-        settings = Settings.from_environment()
+        contract: Contract = create_app(Settings.from_environment()).extensions["assignable.contract"]
     except BadSettings as error:
         return _not_understood(str(error))
-    contract: Contract = create_app(settings).extensions["assignable.contract"]
     operation = contract.operations.get(operation_id)
     if operation is None:
         near = get_close_matches(operation_id, contract.operations, n=1, cutoff=0.5)

@@ -50,10 +50,10 @@ def serve(environment: Mapping[str, str], *, demonstrate: bool = False) -> int:
     try:
         settings = settings_from(environment)
         _require_free(settings)
+        app = create_app(settings)
     except (BadSettings, CannotServe) as error:
         print(error, file=sys.stderr)
         return 2
-    app = create_app(settings)
     warm_up(app)
     Server(app, settings, demonstrate=demonstrate).run()
     return 0
@@ -62,16 +62,16 @@ def serve(environment: Mapping[str, str], *, demonstrate: bool = False) -> int:
 def settings_from(environment: Mapping[str, str]) -> Settings:
     """The settings, with an address this service may listen on.
 
-    Nobody has to prove who they are yet, so that any machine that reaches the port may compute: an
-    address that is not this machine's own needs ``ASSIGNABLE_ALLOW_REMOTE=yes``.
+    Where nobody has to prove who they are, any machine that reaches the port may compute: without API keys
+    or keys of tokens an address that is not this machine's own needs ``ASSIGNABLE_ALLOW_REMOTE=yes``.
     Raises :class:`BadSettings`, :class:`CannotServe`.
     """
     settings = Settings.from_environment(environment)
-    if not settings.allow_remote and not _is_loopback(settings.host):
+    if not settings.allow_remote and not settings.asks_who and not _is_loopback(settings.host):
         raise CannotServe(
             f"{settings.host} can be reached from other machines, and this service asks nobody who they are. "
-            "Listen on 127.0.0.1, or, behind a proxy or in a network you trust, "
-            "say --allow-remote or set ASSIGNABLE_ALLOW_REMOTE=yes."
+            "Listen on 127.0.0.1, or set ASSIGNABLE_API_KEYS or ASSIGNABLE_JWT_KEYS so that it asks; or, behind a "
+            "proxy or in a network you trust, say --allow-remote or set ASSIGNABLE_ALLOW_REMOTE=yes."
         )
     return settings
 

@@ -94,6 +94,7 @@ GROUPS = (
         ),
     ),
     Group("verification", (("GET", "/v1/verification", "getVerification"),)),
+    Group("sealing", (("GET", "/.well-known/jwks.json", "getSealingKeys"),)),
     Group(
         "health",
         (("GET", "/health/live", "getLiveness"), ("GET", "/health/ready", "getReadiness")),

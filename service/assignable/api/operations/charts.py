@@ -11,6 +11,7 @@ from typing import Any
 import orjson
 
 from ...documents.limits import carry_document, check_carry, check_limits, limits_document, written
+from ...documents.seal import Seals
 from ...spc.charts import CHARTS, Chart
 from ...spc.charts.common import Performance
 from ...spc.errors import DocumentMismatch, SpcError
@@ -116,10 +117,11 @@ class Kept(tuple[str, Any]):
 class LimitsField(f.Object):
     """A limits document, checked against its digest; documents seen lately are kept parsed."""
 
-    def __init__(self, chart: Chart, shape: type[f.RequestShape], **kwargs: Any) -> None:
+    def __init__(self, chart: Chart, shape: type[f.RequestShape], seals: Seals, **kwargs: Any) -> None:
         super().__init__(shape, **kwargs)
 
         self._chart = chart
+        self._seals = seals
         self._opened = lru_cache(1024)(lambda blob: self._open(orjson.loads(blob)))
 
     def _deserialize(  # type: ignore[override]
@@ -141,13 +143,7 @@ class LimitsField(f.Object):
             check_limits(self._chart.name, document)
             raise
         check_limits(self._chart.name, document)
-        if document["seal"] is not None:
-            raise DocumentMismatch.of(
-                "seal-not-known",
-                "This server has no key to check the seal of these limits with.",
-                "limits",
-                "seal",
-            )
+        self._seals.check(document)
         return Kept.of(document["digest"], loaded, document["characteristic"])
 
 
@@ -180,8 +176,8 @@ class Documents:
 
 
 @cache
-def documents_of(name: str) -> Documents:
-    """The fields that read limits documents and carries of the chart of this name."""
+def documents_of(name: str, seals: Seals) -> Documents:
+    """The fields that read limits documents, under these seals, and carries of the chart of this name."""
     chart = CHARTS[name]
     kept = derive.document(
         chart.limits,
@@ -196,6 +192,7 @@ def documents_of(name: str) -> Documents:
         LimitsField(
             chart,
             kept,
+            seals,
             required=True,
             metadata={"description": "The limits document, exactly as received."},
         ),
@@ -254,9 +251,9 @@ def _judged(chart: Chart, panels: type) -> dict[str, Any]:
     return members
 
 
-def _shapes(chart: Chart, takes: ChartRequest) -> tuple[Any, Any, Any, Any]:
+def _shapes(chart: Chart, takes: ChartRequest, seals: Seals) -> tuple[Any, Any, Any, Any]:
     """The shapes of both operations: fit request and answer, judge request and answer."""
-    stem, documents = chart.stem, documents_of(chart.name)
+    stem, documents = chart.stem, documents_of(chart.name, seals)
     limits_answer = derive.answer(
         chart.limits,
         f"{stem}Limits",
@@ -385,14 +382,16 @@ def judged(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> Any:
         ) from error
 
 
-def fit(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str, Any]:
+def fit(chart: Chart, takes: ChartRequest, seals: Seals, loaded: dict[str, Any]) -> dict[str, Any]:
     """Limits from a baseline, or from standards."""
     posted = loaded.get("data")
     result = fitted(chart, takes, loaded)
     baseline = result.baseline
     labels = {} if posted is None else labels_of(posted)
     return {
-        "limits": written(limits_document(chart.name, result.limits, loaded.get("characteristic"))),
+        "limits": written(
+            seals.sealed(limits_document(chart.name, result.limits, loaded.get("characteristic")))
+        ),
         "baseline": None
         if baseline is None
         else {
@@ -464,7 +463,7 @@ def register(contract: Contract) -> None:
     contract.tag(TAG, "Limits from a baseline, and signals on new data under frozen limits. " + VERDICT_NOTE)
     for chart in CHARTS.values():
         takes = request_of(chart.name)
-        fit_request, fit_answer, judge_request, judge_answer = _shapes(chart, takes)
+        fit_request, fit_answer, judge_request, judge_answer = _shapes(chart, takes, contract.seals)
         contract.operation(
             "POST",
             f"/v1/charts/{chart.name}/limits",
@@ -487,7 +486,7 @@ def register(contract: Contract) -> None:
             },
             provenance=chart.name,
             explain=partial(explain_fit, chart, takes),
-        )(partial(fit, chart, takes))
+        )(partial(fit, chart, takes, contract.seals))
         contract.operation(
             "POST",
             f"/v1/charts/{chart.name}/signals",

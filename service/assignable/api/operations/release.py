@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, fields
-from functools import cache
+from functools import cache, partial
 from itertools import islice
 from typing import Any
 
@@ -13,6 +13,7 @@ import numpy as np
 from marshmallow import ValidationError
 
 from ...documents.limits import carry_document, check_carry
+from ...documents.seal import Seals
 from ...spc import release
 from ...spc.cautions import COMMON_PRACTICE, Caution
 from ...spc.charts import CHARTS
@@ -41,7 +42,7 @@ MOST_POINTS = 2_000  # judged in one request, whatever the rules of their charts
 _FIGURES = tuple(entry.name for entry in fields(release.Figures))
 
 
-def check(loaded: dict[str, Any]) -> dict[str, Any]:
+def check(seals: Seals, loaded: dict[str, Any]) -> dict[str, Any]:
     """A batch against its specifications and its own charts."""
     posted = loaded["characteristics"]
     _refuse_too_much(posted)
@@ -53,7 +54,7 @@ def check(loaded: dict[str, Any]) -> dict[str, Any]:
         place: Where = ("characteristics", position)
         try:
             with _placed(place):
-                trend = _Trend.of(one)
+                trend = _Trend.of(one, seals)
                 result = release.check(characteristic_of(one, None if trend is None else trend.judged))
         except SpcError as error:
             errors.append(error)
@@ -204,7 +205,7 @@ class _Trend:
     cautions: tuple[Caution, ...]
 
     @staticmethod
-    def of(posted: Mapping[str, Any]) -> _Trend | None:
+    def of(posted: Mapping[str, Any], seals: Seals) -> _Trend | None:
         """The batch as the next point or points of its own chart.
 
         Raises DocumentMismatch for documents that were edited or do not belong together; UnusableParameter and
@@ -224,7 +225,7 @@ class _Trend:
                 "chart",
             )
         with _placed(("trend",)):
-            digest, limits, carry = _opened(name, asked)
+            digest, limits, carry = _opened(name, asked, seals)
         size = getattr(limits, "subgroup_size", 1) or 2
         point = asked.get("point") or taking.usual or ("subgroup" if size > 1 else "average")
         data, points, left_out = _points(name, taking, point, posted)
@@ -264,9 +265,9 @@ def _of_another(posted: Mapping[str, Any], known: Mapping[str, str]) -> Iterator
             )
 
 
-def _opened(name: str, asked: Mapping[str, Any]) -> tuple[str, Any, Any]:
+def _opened(name: str, asked: Mapping[str, Any], seals: Seals) -> tuple[str, Any, Any]:
     """Digest and object of the limits, and the object of the carry."""
-    documents = documents_of(name)
+    documents = documents_of(name, seals)
     with _as_documents("limits"):
         digest, limits = documents.limits._deserialize(asked["limits"], None, None)
     posted = asked["carry"]
@@ -418,4 +419,4 @@ def register(contract: Contract) -> None:
         example="release-checks",
         provenance="release-check",
         explain=explain,
-    )(check)
+    )(partial(check, contract.seals))
