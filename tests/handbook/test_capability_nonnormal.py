@@ -265,18 +265,30 @@ def test_results_below_a_limit() -> None:
 
 
 def test_a_process_out_of_control_is_provisional() -> None:
-    x = _random(3).weibull(2.0, 60)
-    steady = study(x, Specification(None, 6.0), distribution="weibull")
-    assert steady.status == "established"
-    x[30:] += 3.0
+    x = _random(10).weibull(2.0, 60)
+    assert study(x, Specification(None, 6.0), distribution="weibull").status == "established"
+    x[20] = 7.0
+    wild = study(x, Specification(None, 9.0), distribution="weibull")
+    assert wild.status == "provisional"
+    assert wild.cautions[0].code == "not-in-control"
+    x[20] = 1.0
+    x[30:] += 1.5
     moved = study(x, Specification(None, 9.0), distribution="weibull")
     assert moved.status == "provisional"
-    assert moved.cautions[0].code == "not-in-control"
+    assert "lasting step of the level at point 30" in moved.cautions[0].sentence
+
+
+@pytest.mark.parametrize("shape", [(100,), (25, 4)])
+def test_a_process_in_control_is_seldom_provisional(shape: tuple[int, ...]) -> None:
+    random, reps = _random(16), 200
+    found = [study(random.normal(size=shape), Specification(-5.0, 5.0)).status for _ in range(reps)]
+    # 5 % by the limits and 1 % by the search for a step, within four standard errors.
+    assert found.count("provisional") / reps <= 0.06 + 4.0 * math.sqrt(0.06 * 0.94 / reps)
 
 
 def test_skewed_values_are_charted_by_their_scores() -> None:
-    # On a chart for normal values the long tail of these would signal.
-    x = _random(3).exponential(1.0, 100)
+    # On a chart for normal values the long tail of these signals.
+    x = _random(15).exponential(1.0, 300)
     assert study(x, Specification(None, 12.0), distribution="exponential").status == "established"
     assert study(x, Specification(None, 12.0)).status == "provisional"
 

@@ -10,6 +10,7 @@ import scipy
 
 from .. import cautions as caution
 from .. import diagnostics
+from ..baseline import change_points
 from ..cautions import Caution
 from ..charts import individuals, subgroups
 from ..data import Floats, Individuals, Subgroups
@@ -29,6 +30,7 @@ from .specification import Specification
 
 MOVING = ("mean-moving-range", "median-moving-range")
 FEWEST_VALUES = 50
+JOINT = 0.05  # of a process in control being called out of it
 
 Status: TypeAlias = Literal["established", "provisional", "not-assessed"]
 
@@ -72,11 +74,13 @@ def study(
 
     distribution: ``normal``, another of ``nonnormal.CHOICES``, or ``auto``. below: (n,) beside values (n,),
     the limit that a result is below where its value is missing, NaN elsewhere.
-    The values, or their normal scores under the distribution used, are charted at three sigma without run
-    rules (means with deviations, or single values); where that signals, the study is provisional
-    [iso-22514-1]. Raises what ``capability``, ``choose``, ``by_quantiles`` and the estimators raise;
-    UnusableParameter ``estimator-needs-rows``, ``estimator-needs-list`` for the other kind's estimator,
-    ``normal-only``, ``needs-values``; UnusableData ``beyond-natural-bound``, ``limits-need-list``.
+    The values, or their normal scores under the distribution used, are charted (means with deviations, or
+    single values) by limits that a process in control passes as a whole with 95 %, and searched for a lasting
+    step of the level at 1 %; where either signals, the study is provisional [iso-22514-1]. At three sigma
+    two of three studies of 100 single values in control would be.
+    Raises what ``capability``, ``choose``, ``by_quantiles`` and the estimators raise; UnusableParameter
+    ``estimator-needs-rows``, ``estimator-needs-list`` for the other kind's estimator, ``normal-only``,
+    ``needs-values``; UnusableData ``beyond-natural-bound``, ``limits-need-list``.
     """
     specification = specification.effective
     if isinstance(data, NormalSummary):
@@ -165,7 +169,7 @@ def _by_distribution(
     if not sample.below.size:
         scored = data if fitted is None else fitted.scores(data)
         signals = _signals(scored, data.ndim == 2)
-    status: Status = "not-assessed" if signals is None else "provisional" if signals else "established"
+    status: Status = "not-assessed" if signals is None else "provisional" if signals[0] else "established"
     resolution = diagnostics.resolution(data)
     return CapabilityStudy(
         status,
@@ -227,7 +231,7 @@ def _of_normal(
     machine = machine_capability(data, specification, confidence=confidence) if short_run else None
     shown = CapabilityDiagnostics(diagnostics.normality(data), resolution)
     signals = _signals(data, rows)
-    status: Status = "not-assessed" if signals is None else "provisional" if signals else "established"
+    status: Status = "not-assessed" if signals is None else "provisional" if signals[0] else "established"
     return CapabilityStudy(
         status,
         choice,
@@ -246,28 +250,46 @@ def _of_normal(
     )
 
 
-def _signals(data: Floats, rows: bool) -> int | None:
-    """Signals of the values' own chart; ``None`` where they cannot be charted."""
+def _signals(data: Floats, rows: bool) -> tuple[int, str] | None:
+    """Signals of the values' own chart, and what they are; ``None`` where they cannot be charted."""
     try:
         if rows:
+            table = Subgroups(data)
             judged = subgroups.fit(
-                Subgroups(data), subgroups.SubgroupOptions("pooled-sd"), spread="sd"
+                table,
+                subgroups.SubgroupOptions("pooled-sd", joint_false_alarm_probability=JOINT),
+                spread="sd",
             ).baseline
+            steps = change_points.of_subgroups(table.statistics())
         else:
-            judged = individuals.fit(Individuals(data), individuals.IndividualsOptions()).baseline
+            judged = individuals.fit(
+                Individuals(data), individuals.IndividualsOptions(joint_false_alarm_probability=JOINT)
+            ).baseline
+            steps = change_points.of_values(data)
     except SpcError:
         return None
-    return None if judged is None else judged.signals_found
+    if judged is None:
+        return None
+    found = judged.signals_found
+    told = (
+        [f"{found} {'signal' if found == 1 else 'signals'} beyond limits that hold for all of them"]
+        if found
+        else []
+    )
+    step = None if steps is None else steps.mean
+    if step is not None and step.p_value < caution.SIGNIFICANCE:
+        found += 1
+        told.append(f"a lasting step of the level at point {step.index}")
+    return found, " and ".join(told)
 
 
-def _not_in_control(signals: int | None) -> Caution | None:
-    if not signals:
+def _not_in_control(signals: tuple[int, str] | None) -> Caution | None:
+    if signals is None or not signals[0]:
         return None
     return Caution(
         "not-in-control",
-        f"The values' own control chart gives {signals} {'signal' if signals == 1 else 'signals'}: the process was "
-        "not in control, so these figures describe what was made and promise nothing of what will be. Treat them "
-        "as provisional; find the causes first.",
+        f"The values' own control chart gives {signals[1]}: the process was not in control, so these figures describe "
+        "what was made and promise nothing of what will be. Treat them as provisional; find the causes first.",
         ("data", "values"),
         "iso-22514-1",
     )
