@@ -1,18 +1,23 @@
-"""The contract as people read it: the document, the reference page, the problem pages, the start page."""
+"""The contract as people read it: the pages, and the document behind them."""
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from functools import cache
 from hashlib import sha256
 from importlib.resources import files
+from typing import Any
 
+import orjson
 from flask import Response, request
-from markupsafe import Markup, escape
 
+from ... import web
+from ...web import auditing, trying
+from ...web.reading import Document
 from ..answers import JSON, service_version
 from ..bodies import require_acceptable
 from ..contract import Contract, cacheable
-from ..problems import NOT_FOUND, TYPES, Problem, ProblemType
+from ..problems import NOT_FOUND, TYPES, Problem
 
 HTML = "text/html; charset=utf-8"
 
@@ -21,8 +26,11 @@ POLICY = (
     "default-src 'none'; script-src 'self'; style-src 'self'; img-src 'self' data: blob:; font-src 'self'; "
     "connect-src 'self'; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
 )
+# The pages to read hold no script at all.
+QUIET_POLICY = "default-src 'none'; style-src 'self'; img-src data:; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
 
-_OURS = {"reference.js": "text/javascript", "reference.css": "text/css", "page.css": "text/css"}
+_SCRIPTS = ("reference.js", "start.js", "trial.js", "sheet.js", "calls.js", "words.js", "takeaway.js", "plant.js")
+_SHEETS = ("page.css", "reference.css")
 _THEIRS = {"swagger-ui-bundle.js": "text/javascript", "swagger-ui.css": "text/css"}
 _FOREVER = 31_536_000
 
@@ -35,27 +43,61 @@ def register(contract: Contract) -> None:
         return cacheable(contract.document(), JSON, 300)
 
     def start() -> Response:
-        return _page("Assignable", _start())
+        return _page("start.html", "Assignable", {"offered": " ".join(trying.FORMS)}, here="start")
+
+    def trial() -> Response:
+        def ruled(operation_id: str) -> bool:
+            shape = contract.bound(operation_id).request
+            return shape is not None and "rules" in shape.fields
+
+        offered = {"charts": trying.offered(ruled), "rules": trying.rule_sets()}
+        return _page("try.html", "Your own numbers on a chart", offered, here="try")
 
     def reference() -> Response:
-        text = _web("reference.html").decode().replace("{assets}", f"docs/assets/{_edition()}")
-        return _html(text)
+        return _page("reference.html", "Reference", here="docs")
+
+    @cache
+    def parsed() -> Document:
+        problems = {kind.code: (kind.status, kind.meaning, kind.remedy) for kind in TYPES.values()}
+        return Document(orjson.loads(contract.document()), problems)
+
+    def contents() -> Response:
+        found = {"groups": parsed().groups(), "contract": parsed().version}
+        return _page("contents.html", "The contract to read", found, here="reading", policy=QUIET_POLICY)
+
+    def reading(operation_id: str) -> Response:
+        found = parsed().reading(operation_id)
+        if found is None:
+            raise Problem(NOT_FOUND, "There is no operation of this name; /docs/reading lists those there are.")
+        methods = auditing.with_sources(found.draws or operation_id)
+        return _page(
+            "operation.html", found.title, {"of": found, "methods": methods}, here="reading", policy=QUIET_POLICY
+        )
+
+    def methods() -> Response:
+        from ...verification.runner import cases
+
+        published = (
+            auditing.PublishedCase(case.id, case.title, case.trust, case.operation_id) for case in cases()
+        )
+        found = {"methods": auditing.audited(published)}
+        return _page("methods.html", "Methods", found, here="methods", policy=QUIET_POLICY)
 
     def listing() -> Response:
-        return _page("Problems", _listing())
+        return _page("problems.html", "Problems", {"kinds": TYPES.values()}, policy=QUIET_POLICY)
 
     def problem(code: str) -> Response:
         kind = TYPES.get(code)
         if kind is None:
             raise Problem(NOT_FOUND, "There is no such problem.")
-        return _page(kind.title, _described(kind))
+        return _page("problem.html", kind.title, {"kind": kind}, policy=QUIET_POLICY)
 
     def verification() -> Response:
         from ...verification.page import page
         from .verification import verified
 
         link = f"docs/assets/{_edition()}/verification.css"
-        return _html(page(verified(contract)(), service_version(), link=link), seconds=0)
+        return _html(page(verified(contract)(), service_version(), link=link), QUIET_POLICY, seconds=0)
 
     def asset(edition: str, name: str) -> Response:
         if edition != _edition() or name not in _assets():
@@ -67,9 +109,13 @@ def register(contract: Contract) -> None:
 
     for path, name, view in (
         ("/", "start", start),
+        ("/try", "try", trial),
         ("/openapi.json", "document", document),
         ("/docs", "reference", reference),
+        ("/docs/reading", "contents", contents),
+        ("/docs/reading/<operation_id>", "reading", reading),
         ("/docs/assets/<edition>/<name>", "asset", asset),
+        ("/methods", "methods", methods),
         ("/problems", "problems", listing),
         ("/problems/<code>", "problem", problem),
         ("/verification", "verification", verification),
@@ -77,20 +123,14 @@ def register(contract: Contract) -> None:
         contract.app.add_url_rule(path, f"pages.{name}", view, methods=["GET"])
 
 
-def _web(name: str) -> bytes:
-    return files("assignable.web").joinpath(name).read_bytes()
-
-
-def _verification(name: str) -> bytes:
-    return files("assignable.verification").joinpath(name).read_bytes()
-
-
 @cache
 def _assets() -> dict[str, tuple[bytes, str]]:
     """The only files served: ours by name, and two of the reference page's library."""
     theirs = files("flask_swagger_ui").joinpath("dist")
-    found = {name: (_web(name), f"{kind}; charset=utf-8") for name, kind in _OURS.items()}
-    found["verification.css"] = (_verification("page.css"), "text/css; charset=utf-8")
+    found = {name: (web.read(name), "text/javascript; charset=utf-8") for name in _SCRIPTS}
+    found |= {name: (web.read(name), "text/css; charset=utf-8") for name in _SHEETS}
+    sheet = files("assignable.verification").joinpath("page.css").read_bytes()
+    found["verification.css"] = (sheet, "text/css; charset=utf-8")
     for name, kind in _THEIRS.items():
         found[name] = (theirs.joinpath(name).read_bytes(), f"{kind}; charset=utf-8")
     return found
@@ -105,51 +145,28 @@ def _edition() -> str:
     return together.hexdigest()[:16]
 
 
-def _html(text: str, seconds: int = 300) -> Response:
+def _page(
+    template: str,
+    title: str,
+    values: Mapping[str, Any] | None = None,
+    *,
+    here: str = "",
+    policy: str = POLICY,
+) -> Response:
+    # Links are relative to the page's depth, so that the service may stand behind a path prefix.
+    root = "../" * (request.path.count("/") - 1) or "./"
+    framed = {
+        "title": title,
+        "root": root,
+        "here": here,
+        "edition": _edition(),
+        "version": service_version(),
+    }
+    return _html(web.render(template, {**framed, **(values or {})}), policy)
+
+
+def _html(text: str, policy: str, seconds: int = 300) -> Response:
     answer = cacheable(text.encode(), HTML, seconds)
-    answer.headers["Content-Security-Policy"] = POLICY
+    answer.headers["Content-Security-Policy"] = policy
     answer.headers["Referrer-Policy"] = "no-referrer"
     return answer
-
-
-def _page(title: str, content: Markup) -> Response:
-    # Links are relative to the page's depth, so that the service may stand behind a path prefix.
-    depth = request.path.count("/") - 1
-    page = Markup(_web("page.html").decode()).format(  # noqa: S704 - our own file
-        title=title, content=content, root="../" * depth or "./", edition=_edition()
-    )
-    return _html(str(page))
-
-
-def _start() -> Markup:
-    return Markup(
-        "<p>The statistics of process control as a service, version {version}. It keeps nothing between "
-        "requests; the same request always gives the same answer.</p>"
-        '<ul><li><a href="docs">Reference, to read and to try</a></li>'
-        '<li><a href="openapi.json">The contract as an OpenAPI document</a></li>'
-        '<li><a href="problems">Problems and what to do about each</a></li>'
-        '<li><a href="verification">Published cases, computed on this installation</a></li>'
-        '<li><a href="health/ready">Whether it is ready</a></li></ul>'
-    ).format(version=service_version())
-
-
-def _listing() -> Markup:
-    rows = Markup("").join(
-        Markup(
-            '<tr><td>{status}</td><td><a href="problems/{code}">{code}</a></td><td>{meaning}</td></tr>'
-        ).format(status=kind.status, code=kind.code, meaning=kind.meaning)
-        for kind in TYPES.values()
-    )
-    return Markup(
-        "<p>Every failure is answered as application/problem+json of one of these types.</p>"
-        '<table><thead><tr><th scope="col">Status</th><th scope="col">Type</th>'
-        '<th scope="col">What happened</th></tr></thead><tbody>{rows}</tbody></table>'
-    ).format(rows=rows)
-
-
-def _described(kind: ProblemType) -> Markup:
-    return Markup(
-        "<dl><dt>Type</dt><dd><code>{uri}</code></dd><dt>Status</dt><dd>{status}</dd>"
-        "<dt>What happened</dt><dd>{meaning}</dd><dt>What to do</dt><dd>{remedy}</dd></dl>"
-        '<p><a href="../problems">All problems</a></p>'
-    ).format(uri=escape(kind.uri), status=kind.status, meaning=kind.meaning, remedy=kind.remedy)
