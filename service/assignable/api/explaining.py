@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from typing import Any
 
+import numpy as np
 from marshmallow import Schema
 
 from ..spc.explain.steps import Step
@@ -55,7 +56,9 @@ def with_steps(view: View, explain: Explain) -> View:
         if not loaded.pop("explain", False):
             return view(loaded, **path)
         found = view(loaded, **path)
-        return {**found, "steps": explain(loaded, found)}
+        # A sum that overflows is a value that cannot be told, and no fault.
+        with np.errstate(all="ignore"):
+            return {**found, "steps": explain(loaded, found)}
 
     return answer
 

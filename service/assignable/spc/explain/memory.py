@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from typing import Any
 
 import numpy as np
@@ -20,7 +19,7 @@ from .pieces import (
     which,
     within_steps,
 )
-from .steps import Pad, Step, Value
+from .steps import Pad, Step, Value, total_of
 
 
 def _parameters(pad: Pad, data: Data | None, options: Any, limits: Any) -> SubgroupStatistics | None:
@@ -394,10 +393,10 @@ def _average_point(
             f"Average of the values of the last {len(means)} points at {name}",
             "total / count",
             f"{at}/value/{place}",
-            total=(math.fsum(m * n for m, n in zip(means, sizes, strict=True)), "sum of size times mean"),
-            count=math.fsum(sizes),
+            total=(total_of(m * n for m, n in zip(means, sizes, strict=True)), "sum of size times mean"),
+            count=total_of(sizes),
         )
-    count = math.fsum(sizes)
+    count = total_of(sizes)
     for sign, line in (("-", "lower"), ("+", "upper")):
         pad.work(
             f"{line.capitalize()} limit there",

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Iterable, Sequence
 from typing import Any
 
@@ -14,7 +13,7 @@ from ..charts.lines import Spread, spread_lines
 from ..data import Floats, SubgroupStatistics
 from ..rules import Rule
 from ..sigma import moving_ranges
-from .steps import Pad, Value, present
+from .steps import Pad, Value, present, total_of
 
 FACTOR = "factor for this size (GET /v1/factors)"
 
@@ -144,7 +143,7 @@ def grand_mean_steps(
     means, sizes = used.mean[there], used.size[there]
     if used.common_size is not None:
         return pad.mean(f"{what}: mean of the {len(means)} subgroup means", means, where, "mean")
-    total = math.fsum((means * sizes).tolist())
+    total = total_of(means * sizes)
     return pad.work(
         f"{what}: mean of all values, each subgroup's mean weighing its size",
         "sum_values / values",
@@ -211,8 +210,8 @@ def within_steps(pad: Pad, used: SubgroupStatistics, estimator: str, where: str 
         f"Sigma from the {named} of subgroups of several sizes",
         "sum_weighted / sum_weights",
         where,
-        sum_weighted=(math.fsum((weight * values).tolist()), f"sum of weight times {named[:-1]}"),
-        sum_weights=(math.fsum((weight * expected).tolist()), f"sum of weight times {e}"),
+        sum_weighted=(total_of(weight * values), f"sum of weight times {named[:-1]}"),
+        sum_weights=(total_of(weight * expected), f"sum of weight times {e}"),
     )
 
 
@@ -225,7 +224,7 @@ def _pooled_steps(pad: Pad, sd: Floats, sizes: Any, where: str | None) -> float:
         "sqrt(sum_squares / freedom)",
         None,
         sum_squares=(
-            math.fsum(((sizes - 1) * sd * sd).tolist()),
+            total_of((sizes - 1) * sd * sd),
             "sum of (size - 1) times the squared standard deviation over the subgroups",
         ),
         freedom=freedom,

@@ -11,7 +11,7 @@ from ..charts.common import LimitBasis, normal_multiple
 from ..charts.rare import OpportunityLimits, TimeLimits, opportunity_lines
 from ..data import Floats, Intervals
 from .pieces import alone, shown_point, which
-from .steps import Pad, Step, Value, present, summed
+from .steps import Pad, Step, Value, present, summed, total_of
 
 _AT = "#/limits/panels/interval"
 
@@ -243,19 +243,19 @@ def _weibull(pad: Pad, times: list[float], shape: float, fitted: bool) -> None:
             "sum_weighted_logs / sum_powers - 1 / shape - mean_log",
             None,
             sum_weighted_logs=(
-                math.fsum(w * y for w, y in zip(powers, logs, strict=True)),
+                total_of(w * y for w, y in zip(powers, logs, strict=True)),
                 "sum of (x / largest)**shape times log(x / largest)",
             ),
-            sum_powers=(math.fsum(powers), "sum of (x / largest)**shape"),
+            sum_powers=(total_of(powers), "sum of (x / largest)**shape"),
             shape=shape,
-            mean_log=(math.fsum(logs) / len(logs), "mean of log(x / largest)"),
+            mean_log=(total_of(logs) / len(logs), "mean of log(x / largest)"),
         )
     pad.work(
         "Scale of largest likelihood for this shape",
         "largest * (sum_powers / n)**(1 / shape)",
         "#/limits/scale",
         largest=largest,
-        sum_powers=(math.fsum(powers), "sum of (x / largest)**shape"),
+        sum_powers=(total_of(powers), "sum of (x / largest)**shape"),
         n=len(times),
         shape=shape,
     )

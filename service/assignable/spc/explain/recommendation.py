@@ -2,14 +2,12 @@
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 
 from ..data import Counts, Floats, Intervals, Subgroups, Vectors
 from ..recommendation import Evidence, Recommendation
 from .pieces import moving_sigma_steps, within_steps
-from .steps import MOST_LISTED, Pad, Step, Value, numbered
+from .steps import MOST_LISTED, Pad, Step, Value, numbered, total_of
 
 
 def of_choice(
@@ -41,7 +39,7 @@ def _drift(pad: Pad, sample: Subgroups | Vectors | Counts | Intervals, evidence:
     position = float(at.mean())
     x = at - position
     away = y - mean
-    sxx, syy = math.fsum((x * x).tolist()), math.fsum((away * away).tolist())
+    sxx, syy = total_of(x * x), total_of(away * away)
     if n <= MOST_LISTED:
         names, given = numbered("y", y.tolist())
         places = {f"t{i}": float(place) for i, place in enumerate(at.tolist(), 1)}
@@ -56,7 +54,7 @@ def _drift(pad: Pad, sample: Subgroups | Vectors | Counts | Intervals, evidence:
             mean=mean,
         )
     else:
-        sxy = math.fsum((x * away).tolist())
+        sxy = total_of(x * away)
     slope = pad.work(
         "Slope of the line of least squares, per point",
         "sum_ty / sum_tt",

@@ -44,7 +44,8 @@ class Step:
     values: Annotated[tuple[Given, ...], "The values put into the formula, by name."]
     result: Annotated[
         float | None,
-        "What comes out; null where the formula states how something is computed that no hand calculator does.",
+        "What comes out; null where the formula states how something is computed that no hand calculator does, or "
+        "where what comes out cannot be represented.",
     ]
     where: Annotated[
         str | None,
@@ -135,7 +136,7 @@ class Pad:
             plain[name] = number
             given.append(Given(name, number if math.isfinite(number) else None, source))
         found = evaluate(formula, plain)
-        self._steps.append(Step(what, formula, tuple(given), found, where))
+        self._steps.append(Step(what, formula, tuple(given), found, None if found is None else where))
         return math.nan if found is None else found
 
     def state(self, what: str, formula: str, /, **values: Value) -> None:
@@ -161,7 +162,7 @@ class Pad:
             names, given = numbered("x", there)
             text = " + ".join(f"({name} - mean)**2" for name in names)
             return self.work(what, f"sqrt(({text}) / (n - 1))", where, **given, mean=mean, n=len(there))
-        squares = math.fsum((value - mean) ** 2 for value in there)
+        squares = total_of(np.square(np.asarray(there) - mean))
         return self.work(
             what,
             "sqrt(sum_squares / (n - 1))",
@@ -203,6 +204,14 @@ def present(values: Iterable[float]) -> list[float]:
     return [value for value in np.asarray(values, dtype=np.float64).reshape(-1).tolist() if value == value]
 
 
+def total_of(values: Iterable[float]) -> float:
+    """The sum of some numbers, correctly rounded; infinite where it cannot be represented."""
+    try:
+        return math.fsum(values.reshape(-1).tolist() if isinstance(values, np.ndarray) else values)
+    except OverflowError:
+        return math.inf
+
+
 def numbered(name: str, values: Sequence[float]) -> tuple[list[str], dict[str, Value]]:
     """Names x1, x2, … with the values they stand for."""
     names = [f"{name}{at}" for at in range(1, len(values) + 1)]
@@ -215,4 +224,4 @@ def summed(name: str, values: Iterable[float]) -> tuple[str, dict[str, Value]]:
     if len(there) <= MOST_LISTED:
         names, given = numbered(name, there)
         return " + ".join(names) or "0", given
-    return f"sum_{name}", {f"sum_{name}": (math.fsum(there), f"sum of {len(there)} values")}
+    return f"sum_{name}", {f"sum_{name}": (total_of(there), f"sum of {len(there)} values")}

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from typing import Any
 
 import numpy as np
@@ -32,7 +31,7 @@ from .pieces import (
     which,
     within_steps,
 )
-from .steps import Pad, Step, Value
+from .steps import Pad, Step, Value, total_of
 from .subgroups import row_of, used_statistics
 
 _NORMAL = "normal quantile exceeded with probability {:g}"
@@ -413,11 +412,11 @@ def fit_trend(data: TrendData, options: Any, result: Any) -> tuple[Step, ...]:
                 f"Mean {of}{each}",
                 "total / weight",
                 f"#/limits/line/{name}",
-                total=(math.fsum((w * values).tolist()), f"sum of size times {of}"),
+                total=(total_of(w * values), f"sum of size times {of}"),
                 weight=line.weight,
             )
     dx, dy = x - line.mean_position, y - line.mean_level
-    sxx, sxy = math.fsum((w * dx * dx).tolist()), math.fsum((w * dx * dy).tolist())
+    sxx, sxy = total_of(w * dx * dx), total_of(w * dx * dy)
     pad.work(
         f"Slope of the line of least squares{each}",
         "sum_xy / sum_xx",
@@ -455,7 +454,7 @@ def _trend_sigma(
             "sqrt(sum_squares / (points - 2))",
             "#/limits/sigma",
             sum_squares=(
-                math.fsum((w * residuals * residuals).tolist()),
+                total_of(w * residuals * residuals),
                 "sum of the squared distances from the line, each weighing the size of its point",
             ),
             points=len(residuals),
@@ -652,8 +651,8 @@ def _model(pad: Pad, data: Individuals, limits: ResidualLimits) -> None:
             f"Coefficient by least squares on the {len(windows)} pairs of a value and the one before",
             "sum_xy / sum_xx",
             "#/limits/coefficients/0",
-            sum_xy=(math.fsum((dx * dy).tolist()), "sum of (previous - mean) times (value - mean)"),
-            sum_xx=(math.fsum((dx * dx).tolist()), "sum of (previous - mean)**2"),
+            sum_xy=(total_of(dx * dy), "sum of (previous - mean) times (value - mean)"),
+            sum_xx=(total_of(dx * dx), "sum of (previous - mean)**2"),
         )
     elif p > 1:
         pad.state(
@@ -681,7 +680,7 @@ def _model(pad: Pad, data: Individuals, limits: ResidualLimits) -> None:
         "Sigma of the residuals",
         "sqrt(sum_squares / (windows - p - 1))",
         "#/limits/sigma",
-        sum_squares=(math.fsum((rest * rest).tolist()), "sum of the squared residuals"),
+        sum_squares=(total_of(rest * rest), "sum of the squared residuals"),
         windows=len(windows),
         p=p,
     )

@@ -15,7 +15,7 @@ from ..studies.bias import BiasStudy, ReferenceLevel
 from ..studies.crossed import CrossedStudy
 from ..studies.nested import NestedStudy
 from ..studies.variance_components import AnovaRow, OneSidedTolerance
-from .steps import MOST_LISTED, Pad, Step, Value, numbered
+from .steps import MOST_LISTED, Pad, Step, Value, numbered, total_of
 
 
 def _squares(pad: Pad, what: str, means: Floats, centre: float, copies: int, word: str, where: str) -> None:
@@ -26,7 +26,7 @@ def _squares(pad: Pad, what: str, means: Floats, centre: float, copies: int, wor
         text = " + ".join(f"({name} - mean)**2" for name in names)
         pad.work(what, f"copies * ({text})", where, copies=(copies, word), mean=centre, **given)
         return
-    total = math.fsum(((flat - centre) ** 2).tolist())
+    total = total_of((flat - centre) ** 2)
     pad.work(
         what,
         "copies * sum_squares",
@@ -194,9 +194,9 @@ def of_crossed(
             "measurements of an appraiser",
             at["appraiser"],
         )
-    within = math.fsum(((measurements - found.cell_means[:, :, None]) ** 2).reshape(-1).tolist())
+    within = total_of((measurements - found.cell_means[:, :, None]) ** 2)
     cells = found.cell_means - found.part_means[:, None] - found.appraiser_means + found.grand_mean
-    between = r * math.fsum((cells**2).reshape(-1).tolist())
+    between = r * total_of(cells**2)
     values: dict[str, Value] = {
         "within": (within, "sum of the squared distances of measurements from the mean of their cell"),
         "between": (between, "trials times the sum of (cell - part - appraiser + mean)**2 of the means"),
@@ -264,7 +264,7 @@ def of_nested(
             at["part"],
         )
     if squares["repeatability"] > 0:
-        inside = math.fsum(((measurements - found.part_means[:, :, None]) ** 2).reshape(-1).tolist())
+        inside = total_of((measurements - found.part_means[:, :, None]) ** 2)
         pad.work(
             "Sum of squares of repeatability",
             "within",
