@@ -107,6 +107,19 @@ def test_probabilities_agree_with_percentiles() -> None:
             assert by[each["points"] - 1] < each["probability"] <= by[each["points"]] + 1e-9
 
 
+def test_a_far_shift_signals_at_once() -> None:
+    for chart in (
+        {"shewhart": {"rules": NELSON}},
+        {"ewma": {"smoothing": 1, "limit": 3}},
+        {"cusum": {"reference": 0.5, "decision": 4}},
+        {"moving_average": {"span": 2}},
+        {"mewma": {"variables": 3, "smoothing": 0.5, "limit": 12}},
+    ):
+        (one,) = run_lengths({**chart, "shifts": [10]})
+        assert one["arl"] == pytest.approx(1.0, abs=1e-3)
+        assert one["steady_state_arl"] >= 1.0
+
+
 def test_a_change_of_sigma_is_told_by_its_scale() -> None:
     (one,) = run_lengths({"shewhart": {}, "shifts": [0], "scales": [1.5]})
     assert one["arl"] == pytest.approx(1 / math.erfc(2 / math.sqrt(2)))
@@ -228,6 +241,31 @@ def test_a_comparison_recommends_one_of_its_charts() -> None:
             "#/mewma/smoothing",
             "too-much-work",
         ),
+        (
+            "computeRunLength",
+            {"shewhart": {"sigma_multiple": 10}, "shifts": [0]},
+            "#/shewhart/sigma_multiple",
+            "run-length-beyond-reach",
+        ),
+        (
+            "computeRunLength",
+            {"moving_average": {"span": 2, "sigma_multiple": 10}},
+            "#/moving_average/sigma_multiple",
+            "run-length-beyond-reach",
+        ),
+        (
+            "computeRunLength",
+            {"counts": {"law": "poisson", "mean": 100, "size": 1, "sigma_multiple": 10}},
+            "#/counts/sigma_multiple",
+            "run-length-beyond-reach",
+        ),
+        (
+            "computeRunLength",
+            {"mewma": {"variables": 2, "smoothing": 0.5, "limit": 900}},
+            "#/mewma/limit",
+            "not-settled",
+        ),
+        ("computeRunLength", {"ewma": {"smoothing": 0.5, "limit": 10}}, "#/ewma/limit", ""),
         ("designSubgroups", {"shift": 1}, "#/detect", "nothing-asked"),
         (
             "designSubgroups",

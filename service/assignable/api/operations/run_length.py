@@ -59,8 +59,9 @@ def run_length(loaded: dict[str, Any]) -> dict[str, Any]:
     told = []
     for index, (shift, scale) in enumerate(shifts):
         places: dict[str, Where] = {name: (kind, name) for name in chart}
-        # What never signals, or does not settle, is told of the rules; without any it is the limits.
-        places["rules"] = (kind, "rules" if kind == "shewhart" else _LIMITS[kind])
+        # What does not settle is told of the rules; where there are none it is the limits, as what never signals.
+        places["limits"] = (kind, _LIMITS[kind])
+        places["rules"] = (kind, "rules") if kind == "shewhart" else places["limits"]
         with located(shift=("shifts", index), scale=("scales", index), **places):
             found = at(shift * root, scale)
         told.append(_told(found, within, hours, shift=shift, scale=scale))
@@ -91,6 +92,13 @@ def _told(found: _Found, within: Sequence[int], hours: float | None, **at: float
 def _of_law(law: Decay, within: tuple[int, ...], steady: Callable[[], float | None]) -> _Found:
     """Told by a law; the steady state as well, where that does not take long."""
     run = law.run_length()
+    if run.arl > memory.LONGEST_ARL:
+        raise UnusableParameter.of(
+            "run-length-beyond-reach",
+            f"The average run length is beyond {memory.LONGEST_ARL:g} points: in practice this chart never signals "
+            "here, and no figure is given.",
+            "limits",
+        )
     reached = law.probability(np.array(within, dtype=np.float64)).tolist()
     slow = law.operations > _MOST_FOR_STEADY
     return _Found(run, reached, None if slow else steady(), law.operations * (1 if slow else 2))
@@ -204,7 +212,17 @@ def _mewma(loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...
     kernel = check(limit)
 
     def at(shift: float, scale: float) -> _Found:
-        law = mewma.mewma_law(p, smoothing, limit, shift, exact=exact)
+        try:
+            law = mewma.mewma_law(p, smoothing, limit, shift, exact=exact)
+        except UnusableParameter as error:
+            if error.faults[0].code != "not-settled":
+                raise
+            raise UnusableParameter.of(
+                "not-settled",
+                "With this limit the chart signals too seldom, or settles too slowly, for its run length to be "
+                "computed.",
+                "limits",
+            ) from error
         found = _of_law(law, within, lambda: mewma.steady_state_arl(p, smoothing, limit, shift))
         return _Found(
             found.run, found.within, found.steady_state_arl, found.operations + kernel / max(asked, 1)
@@ -213,7 +231,13 @@ def _mewma(loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...
     return at
 
 
-_LIMITS = {"ewma": "limit", "cusum": "decision", "moving_average": "sigma_multiple", "mewma": "smoothing"}
+_LIMITS = {
+    "shewhart": "sigma_multiple",
+    "ewma": "limit",
+    "cusum": "decision",
+    "moving_average": "sigma_multiple",
+    "mewma": "limit",
+}
 _ROADS = {
     "shewhart": _shewhart,
     "ewma": _ewma,
@@ -264,7 +288,7 @@ def _of_counts(
             law = steady_run_law(rules, shifted, calm, **drawn)
             return None if law is None else law.run_length().arl
 
-        with located(rules=("counts", "rules")):
+        with located(rules=("counts", "rules"), limits=("counts", "sigma_multiple")):
             law = run_law(rules, shifted, **drawn)
             found = _of_law(law, within, steady)
         told.append(_told(found, within, hours, factor=factor))
@@ -303,13 +327,17 @@ def _explain(
         each = None
         if chart["sides"] == "two" and not chart["head_start"]:
             given = {"reference": chart["reference"], "decision": chart["decision"], "scale": scale}
-            upper, lower = (memory.cusum(sides="upper", shift=sign * shift, **given).arl for sign in (1.0, -1.0))
+            upper, lower = (
+                memory.cusum(sides="upper", shift=sign * shift, **given).arl for sign in (1.0, -1.0)
+            )
             each = upper, lower
         worked.of_cusum(pad, chart["reference"], chart["decision"], shift, scale, arl, each, f"{at}/arl")
     elif kind == "moving_average":
         worked.of_moving_average(pad, chart["span"], chart["sigma_multiple"], shift, scale, arl, f"{at}/arl")
     else:
-        worked.of_mewma(pad, chart["variables"], chart["smoothing"], chart.get("limit"), shift, arl, f"{at}/arl")
+        worked.of_mewma(
+            pad, chart["variables"], chart["smoothing"], chart.get("limit"), shift, arl, f"{at}/arl"
+        )
 
 
 def register(contract: Contract) -> None:

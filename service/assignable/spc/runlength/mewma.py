@@ -433,4 +433,4 @@ def steady_state_arl(p: int, smoothing: float, limit: float, shift: float = 0.0)
         return None
     disc, steps = _steps(p, smoothing, limit, 0)
     step = steps[-1]
-    return float((start * _settled(step, disc, step.along(shift))).sum())
+    return max(float((start * _settled(step, disc, step.along(shift))).sum()), 1.0)
