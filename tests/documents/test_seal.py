@@ -14,6 +14,8 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+import rfc8785
+from cryptography.hazmat.primitives.asymmetric.ed25519 import Ed25519PublicKey
 from flask.testing import FlaskClient
 from joserfc import jws as other
 from joserfc.errors import BadSignatureError
@@ -25,6 +27,7 @@ from assignable.api.settings import BadSettings, Settings
 from assignable.cli import main
 from assignable.documents import seal
 from assignable.documents.canonical import digest
+from assignable.spc.charts import CHARTS
 
 ROOT = Path(__file__).resolve().parents[2]
 SIGNALS = "/v1/charts/xbar-r/signals"
@@ -194,6 +197,19 @@ def test_the_recipe_as_it_is_printed(served: Served, tmp_path: Path) -> None:
     assert status_of(limits) == 0
     assert status_of({**limits, "centre": 0.5}) == 1
     assert status_of({**limits, "seal": {**limits["seal"], "key_id": "kiln-a"}}) == 1
+
+
+@pytest.mark.parametrize("chart", CHARTS)
+def test_documents_of_every_chart_are_sealed_over_what_others_read(served: Served, chart: str) -> None:
+    client = served(KEY, required=True)
+    answer = client.post(f"/v1/charts/{chart}/limits", json=example(f"{chart}-limits"))
+    document = json.loads(answer.text, parse_int=float)["limits"]
+    header, _, signature = document.pop("seal")["jws"].split(".")
+    key = Ed25519PublicKey.from_public_bytes(coded(KEY["x"]))
+    key.verify(coded(signature), header.encode() + b"." + rfc8785.dumps(document))
+    body = {**example(f"{chart}-signals"), "limits": answer.json["limits"], "carry": None}
+    judged = client.post(f"/v1/charts/{chart}/signals", json=body)
+    assert judged.status_code == 200, judged.text
 
 
 def test_every_edit_is_told_as_what_it_is(served: Served) -> None:

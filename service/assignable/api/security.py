@@ -142,6 +142,10 @@ class TokenKey:
     algorithm: str
     key: Any
 
+    def answers_to(self, key_id: object) -> bool:
+        """Whether a token that names this key, or none, may be this key's; the signature decides."""
+        return key_id is None or self.key_id is None or key_id == self.key_id
+
 
 @dataclass(frozen=True, slots=True)
 class Tokens:
@@ -173,7 +177,7 @@ class Tokens:
         try:
             header = jwt.get_unverified_header(token)
             for key in self.keys:
-                if header.get("alg") != key.algorithm or header.get("kid", key.key_id) != key.key_id:
+                if header.get("alg") != key.algorithm or not key.answers_to(header.get("kid")):
                     continue
                 try:
                     claims = jwt.decode(

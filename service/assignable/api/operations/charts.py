@@ -115,7 +115,7 @@ class Kept(tuple[str, Any]):
 
 
 class LimitsField(f.Object):
-    """A limits document, checked against its digest; documents seen lately are kept parsed."""
+    """A limits document, checked against its digest and its seal; documents seen lately are kept parsed."""
 
     def __init__(self, chart: Chart, shape: type[f.RequestShape], seals: Seals, **kwargs: Any) -> None:
         super().__init__(shape, **kwargs)
