@@ -32,6 +32,7 @@ _GRID = 28
 _FARTHEST = 300.0
 _NEAREST = 1e-3
 _NO_DISTANCE = 1e-100
+_TOO_LARGE = 1e150
 _PART = 4000
 # A folded normal whose mean is nearer its fold than this, in sigma, cannot be told from a half normal.
 _FOLDED_APART = 0.3
@@ -697,7 +698,7 @@ def fit_law(law: Law, sample: Sample) -> Fitted:
 
     Values below a limit enter with the probability of being below it [cohen-1959]; the likelihood is then
     climbed by Newton steps. Raises UnusableData: ``outside-support``, ``no-maximum``, ``no-variation``,
-    ``too-few-values``, ``too-many-values``, ``all-below-limits``.
+    ``too-few-values``, ``too-many-values``, ``all-below-limits``, ``too-large``, ``too-small``.
     """
     name = law.name
     check(sample)
@@ -775,10 +776,25 @@ def check(sample: Sample) -> None:
             "data",
             "values",
         )
-    if not math.isfinite(float(np.ptp(0.5 * sample.values))) or float(np.abs(sample.values).max()) > 1e150:
+    check_size(sample)
+
+
+def check_size(sample: Sample) -> None:
+    """Raises UnusableData ``too-large`` or ``too-small`` where squares of the values would leave a double."""
+    largest = float(np.abs(sample.values).max())
+    if sample.below.size:
+        largest = max(largest, float(np.abs(sample.below).max()))
+    if largest > _TOO_LARGE:
         raise UnusableData.of(
             "too-large",
             "The values are too large to fit a distribution to; choose a larger unit.",
+            "data",
+            "values",
+        )
+    if float(np.ptp(sample.values)) < 1.0 / _TOO_LARGE:
+        raise UnusableData.of(
+            "too-small",
+            "The values differ too little to fit a distribution to; choose a smaller unit.",
             "data",
             "values",
         )

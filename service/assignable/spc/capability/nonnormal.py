@@ -24,7 +24,7 @@ import scipy
 
 from ..data import Floats
 from ..errors import SpcError, UnusableData, UnusableParameter
-from .distributions import LAWS, DistributionParameter, Fitted, Sample, fit_law
+from .distributions import LAWS, DistributionParameter, Fitted, Sample, check_size, fit_law
 from .goodness import GoodnessOfFit
 from .indices import LARGEST_INDEX
 from .nonconforming import ObservedNonconforming, clopper_pearson, observed
@@ -454,6 +454,7 @@ def _empirical(sample: Sample, specification: Specification, confidence: float) 
     n = ordered.size
     if n < 2 or ordered[0] == ordered[-1]:
         raise UnusableData.of("no-variation", "There is no variation among the values.", "data", "values")
+    check_size(sample)
     low, middle, high = (float(one) for one in np.quantile(ordered, _P, method="median_unbiased"))
 
     def ends(which: int, level: float) -> tuple[float | None, float | None]:
