@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from ...documents.seal import ALGORITHM
 from ..contract import Contract
-from ..fields import AnswerShape, Choice, ObjectList, StrictString
+from ..fields import AnswerShape, ObjectList, StrictString
 
 TAG = "Sealing"
 
@@ -12,11 +12,13 @@ TAG = "Sealing"
 class SealingKey(AnswerShape):
     """A public key, as RFC 7517 and RFC 8037 have it."""
 
-    kty = Choice("OKP", required=True, metadata={"description": "Kind of the key."})
-    crv = Choice("Ed25519", required=True, metadata={"description": "Its curve."})
+    kty = StrictString(required=True, metadata={"description": "Kind of the key: OKP."})
+    crv = StrictString(required=True, metadata={"description": "Its curve: Ed25519."})
     kid = StrictString(required=True, metadata={"description": "Its id: `key_id` of the seals it is for."})
-    use = Choice("sig", required=True, metadata={"description": "Signatures only."})
-    alg = Choice(ALGORITHM, required=True, metadata={"description": "The algorithm of the signatures."})
+    use = StrictString(required=True, metadata={"description": "What it is for: sig, signatures."})
+    alg = StrictString(
+        required=True, metadata={"description": f"The algorithm of the signatures: {ALGORITHM}."}
+    )
     x = StrictString(required=True, metadata={"description": "The public key, base64url."})
 
 
