@@ -93,7 +93,7 @@ def test_coverage_of_its_interval() -> None:
     correlation = np.array([[1.0, 0.6], [0.6, 1.0]])
     lower, upper = np.array([-3.0, -2.5]), np.array([2.5, 1e12])
     truth = _outside_with_error(lower, upper, correlation)[0]
-    random, reps, n = _random(3), 250, 60
+    random, reps, n = _random(3), 120, 60
     hits = bounds = 0
     for _ in range(reps):
         x = random.multivariate_normal(np.zeros(2), correlation, n)
@@ -101,7 +101,7 @@ def test_coverage_of_its_interval() -> None:
         ends = _interval((lower - mean) / sd, (upper - mean) / sd, np.corrcoef(x.T), n, 0.95)
         hits += ends[0] <= truth <= ends[1]
         bounds += truth <= ends[2]
-    # A nominal 0.95, within four standard errors of 250 trials.
+    # A nominal 0.95, within four standard errors of 120 trials.
     assert hits / reps == pytest.approx(0.95, abs=4.0 * math.sqrt(0.95 * 0.05 / reps))
     assert bounds / reps == pytest.approx(0.95, abs=4.0 * math.sqrt(0.95 * 0.05 / reps))
 
