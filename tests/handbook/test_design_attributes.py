@@ -243,3 +243,12 @@ def test_it_is_quick() -> None:
     with pytest.raises(UnusableParameter, match="by the normal approximation"):
         detection_size("p", 0.005, 0.0075, 0.9, false_alarm_probability=0.0027)
     assert time.process_time() - begun < 2.0
+
+
+@pytest.mark.parametrize("chart", ["p", "u"])
+def test_limits_without_a_whole_number_between_them(chart: CountChart) -> None:
+    size = lower_limit_size(chart, 4e-6, sigma_multiple=0.1).size
+    found = characteristics(chart, 4e-6, size, [4e-6, 0.1], sigma_multiple=0.1)
+    assert (found.limits.lower_count, found.limits.upper_count) == (1, 0)
+    assert [one.power for one in found.levels] == [1.0, 1.0]
+    assert found.longest_arl == 1.0

@@ -315,6 +315,9 @@ def _least_favourable(binomial: bool, size: float, fewest: float, most: float, l
             else SMALLEST_LEVEL
         )
     span = most - fewest + 1.0
+    if span <= 0.0:
+        # No whole number lies between the limits: every sample signals, at every level.
+        return level
     if not binomial:
         return math.exp((math.lgamma(most + 1.0) - math.lgamma(fewest)) / span) / size
 
