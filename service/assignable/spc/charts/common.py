@@ -145,11 +145,19 @@ class Plot:
         value = self.value if kept is None else np.where(kept, self.value, np.nan)
         return Track(
             value=value,
-            z=(value - self.centre) / self.sigma,
+            z=self._standardised(value),
             sigma=np.asarray(self.sigma),
             lower=np.asarray(self.floor if self.lower is None else self.lower),
             upper=np.asarray(self.ceiling if self.upper is None else self.upper),
         )
+
+    def _standardised(self, value: Floats) -> Floats:
+        """Distances from the centre in sigma, kept within what a document can hold."""
+        sigma = self.sigma
+        if (sigma if isinstance(sigma, float) else float(np.min(sigma, initial=1.0))) > 1e-7:
+            return (value - self.centre) / sigma
+        with np.errstate(over="ignore"):
+            return np.clip((value - self.centre) / sigma, -1e300, 1e300)
 
     def beyond(self) -> Booleans:
         """(m,) bool: values strictly beyond a limit; a gap is not."""
