@@ -42,7 +42,6 @@ from ..schemas.economic import (
     requirements_of,
 )
 from .run_length import TAG, TAG_TEXT
-from .run_length import run_length as run_length
 
 USUAL_LEVELS = (0.5, 0.75, 1.0, 1.25, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0)
 

@@ -17,7 +17,8 @@ from ..schemas.charts import ChartRequest, request_of
 from ..schemas.common import labels_of
 from .capability import measurements
 from .charts import fitted, judged
-from .designs import design_subgroups, run_length
+from .designs import design_subgroups
+from .run_length import run_length
 
 TAG = "Pictures"
 Drawing = Callable[[dict[str, Any]], str]
