@@ -34,7 +34,11 @@ def _environment() -> Environment:
     folder = files("assignable.web").joinpath("templates")
     texts = {file.name: file.read_text(encoding="utf-8") for file in folder.iterdir()}
     made = Environment(
-        loader=DictLoader(texts), autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True
+        loader=DictLoader(texts),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
     )
     made.filters["marked"] = marked
     return made

@@ -8,6 +8,8 @@ from dataclasses import dataclass
 from typing import Any
 
 _DEEPEST = 12
+_NO_BOUND = 1e15
+"""A bound as large is one of arithmetic: it tells a reader nothing."""
 _BOUNDS = (
     ("minimum", "at least {}"),
     ("exclusiveMinimum", "above {}"),
@@ -18,8 +20,20 @@ _BOUNDS = (
     ("minLength", "{} characters or more"),
     ("maxLength", "no more than {} characters"),
 )
-_PLURAL = {"object": "objects", "array": "lists", "number": "numbers", "integer": "whole numbers", "string": "texts"}
-_SINGULAR = {"object": "object", "array": "list", "number": "number", "integer": "whole number", "string": "text"}
+_PLURAL = {
+    "object": "objects",
+    "array": "lists",
+    "number": "numbers",
+    "integer": "whole numbers",
+    "string": "texts",
+}
+_SINGULAR = {
+    "object": "object",
+    "array": "list",
+    "number": "number",
+    "integer": "whole number",
+    "string": "text",
+}
 
 
 @dataclass(frozen=True, slots=True)
@@ -229,7 +243,10 @@ class Document:
         if not found and len(whole) == 1:
             found = whole[0].get("description", "")
         bounds = [
-            words.format(_number(one[name])) for one in whole for name, words in _BOUNDS if one.get(name)
+            words.format(_number(one[name]))
+            for one in whole
+            for name, words in _BOUNDS
+            if one.get(name) and abs(one[name]) < _NO_BOUND and (name, one[name]) != ("minLength", 1)
         ]
         more = f"{', '.join(dict.fromkeys(bounds))}." if bounds else ""
         return " ".join(part for part in (found, more[:1].upper() + more[1:]) if part)
@@ -256,4 +273,4 @@ def _main(schema: Mapping[str, Any]) -> str:
 
 
 def _number(value: float) -> str:
-    return f"{value:,}".replace(",", " ") if isinstance(value, int) else f"{value:g}"
+    return f"{value:,}".replace(",", "\u202f") if isinstance(value, int) else f"{value:g}"

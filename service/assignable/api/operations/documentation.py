@@ -29,7 +29,16 @@ POLICY = (
 # The pages to read hold no script at all.
 QUIET_POLICY = "default-src 'none'; style-src 'self'; img-src data:; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
 
-_SCRIPTS = ("reference.js", "start.js", "trial.js", "sheet.js", "calls.js", "words.js", "takeaway.js", "plant.js")
+_SCRIPTS = (
+    "reference.js",
+    "start.js",
+    "trial.js",
+    "sheet.js",
+    "calls.js",
+    "words.js",
+    "takeaway.js",
+    "plant.js",
+)
 _SHEETS = ("page.css", "reference.css")
 _THEIRS = {"swagger-ui-bundle.js": "text/javascript", "swagger-ui.css": "text/css"}
 _FOREVER = 31_536_000
@@ -68,10 +77,16 @@ def register(contract: Contract) -> None:
     def reading(operation_id: str) -> Response:
         found = parsed().reading(operation_id)
         if found is None:
-            raise Problem(NOT_FOUND, "There is no operation of this name; /docs/reading lists those there are.")
+            raise Problem(
+                NOT_FOUND, "There is no operation of this name; /docs/reading lists those there are."
+            )
         methods = auditing.with_sources(found.draws or operation_id)
         return _page(
-            "operation.html", found.title, {"of": found, "methods": methods}, here="reading", policy=QUIET_POLICY
+            "operation.html",
+            found.title,
+            {"of": found, "methods": methods},
+            here="reading",
+            policy=QUIET_POLICY,
         )
 
     def methods() -> Response:
