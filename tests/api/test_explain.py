@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import Any
 
 import pytest
@@ -246,3 +247,44 @@ def test_a_point_that_signals_is_the_one_that_is_shown() -> None:
     answer = served.answer_of("judgeXbarR", {**request, "explain": True})
     first = answer["signals"][0]["index"]
     assert any(f"subgroup {first} (the first with a signal)" in step["what"] for step in answer["steps"])
+
+
+# What is hard to calculate with ---------------------------------------------------------------------
+
+
+def _changed(value: Any, change: Callable[[list[Any]], list[Any]]) -> Any:
+    """A request with every list of numbers changed, documents left as they are."""
+    if isinstance(value, dict):
+        kept = ("limits", "carry", "rules")
+        return {key: one if key in kept else _changed(one, change) for key, one in value.items()}
+    if not isinstance(value, list):
+        return value
+    numbers = all(
+        one is None or (isinstance(one, int | float) and not isinstance(one, bool)) for one in value
+    )
+    return change(value) if numbers else [_changed(one, change) for one in value]
+
+
+def _huge(values: list[Any]) -> list[Any]:
+    return [one * 1e290 if isinstance(one, float) else one for one in values]
+
+
+def _tiny(values: list[Any]) -> list[Any]:
+    return [one * 1e-150 if isinstance(one, float) else one for one in values]
+
+
+def _gaps(values: list[Any]) -> list[Any]:
+    return [None if at % 5 == 3 else one for at, one in enumerate(values)]
+
+
+@pytest.mark.parametrize("change", [_huge, _tiny, _gaps])
+def test_no_steps_stand_in_the_way_of_an_answer(change: Callable[[list[Any]], list[Any]]) -> None:
+    answered = 0
+    for operation_id, name in CALCULATIONS:
+        if "/designs/" in served.operations()[operation_id].path:
+            continue
+        request = _changed(served.example(name), change)
+        plain, asked = (served.call(operation_id, {**request, "explain": one}) for one in (False, True))
+        assert plain.status_code == asked.status_code, (operation_id, name, asked.get_data(as_text=True))
+        answered += plain.status_code == 200
+    assert answered > 10

@@ -68,7 +68,7 @@ def of_rules(
         pad.work("Average run length", "1 / p", f"{at}/arl", p=p)
         pad.work("Standard deviation of the run length", "sqrt(1 - p) / p", f"{at}/sd", p=p)
         return
-    low, high = cuts[:-1].tolist(), cuts[1:].tolist()
+    low, high = (cuts[:-1] + 0.0).tolist(), (cuts[1:] + 0.0).tolist()
     for one, other in list(zip(low, high, strict=True))[:8]:
         values: dict[str, Value] = {"d": shift, "scale": scale}
         parts = []

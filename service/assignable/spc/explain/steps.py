@@ -153,7 +153,8 @@ class Pad:
         """The mean of some values."""
         text, given = summed(name, values)
         count = len(given) if text != f"sum_{name}" else len(present(values))
-        return self.work(what, f"({text}) / n", where, **given, n=count)
+        formula = f"({text}) / n" if len(given) > 1 else f"{text} / n"
+        return self.work(what, formula, where, **given, n=count)
 
     def deviation(self, what: str, values: Iterable[float], mean: float, where: str | None = None) -> float:
         """The standard deviation, divisor n - 1, of values with this mean."""
