@@ -63,7 +63,7 @@ def run_lengths(kind: str, found: Sequence[RunLengthAt]) -> str:
     high = max(max(numbers) * 1.25, low * 10)
     to_y = scale.Logarithmic(low, high, bottom, top)
     spread = max(places) - min(places)
-    to_x = scale.Linear(min(places), max(places) if spread > 0 else min(places) + 1, _LOW + 16, _HIGH - 24)
+    to_x = scale.Linear(min(places), max(places) if spread > 1e-9 else min(places) + 1, _LOW + 16, _HIGH - 24)
 
     def y_of(number: float) -> float:
         return to_y(max(number, low))
@@ -261,7 +261,7 @@ def _curves(
     top, bottom = 74.0, 294.0
     reach = np.concatenate([one.shifts for _, one, _ in curves])
     low, high = min(0.0, float(reach.min())), max(float(reach.max()), shift)
-    to_x = scale.Linear(low, high if high > low else low + 1, _LOW, _HIGH)
+    to_x = scale.Linear(low, high if high - low > 1e-9 else low + 1, _LOW, _HIGH)
     to_y = scale.Linear(0.0, 1.0, bottom, top)
     _frame(paper, top, bottom)
     for share in (0.0, 0.25, 0.5, 0.75, 1.0):
