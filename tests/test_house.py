@@ -27,6 +27,8 @@ from contract import served
 ROOT = Path(__file__).resolve().parent.parent
 SERVICE = ROOT / "service" / "assignable"
 README = (ROOT / "README.md").read_text(encoding="utf-8")
+TRIED = ("README.md", "openapi/GUIDE.md")
+"""Whose requests are sent by the tests, and whose answers compared."""
 WEB = ("flask", "werkzeug", "marshmallow", "apispec", "gunicorn", "orjson", "rfc8785")
 
 
@@ -129,7 +131,9 @@ class Block:
     text: str
 
 
-BLOCKS = [Block(*found) for found in re.findall(r"^```(\w+)\n(.*?)^```$", README, re.M | re.S)]
+def blocks(name: str) -> list[Block]:
+    text = (ROOT / name).read_text(encoding="utf-8")
+    return [Block(*found) for found in re.findall(r"^```(\w+)\n(.*?)^```$", text, re.M | re.S)]
 
 
 def commands(text: str) -> Iterator[list[str]]:
@@ -157,6 +161,8 @@ def run(words: list[str]) -> TestResponse:
         elif word in ("-d", "--data", "--data-binary"):
             given = next(rest)
             data = (ROOT / given[1:]).read_bytes() if given.startswith("@") else given.encode()
+        elif word == "-o":
+            next(rest)
         elif word.startswith("http://127.0.0.1:8000"):
             path = word.removeprefix("http://127.0.0.1:8000")
         else:
@@ -226,7 +232,7 @@ def compare(part: Any, whole: Any, where: str = "$") -> None:
 
 
 def test_the_two_commands_come_first_and_are_one_line_each() -> None:
-    first, second = [block.text for block in BLOCKS if block.language == "sh"][:2]
+    first, second = [block.text for block in blocks("README.md") if block.language == "sh"][:2]
     for text in (first, second):
         assert len(text.strip().splitlines()) == 1
         assert text.startswith("python3 -m venv .venv")
@@ -239,14 +245,16 @@ def test_the_readme_is_finished() -> None:
     assert "TODO" not in README
 
 
-def test_what_the_readme_shows_is_what_the_service_answers() -> None:
+@pytest.mark.parametrize("name", TRIED)
+def test_what_is_shown_is_what_the_service_answers(name: str) -> None:
     compared, answer = 0, None
-    for block in BLOCKS:
+    for block in blocks(name):
         if block.language == "sh":
             for words in commands(block.text):
                 answer = run(words)
                 assert answer.status_code in (200, 422), (words, answer.get_data(as_text=True))
-                assert answer.is_json or "json" in (answer.content_type or ""), words
+                kind = answer.content_type or ""
+                assert kind == "image/svg+xml" if "-o" in words else "json" in kind, words
         elif block.language == "json":
             part = shown(block.text)
             assert answer is not None, "an answer is shown before any request"
@@ -255,10 +263,39 @@ def test_what_the_readme_shows_is_what_the_service_answers() -> None:
     assert compared >= 4
 
 
+def test_the_guide_goes_on_with_what_was_answered() -> None:
+    """A limits document or a carry of one step is the one the next step sends."""
+
+    def file(name: str) -> Any:
+        return json.loads((ROOT / "openapi" / name).read_bytes())
+
+    frozen = served.answer_of("fitXbarRLimits", file("guide/baseline-mended.json"))["limits"]
+    first = file("examples/xbar-r-signals.request.json")
+    following = file("guide/next-car.json")
+    for judged in (first, following, file("guide/after-repair.json")):
+        assert close(judged["limits"], frozen)
+    assert close(following["carry"], served.answer_of("judgeXbarR", first)["carry"])
+    assert "carry" not in file("guide/after-repair.json")
+
+
+def close(one: Any, other: Any) -> bool:
+    """Equal, but for the last digits of numbers on another processor, and the digests that follow from them."""
+    if isinstance(one, dict) and isinstance(other, dict):
+        return one.keys() == other.keys() and all(close(one[name], other[name]) for name in one)
+    if isinstance(one, list) and isinstance(other, list):
+        return len(one) == len(other) and all(map(close, one, other))
+    if isinstance(one, float) and isinstance(other, float):
+        return one == pytest.approx(other, rel=1e-9)
+    if isinstance(one, str) and one.startswith("sha-256:"):
+        return isinstance(other, str) and other.startswith("sha-256:")
+    return one == other
+
+
 def test_files_the_readme_links_to_exist() -> None:
-    for text in (README, (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")):
-        for target in re.findall(r"\]\((?!https?:|#)([^)#]+)", text):
-            assert (ROOT / target).exists(), target
+    for name in (*TRIED, "DEVELOPERS.md"):
+        file = ROOT / name
+        for target in re.findall(r"\]\((?!https?:|#)([^)#]+)", file.read_text(encoding="utf-8")):
+            assert (file.parent / target).exists(), target
 
 
 def test_every_setting_is_in_the_table_of_the_readme() -> None:

@@ -162,7 +162,7 @@ function showPreview(built) {
     [row].flat().map((value) => element("td", {}, value === null ? "–" : String(value))),
     Array.isArray(built.inspected) ? element("td", {}, `of ${built.inspected[at]}`) : null));
   byId("preview").replaceChildren(
-    element("p", { class: "soft" }, [`Understood as ${count(main.length, built.form === "rows" || built.form === "long" ? "subgroup" : "point")}${main.length > SHOWN_ROWS ? ", which begin" : ""}:`, ...built.notes].join(" ")),
+    element("p", { class: "soft" }, [...built.notes, `Understood as ${count(main.length, built.form === "rows" || built.form === "long" ? "subgroup" : "point")}${main.length > SHOWN_ROWS ? ", which begin" : ""}:`].join(" ")),
     element("div", { class: "wide", role: "region", "aria-label": "The first rows as understood", tabindex: "0" }, element("table", {}, element("tbody", {}, shown))),
   );
 }

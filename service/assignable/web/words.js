@@ -49,7 +49,7 @@ export function price(performance) {
   }
   const one = performance.shifts?.find((shift) => shift.shift === 1 || shift.shift === 1.5);
   if (one?.arl) {
-    const unit = performance.shift_unit ? ` (${spaced(performance.shift_unit)})` : "";
+    const unit = performance.shift_unit ? ` (in ${spaced(performance.shift_unit)})` : "";
     parts.push(`A lasting shift of ${number(one.shift)}${unit} is seen after ${number(Number(one.arl.toPrecision(3)))} points on average.`);
   }
   return parts.join(" ") || null;
