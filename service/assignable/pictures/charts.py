@@ -136,7 +136,8 @@ class Drawn:
 def _headings(plotted: Any) -> Mapping[str, str]:
     """What each panel shows, from its own description."""
     hints = get_type_hints(get_origin(plotted) or plotted, include_extras=True)
-    return {name: hint.__metadata__[0].split(".")[0] for name, hint in hints.items()}
+    # The first sentence, without what only a reader of the contract can look up.
+    return {name: hint.__metadata__[0].split(".")[0].split(", as `")[0] for name, hint in hints.items()}
 
 
 def panels_of(result: Any) -> Iterable[tuple[str, Any]]:
