@@ -252,6 +252,25 @@ def test_values_outside_the_support_signal() -> None:
 
 
 def test_parameters_of_another_distribution_are_refused() -> None:
-    frozen = nonnormal.FrozenDistribution("gamma", (), (1.0, 2.0, 3.0), 0.0, 1.0)
+    frozen = nonnormal.FrozenDistribution("gamma", (), (1.0, 2.0, 3.0), 0.0, 1.0, 1)
     with pytest.raises(UnusableParameter):
         nonnormal.law_of(frozen)
+
+
+def test_a_tail_to_the_left_is_the_mirror_of_one_to_the_right() -> None:
+    # Invariance: mirrored values have mirrored limits, and the sides of their signals change places.
+    x = np.random.default_rng(11).lognormal(0.0, 0.5, 80)
+    right, left = (
+        _fit(each, distribution="johnson-sl", rules=PUBLISHED["nelson-1984"].rules) for each in (x, 10.0 - x)
+    )
+    assert left.limits.distribution is not None
+    assert left.limits.distribution.direction == -1
+    assert left.limits.panels.value.upper == pytest.approx(10.0 - right.limits.panels.value.lower, rel=1e-6)
+    assert left.limits.panels.value.lower == pytest.approx(10.0 - right.limits.panels.value.upper, rel=1e-6)
+    new = np.array([1.0, 0.9, 6.0, 1.1, 0.2])
+    one, other = judge(right.limits, Individuals(new), None), judge(left.limits, Individuals(10.0 - new), None)
+    mirrored = {"above": "below", "below": "above", None: None}
+    assert [(s.rule, s.index, mirrored[s.side]) for s in one.signals if s.panel == "value"] == [
+        (s.rule, s.index, s.side) for s in other.signals if s.panel == "value"
+    ]
+    assert one.carry.value.z == pytest.approx([-z for z in other.carry.value.z], rel=1e-5)

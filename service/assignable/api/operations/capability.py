@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -11,7 +12,7 @@ from ...spc.capability import attributes as counting
 from ...spc.capability import joint, uncertainty
 from ...spc.capability.specification import Specification
 from ...spc.capability.study import study
-from ...spc.errors import UnusableParameter
+from ...spc.errors import UnusableData, UnusableParameter
 from ...spc.explain import capability as worked
 from ...spc.explain.steps import Step
 from .. import problems
@@ -60,7 +61,17 @@ def measurements(loaded: dict[str, Any]) -> dict[str, Any]:
 def attributes(loaded: dict[str, Any]) -> dict[str, Any]:
     """Capability of counts."""
     counts, inspected = counted(loaded["data"])
-    found = counting.study(counts, inspected, loaded["kind"], confidence=loaded["confidence"])
+    try:
+        found = counting.study(counts, inspected, loaded["kind"], confidence=loaded["confidence"])
+    except UnusableData as error:
+        if len(loaded["data"]["inspected"]) > 1:
+            raise
+        # One number was given for all samples: that is where its faults are, once.
+        faults = (
+            replace(fault, where=fault.where[:2]) if "inspected" in fault.where else fault
+            for fault in error.faults
+        )
+        raise UnusableData(*dict.fromkeys(faults)) from error
     return {
         "status": found.status,
         "capability": found.capability,

@@ -60,6 +60,7 @@ class FrozenDistribution:
     theta: Annotated[tuple[float, ...], "The same as the program uses them, in units of its own."]
     shift: Annotated[float, "Origin of that unit, in the unit of the characteristic."]
     unit: Annotated[float, "Size of that unit, in the unit of the characteristic."]
+    direction: Annotated[int, "1, or -1 where the unit counts downwards, as for a tail to the left."]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -87,14 +88,14 @@ class Shaped:
 def law_of(frozen: FrozenDistribution) -> Fitted:
     """The distribution as it can be calculated with. Raises UnusableParameter for one that cannot be."""
     law = ALL_LAWS[frozen.name]
-    if len(frozen.theta) != law.parameters or not frozen.unit > 0.0:
+    if len(frozen.theta) != law.parameters or not frozen.unit > 0.0 or frozen.direction not in (1, -1):
         raise UnusableParameter.of(
             "not-this-distribution",
             f"These are no parameters of the distribution {frozen.name}.",
             "limits",
             "distribution",
         )
-    return Fitted(law, np.array(frozen.theta), frozen.shift, frozen.unit, 1, 0, 0.0, None)
+    return Fitted(law, np.array(frozen.theta), frozen.shift, frozen.unit, frozen.direction, 0, 0.0, None)
 
 
 def shaped(
@@ -135,6 +136,7 @@ def shaped(
         tuple(found.theta.tolist()),
         found.shift,
         found.unit,
+        found.direction,
     )
     reach = basis.multiple
     tail = float(scipy.special.ndtr(-reach))
