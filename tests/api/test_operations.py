@@ -259,6 +259,8 @@ def test_the_same_request_gives_the_same_bytes(operation_id: str, name: str) -> 
     [(found, name) for found, name in served.examples() if served.operations()[found].provenance],
 )
 def test_the_provenance_is_of_the_body(operation_id: str, name: str) -> None:
+    if served.operations()[operation_id].provenance is None:
+        pytest.skip("a picture says nothing of itself in JSON")
     body = json.dumps(served.example(name), indent=1).encode()
     provenance = served.answer_of(operation_id, body)["provenance"]
     assert provenance["request_digest"] == "sha-256:" + sha256(body).hexdigest()

@@ -20,6 +20,7 @@ from flask import Flask, Response, request
 from marshmallow import Schema, ValidationError
 
 from ..documents.seal import UNSEALED, Seals
+from ..spc.errors import SpcError
 from . import answers, bodies, explaining, problems, strict_json
 from .fields import AnswerShape, ObjectList, StrictInteger, StrictString, known_names
 from .problems import Entry, Problem, ProblemType
@@ -111,8 +112,15 @@ class Operation:
 
     def answer_to(self, document: Any, body: bytes) -> bytes:
         """The answer to a body that is parsed already; ``body`` is what the provenance's digest is of."""
+        return self.write(self.computed(document), body)
+
+    def computed(self, document: Any, **path: str) -> Any:
+        """What the view makes of a body that is parsed already; faults are told where the body has them."""
         assert self.request is not None
-        return self.write(self.view(self.request.load(document)), body)
+        try:
+            return self.view(self.request.load(document), **path)
+        except SpcError as error:
+            raise problems.placed(error, document) from error
 
     def write(self, result: Any, body: bytes = b"") -> bytes:
         """A view's result as the bytes of the answer."""
@@ -267,8 +275,7 @@ class Contract:
 
     def _taking_body(self, operation: Operation) -> Callable[..., Response]:
         content_type = operation.media_type
-        operation_id, shape, view = operation.operation_id, operation.request, operation.view
-        assert shape is not None
+        operation_id = operation.operation_id
 
         def answer(**path: str) -> Response:
             environ = request.environ
@@ -281,7 +288,7 @@ class Contract:
             with self._slots:
                 if packed:
                     body = bodies.inflate(body, self._settings.max_inflated_bytes)
-                written = operation.write(view(shape.load(strict_json.loads(body)), **path), body)
+                written = operation.write(operation.computed(strict_json.loads(body), **path), body)
             return _response(written, content_type, (("Cache-Control", "no-store"),))
 
         return answer

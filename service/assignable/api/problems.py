@@ -16,7 +16,7 @@ from marshmallow import ValidationError
 from werkzeug.exceptions import HTTPException
 
 from ..documents.canonical import NotFinite
-from ..spc.errors import DocumentMismatch, SpcError, UnusableData, UnusableParameter
+from ..spc.errors import DocumentMismatch, Fault, SpcError, UnusableData, UnusableParameter, Where
 from .strict_json import BadJson
 
 MEDIA_TYPE = "application/problem+json"
@@ -322,6 +322,31 @@ def _kind_of(entries: tuple[Entry | int, ...]) -> ProblemType:
     """A body with no other fault than what a schema cannot state has the shape that the contract states."""
     codes = {entry.code for entry in entries if isinstance(entry, Entry)}
     return NOT_COMPUTABLE if codes and codes <= BEYOND_SCHEMAS else CONTRACT_VIOLATION
+
+
+def placed(error: SpcError, document: object) -> SpcError:
+    """The error with each fault at a place that the body has, or that it lacks.
+
+    One number may stand for all points of a list, and a fault of one point is then a fault of that number.
+    """
+    faults = {(fault.code, fault.detail, _within(document, fault.where)): None for fault in error.faults}
+    return type(error)(*(Fault(*found) for found in faults))
+
+
+def _within(document: object, where: Where) -> Where:
+    here = document
+    for at, step in enumerate(where):
+        if isinstance(here, dict):
+            if step not in here:
+                lacking = where[at:]
+                names = next((i for i, name in enumerate(lacking) if isinstance(name, int)), len(lacking))
+                return where[: at + names]
+            here = here[step]
+        elif isinstance(here, list) and isinstance(step, int) and -len(here) <= step < len(here):
+            here = here[step]
+        else:
+            return where[:at]
+    return where
 
 
 def pointer(path: Iterable[str | int]) -> str:

@@ -714,7 +714,12 @@ def fit_law(law: Law, sample: Sample) -> Fitted:
             "below",
         )
     if name == "exponential" and not limits.size:
-        theta = np.array([math.log(float(u.mean()))])
+        average = float(u.mean())
+        if not average > 0.0:
+            raise UnusableData.of(
+                "no-variation", "The values differ by less than a number can express.", "data", "values"
+            )
+        theta = np.array([math.log(average)])
     else:
         # A value on the bound itself has no logarithm, and any likelihood with the exponential alone.
         theta = law.fit(u) if not limits.size else _start(law, u, limits)

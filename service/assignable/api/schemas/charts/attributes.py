@@ -68,10 +68,6 @@ def counts(loaded: dict[str, Any]) -> Counts:
     inspected = loaded.get("inspected")
     if inspected is not None:
         if len(inspected) == 1:
-            if np.isnan(inspected[0]):
-                faults.append(
-                    Fault("null", "One number for all samples must not be null.", ("data", "inspected"))
-                )
             inspected = np.broadcast_to(inspected, found.shape)
         elif len(inspected) != len(found):
             faults.append(
