@@ -115,7 +115,7 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: A
     for operation in operations:
         described = _operation(operation, access)
         spec.path(path=operation.path, operations={operation.method.lower(): described})
-    return orjson.dumps(spec.to_dict(), option=orjson.OPT_INDENT_2 | orjson.OPT_NON_STR_KEYS)
+    return orjson.dumps(spec.to_dict(), option=orjson.OPT_NON_STR_KEYS)
 
 
 def _name_of(shape: Any) -> str:

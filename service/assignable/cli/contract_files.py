@@ -130,7 +130,8 @@ def _contract() -> Contract:
 
 
 def _document(contract: Contract) -> bytes:
-    return contract.document() + b"\n"
+    """The document as it is committed: indented, so that its changes can be reviewed."""
+    return orjson.dumps(orjson.loads(contract.document()), option=orjson.OPT_INDENT_2) + b"\n"
 
 
 def _same_but_for_last_digits(committed: bytes, now: bytes) -> bool:

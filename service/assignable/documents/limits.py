@@ -75,7 +75,7 @@ def carry_document(chart: str, limits_digest: str, carry: object) -> dict[str, A
     return document
 
 
-def check_carry(chart: str, limits_digest: str, document: Mapping[str, Any]) -> None:
+def check_carry(chart: str | None, limits_digest: str | None, document: Mapping[str, Any]) -> None:
     """Refuse a carry of other limits, or one that was edited.
 
     Raises DocumentMismatch with ``carry-of-other-limits`` or ``carry-edited``.

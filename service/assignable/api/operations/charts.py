@@ -163,7 +163,7 @@ class CarryField(f.Object):
                     return value, self._quick(value)
             return value, super()._deserialize(value, attr, data, **kwargs)
         except SpcError:
-            check_carry(value["chart"], value["limits"], value)
+            check_carry(value.get("chart"), value.get("limits"), value)
             raise
 
 
