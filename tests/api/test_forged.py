@@ -5,6 +5,7 @@ import json
 import random
 
 import pytest
+
 from assignable.api.app import create_app
 from assignable.api.contract import examples_directory
 from assignable.api.settings import Settings

@@ -275,7 +275,7 @@ def memory() -> None:
     """Peak memory of that request over what the process held before, against the body."""
     code = """
 import sys, resource
-sys.path.insert(0, %r)
+sys.path.insert(0, sys.argv[1])
 import run
 import numpy as np, orjson
 run.post("/v1/charts/xbar-r/limits", run.fit_body())
@@ -287,12 +287,12 @@ for at in range(0, len(rows), 1000):
 parts[-1] = b']},"rules":{"published":"western-electric-1956"}}'
 body = b"".join(parts)
 del rows, parts
-before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
 held = int(open("/proc/self/statm").read().split()[1]) * 4
 run.post("/v1/charts/xbar-r/limits", body)
 print(len(body), (resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - held) * 1024)
-""" % str(HERE)
-    out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout
+"""
+    command = [sys.executable, "-c", code, str(HERE)]
+    out = subprocess.run(command, capture_output=True, text=True, check=True).stdout
     size, peak = map(int, out.split())
     row(
         "memory: peak of that request over the body",

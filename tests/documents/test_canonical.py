@@ -4,9 +4,10 @@ import json
 
 import pytest
 import rfc8785
-from assignable.documents.canonical import NotFinite, canonical, digest, plain
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
+
+from assignable.documents.canonical import NotFinite, canonical, digest, plain
 
 NUMBERS = st.one_of(
     st.integers(-(2**53) + 1, 2**53 - 1),

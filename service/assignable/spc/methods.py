@@ -358,8 +358,8 @@ METHODS = (
     Method(
         "release-check",
         "Results of a batch against specification, guard band and own limits",
-        "value = result, or exact mean of replicates; rounded once to the decimals stated, halves up in magnitude or to "
-        "even; out of specification if value < L or value > U; in the guard band if the unrounded value < L + w or "
+        "value = result, or exact mean of replicates; rounded once to the decimals stated, halves up in magnitude or "
+        "to even; out of specification if value < L or value > U; in the guard band if the unrounded value < L + w or "
         "> U - w, with w stated, r u, or from Phi(w/u) + Phi((U-L-w)/u) - 1 = 1 - risk.",
         ("checkRelease",),
         ("astm-e29", "iso-80000-1", "jcgm-106", "iso-14253-1"),

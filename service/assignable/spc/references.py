@@ -755,7 +755,8 @@ _LISTED = (
         "iso-14253-1",
         "ISO",
         2017,
-        "Geometrical product specifications - Inspection by measurement - Part 1: Decision rules for verifying conformity",
+        "Geometrical product specifications - Inspection by measurement - Part 1: Decision rules for verifying "
+        "conformity",
         "ISO 14253-1:2017",
     ),
     Reference(
@@ -909,8 +910,8 @@ _LISTED = (
         "iso-22514-6",
         "ISO",
         2013,
-        "Capability and performance - Part 6: Process capability statistics for characteristics following a multivariate "
-        "normal distribution",
+        "Capability and performance - Part 6: Process capability statistics for characteristics following a "
+        "multivariate normal distribution",
         "ISO 22514-6:2013",
     ),
     Reference(

@@ -27,9 +27,7 @@ POLICY = (
     "connect-src 'self'; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
 )
 # The pages to read hold no script at all.
-QUIET_POLICY = (
-    "default-src 'none'; style-src 'self'; img-src data:; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
-)
+QUIET_POLICY = "default-src 'none'; style-src 'self'; img-src data:; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
 
 _SCRIPTS = (
     "reference.js",

@@ -59,10 +59,12 @@ class BaselineStep:
 class ChangePoint:
     """A step of the level and of the spread, each looked for by itself in normal points of one process."""
 
-    mean: Annotated[BaselineStep | None, "BaselineStep of the level of the plotted points; null where there are too few."]
+    mean: Annotated[
+        BaselineStep | None, "Step of the level of the plotted points; null where there are too few."
+    ]
     variance: Annotated[
         BaselineStep | None,
-        "BaselineStep of the standard deviation: within subgroups, or of single values (a step of their mean that is "
+        "Step of the standard deviation: within subgroups, or of single values (a step of their mean that is "
         "significant at 0.01 taken out first); null where there are too few points, or none that vary.",
     ]
 
@@ -153,7 +155,7 @@ def _counts(m: int) -> tuple[Floats, Floats]:
 
 
 def _step_of_mean(z: Floats, weights: Floats | None) -> tuple[BaselineStep | None, int]:
-    """BaselineStep of the mean of centred values (m,) of one variance over their weights."""
+    """Step of the mean of centred values (m,) of one variance over their weights."""
     m = len(z)
     mean = 0.0
     inside = slice(SHORTEST_LEVEL - 1, m - SHORTEST_LEVEL)
@@ -184,7 +186,7 @@ def _step_of_mean(z: Floats, weights: Floats | None) -> tuple[BaselineStep | Non
 
 
 def _step_of_spread_of_values(z: Floats) -> BaselineStep | None:
-    """BaselineStep of the standard deviation of centred values (m,), each side about its own mean."""
+    """Step of the standard deviation of centred values (m,), each side about its own mean."""
     m = len(z)
     edge = int(LEAST_FREEDOM) + 1
     if m < 2 * edge:
@@ -199,7 +201,7 @@ def _step_of_spread_of_values(z: Floats) -> BaselineStep | None:
 
 
 def _step_within(statistics: SubgroupStatistics, smallest: int, largest: int) -> BaselineStep | None:
-    """BaselineStep of the standard deviation within subgroups."""
+    """Step of the standard deviation within subgroups."""
     if largest < 2:
         return None
     size, at = statistics.size, None

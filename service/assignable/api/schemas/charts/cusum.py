@@ -7,7 +7,7 @@ from typing import Any
 from ....spc.charts.cusum import CusumOptions
 from ....spc.runlength.memory import LARGEST_DECISION, LARGEST_REFERENCE
 from ... import fields as f
-from ._memory import ShiftToDetect, MemoryFit, PointData, detect_of, points, source_of
+from ._memory import MemoryFit, PointData, ShiftToDetect, detect_of, points, source_of
 from .common import ChartRequest
 
 

@@ -7,7 +7,7 @@ from typing import Any
 from ....spc.charts.ewma import EwmaOptions
 from ....spc.runlength.memory import LARGEST_LIMIT, SMALLEST_SMOOTHING
 from ... import fields as f
-from ._memory import ShiftToDetect, MemoryFit, PointData, detect_of, points, source_of
+from ._memory import MemoryFit, PointData, ShiftToDetect, detect_of, points, source_of
 from .common import ChartRequest
 
 
