@@ -205,6 +205,18 @@ def test_the_curl_request_is_the_same(page: Page, host: str) -> None:
     assert json.loads(request)["characteristic"]["name"] == "baker's glaze"
 
 
+def drop(page: Page, name: str, content: str) -> None:
+    """Drops a file; ``content`` is a JavaScript expression of its text or bytes."""
+    page.value(
+        f"""(() => {{
+          const carried = new DataTransfer();
+          carried.items.add(new File([{content}], {json.dumps(name)}));
+          const dropped = new DragEvent("drop", {{dataTransfer: carried, bubbles: true, cancelable: true}});
+          document.getElementById("drop").dispatchEvent(dropped);
+        }})()"""
+    )
+
+
 def test_a_file_is_dropped(page: Page, host: str, keep: Keep) -> None:
     page.open(f"http://{host}/try")
     body = served.example("p-limits")["data"]
@@ -212,12 +224,7 @@ def test_a_file_is_dropped(page: Page, host: str, keep: Keep) -> None:
         f"K-{at};{count};{of}"
         for at, (count, of) in enumerate(zip(body["counts"], body["inspected"], strict=True))
     )
-    page.value(
-        "(() => { const carried = new DataTransfer(); "
-        f"carried.items.add(new File([{json.dumps(text)}], 'cracked.csv', {{type: 'text/csv'}})); "
-        "document.getElementById('drop').dispatchEvent(new DragEvent('drop', "
-        "{dataTransfer: carried, bubbles: true, cancelable: true})); })()"
-    )
+    drop(page, "cracked.csv", json.dumps(text))
     page.wait("document.querySelector('#advice .advice')")
     assert "semicolons" in page.text("#read")
     assert page.value("document.querySelector('[name=form]:checked').value") == "counts"
@@ -231,11 +238,7 @@ def test_a_file_is_dropped(page: Page, host: str, keep: Keep) -> None:
 
 def test_a_spreadsheets_own_file_is_refused_in_words(page: Page, host: str) -> None:
     page.open(f"http://{host}/try")
-    page.value(
-        "(() => { const carried = new DataTransfer(); "
-        "carried.items.add(new File([new Uint8Array([0x50, 0x4b, 3, 4])], 'cars.xlsx')); "
-        "document.getElementById('drop').dispatchEvent(new DragEvent('drop', {dataTransfer: carried, bubbles: true, cancelable: true})); })()"
-    )
+    drop(page, "cars.xlsx", "new Uint8Array([0x50, 0x4b, 3, 4])")
     page.wait("document.querySelector('#read .fault')")
     assert "Save it as CSV" in page.text("#read")
 

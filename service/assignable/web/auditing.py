@@ -56,6 +56,16 @@ def with_sources(operation_id: str) -> tuple[tuple[Method, tuple[Reference, ...]
     )
 
 
+def sources_of_chart(operation_id: str) -> tuple[Reference, ...]:
+    """What a chart's own listing cites, for its two operations; none for others."""
+    return tuple(
+        REFERENCES[key]
+        for name, chart in CHARTS.items()
+        if operation_id in _operations_of(name)
+        for key in chart.references
+    )
+
+
 def _operations_of(user: str) -> tuple[str, ...]:
     """A chart stands for its two operations."""
     if user not in CHARTS:

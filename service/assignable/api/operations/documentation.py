@@ -27,7 +27,10 @@ POLICY = (
     "connect-src 'self'; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
 )
 # The pages to read hold no script at all.
-QUIET_POLICY = "default-src 'none'; style-src 'self'; img-src data:; frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
+QUIET_POLICY = (
+    "default-src 'none'; style-src 'self'; img-src data:; "
+    "frame-ancestors 'none'; base-uri 'none'; form-action 'none'"
+)
 
 _SCRIPTS = (
     "reference.js",
@@ -80,14 +83,13 @@ def register(contract: Contract) -> None:
             raise Problem(
                 NOT_FOUND, "There is no operation of this name; /docs/reading lists those there are."
             )
-        methods = auditing.with_sources(found.draws or operation_id)
-        return _page(
-            "operation.html",
-            found.title,
-            {"of": found, "methods": methods},
-            here="reading",
-            policy=QUIET_POLICY,
-        )
+        computed = found.draws or operation_id
+        values = {
+            "of": found,
+            "methods": auditing.with_sources(computed),
+            "sources": auditing.sources_of_chart(computed),
+        }
+        return _page("operation.html", found.title, values, here="reading", policy=QUIET_POLICY)
 
     def methods() -> Response:
         from ...verification.runner import cases
