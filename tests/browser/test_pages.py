@@ -78,6 +78,8 @@ def test_the_reference_tries_a_call(page: Page, host: str, keep: Keep) -> None:
     page.wait("document.querySelector('.responses-table.live-responses-table .response-col_status')")
     assert page.text(".live-responses-table tbody .response-col_status").startswith("200")
     assert '"chart"' in page.text(".live-responses-table .highlight-code")
+    page.size(390)
+    assert page.value("document.documentElement.scrollWidth <= innerWidth")
     keep("docs-call")
 
 

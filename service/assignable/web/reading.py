@@ -112,18 +112,11 @@ class Document:
 
     def groups(self) -> tuple[Group, ...]:
         """Every operation, in the document's order."""
-        return tuple(
-            Group(
-                tag["name"],
-                tag["description"],
-                tuple(
-                    (name, method, path, entry["summary"])
-                    for name, (method, path, entry) in self._found.items()
-                    if entry["tags"] == [tag["name"]]
-                ),
-            )
-            for tag in self._tags
-        )
+        purposes = {tag["name"]: tag["description"] for tag in self._tags}
+        found: dict[str, list[tuple[str, str, str, str]]] = {}
+        for name, (method, path, entry) in self._found.items():
+            found.setdefault(entry["tags"][0], []).append((name, method, path, entry["summary"]))
+        return tuple(Group(name, purposes.get(name, ""), tuple(of)) for name, of in found.items())
 
     def reading(self, operation_id: str) -> Reading | None:
         """One operation; None where there is no such."""
