@@ -28,6 +28,7 @@ class Page:
 
     socket: ClientConnection
     session: str
+    hosts: set[str] = field(default_factory=set)
     requests: list[str] = field(default_factory=list)
     complaints: list[str] = field(default_factory=list)
     _calls: int = 0
@@ -141,12 +142,12 @@ class Page:
         """Ends the tab."""
         self.call("Page.close")
 
-    def strangers(self, host: str) -> list[str]:
-        """Requests to anywhere but the host."""
+    def strangers(self) -> list[str]:
+        """Requests to anywhere but the page's own hosts."""
         return [
             url
             for url in self.requests
-            if urlsplit(url).scheme not in ("data", "blob") and urlsplit(url).netloc != host
+            if urlsplit(url).scheme not in ("data", "blob") and urlsplit(url).netloc not in self.hosts
         ]
 
 

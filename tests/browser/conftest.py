@@ -2,16 +2,22 @@
 
 from __future__ import annotations
 
+import json
 import os
 import shutil
 import subprocess
 import threading
 from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from hashlib import sha256
 from pathlib import Path
 
 import pytest
+from flask import Flask
 from werkzeug.serving import make_server
 
+from assignable.api.app import create_app
+from assignable.api.settings import Settings
 from browser import chromium
 from contract import served
 
@@ -19,16 +25,32 @@ SCREENSHOTS = "SCREENSHOTS"
 AXE = "AXE_CORE"
 
 
-@pytest.fixture(scope="session")
-def host() -> Iterator[str]:
-    """The service, where a browser reaches it."""
-    server = make_server("127.0.0.1", 0, served.app(), threaded=True)
+@contextmanager
+def serving(app: Flask) -> Iterator[str]:
+    """An application where a browser reaches it."""
+    server = make_server("127.0.0.1", 0, app, threaded=True)
     thread = threading.Thread(target=server.serve_forever, daemon=True)
     thread.start()
     yield f"127.0.0.1:{server.server_port}"
     server.shutdown()
     thread.join(timeout=5)
     server.server_close()
+
+
+@pytest.fixture(scope="session")
+def host() -> Iterator[str]:
+    """The service that asks nobody who they are."""
+    with serving(served.app()) as found:
+        yield found
+
+
+@pytest.fixture
+def guarded(tmp_path: Path) -> Iterator[str]:
+    """The service that admits callers with the key ``open-sesame`` only."""
+    keys = tmp_path / "keys.json"
+    keys.write_text(json.dumps({"bench": sha256(b"open-sesame").hexdigest()}))
+    with serving(create_app(Settings(log="off", api_keys=str(keys)))) as found:
+        yield found
 
 
 @pytest.fixture(scope="session")
@@ -43,9 +65,10 @@ def socket(tmp_path_factory: pytest.TempPathFactory) -> Iterator[chromium.Client
 def page(socket: chromium.ClientConnection, host: str) -> Iterator[chromium.Page]:
     """A tab; a test fails that leaves a complaint, or asks any other host for anything."""
     found = chromium.tab(socket)
+    found.hosts.add(host)
     yield found
     assert found.complaints == []
-    assert found.strangers(host) == []
+    assert found.strangers() == []
     assert found.requests
     found.close()
 

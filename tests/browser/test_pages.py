@@ -72,9 +72,15 @@ def test_no_serious_fault_of_accessibility_is_ours(page: Page, host: str, axe: s
 # The reference -----------------------------------------------------------------------------------------
 
 
+def execute(page: Page) -> None:
+    """Sends the example of the operation that is open, once the page has put it in."""
+    page.wait("document.querySelector('.opblock.is-open textarea.body-param__text')?.value")
+    page.click(".opblock.is-open .execute")
+
+
 def test_the_reference_tries_a_call(page: Page, host: str, keep: Keep) -> None:
     page.open(f"http://{host}/docs#/Choosing%20a%20chart/recommendChart")
-    page.click(".opblock.is-open .execute")
+    execute(page)
     page.wait("document.querySelector('.responses-table.live-responses-table .response-col_status')")
     assert page.text(".live-responses-table tbody .response-col_status").startswith("200")
     assert '"chart"' in page.text(".live-responses-table .highlight-code")
@@ -85,7 +91,7 @@ def test_the_reference_tries_a_call(page: Page, host: str, keep: Keep) -> None:
 
 def test_the_reference_shows_a_picture_as_one(page: Page, host: str, keep: Keep) -> None:
     page.open(f"http://{host}/docs#/Pictures/drawXbarRLimits")
-    page.click(".opblock.is-open .execute")
+    execute(page)
     picture = "document.querySelector('.live-responses-table img')"
     page.wait(f"{picture}?.complete && {picture}.naturalWidth > 300")
     assert page.value(f"{picture}.src.startsWith('data:image/svg+xml')")
@@ -320,3 +326,31 @@ def test_the_page_works_without_a_mouse(page: Page, host: str) -> None:
     page.press("Enter")
     page.wait("!document.getElementById('outcome').hidden")
     assert "control" in page.text("#verdict")
+
+
+def test_a_service_that_asks_for_a_key_is_given_one(page: Page, guarded: str) -> None:
+    page.hosts.add(guarded)
+    page.open(f"http://{guarded}/try")
+    page.click("[data-example=singles]")
+    page.wait("document.getElementById('admission').checkVisibility()")
+    page.value("document.getElementById('key').focus()")
+    page.type("open-sesame")
+    page.click("#trial [type=submit]")
+    page.wait("!document.getElementById('outcome').hidden")
+    assert "control" in page.text("#verdict")
+    taken = page.value("document.getElementById('outcome').textContent")
+    assert "open-sesame" not in taken
+    assert "$API_KEY" in taken
+
+
+def test_a_request_to_elsewhere_and_a_script_in_the_page_would_be_noticed(page: Page, host: str) -> None:
+    page.open(f"http://{host}/")
+    page.value("fetch('http://elsewhere.example/').catch(() => {})")
+    page.value("document.body.append(Object.assign(document.createElement('script'), {textContent: '1'}))")
+    page.wait("true")
+    assert any("connect-src" in one for one in page.complaints)
+    assert any("script-src" in one for one in page.complaints)
+    page.complaints.clear()
+    page.requests.append("http://elsewhere.example/")
+    assert page.strangers() == ["http://elsewhere.example/"]
+    page.requests.remove("http://elsewhere.example/")

@@ -44,6 +44,8 @@ const name = () => {
   for (const [selector, text] of Object.entries(NAMES)) {
     for (const one of document.querySelectorAll(`${selector}:not([aria-label])`)) one.setAttribute("aria-label", text);
   }
+  // What scrolls must be reached by keyboard.
+  for (const one of document.querySelectorAll("pre.microlight:not([tabindex])")) one.setAttribute("tabindex", "0");
 };
 
 window.addEventListener("load", () => {
