@@ -274,7 +274,7 @@ def large() -> None:
 def memory() -> None:
     """Peak memory of that request over what the process held before, against the body."""
     code = """
-import sys, resource
+import sys
 sys.path.insert(0, sys.argv[1])
 import run
 import numpy as np, orjson
@@ -287,9 +287,13 @@ for at in range(0, len(rows), 1000):
 parts[-1] = b']},"rules":{"published":"western-electric-1956"}}'
 body = b"".join(parts)
 del rows, parts
-held = int(open("/proc/self/statm").read().split()[1]) * 4
+
+def kilobytes(name):
+    return next(int(line.split()[1]) for line in open("/proc/self/status") if line.startswith(name))
+
+held = kilobytes("VmRSS")
 run.post("/v1/charts/xbar-r/limits", body)
-print(len(body), (resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - held) * 1024)
+print(len(body), (kilobytes("VmHWM") - held) * 1024)
 """
     command = [sys.executable, "-c", code, str(HERE)]
     out = subprocess.run(command, capture_output=True, text=True, check=True).stdout

@@ -88,7 +88,7 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: A
     """The document of these operations; equal calls give equal bytes."""
     plugin = _Plugin(schema_name_resolver=lambda shape: _name_of(shape))
     operations = tuple(operations)
-    used = {operation.tag for operation in operations}
+    used = dict.fromkeys(operation.tag for operation in operations)
     spec = APISpec(
         title="Assignable",
         version=answers.CONTRACT_VERSION,
@@ -99,7 +99,7 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: A
             "license": {"name": "Apache-2.0", "identifier": "Apache-2.0"},
         },
         servers=[{"url": "/"}],
-        tags=[{"name": name, "description": text} for name, text in tags.items() if name in used],
+        tags=[{"name": name, "description": tags[name]} for name in used],
     )
     assert plugin.converter is not None
     add = plugin.converter.add_attribute_function

@@ -109,6 +109,39 @@ METHODS = (
         ("xie-goh-ranjan-2002", "nelson-1994", "cohen-1965"),
     ),
     Method(
+        "averages-with-memory",
+        "EWMA and moving averages",
+        "z_i = lambda x_i + (1 - lambda) z_{i-1}, limits +- L sqrt(v_i) sigma with v_i = (1 - lambda)^2 v_{i-1} + "
+        "lambda^2/n_i; moving average of w points weighted by size, +- k sigma/sqrt(sum of sizes).",
+        ("ewma", "moving-average"),
+        ("roberts-1959", "iso-7870-5", "iso-7870-6"),
+    ),
+    Method(
+        "cumulative-sums",
+        "CUSUM of level and of spread",
+        "C+ = max(0, C+ + z - k), C- = max(0, C- - z - k), a signal above h; the shift began after the sum was last 0, "
+        "and its mean is target +- (k + C/N) sigma. Spread: the same sums of the standardised fourth root of the "
+        "variance.",
+        ("cusum",),
+        ("page-1954", "lucas-crosier-1982", "hawkins-1981", "hawkins-wixley-1986", "iso-7870-4"),
+    ),
+    Method(
+        "one-distance-of-several-variables",
+        "Hotelling's T-squared and the multivariate EWMA",
+        "T2 = (x - mean)' S^-1 (x - mean); phase one by the beta law, phase two by F; MEWMA: T2 of the smoothed vector "
+        "by its own covariance, its limit from its run length; a signal is decomposed by variable.",
+        ("t-squared", "mewma"),
+        (
+            "hotelling-1947",
+            "tracy-young-mason-1992",
+            "mason-tracy-young-1995",
+            "holmes-mergen-1993",
+            "lowry-woodall-champ-rigdon-1992",
+            "rigdon-1995",
+            "runger-prabhu-1996",
+        ),
+    ),
+    Method(
         "between-and-within",
         "Means as single values, components between and within",
         "mean of means +- k sigma_m, sigma_m = mean moving range of the means over d2(w); between = sigma_m^2 - "
