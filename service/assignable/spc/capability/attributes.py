@@ -166,7 +166,7 @@ def _check(counts: Floats, inspected: Floats, present: Booleans, binomial: bool)
         faults += [
             Fault(
                 "count-too-large",
-                f"{counts[i]:g} of {inspected[i]:g} units cannot be nonconforming.",
+                f"{counts[i]:.15g} of {inspected[i]:.15g} units cannot be nonconforming.",
                 ("data", "counts", int(i)),
             )
             for i in over[:20]

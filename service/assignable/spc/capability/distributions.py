@@ -668,7 +668,7 @@ def _frame(law: Law, sample: Sample) -> tuple[float, float, int]:
             side = "above" if direction > 0 else "below"
             raise UnusableData.of(
                 "outside-support",
-                f"The distribution {law.name} has values {side} {origin:g} only, and the data hold others; give the "
+                f"The distribution {law.name} has values {side} {origin:.15g} only, and the data hold others; give the "
                 "natural bound of the characteristic, or choose another distribution.",
                 "data",
                 "values",

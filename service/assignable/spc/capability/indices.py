@@ -309,7 +309,7 @@ def _check_distances(summary: NormalSummary, specification: Specification) -> No
         if value is not None and abs(0.5 * value - 0.5 * summary.mean) > LARGEST_INDEX * least:
             raise UnusableParameter.of(
                 "limits-too-far",
-                f"The {'target' if name == 'target' else name + ' limit'}, {value:g}, is more than "
+                f"The {'target' if name == 'target' else name + ' limit'}, {value:.15g}, is more than "
                 f"{LARGEST_INDEX:g} standard deviations from the mean, {summary.mean:g}; "
                 "check that limits and values have the same unit.",
                 "specification",

@@ -353,7 +353,7 @@ def _check_limits(sample: Sample, specification: Specification) -> None:
         if limit is not None and abs(0.5 * limit - middle) > LARGEST_INDEX * spread:
             raise UnusableParameter.of(
                 "limits-too-far",
-                f"The {name} limit, {limit:g}, is out of all proportion to the values, which spread over "
+                f"The {name} limit, {limit:.15g}, is out of all proportion to the values, which spread over "
                 f"{2.0 * spread:g}; check that limits and values have the same unit, and that the values vary.",
                 "specification",
                 name,

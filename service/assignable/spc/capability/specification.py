@@ -48,17 +48,17 @@ class Specification:
             detail = "The specification needs a lower limit, an upper limit, or both."
             return [Fault("no-limit", detail, ("specification",))]
         if lower is not None and upper is not None and not lower < upper:
-            detail = f"The lower limit, {lower:g}, must be below the upper limit, {upper:g}."
+            detail = f"The lower limit, {lower:.15g}, must be below the upper limit, {upper:.15g}."
             return [Fault("limits-crossed", detail, ("specification", "lower"))]
         if faults := self._bound_faults():
             return faults
         if target is None:
             return []
         if lower is not None and target <= lower:
-            detail = f"The target, {target:g}, must be above the lower limit, {lower:g}."
+            detail = f"The target, {target:.15g}, must be above the lower limit, {lower:.15g}."
             return [Fault("target-outside", detail, ("specification", "target"))]
         if upper is not None and target >= upper:
-            detail = f"The target, {target:g}, must be below the upper limit, {upper:g}."
+            detail = f"The target, {target:.15g}, must be below the upper limit, {upper:.15g}."
             return [Fault("target-outside", detail, ("specification", "target"))]
         return []
 
@@ -67,17 +67,19 @@ class Specification:
         if least is None and most is None:
             return []
         if least is not None and most is not None and not least < most:
-            detail = f"The natural lower bound, {least:g}, must be below the natural upper bound, {most:g}."
+            detail = (
+                f"The natural lower bound, {least:.15g}, must be below the natural upper bound, {most:.15g}."
+            )
             return [Fault("bounds-crossed", detail, ("specification", "natural_lower"))]
         faults = []
         for name, limit in (("lower", self.lower), ("upper", self.upper)):
             if limit is None:
                 continue
             if least is not None and (limit < least or (name == "upper" and limit == least)):
-                detail = f"The {name} limit, {limit:g}, is beyond the natural lower bound, {least:g}."
+                detail = f"The {name} limit, {limit:.15g}, is beyond the natural lower bound, {least:.15g}."
                 faults.append(Fault("limit-beyond-bound", detail, ("specification", name)))
             elif most is not None and (limit > most or (name == "lower" and limit == most)):
-                detail = f"The {name} limit, {limit:g}, is beyond the natural upper bound, {most:g}."
+                detail = f"The {name} limit, {limit:.15g}, is beyond the natural upper bound, {most:.15g}."
                 faults.append(Fault("limit-beyond-bound", detail, ("specification", name)))
         if not faults and self.effective_limits == (None, None):
             detail = (

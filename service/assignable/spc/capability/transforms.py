@@ -100,7 +100,6 @@ class _BoxCox(_ToNormal):
             -0.5 * z * z - _LOG_ROOT_2PI - theta[2] + (theta[0] - 1.0) * np.log(np.maximum(u, _TINY))
         )
         return found
-        return found
 
     def fit(self, u: Floats) -> Floats:
         log_u = np.log(u)

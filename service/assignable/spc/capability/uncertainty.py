@@ -145,7 +145,7 @@ def product_capability(
         if limit is not None and abs(0.5 * limit - 0.5 * mean) > LARGEST_INDEX * own:
             raise UnusableParameter.of(
                 "limits-too-far",
-                f"The {name} limit, {limit:g}, is out of all proportion to the mean, {mean:g}, and the spread; "
+                f"The {name} limit, {limit:.15g}, is out of all proportion to the mean, {mean:g}, and the spread; "
                 "check that they have the same unit.",
                 "specification",
                 name,

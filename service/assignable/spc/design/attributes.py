@@ -495,7 +495,7 @@ def _too_large(by_formula: int, cap: int, binomial: bool) -> str:
 def _check_range(value: float, low: float, high: float, *where: str | int) -> None:
     if not low <= value <= high:
         raise UnusableParameter.of(
-            "out-of-range", f"{where[0]} must be from {low:g} to {high:g}; it is {value:g}.", *where
+            "out-of-range", f"{where[0]} must be from {low:g} to {high:g}; it is {value:.15g}.", *where
         )
 
 

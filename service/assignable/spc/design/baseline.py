@@ -212,7 +212,7 @@ def enough(
     ):
         if not low <= value <= high:
             raise UnusableParameter.of(
-                "out-of-range", f"{name} must be from {low:g} to {high:g}; it is {value:g}.", name
+                "out-of-range", f"{name} must be from {low:g} to {high:g}; it is {value:.15g}.", name
             )
     nominal = _arl(0.0, multiple)
     goal = share_of_nominal * nominal

@@ -820,7 +820,9 @@ def _check_economics(e: ProcessEconomics) -> None:
     def check(name: str, value: float, low: float, high: float) -> None:
         if not low <= value <= high:
             faults.append(
-                Fault("out-of-range", f"{name} must be from {low:g} to {high:g}; it is {value:g}.", (name,))
+                Fault(
+                    "out-of-range", f"{name} must be from {low:g} to {high:g}; it is {value:.15g}.", (name,)
+                )
             )
 
     check("mean_hours_to_shift", e.mean_hours_to_shift, SHORTEST_MEAN, LONGEST_MEAN)
@@ -864,7 +866,7 @@ def _check_requirements(r: Requirements) -> None:
             faults.append(
                 Fault(
                     "out-of-range",
-                    f"{name} must be from {low:g} to {high:g}; it is {value:g}.",
+                    f"{name} must be from {low:g} to {high:g}; it is {value:.15g}.",
                     ("requirements", name),
                 )
             )
@@ -939,7 +941,10 @@ def _check_present(present: SamplingPlan, laws: _Laws) -> None:
     ):
         if not low <= value <= high:
             raise UnusableParameter.of(
-                "out-of-range", f"{name} must be from {low:g} to {high:g}; it is {value:g}.", "present", name
+                "out-of-range",
+                f"{name} must be from {low:g} to {high:g}; it is {value:.15g}.",
+                "present",
+                name,
             )
 
 

@@ -260,7 +260,7 @@ def _within(value: float, name: str, low: float, high: float) -> float:
     number = float(value)
     if not low <= number <= high:
         raise UnusableParameter.of(
-            "out-of-range", f"{name} must be from {low:g} to {high:g}; it is {number:g}.", name
+            "out-of-range", f"{name} must be from {low:g} to {high:g}; it is {number:.15g}.", name
         )
     return number
 

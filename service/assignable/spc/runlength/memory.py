@@ -82,7 +82,7 @@ def _number(value: float, name: str, low: float, high: float, *, open_low: bool 
     number = float(value)
     if not (low <= number <= high) or (open_low and number == low):
         bounds = f"greater than {low:g} and at most {high:g}" if open_low else f"from {low:g} to {high:g}"
-        raise UnusableParameter.of("out-of-range", f"{name} must be {bounds}; it is {number:g}.", name)
+        raise UnusableParameter.of("out-of-range", f"{name} must be {bounds}; it is {number:.15g}.", name)
     return number
 
 

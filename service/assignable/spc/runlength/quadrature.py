@@ -122,12 +122,6 @@ class StoppedChain:
         lag = self._solve(self.short[1:] + (excess + self.rate))
         return np.concatenate(([0.0], lag)), excess
 
-    def occupation(self, row: Array) -> Array:
-        """Expected number of visits to each state by a path that enters by ``row``: ``row (I − Q)⁻¹``."""
-        home = float(row[0] + row[1:] @ self._to_home) / self.toll
-        rest = self._solve(row[1:] + home * self.steps[0, 1:], transposed=True)
-        return np.concatenate(([home], rest))
-
     def conditional_law(self, opposed: bool = False) -> Array:
         """Limiting law of the state, given that no signal has come (quasi-stationary distribution).
 
