@@ -24,6 +24,9 @@ from assignable.spc.charts import CHARTS
 from contract import served
 
 SEMANTIC = (problems.NOT_COMPUTABLE, problems.DOCUMENT_MISMATCH)
+# What the generator itself does with the random module in its strategies is no fault of the service.
+pytestmark = pytest.mark.filterwarnings("ignore::hypothesis.errors.HypothesisDeprecationWarning")
+
 QUIET = settings(derandomize=True, deadline=None, database=None, suppress_health_check=list(HealthCheck))
 load_all_checks()
 

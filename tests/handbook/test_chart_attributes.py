@@ -16,7 +16,7 @@ from scipy import stats
 from assignable.spc import runlength
 from assignable.spc.charts import attributes as a
 from assignable.spc.charts import lattice, price
-from assignable.spc.charts.common import Exclusion, LimitBasis, PanelLimits
+from assignable.spc.charts.common import Exclusion, Fit, LimitBasis, PanelLimits
 from assignable.spc.charts.counts import count_law, count_lines
 from assignable.spc.data import Counts
 from assignable.spc.errors import SpcError, UnusableData, UnusableParameter
@@ -63,7 +63,7 @@ def lines(found: a.AttributeFit) -> PanelLimits:
 
 
 def hits(found: a.AttributeFit | a.AttributeJudgement) -> list[int]:
-    baseline = found.baseline if isinstance(found, a.AttributeFit) else found
+    baseline = found.baseline if isinstance(found, Fit) else found
     assert baseline is not None
     return [signal.index for signal in baseline.signals]
 

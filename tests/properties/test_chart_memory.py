@@ -87,7 +87,7 @@ def test_a_split_anywhere_changes_no_signal(name: str, case: Case, lengths: list
         signals += [
             replace(s, index=s.index + start, points=tuple(p + start for p in s.points)) for s in part.signals
         ]
-        if hasattr(part, "details"):
+        if part.details is not None:
             shifts += [replace(s, index=s.index + start, since=s.since + start) for s in part.details.shifts]
         values += [
             panel.value for panel in (getattr(part.panels, own) for own in chart.panels) if panel is not None
@@ -95,7 +95,7 @@ def test_a_split_anywhere_changes_no_signal(name: str, case: Case, lengths: list
         carry, start = part.carry, start + length
     assert signals == list(whole.signals)
     assert carry.points == len(case.values)
-    if hasattr(whole, "details"):
+    if whole.details is not None:
         for one, two in zip(shifts, whole.details.shifts, strict=True):
             assert (one.panel, one.index, one.since, one.points) == (
                 two.panel,

@@ -11,7 +11,7 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass, replace
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 import scipy
@@ -24,20 +24,20 @@ from ..cautions import Caution
 from ..data import Booleans, Floats, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..errors import Fault, UnusableData, UnusableParameter
 from ..factors import LARGEST_SIZE
-from ..rules import Signal
 from ..sigma import within
 from .common import (
     FOLLOWING,
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
     Performance,
     Plot,
     ShiftPerformance,
-    Verdict,
     Watched,
     exclusion_mask,
     too_many_signals,
@@ -162,27 +162,10 @@ class AcceptanceDiagnostics:
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class AcceptanceFit:
-    """Acceptance control limits with the evidence for them."""
-
-    limits: AcceptanceLimits
-    baseline: Baseline[AcceptancePanels[Panel]] | None
-    diagnostics: AcceptanceDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+AcceptanceFit: TypeAlias = Fit[AcceptanceLimits, AcceptancePanels[Panel], AcceptanceDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class AcceptanceJudgement:
-    """New subgroups judged by acceptance control limits."""
-
-    verdict: Verdict
-    panels: AcceptancePanels[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: AcceptanceCarry
-    cautions: tuple[Caution, ...]
+AcceptanceJudgement: TypeAlias = Judgement[AcceptancePanels[Panel], AcceptanceCarry]
 
 
 @functools.lru_cache(1024)
@@ -281,7 +264,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: AcceptanceOptions) ->
             raise UnusableParameter(*faults)
         assert options.sigma is not None
         limits = _limits(options, exact, size, options.sigma, "given", None, None)
-        return AcceptanceFit(limits, None, None, _performance(limits), _plan_cautions(limits))
+        return Fit(limits, None, None, _performance(limits), _plan_cautions(limits))
     statistics = data.statistics()
     _check_spread(statistics, options.within_statistic)
     kept = exclusion_mask(len(statistics.size), options.exclude)
@@ -300,7 +283,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: AcceptanceOptions) ->
     plots = _plots(statistics, limits)
     seen = _watch(plots, kept)
     shown = _diagnose(data, used, kept)
-    return AcceptanceFit(
+    return Fit(
         limits,
         Baseline(
             seen.verdict, AcceptancePanels(plots[0].panel(), plots[1].panel()), seen.signals, seen.found
@@ -511,7 +494,7 @@ def judge(
     _check_spread(statistics, limits.within_statistic)
     plots = _plots(statistics, limits)
     seen = _watch(plots, None)
-    return AcceptanceJudgement(
+    return Judgement(
         seen.verdict,
         AcceptancePanels(plots[0].panel(), plots[1].panel()),
         seen.signals,

@@ -11,7 +11,7 @@ import functools
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Annotated, Any, Generic, Literal, TypeVar
+from typing import Annotated, Any, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 
@@ -21,18 +21,18 @@ from ..bounds import MULTIPLE, POSITIVE, PROBABILITY
 from ..cautions import Caution
 from ..data import Counts, Floats
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, Tail, watched
+from ..rules import Rule, Tail, watched
 from .common import (
     AT_THREE_SIGMA,
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
-    Performance,
     Plot,
-    Verdict,
     exclusion_mask,
     too_many_signals,
     watch,
@@ -148,27 +148,10 @@ class AttributeDiagnostics:
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class AttributeFit(Generic[P, Q]):
-    """Limits of a chart of counts with the evidence for them."""
-
-    limits: AttributeLimits[P]
-    baseline: Baseline[Q] | None
-    diagnostics: AttributeDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+AttributeFit: TypeAlias = Fit[AttributeLimits[P], Q, AttributeDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class AttributeJudgement(Generic[Q]):
-    """New samples judged by frozen limits."""
-
-    verdict: Verdict
-    panels: Q
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: AttributeCarry
-    cautions: tuple[Caution, ...]
+AttributeJudgement: TypeAlias = Judgement[Q, AttributeCarry]
 
 
 def is_binomial(chart: CountChart) -> bool:
@@ -357,7 +340,7 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
         assert options.standard is not None
         limits = _limits(chart, options, rules, options.standard, "given", options.sample_size, None)
         size = options.sample_size
-        return AttributeFit(
+        return Fit(
             limits,
             None,
             None,
@@ -391,7 +374,7 @@ def fit(data: Counts | None, options: AttributeOptions, *, chart: AttributeChart
         diagnostics.autocorrelation(z if kept is None else np.where(kept, z, np.nan)),
     )
     typical = total / filled if filled else float(sizes.mean())
-    return AttributeFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, _PANELS[chart](plot.panel()), seen.signals, seen.found),
         found,
@@ -474,7 +457,7 @@ def judge(
     before = carry or NEW
     plot = plot_counts(chart, data.counts, sizes, limits.mean, limits.basis)
     seen, tail = watch(PANEL_NAMES[chart], plot, limits.rules, tail=before.tail)
-    return AttributeJudgement(
+    return Judgement(
         seen.verdict,
         _PANELS[chart](plot.panel()),
         seen.signals,

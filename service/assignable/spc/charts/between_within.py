@@ -10,7 +10,7 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass, replace
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 
@@ -21,7 +21,7 @@ from ..cautions import Caution
 from ..components import VarianceComponents, components
 from ..data import Booleans, Floats, Integers, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, Tail, watched
+from ..rules import Rule, Tail, watched
 from ..sigma import SigmaEstimate, moving_range, moving_ranges, within
 from .common import (
     AT_THREE_SIGMA,
@@ -29,12 +29,13 @@ from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
     Performance,
     Plot,
-    Verdict,
     Watched,
     exclusion_mask,
     too_many_signals,
@@ -169,27 +170,10 @@ class BetweenWithinDiagnostics:
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class BetweenWithinFit:
-    """Limits of a ``between-within`` chart with the evidence for them."""
-
-    limits: BetweenWithinLimits
-    baseline: Baseline[BetweenWithinPanels[Panel]] | None
-    diagnostics: BetweenWithinDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+BetweenWithinFit: TypeAlias = Fit[BetweenWithinLimits, BetweenWithinPanels[Panel], BetweenWithinDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class BetweenWithinJudgement:
-    """New subgroups judged by frozen limits."""
-
-    verdict: Verdict
-    panels: BetweenWithinPanels[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: BetweenWithinCarry
-    cautions: tuple[Caution, ...]
+BetweenWithinJudgement: TypeAlias = Judgement[BetweenWithinPanels[Panel], BetweenWithinCarry]
 
 
 Plots = tuple[Plot, Plot, Plot]
@@ -321,7 +305,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: BetweenWithinOptions)
         None if values is None else diagnostics.resolution(values, used),
         diagnostics.spread_stability(used),
     )
-    return BetweenWithinFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, _panels(plots), seen.signals, seen.found),
         shown,
@@ -385,7 +369,7 @@ def _from_standards(options: BetweenWithinOptions, rules: tuple[Rule, ...]) -> B
         None,
     )
     performance = _performance(rules, basis, options.subgroup_size, options.within_statistic)
-    return BetweenWithinFit(_with_lines(limits), None, None, performance, ())
+    return Fit(_with_lines(limits), None, None, performance, ())
 
 
 def _with_lines(limits: BetweenWithinLimits) -> BetweenWithinLimits:
@@ -418,7 +402,7 @@ def judge(
     ranges = moving_ranges(series, limits.span)[len(recent) :]
     plots = _plots(statistics, ranges, limits)
     seen, tail = _watch(plots, limits, before.mean, None)
-    return BetweenWithinJudgement(
+    return Judgement(
         seen.verdict,
         _panels(plots),
         seen.signals,

@@ -11,7 +11,7 @@ from __future__ import annotations
 import functools
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Any, Generic, Literal, TypeVar
 
 import numpy as np
 import scipy
@@ -28,6 +28,9 @@ MOST_SIGNALS = 10_000
 
 Verdict = Literal["in-control", "signal"]
 Q = TypeVar("Q")
+L = TypeVar("L")
+D = TypeVar("D")
+C = TypeVar("C")
 
 
 @dataclass(frozen=True, slots=True)
@@ -282,6 +285,30 @@ class Performance:
         EstimatedPerformance | None,
         "What limits from estimates deliver; null where nothing was estimated, or it is not known for the chart.",
     ] = None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Fit(Generic[L, Q, D]):
+    """Limits of a chart with the evidence for them."""
+
+    limits: L
+    baseline: Baseline[Q] | None
+    diagnostics: D | None
+    performance: Performance
+    cautions: tuple[Caution, ...]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Judgement(Generic[Q, C]):
+    """New data judged by frozen limits; ``details`` is what some charts tell besides."""
+
+    verdict: Verdict
+    panels: Q
+    signals: tuple[Signal, ...]
+    signals_found: int
+    carry: C
+    cautions: tuple[Caution, ...]
+    details: Any = None
 
 
 def exclusion_mask(points: int, exclude: Sequence[Exclusion]) -> Booleans | None:

@@ -15,13 +15,12 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 
 from .. import factors
 from ..bounds import NOT_NEGATIVE, POSITIVE
-from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals, Integers, SubgroupStatistics
 from ..design import memory as design
 from ..errors import UnusableData
@@ -45,10 +44,11 @@ from ._memory import (
 from .common import (
     MOST_SIGNALS,
     Baseline,
+    Fit,
+    Judgement,
     Panel,
     PanelLimits,
     Performance,
-    Verdict,
     Watched,
     too_many_signals,
 )
@@ -150,28 +150,10 @@ class CusumDetails:
     shifts: Annotated[tuple[ShiftEstimate, ...], "One for each signal told, in the same order."]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class CusumFit:
-    """A CUSUM chart with the evidence for its parameters."""
-
-    limits: CusumLimits
-    baseline: Baseline[CusumPanels[Panel]] | None
-    diagnostics: SubgroupDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+CusumFit: TypeAlias = Fit[CusumLimits, CusumPanels[Panel], SubgroupDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class CusumJudgement:
-    """New points judged by frozen limits."""
-
-    verdict: Verdict
-    panels: CusumPanels[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    details: CusumDetails
-    carry: CusumCarry
-    cautions: tuple[Caution, ...]
+CusumJudgement: TypeAlias = Judgement[CusumPanels[Panel], CusumCarry]
 
 
 def fit(data: Data | None, options: CusumOptions) -> CusumFit:
@@ -202,9 +184,9 @@ def fit(data: Data | None, options: CusumOptions) -> CusumFit:
         reference, decision, options.head_start * decision, options.spread, found.typical
     )
     if found.points is None:
-        return CusumFit(limits, None, None, performance, ())
+        return Fit(limits, None, None, performance, ())
     seen, panels, details, _ = _walk(found.points, isinstance(data, Individuals), limits, None)
-    return CusumFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, panels, seen.signals, seen.found, details),
         found.diagnostics,
@@ -562,14 +544,14 @@ def judge(limits: CusumLimits, data: Data, carry: CusumCarry | None) -> CusumJud
         )
     points = points_of(data)
     seen, panels, details, after = _walk(points, isinstance(data, Individuals), limits, carry)
-    return CusumJudgement(
+    return Judgement(
         seen.verdict,
         panels,
         seen.signals,
         seen.found,
-        details,
         after,
         (*size_cautions(limits.subgroup_size, points.size), *too_many_signals(seen)),
+        details,
     )
 
 

@@ -12,7 +12,7 @@ import functools
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import Annotated, Any, Generic, Literal, TypeVar
+from typing import Annotated, Any, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 
@@ -22,7 +22,7 @@ from ..bounds import MULTIPLE, POSITIVE, SIGMA
 from ..cautions import Caution
 from ..data import Counts, Floats
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, watched
+from ..rules import Rule, watched
 from ..sigma import moving_range, moving_ranges
 from .attributes import (
     NEW,
@@ -41,12 +41,13 @@ from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
     Performance,
     Plot,
-    Verdict,
     exclusion_mask,
     too_many_signals,
     watch,
@@ -118,27 +119,10 @@ class DispersedLimits(Generic[P]):
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class DispersedFit(Generic[P, Q]):
-    """Limits of a chart of dispersed counts with the evidence for them."""
-
-    limits: DispersedLimits[P]
-    baseline: Baseline[Q] | None
-    diagnostics: AttributeDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+DispersedFit: TypeAlias = Fit[DispersedLimits[P], Q, AttributeDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class DispersedJudgement(Generic[Q]):
-    """New samples judged by frozen limits."""
-
-    verdict: Verdict
-    panels: Q
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: AttributeCarry
-    cautions: tuple[Caution, ...]
+DispersedJudgement: TypeAlias = Judgement[Q, AttributeCarry]
 
 
 def _basis(multiple: float, sigma_z: float) -> LimitBasis:
@@ -198,7 +182,7 @@ def fit(data: Counts | None, options: DispersedOptions, *, chart: DispersedChart
         diagnostics.autocorrelation(z if kept is None else np.where(kept, z, np.nan)),
     )
     typical = total / filled if filled else float(sizes.mean())
-    return DispersedFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, _PANELS[chart](plot.panel()), seen.signals, seen.found),
         found,
@@ -234,7 +218,7 @@ def _from_standards(
         raise UnusableParameter(*faults)
     assert mean is not None
     assert sigma_z is not None
-    return DispersedFit(
+    return Fit(
         _limits(chart, options, rules, mean, sigma_z, None, size, None),
         None,
         None,
@@ -373,7 +357,7 @@ def judge(
     before = carry or NEW
     plot = _plot(chart, data.counts, sizes, limits.mean, limits.sigma_multiple, limits.sigma_z)
     seen, tail = watch(_PANEL_NAMES[chart], plot, limits.rules, tail=before.tail)
-    return DispersedJudgement(
+    return Judgement(
         seen.verdict,
         _PANELS[chart](plot.panel()),
         seen.signals,

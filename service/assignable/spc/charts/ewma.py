@@ -10,17 +10,15 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 import scipy
 
 from ..bounds import MULTIPLE, WEIGHT
-from ..cautions import Caution
 from ..data import SubgroupStatistics
 from ..design import memory as design
 from ..errors import UnusableData
-from ..rules import Signal
 from ..runlength import memory as runlength
 from ._memory import (
     FROM_DATA,
@@ -39,11 +37,12 @@ from ._memory import (
 )
 from .common import (
     Baseline,
+    Fit,
+    Judgement,
     Panel,
     PanelLimits,
     Performance,
     Plot,
-    Verdict,
     Watched,
     too_many_signals,
     watch,
@@ -101,27 +100,10 @@ class EwmaCarry:
 NEW = EwmaCarry(0, 0.0, 0.0)
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class EwmaFit:
-    """Limits of an EWMA chart with the evidence for them."""
-
-    limits: EwmaLimits
-    baseline: Baseline[EwmaPanels[Panel]] | None
-    diagnostics: SubgroupDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+EwmaFit: TypeAlias = Fit[EwmaLimits, EwmaPanels[Panel], SubgroupDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class EwmaJudgement:
-    """New points judged by frozen limits."""
-
-    verdict: Verdict
-    panels: EwmaPanels[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: EwmaCarry
-    cautions: tuple[Caution, ...]
+EwmaJudgement: TypeAlias = Judgement[EwmaPanels[Panel], EwmaCarry]
 
 
 def fit(data: Data | None, options: EwmaOptions) -> EwmaFit:
@@ -140,10 +122,10 @@ def fit(data: Data | None, options: EwmaOptions) -> EwmaFit:
     limits = _limits(found.parameters, smoothing, limit, options)
     performance = _performance(smoothing, limit, options.limit_variance, found.typical)
     if found.points is None:
-        return EwmaFit(limits, None, None, performance, ())
+        return Fit(limits, None, None, performance, ())
     plot, _ = _plot(found.points, limits, NEW)
     seen, _ = watch("ewma", plot)
-    return EwmaFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, EwmaPanels(plot.panel()), seen.signals, seen.found),
         found.diagnostics,
@@ -232,7 +214,7 @@ def judge(limits: EwmaLimits, data: Data, carry: EwmaCarry | None) -> EwmaJudgem
     points = points_of(data)
     plot, after = _plot(points, limits, before)
     seen: Watched = watch("ewma", plot)[0]
-    return EwmaJudgement(
+    return Judgement(
         seen.verdict,
         EwmaPanels(plot.panel()),
         seen.signals,

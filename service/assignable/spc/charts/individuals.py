@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, replace
 from functools import partial
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 
@@ -16,7 +16,7 @@ from ..capability.nonnormal import DistributionChoice
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, Tail, watched
+from ..rules import Rule, Tail, watched
 from ..sigma import moving_range, moving_ranges
 from . import nonnormal
 from .common import (
@@ -25,13 +25,13 @@ from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
-    Performance,
     Plot,
     Standards,
-    Verdict,
     Watched,
     baseline_alone,
     exclusion_mask,
@@ -154,27 +154,10 @@ class _Known:
     shaped: nonnormal.Shaped | None = None
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class IndividualsFit:
-    """Limits of a chart of single values with the evidence for them."""
-
-    limits: IndividualsLimits
-    baseline: Baseline[ValueMovingRange[Panel]] | None
-    diagnostics: IndividualsDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+IndividualsFit: TypeAlias = Fit[IndividualsLimits, ValueMovingRange[Panel], IndividualsDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class IndividualsJudgement:
-    """New values judged by frozen limits."""
-
-    verdict: Verdict
-    panels: ValueMovingRange[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: IndividualsCarry
-    cautions: tuple[Caution, ...]
+IndividualsJudgement: TypeAlias = Judgement[ValueMovingRange[Panel], IndividualsCarry]
 
 
 def individual_plots(
@@ -229,7 +212,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
         assert given.mean is not None
         assert given.sigma is not None
         limits = _limits(options, rules, _Known(np.empty(0), 0, given.mean, given.sigma, "given", None), None)
-        return IndividualsFit(limits, None, None, mean_performance(rules, basis, 1.0, None), ())
+        return Fit(limits, None, None, mean_performance(rules, basis, 1.0, None), ())
 
     if faults := _not_normal_faults(options, data=True):
         raise UnusableParameter(*faults)
@@ -271,7 +254,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
         performance = replace(performance, estimated=delivered)
     else:
         performance = replace(performance, shift_unit="normal scores of the fitted distribution")
-    return IndividualsFit(
+    return Fit(
         limits,
         Baseline(
             seen.verdict, ValueMovingRange(plots[0].panel(), plots[1].panel()), seen.signals, seen.found
@@ -466,7 +449,7 @@ def judge(
             values, ranges, limits.distribution, lines.value, lines.moving_range, limits.sigma
         )
     seen, tail = _watch(plots, limits.rules, before.value, None)
-    return IndividualsJudgement(
+    return Judgement(
         seen.verdict,
         ValueMovingRange(plots[0].panel(), plots[1].panel()),
         seen.signals,

@@ -9,27 +9,26 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 import scipy
 
 from ..bounds import MULTIPLE, POSITIVE, SIZE, WEIGHT
-from ..cautions import Caution
 from ..data import Booleans, Floats, Vectors
 from ..errors import UnusableData, UnusableParameter
-from ..rules import Signal
 from ..runlength import mewma as run_length
 from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     Panel,
     PanelLimits,
     Performance,
     Plot,
     ShiftPerformance,
-    Verdict,
     exclusion_mask,
     too_many_signals,
     watch,
@@ -131,28 +130,10 @@ class MewmaCarry:
     vector: Annotated[tuple[float, ...], "The last smoothed vector less the mean, in the variables' units."]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class MewmaFit:
-    """Limits of a ``mewma`` chart with the evidence for them."""
-
-    limits: MewmaLimits
-    baseline: Baseline[MewmaPanels[Panel]] | None
-    diagnostics: VectorDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+MewmaFit: TypeAlias = Fit[MewmaLimits, MewmaPanels[Panel], VectorDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class MewmaJudgement:
-    """New points judged by frozen limits."""
-
-    verdict: Verdict
-    panels: MewmaPanels[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    details: Decompositions | None
-    carry: MewmaCarry
-    cautions: tuple[Caution, ...]
+MewmaJudgement: TypeAlias = Judgement[MewmaPanels[Panel], MewmaCarry]
 
 
 @functools.lru_cache(maxsize=512)
@@ -231,7 +212,7 @@ def fit(data: Vectors | None, options: MewmaOptions) -> MewmaFit:
     )
     performance = mewma_performance(p, options.smoothing, limit, size, exact)
     if data is None:
-        return MewmaFit(limits, None, None, performance, ())
+        return Fit(limits, None, None, performance, ())
 
     kept = exclusion_mask(len(data.values), options.exclude)
     measure = metric(mean, covariance)
@@ -239,7 +220,7 @@ def fit(data: Vectors | None, options: MewmaOptions) -> MewmaFit:
     vectors, scale, plot, _ = _plot(limits, means, measure, data.present(), kept, None)
     seen, _ = watch("mewma", plot, kept=kept)
     shown = None if found is None else diagnose(found, means, measure, data)
-    return MewmaFit(
+    return Fit(
         limits,
         Baseline(
             seen.verdict,
@@ -334,14 +315,14 @@ def judge(limits: MewmaLimits, data: Vectors, carry: MewmaCarry | None) -> Mewma
     measure = metric(limits.mean, limits.covariance)
     vectors, scale, plot, after = _plot(limits, data.means(), measure, data.present(), None, carry)
     seen, _ = watch("mewma", plot)
-    return MewmaJudgement(
+    return Judgement(
         seen.verdict,
         MewmaPanels(plot.panel()),
         seen.signals,
         seen.found,
-        decompose(seen.signals, vectors, plot.value, scale, measure, limits.variables, _term_limits()),
         after,
         too_many_signals(seen),
+        decompose(seen.signals, vectors, plot.value, scale, measure, limits.variables, _term_limits()),
     )
 
 

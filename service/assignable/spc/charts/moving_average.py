@@ -10,16 +10,15 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass
-from typing import Annotated, Generic, TypeVar
+from typing import Annotated, Generic, TypeAlias, TypeVar
 
 import numpy as np
 
 from .. import runlength
 from ..bounds import MULTIPLE, SIZE
-from ..cautions import Caution
 from ..data import Floats, SubgroupStatistics
 from ..errors import UnusableData
-from ..rules import LIMIT, Signal
+from ..rules import LIMIT
 from ..runlength import moving
 from ._memory import (
     FROM_DATA,
@@ -36,11 +35,12 @@ from ._memory import (
 )
 from .common import (
     Baseline,
+    Fit,
+    Judgement,
     Panel,
     PanelLimits,
     Performance,
     Plot,
-    Verdict,
     too_many_signals,
     watch,
 )
@@ -92,27 +92,10 @@ class MovingAverageCarry:
 NEW = MovingAverageCarry(0, (), ())
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class MovingAverageFit:
-    """Limits of a chart of moving averages with the evidence for them."""
-
-    limits: MovingAverageLimits
-    baseline: Baseline[MovingAveragePanels[Panel]] | None
-    diagnostics: SubgroupDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+MovingAverageFit: TypeAlias = Fit[MovingAverageLimits, MovingAveragePanels[Panel], SubgroupDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class MovingAverageJudgement:
-    """New points judged by frozen limits."""
-
-    verdict: Verdict
-    panels: MovingAveragePanels[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: MovingAverageCarry
-    cautions: tuple[Caution, ...]
+MovingAverageJudgement: TypeAlias = Judgement[MovingAveragePanels[Panel], MovingAverageCarry]
 
 
 def fit(data: Data | None, options: MovingAverageOptions) -> MovingAverageFit:
@@ -125,10 +108,10 @@ def fit(data: Data | None, options: MovingAverageOptions) -> MovingAverageFit:
     limits = _limits(found.parameters, options)
     performance = _performance(options.span, options.sigma_multiple, found.typical)
     if found.points is None:
-        return MovingAverageFit(limits, None, None, performance, ())
+        return Fit(limits, None, None, performance, ())
     plot, _ = _plot(found.points, limits, NEW)
     seen, _ = watch("average", plot)
-    return MovingAverageFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, MovingAveragePanels(plot.panel()), seen.signals, seen.found),
         found.diagnostics,
@@ -220,7 +203,7 @@ def judge(
     points = points_of(data)
     plot, after = _plot(points, limits, before)
     seen, _ = watch("average", plot)
-    return MovingAverageJudgement(
+    return Judgement(
         seen.verdict,
         MovingAveragePanels(plot.panel()),
         seen.signals,

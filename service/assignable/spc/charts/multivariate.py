@@ -9,28 +9,27 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 import scipy
 
 from ..bounds import POSITIVE, PROBABILITY, SIZE
-from ..cautions import Caution
 from ..data import Floats, Vectors
 from ..errors import Fault, UnusableParameter
-from ..rules import Signal
 from ..runlength.mewma import chi_square_tail
 from . import successive
 from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     Panel,
     PanelLimits,
     Performance,
     Plot,
     ShiftPerformance,
-    Verdict,
     exclusion_mask,
     too_many_signals,
     watch,
@@ -122,28 +121,10 @@ class TSquaredCarry:
     points: Annotated[int, "Points judged so far under these limits."]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class TSquaredFit:
-    """Limits of a ``t-squared`` chart with the evidence for them."""
-
-    limits: TSquaredLimits
-    baseline: Baseline[TSquaredPanels[Panel]] | None
-    diagnostics: VectorDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+TSquaredFit: TypeAlias = Fit[TSquaredLimits, TSquaredPanels[Panel], VectorDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class TSquaredJudgement:
-    """New points judged by frozen limits."""
-
-    verdict: Verdict
-    panels: TSquaredPanels[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    details: Decompositions | None
-    carry: TSquaredCarry
-    cautions: tuple[Caution, ...]
+TSquaredJudgement: TypeAlias = Judgement[TSquaredPanels[Panel], TSquaredCarry]
 
 
 def _ratio_quantile(alpha: float, p: int, freedom: float) -> float:
@@ -317,7 +298,7 @@ def fit(data: Vectors | None, options: TSquaredOptions) -> TSquaredFit:
     assert upper_ is not None
     performance = t_squared_performance(len(limits.variables), alpha, limits.subgroup_size)
     if data is None:
-        return TSquaredFit(limits, None, None, performance, ())
+        return Fit(limits, None, None, performance, ())
 
     kept = exclusion_mask(len(data.values), options.exclude)
     measure = metric(limits.mean, limits.covariance)
@@ -341,7 +322,7 @@ def fit(data: Vectors | None, options: TSquaredOptions) -> TSquaredFit:
     )
     panels = TSquaredPanels(plot.panel())
     shown = None if found is None else diagnose(found, means, measure, data)
-    return TSquaredFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, panels, seen.signals, seen.found, details),
         shown,
@@ -397,16 +378,16 @@ def judge(limits: TSquaredLimits, data: Vectors, carry: TSquaredCarry | None) ->
     plot = _plot(statistic, len(limits.variables), upper)
     seen, _ = watch("t_squared", plot)
     terms = (limits.unconditional_limit, limits.conditional_limit)
-    return TSquaredJudgement(
+    return Judgement(
         seen.verdict,
         TSquaredPanels(plot.panel()),
         seen.signals,
         seen.found,
+        TSquaredCarry((carry.points if carry else 0) + len(data.values)),
+        too_many_signals(seen),
         decompose(
             seen.signals, deviations, statistic, limits.subgroup_size, measure, limits.variables, terms
         ),
-        TSquaredCarry((carry.points if carry else 0) + len(data.values)),
-        too_many_signals(seen),
     )
 
 

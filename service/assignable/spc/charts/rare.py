@@ -17,7 +17,7 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass, replace
-from typing import Annotated, Generic, Literal, TypeVar
+from typing import Annotated, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 import scipy
@@ -28,19 +28,20 @@ from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, WEIGHT
 from ..cautions import Caution
 from ..data import Booleans, Floats, Intervals
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, Tail, Track, watched
+from ..rules import Rule, Tail, Track, watched
 from ..runlength.of_rules import continuous_law
 from .common import (
     AT_THREE_SIGMA,
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
     Performance,
     Plot,
-    Verdict,
     Watched,
     exclusion_mask,
     normal_multiple,
@@ -84,16 +85,7 @@ class IntervalCarry:
 NEW = IntervalCarry(0, Tail())
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class IntervalJudgement:
-    """New intervals judged by frozen limits."""
-
-    verdict: Verdict
-    panels: BetweenEvents[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: IntervalCarry
-    cautions: tuple[Caution, ...]
+IntervalJudgement: TypeAlias = Judgement[BetweenEvents[Panel], IntervalCarry]
 
 
 def _in_words(seen: Watched) -> Watched:
@@ -223,15 +215,7 @@ class OpportunityDiagnostics:
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class OpportunityFit:
-    """Limits of a ``g`` chart with the evidence for them."""
-
-    limits: OpportunityLimits
-    baseline: Baseline[BetweenEvents[Panel]] | None
-    diagnostics: OpportunityDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+OpportunityFit: TypeAlias = Fit[OpportunityLimits, BetweenEvents[Panel], OpportunityDiagnostics]
 
 
 def opportunity_lines(mean: float, basis: LimitBasis) -> tuple[float | None, float]:
@@ -316,7 +300,7 @@ def fit_opportunities(data: Intervals | None, options: OpportunityOptions) -> Op
         assert given is not None
         mean = (1.0 - given) / given + start
         limits = _opportunity_limits(options, rules, mean, given, None)
-        return OpportunityFit(
+        return Fit(
             limits,
             None,
             None,
@@ -348,7 +332,7 @@ def fit_opportunities(data: Intervals | None, options: OpportunityOptions) -> Op
     seen, _ = watch("interval", plot, rules, kept=kept)
     seen = _in_words(seen)
     found = OpportunityDiagnostics(_geometric_dispersion(used - start, filled), _correlation(used - start))
-    return OpportunityFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, BetweenEvents(plot.panel()), seen.signals, seen.found),
         found,
@@ -492,7 +476,7 @@ def judge_opportunities(
 
 def _judgement(seen: Watched, plot: Plot, tail: Tail, before: IntervalCarry) -> IntervalJudgement:
     told = _in_words(seen)
-    return IntervalJudgement(
+    return Judgement(
         told.verdict,
         BetweenEvents(plot.panel()),
         told.signals,
@@ -570,15 +554,7 @@ class TimeDiagnostics:
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class TimeFit:
-    """Limits of a ``t`` chart with the evidence for them."""
-
-    limits: TimeLimits
-    baseline: Baseline[BetweenEvents[Panel]] | None
-    diagnostics: TimeDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+TimeFit: TypeAlias = Fit[TimeLimits, BetweenEvents[Panel], TimeDiagnostics]
 
 
 def weibull_shape(times: Floats) -> float | None:
@@ -688,9 +664,7 @@ def fit_times(data: Intervals | None, options: TimeOptions) -> TimeFit:
         assert options.mean is not None
         shape = 1.0 if exponential or options.shape is None else options.shape
         limits = _time_limits(options, rules, shape, None, None)
-        return TimeFit(
-            limits, None, None, _time_performance(rules, shape, options.false_alarm_probability), ()
-        )
+        return Fit(limits, None, None, _time_performance(rules, shape, options.false_alarm_probability), ())
     kept, used, filled = _kept(data, options.exclude)
     times = used[used == used]
     if filled < 2 and (options.mean is None or not (exponential or options.shape is not None)):
@@ -711,7 +685,7 @@ def fit_times(data: Intervals | None, options: TimeOptions) -> TimeFit:
     seen, _ = _watch_times(data.values, limits, kept=kept)
     seen = _in_words(seen)
     found = TimeDiagnostics(_exponential_test(times, fitted), _correlation(used, shape) if filled else None)
-    return TimeFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, BetweenEvents(plot.panel()), seen.signals, seen.found),
         found,

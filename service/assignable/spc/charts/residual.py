@@ -10,7 +10,7 @@ from __future__ import annotations
 import functools
 import math
 from dataclasses import dataclass, replace
-from typing import Annotated, Literal
+from typing import Annotated, Literal, TypeAlias
 
 import numpy as np
 import scipy
@@ -21,19 +21,20 @@ from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA
 from ..cautions import Caution
 from ..data import Floats, Individuals
 from ..errors import Fault, SpcError, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, Tail, watched
+from ..rules import Rule, Tail, watched
 from .common import (
     AT_THREE_SIGMA,
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
     Performance,
     Plot,
     ShiftPerformance,
-    Verdict,
     exclusion_mask,
     too_many_signals,
     watch,
@@ -162,28 +163,10 @@ class NextValue:
     upper: Annotated[float, "A value above this one will signal."]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class ResidualFit:
-    """A model and its limits with the evidence for them."""
-
-    limits: ResidualLimits
-    baseline: Baseline[ResidualPanels] | None
-    diagnostics: ResidualDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+ResidualFit: TypeAlias = Fit[ResidualLimits, ResidualPanels, ResidualDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class ResidualJudgement:
-    """New values judged by a frozen model."""
-
-    verdict: Verdict
-    panels: ResidualPanels
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: ResidualCarry
-    cautions: tuple[Caution, ...]
-    details: NextValue | None
+ResidualJudgement: TypeAlias = Judgement[ResidualPanels, ResidualCarry]
 
 
 def residuals(values: Floats, mean: float, coefficients: tuple[float, ...]) -> Floats:
@@ -377,7 +360,7 @@ def fit(data: Individuals | None, options: ResidualOptions) -> ResidualFit:
             raise UnusableParameter(*faults)
         model = Model(known.mean, known.coefficients, known.sigma, 0)
         limits = _limits(model, options, rules, None)
-        return ResidualFit(limits, None, None, _performance(rules, basis, model.coefficients), ())
+        return Fit(limits, None, None, _performance(rules, basis, model.coefficients), ())
     values = data.values
     kept = exclusion_mask(len(values), options.exclude)
     used = values if kept is None else np.where(kept, values, np.nan)
@@ -405,7 +388,7 @@ def fit(data: Individuals | None, options: ResidualOptions) -> ResidualFit:
         diagnostics.autocorrelation(watched_only),
         diagnostics.normality(watched_only),
     )
-    return ResidualFit(
+    return Fit(
         limits,
         Baseline(
             seen.verdict,
@@ -596,7 +579,7 @@ def judge(limits: ResidualLimits, data: Individuals, carry: ResidualCarry | None
     plot = _plot(found, limits)
     seen, tail = watch("residual", plot, limits.rules, tail=before.residual)
     last = _last(series, limits)
-    return ResidualJudgement(
+    return Judgement(
         seen.verdict,
         ResidualPanels(plot.panel()),
         seen.signals,

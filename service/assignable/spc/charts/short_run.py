@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from typing import Annotated, Literal
+from typing import Annotated, Literal, TypeAlias
 
 import numpy as np
 import scipy
@@ -21,7 +21,7 @@ from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, SIZE
 from ..cautions import Caution
 from ..data import Booleans, Floats, Individuals, Integers, Subgroups, SubgroupStatistics
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, watched
+from ..rules import Rule, watched
 from ..sigma import SigmaEstimate, moving_range, within
 from ._levels import (
     NEW,
@@ -45,11 +45,11 @@ from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
-    Performance,
-    Verdict,
     exclusion_mask,
     too_many_signals,
 )
@@ -187,27 +187,10 @@ class ShortRunDiagnostics:
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class ShortRunFit:
-    """Limits of a ``short-run`` chart with the evidence for them."""
-
-    limits: ShortRunLimits
-    baseline: Baseline[LevelSpread[Panel]] | None
-    diagnostics: ShortRunDiagnostics | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+ShortRunFit: TypeAlias = Fit[ShortRunLimits, LevelSpread[Panel], ShortRunDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class ShortRunJudgement:
-    """New points judged by frozen limits."""
-
-    verdict: Verdict
-    panels: LevelSpread[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: LevelCarry
-    cautions: tuple[Caution, ...]
+ShortRunJudgement: TypeAlias = Judgement[LevelSpread[Panel], LevelCarry]
 
 
 def _places(parts: Sequence[Part | PartTarget], names: Sequence[str], points: int) -> Integers:
@@ -394,7 +377,7 @@ def fit(data: PartData | None, options: ShortRunOptions) -> ShortRunFit:
         estimator = OF_EACH_PART if standardised else "given"
         limits = _limits(options, form, 0.0, known, estimator, None, parts, size, rules, None)
         performance = level_performance(rules, basis, form, float(size))
-        return ShortRunFit(limits, None, None, performance, ())
+        return Fit(limits, None, None, performance, ())
 
     form = form_of(data.points)
     points = points_of(data.points)
@@ -437,7 +420,7 @@ def fit(data: PartData | None, options: ShortRunOptions) -> ShortRunFit:
     plots = level_plots(shown, form, centre, sigma, basis)
     seen, _ = watch_levels(plots, rules, None, kept, form)
     diagnosed = _diagnose(data, compared, places, parts, sigma, form, kept)
-    return ShortRunFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, panels_of(plots), seen.signals, seen.found),
         diagnosed,
@@ -620,7 +603,7 @@ def judge(limits: ShortRunLimits, data: PartData, carry: LevelCarry | None) -> S
         compared = replace(compared, range=ranges)
     plots = level_plots(compared, limits.form, limits.centre, limits.sigma, limits.basis)
     seen, tail = watch_levels(plots, limits.rules, before.level, None, limits.form)
-    return ShortRunJudgement(
+    return Judgement(
         seen.verdict,
         panels_of(plots),
         seen.signals,

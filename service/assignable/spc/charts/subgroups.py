@@ -11,7 +11,7 @@ import functools
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import Annotated, Any, Generic, Literal, TypeVar
+from typing import Annotated, Any, Generic, Literal, TypeAlias, TypeVar
 
 import numpy as np
 
@@ -22,7 +22,7 @@ from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, SIZE
 from ..cautions import Caution
 from ..data import Booleans, Floats, Integers, Subgroups, SubgroupStatistics, SubgroupSummary
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, Tail, watched
+from ..rules import Rule, Tail, watched
 from ..sigma import within
 from .common import (
     AT_THREE_SIGMA,
@@ -30,13 +30,13 @@ from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
-    Performance,
     Plot,
     Standards,
-    Verdict,
     Watched,
     baseline_alone,
     exclusion_mask,
@@ -182,27 +182,10 @@ class _Known:
     freedom: float | None
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class SubgroupFit(Generic[P, Q]):
-    """Limits of a chart of subgroups with the evidence for them."""
-
-    limits: SubgroupLimits[P]
-    baseline: Baseline[Q] | None
-    diagnostics: SubgroupStudy | None
-    performance: Performance
-    cautions: tuple[Caution, ...]
+SubgroupFit: TypeAlias = Fit[SubgroupLimits[P], Q, SubgroupStudy]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class SubgroupJudgement(Generic[Q]):
-    """New subgroups judged by frozen limits."""
-
-    verdict: Verdict
-    panels: Q
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: SubgroupCarry
-    cautions: tuple[Caution, ...]
+SubgroupJudgement: TypeAlias = Judgement[Q, SubgroupCarry]
 
 
 def subgroup_plots(
@@ -323,7 +306,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
         assert options.subgroup_size is not None
         limits = _limits(options, spread, given.mean, given.sigma, None, options.subgroup_size, rules, None)
         performance = mean_performance(rules, basis, float(options.subgroup_size), spread)
-        return SubgroupFit(limits, None, None, performance, ())
+        return Fit(limits, None, None, performance, ())
 
     kept = exclusion_mask(len(statistics.size), options.exclude)
     screened = None
@@ -369,7 +352,7 @@ def fit(data: Subgroups | SubgroupSummary | None, options: SubgroupOptions, *, s
         guarantee=options.guarantee,
     )
     performance = replace(mean_performance(rules, basis, typical, spread), estimated=delivered)
-    return SubgroupFit(
+    return Fit(
         limits,
         baseline,
         study,
@@ -554,7 +537,7 @@ def judge(
     before = carry or NEW
     plots = subgroup_plots(statistics, spread, limits.centre, limits.sigma, limits.basis)
     seen, tail = _watch(plots, spread, limits.rules, before.mean, None)
-    return SubgroupJudgement(
+    return Judgement(
         seen.verdict,
         _PANELS[spread](plots[0].panel(), plots[1].panel()),
         seen.signals,

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from typing import Annotated, Literal
+from typing import Annotated, Literal, TypeAlias
 
 import numpy as np
 import scipy
@@ -19,7 +19,7 @@ from ..bounds import MULTIPLE, POSITIVE, PROBABILITY, SIGMA, SIZE
 from ..cautions import Caution
 from ..data import Floats, SubgroupStatistics
 from ..errors import Fault, UnusableData, UnusableParameter
-from ..rules import Rule, Signal, Tail, watched
+from ..rules import Rule, Tail, watched
 from ..sigma import moving_range, within
 from ._levels import (
     SPAN,
@@ -41,12 +41,12 @@ from .common import (
     Baseline,
     BaselineRecord,
     Exclusion,
+    Fit,
+    Judgement,
     LimitBasis,
     Panel,
     PanelLimits,
-    Performance,
     Plot,
-    Verdict,
     exclusion_mask,
     too_many_signals,
 )
@@ -221,28 +221,10 @@ class Ahead:
     ]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class TrendFit:
-    """The line and its limits with the evidence for them."""
-
-    limits: TrendLimits
-    baseline: Baseline[LevelSpread[Panel]]
-    diagnostics: TrendDiagnostics
-    performance: Performance
-    cautions: tuple[Caution, ...]
+TrendFit: TypeAlias = Fit[TrendLimits, LevelSpread[Panel], TrendDiagnostics]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class TrendJudgement:
-    """New points judged by the continued line."""
-
-    verdict: Verdict
-    panels: LevelSpread[Panel]
-    signals: tuple[Signal, ...]
-    signals_found: int
-    carry: TrendCarry
-    cautions: tuple[Caution, ...]
-    details: Ahead | None
+TrendJudgement: TypeAlias = Judgement[LevelSpread[Panel], TrendCarry]
 
 
 def fit_line(positions: Floats, levels: Floats, weights: Floats) -> Line:
@@ -424,7 +406,7 @@ def fit(data: TrendData | None, options: TrendOptions) -> TrendFit:
     seen, _ = watch_levels(plots, rules, None, kept, form)
     ahead = _ahead(plan, float(positions[-1]))
     found = _diagnose(line, positions[there], used.mean[there], weights, residual, distance, sigma, freedom)
-    return TrendFit(
+    return Fit(
         limits,
         Baseline(seen.verdict, panels, seen.signals, seen.found, ahead),
         found,
@@ -604,7 +586,7 @@ def judge(limits: TrendLimits, data: TrendData, carry: TrendCarry | None) -> Tre
     seen, tail = watch_levels(plots, limits.rules, before.level, None, limits.form)
     last = float(positions[-1])
     ahead = _ahead(limits.adjustment, last)
-    return TrendJudgement(
+    return Judgement(
         seen.verdict,
         panels,
         seen.signals,
