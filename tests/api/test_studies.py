@@ -79,11 +79,11 @@ def test_a_specification_with_one_limit_looks_at_the_room_to_it() -> None:
     answer = served.answer_of(CROSSED, body)
     gauge_sd = answer["components"]["gauge"]["sd"]
     expected = 100 * 3 * gauge_sd / (2.65 - answer["grand_mean"])
-    assert answer["components"]["gauge"]["tolerance_percent"] == pytest.approx(expected)
+    assert answer["components"]["gauge"]["share_of_tolerance_percent"] == pytest.approx(expected)
     assert answer["capability"]["index"] == "cpu"
     beyond = served.answer_of(CROSSED, {**gauge(), "specification": {"upper": 2.0}})
     assert "mean-beyond-limit" in [caution["code"] for caution in beyond["cautions"]]
-    assert beyond["components"]["gauge"]["tolerance_percent"] is None
+    assert beyond["components"]["gauge"]["share_of_tolerance_percent"] is None
 
 
 def test_parts_of_one_name_under_two_appraisers_are_told() -> None:

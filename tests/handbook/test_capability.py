@@ -384,9 +384,9 @@ def test_limits_of_expected_nonconforming_by_brute_force() -> None:
     total = SigmaEstimate(1.0, n - 1.0, "overall-sd")
     found = capability(NormalSummary(0.0, None, total, n), Specification(-a, b)).expected_total
     assert found is not None
-    assert abs((area <= found.lower_ppm).mean() - 0.025) < 0.001
-    assert abs((area <= found.upper_ppm).mean() - 0.975) < 0.001
-    assert abs((area <= found.upper_bound_ppm).mean() - 0.95) < 0.0014
+    assert abs((area <= found.total_lower_ppm).mean() - 0.025) < 0.001
+    assert abs((area <= found.total_upper_ppm).mean() - 0.975) < 0.001
+    assert abs((area <= found.total_upper_bound_ppm).mean() - 0.95) < 0.0014
 
 
 def test_a_far_limit_changes_nothing() -> None:
@@ -397,9 +397,9 @@ def test_a_far_limit_changes_nothing() -> None:
     assert one is not None
     assert both is not None
     assert one.method == "non-central-t"
-    assert both.lower_ppm == pytest.approx(one.lower_ppm, rel=1e-6)
-    assert both.upper_ppm == pytest.approx(one.upper_ppm, rel=1e-6)
-    assert both.upper_bound_ppm == pytest.approx(one.upper_bound_ppm, rel=1e-6)
+    assert both.total_lower_ppm == pytest.approx(one.total_lower_ppm, rel=1e-6)
+    assert both.total_upper_ppm == pytest.approx(one.total_upper_ppm, rel=1e-6)
+    assert both.total_upper_bound_ppm == pytest.approx(one.total_upper_bound_ppm, rel=1e-6)
 
 
 # ---------------------------------------------------------------------------------------------------
@@ -473,7 +473,7 @@ def test_extremes_stay_finite_and_in_order(count: int, confidence: float) -> Non
             assert _finite(found)
             for expected in (found.expected_within, found.expected_total):
                 assert expected is not None
-                assert 0 <= expected.lower_ppm <= expected.total_ppm <= expected.upper_ppm <= 1e6
+                assert 0 <= expected.total_lower_ppm <= expected.total_ppm <= expected.total_upper_ppm <= 1e6
             if confidence > 0.6:
                 for index in (found.cp, found.cpk, found.cpu, found.cpl, found.pp, found.ppk, found.cpm):
                     assert index is not None

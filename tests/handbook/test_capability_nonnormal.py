@@ -73,12 +73,12 @@ def test_coverage_of_intervals(
         assert found.ppk.lower is not None
         assert found.ppk.upper is not None
         assert found.ppk.lower_bound is not None
-        assert found.expected.lower_ppm is not None
-        assert found.expected.upper_ppm is not None
+        assert found.expected.total_lower_ppm is not None
+        assert found.expected.total_upper_ppm is not None
         hits += [
             found.ppk.lower <= ppk <= found.ppk.upper,
             found.ppk.lower_bound <= ppk,
-            found.expected.lower_ppm <= ppm <= found.expected.upper_ppm,
+            found.expected.total_lower_ppm <= ppm <= found.expected.total_upper_ppm,
             found.pp is None
             or found.pp.lower is None
             or found.pp.upper is None

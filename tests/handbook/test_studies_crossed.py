@@ -173,7 +173,7 @@ class TestAiag:
             (found.gauge, 27.86),
             (found.part, 96.04),
         ):
-            assert component.study_variation_percent == pytest.approx(share, abs=6e-3)
+            assert component.sd_share_percent == pytest.approx(share, abs=6e-3)
         assert self.study.discrimination.distinct_categories == 4
         assert 1.41 * found.part.sd / found.gauge.sd == pytest.approx(4.86, abs=5e-3)
 
@@ -222,7 +222,7 @@ class TestPartsAndOperators:
 
     def test_tolerance(self) -> None:
         gauge = self.study.components.gauge
-        assert gauge.tolerance_percent == pytest.approx(100 * 6 * gauge.sd / 55)
+        assert gauge.share_of_tolerance_percent == pytest.approx(100 * 6 * gauge.sd / 55)
         total, part = self.study.components.total, self.study.components.part
         assert self.study.capability.observed_index == pytest.approx(55 / 6 / total.sd)
         assert self.study.capability.true_index == pytest.approx(55 / 6 / part.sd)
@@ -247,7 +247,7 @@ def test_one_operator() -> None:
     assert study.cell_ranges.mean() == pytest.approx(1.0)
     assert study.cell_ranges.mean() / 1.128 == pytest.approx(0.887, abs=5e-4)
     assert study.components.gauge.sd == pytest.approx(0.887, rel=0.03)
-    assert study.components.gauge.tolerance_percent == pytest.approx(9.7, rel=0.03)
+    assert study.components.gauge.share_of_tolerance_percent == pytest.approx(9.7, rel=0.03)
     # Exactly, from differences: sum of d²/2 over 20.
     differences = np.diff(_PARTS_OPERATORS[:, 0, :], axis=1)
     assert study.components.gauge.variance == pytest.approx(float((differences**2).mean()) / 2)
@@ -356,9 +356,9 @@ class TestIndependently:
     def test_bounds_of_categories_and_shares_agree(self) -> None:
         found = crossed(_AIAG).discrimination
         for ratio, share in (
-            (found.distinct_categories_ratio, found.gauge_contribution_percent),
-            (found.distinct_categories_ratio_lower, found.gauge_contribution_percent_upper),
-            (found.distinct_categories_ratio_upper, found.gauge_contribution_percent_lower),
+            (found.distinct_categories_ratio, found.gauge_variance_share_percent),
+            (found.distinct_categories_ratio_lower, found.gauge_variance_share_percent_upper),
+            (found.distinct_categories_ratio_upper, found.gauge_variance_share_percent_lower),
         ):
             assert ratio is not None
             assert share is not None
@@ -372,9 +372,9 @@ class TestIndependently:
         lower = max((f_ratio / f_upper_quantile(0.025, 5, 24) - 1) / 5, 0)
         upper = (f_ratio / f_upper_quantile(0.975, 5, 24) - 1) / 5
         found = study.discrimination
-        assert found.part_contribution_percent_lower == pytest.approx(100 * lower / (1 + lower))
-        assert found.part_contribution_percent_upper == pytest.approx(100 * upper / (1 + upper))
-        assert found.gauge_contribution_percent_upper == pytest.approx(100 / (1 + lower))
+        assert found.part_variance_share_percent_lower == pytest.approx(100 * lower / (1 + lower))
+        assert found.part_variance_share_percent_upper == pytest.approx(100 * upper / (1 + upper))
+        assert found.gauge_variance_share_percent_upper == pytest.approx(100 / (1 + lower))
 
 
 def _simulated(rng: np.random.Generator, means: list[float], df: list[int], runs: int) -> np.ndarray:
@@ -470,7 +470,7 @@ class TestEffects:
         gauge = crossed(_AIAG).components.gauge
         study = crossed(_AIAG, process_sd=1.0)
         assert study.discrimination.basis == "process"
-        assert study.components.gauge.study_variation_percent == pytest.approx(100 * gauge.sd)
+        assert study.components.gauge.sd_share_percent == pytest.approx(100 * gauge.sd)
         assert study.discrimination.distinct_categories_ratio == pytest.approx(
             math.sqrt(2 * (1 / gauge.variance - 1))
         )
@@ -483,7 +483,7 @@ class TestEffects:
     def test_one_sided(self) -> None:
         upper = crossed(_PARTS_OPERATORS, tolerance=OneSidedTolerance(40.0, "upper"))
         room = 40 - upper.grand_mean
-        assert upper.components.gauge.tolerance_percent == pytest.approx(
+        assert upper.components.gauge.share_of_tolerance_percent == pytest.approx(
             100 * 3 * upper.components.gauge.sd / room
         )
         assert upper.capability.index == "cpu"
@@ -494,14 +494,14 @@ class TestEffects:
             (lower.grand_mean - 5) / 3 / lower.components.total.sd
         )
         beyond = crossed(_PARTS_OPERATORS, tolerance=OneSidedTolerance(20.0, "upper"))
-        assert beyond.components.gauge.tolerance_percent is None
+        assert beyond.components.gauge.share_of_tolerance_percent is None
         assert beyond.capability.observed_index is None
         assert "mean-beyond-limit" in [note.code for note in beyond.cautions]
 
-    def test_study_multiple(self) -> None:
-        old = crossed(_AIAG, study_multiple=5.15).components.gauge
-        assert old.study_variation == pytest.approx(5.15 * old.sd)
-        assert old.study_variation_percent == crossed(_AIAG).components.gauge.study_variation_percent
+    def test_spread_multiple(self) -> None:
+        old = crossed(_AIAG, spread_multiple=5.15).components.gauge
+        assert old.spread == pytest.approx(5.15 * old.sd)
+        assert old.sd_share_percent == crossed(_AIAG).components.gauge.sd_share_percent
 
 
 class TestDegenerate:
@@ -509,11 +509,11 @@ class TestDegenerate:
         # 0.1 has no finite binary form: what rounding leaves must not pass for variation.
         study = crossed(np.full((5, 3, 2), 0.1), tolerance=1.0)
         assert study.components.total.variance == 0
-        assert study.components.total.contribution_percent is None
-        assert study.components.gauge.study_variation_percent is None
-        assert study.components.gauge.tolerance_percent == 0
+        assert study.components.total.variance_share_percent is None
+        assert study.components.gauge.sd_share_percent is None
+        assert study.components.gauge.share_of_tolerance_percent == 0
         assert study.discrimination.distinct_categories is None
-        assert study.discrimination.gauge_contribution_percent is None
+        assert study.discrimination.gauge_variance_share_percent is None
         assert study.capability.observed_index is None
         assert study.chart is None
         assert "no-variation" in [note.code for note in study.cautions]
@@ -523,8 +523,8 @@ class TestDegenerate:
         x = np.broadcast_to(shift + np.arange(5.0)[:, None, None] / 10, (5, 3, 2)).copy()
         study = crossed(x)
         assert study.components.gauge.variance == 0
-        assert study.components.gauge.contribution_percent == 0
-        assert study.components.part.contribution_percent == 100
+        assert study.components.gauge.variance_share_percent == 0
+        assert study.components.part.variance_share_percent == 100
         assert study.discrimination.distinct_categories is None
         assert study.discrimination.distinct_categories_ratio_upper is None
         assert _row(study.table, "part").f_ratio is None
@@ -579,14 +579,14 @@ class TestDegenerate:
             crossed(
                 _AIAG,
                 tolerance=-1.0,
-                study_multiple=0.0,
+                spread_multiple=0.0,
                 confidence=1.0,
                 chart_subgroup_size=0,
                 process_sd=0.0,
             )
         assert [fault.where[0] for fault in caught.value.faults] == [
             "specification",
-            "study_multiple",
+            "spread_multiple",
             "process_sd",
             "chart_subgroup_size",
             "confidence",

@@ -172,7 +172,7 @@ def test_missing_cells_are_named() -> None:
 def test_no_variation() -> None:
     study = nested(np.full((3, 4, 2), 0.3))
     assert study.components.total.variance == 0
-    assert study.components.gauge.contribution_percent is None
+    assert study.components.gauge.variance_share_percent is None
     assert study.chart is None
 
 

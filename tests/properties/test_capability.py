@@ -62,8 +62,8 @@ def test_unit_and_origin_do_not_matter(
     for name in ("expected_within", "expected_total"):
         a, b = getattr(plain, name), getattr(other, name)
         assert _near(a.total_ppm, b.total_ppm)
-        assert _near(a.lower_ppm, b.lower_ppm)
-        assert _near(a.upper_ppm, b.upper_ppm)
+        assert _near(a.total_lower_ppm, b.total_lower_ppm)
+        assert _near(a.total_upper_ppm, b.total_upper_ppm)
 
 
 @_settings
@@ -87,8 +87,8 @@ def test_reflection_swaps_the_sides(sample: list[int], limit: tuple[int, int], p
         a, b = getattr(plain, name), getattr(other, name)
         assert _near(a.below_ppm, b.above_ppm)
         assert _near(a.above_ppm, b.below_ppm)
-        assert _near(a.lower_ppm, b.lower_ppm)
-        assert _near(a.upper_ppm, b.upper_ppm)
+        assert _near(a.total_lower_ppm, b.total_lower_ppm)
+        assert _near(a.total_upper_ppm, b.total_upper_ppm)
 
 
 @_settings
@@ -123,5 +123,5 @@ def test_more_confidence_is_a_wider_interval(sample: list[int], limit: tuple[int
         assert b.method == a.method
     assert narrow.expected_total is not None
     assert wide.expected_total is not None
-    assert wide.expected_total.lower_ppm <= narrow.expected_total.lower_ppm + 1e-9
-    assert wide.expected_total.upper_ppm >= narrow.expected_total.upper_ppm - 1e-9
+    assert wide.expected_total.total_lower_ppm <= narrow.expected_total.total_lower_ppm + 1e-9
+    assert wide.expected_total.total_upper_ppm >= narrow.expected_total.total_upper_ppm - 1e-9

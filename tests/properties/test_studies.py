@@ -31,7 +31,7 @@ def _measurements(draw: st.DrawFn, *, least: tuple[int, int, int] = (2, 1, 2)) -
 
 # The power of the unit each number carries; numbers not named here carry none.
 _SQUARED = {"estimate", "variance", "variance_lower", "variance_upper", "sum_of_squares", "mean_square"}
-_PLAIN = {"sd", "sd_lower", "sd_upper", "study_variation"}
+_PLAIN = {"sd", "sd_lower", "sd_upper", "spread"}
 # What moves with the zero, or is prose.
 _APART = {
     "grand_mean",

@@ -69,6 +69,6 @@ export function capability(answer) {
   const sentence = outside?.total_ppm === undefined || outside.total_ppm === null
     ? null
     : `Expected outside the specification: ${number(Number(outside.total_ppm.toPrecision(3)))} in a million` +
-      (outside.upper_ppm ? `, with ${Math.round(100 * (found.confidence ?? 0.95))} % confidence between ${number(Number(outside.lower_ppm.toPrecision(2)))} and ${number(Number(outside.upper_ppm.toPrecision(2)))}.` : ".");
+      (outside.total_upper_ppm ? `, with ${Math.round(100 * (found.confidence ?? 0.95))} % confidence between ${number(Number(outside.total_lower_ppm.toPrecision(2)))} and ${number(Number(outside.total_upper_ppm.toPrecision(2)))}.` : ".");
   return { rows, sentence };
 }

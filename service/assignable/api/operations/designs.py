@@ -16,7 +16,7 @@ from ...spc.runlength.estimated import PERCENTILES
 from ...spc.runlength.memory import SMALLEST_SMOOTHING
 from .. import problems
 from ..contract import Contract
-from ..schemas.common import located, rules_of
+from ..schemas.common import cautions, located, rules_of
 from ..schemas.design_cases import (
     AttributeDesignAnswer,
     AttributeDesignRequest,
@@ -90,7 +90,15 @@ def design_subgroups(loaded: dict[str, Any]) -> dict[str, Any]:
         comparison = subgroups.compare(
             [_plan(one) for one in loaded["candidates"]], shift, shift_moment=moment
         )
-    return {"plan": plan, "characteristics": found, "present": present, "comparison": comparison}
+    return {
+        "plan": plan,
+        "characteristics": found,
+        "present": present,
+        "comparison": comparison,
+        "cautions": cautions(
+            () if rules is None or (plan is None and comparison is None) else (subgroups.RULES_LEFT_OUT,)
+        ),
+    }
 
 
 def design_ewma(loaded: dict[str, Any]) -> dict[str, Any]:

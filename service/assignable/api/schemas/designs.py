@@ -25,7 +25,7 @@ from ...spc.runlength import memory
 from .. import fields as f
 from ..contract import Provenance
 from . import derive
-from .common import RulesRequest
+from .common import CAUTIONS, CautionAnswer, RulesRequest
 
 HOURS = {"least": 1e-6, "most": 1e6}
 MOST_PLANS = 100
@@ -102,7 +102,11 @@ class SubgroupDesignRequest(f.RequestShape):
         metadata={"description": "Plans to be ranked by their time to signal."},
     )
     rules = f.Object(
-        RulesRequest, metadata={"description": "Run rules, for the operating characteristics of a plan."}
+        RulesRequest,
+        metadata={
+            "description": "Run rules, for the operating characteristics of a plan; `plan` and `comparison` go by the "
+            "limits alone, and a caution says so."
+        },
     )
     shifts = f.NumberList(
         least=-LARGEST_SHIFT,
@@ -121,7 +125,7 @@ class SubgroupDesignAnswer(f.AnswerShape):
         derive.answer(PlanPerformance),
         required=True,
         allow_none=True,
-        metadata={"description": "The plan that achieves what `detect` asks."},
+        metadata={"description": "The plan that achieves what `detect` asks, by its limits alone."},
     )
     characteristics = f.Object(
         derive.answer(OperatingCharacteristics),
@@ -141,8 +145,9 @@ class SubgroupDesignAnswer(f.AnswerShape):
         derive.answer(Comparison),
         required=True,
         allow_none=True,
-        metadata={"description": "The candidates, the quickest first."},
+        metadata={"description": "The candidates by their limits alone, the quickest first."},
     )
+    cautions = f.ObjectList(CautionAnswer, **CAUTIONS)
     provenance = PROVENANCE
 
 

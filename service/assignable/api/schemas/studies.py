@@ -67,12 +67,12 @@ class GaugeRequest(f.RequestShape):
             "distance from the mean to its only limit."
         },
     )
-    study_multiple = f.StrictNumber(
+    spread_multiple = f.StrictNumber(
         above=0,
         most=100,
         load_default=6.0,
         metadata={
-            "description": "Standard deviations in the study variation; 6 unless given; older practice has 5.15."
+            "description": "Standard deviations that make up a spread; 6 unless given; older practice has 5.15."
         },
     )
     process_sd = f.StrictNumber(
@@ -220,7 +220,7 @@ def tolerance_of(loaded: dict[str, Any]) -> float | OneSidedTolerance | None:
 
 def terms_of(loaded: dict[str, Any]) -> dict[str, Any]:
     """The options of a gauge study by the names of the numerics."""
-    names = ("study_multiple", "process_sd", "confidence", "chart_shift", "chart_subgroup_size")
+    names = ("spread_multiple", "process_sd", "confidence", "chart_shift", "chart_subgroup_size")
     return {"tolerance": tolerance_of(loaded), **{name: loaded[name] for name in names if name in loaded}}
 
 

@@ -64,9 +64,9 @@ class JointCapability:
     conforming: Annotated[float, "Share of the product that conforms in every characteristic."]
     nonconforming_ppm: Annotated[float, "The rest, in parts per million."]
     standard_error_ppm: Annotated[float, "Of its numerical integration."]
-    lower_ppm: Annotated[float, "Lower end of its interval for the sample taken."]
-    upper_ppm: Annotated[float, "Upper end of it."]
-    upper_bound_ppm: Annotated[float, "One-sided bound: the true share is at most this."]
+    total_lower_ppm: Annotated[float, "Lower end of its interval for the sample taken."]
+    total_upper_ppm: Annotated[float, "Upper end of it."]
+    total_upper_bound_ppm: Annotated[float, "One-sided bound: the true share is at most this."]
     independent_ppm: Annotated[float, "What it would be if the characteristics were independent."]
     index: Annotated[
         float | None,
@@ -168,9 +168,9 @@ def assess(
         conforming=1.0 - joint,
         nonconforming_ppm=joint * _MILLION,
         standard_error_ppm=error * _MILLION,
-        lower_ppm=min(ends[0], joint) * _MILLION,
-        upper_ppm=max(ends[1], joint) * _MILLION,
-        upper_bound_ppm=ends[2] * _MILLION,
+        total_lower_ppm=min(ends[0], joint) * _MILLION,
+        total_upper_ppm=max(ends[1], joint) * _MILLION,
+        total_upper_bound_ppm=ends[2] * _MILLION,
         independent_ppm=-math.expm1(float(np.log1p(-np.minimum(own, 1.0 - 1e-16)).sum())) * _MILLION,
         index=float(-scipy.special.ndtri(joint)) / 3.0 if 0.0 < joint < 1.0 else None,
         correlation=tuple(map(tuple, correlation.tolist())),

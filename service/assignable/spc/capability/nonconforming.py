@@ -31,9 +31,9 @@ class Nonconforming:
     below_ppm: Annotated[float | None, "Below the lower limit; null where there is none."]
     above_ppm: Annotated[float | None, "Above the upper limit; null where there is none."]
     total_ppm: Annotated[float, "Outside the limits there are."]
-    lower_ppm: Annotated[float, "Lower end of the two-sided interval for the total, at the confidence asked."]
-    upper_ppm: Annotated[float, "Upper end of it."]
-    upper_bound_ppm: Annotated[
+    total_lower_ppm: Annotated[float, "Lower end of the two-sided interval for the total, at the confidence asked."]
+    total_upper_ppm: Annotated[float, "Upper end of it."]
+    total_upper_bound_ppm: Annotated[
         float, "One-sided bound: the true total is at most this, with the confidence asked."
     ]
     method: Annotated[str, "Of interval and bound."]
@@ -48,8 +48,8 @@ class ObservedNonconforming:
     total: Annotated[int, "Values outside the limits there are."]
     inspected: Annotated[int, "How many values there were."]
     total_ppm: Annotated[float, "Their share in parts per million."]
-    lower_ppm: Annotated[float, "Lower end of its two-sided interval, at the confidence asked."]
-    upper_ppm: Annotated[float, "Upper end of it."]
+    total_lower_ppm: Annotated[float, "Lower end of its two-sided interval, at the confidence asked."]
+    total_upper_ppm: Annotated[float, "Upper end of it."]
     method: Annotated[str, "Of the interval."] = "clopper-pearson-1934"
 
 

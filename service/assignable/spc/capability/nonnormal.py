@@ -107,11 +107,11 @@ class ExpectedByDistribution:
     below_ppm: Annotated[float | None, "Below the lower limit; null where there is none."]
     above_ppm: Annotated[float | None, "Above the upper limit; null where there is none."]
     total_ppm: Annotated[float, "Outside the limits there are."]
-    lower_ppm: Annotated[
+    total_lower_ppm: Annotated[
         float | None, "Lower end of the two-sided interval for the total; null where unknown."
     ]
-    upper_ppm: Annotated[float | None, "Upper end of it."]
-    upper_bound_ppm: Annotated[float | None, "One-sided bound: the true total is at most this."]
+    total_upper_ppm: Annotated[float | None, "Upper end of it."]
+    total_upper_bound_ppm: Annotated[float | None, "One-sided bound: the true total is at most this."]
 
 
 @dataclass(frozen=True, slots=True)
@@ -524,8 +524,8 @@ def _empirical(sample: Sample, specification: Specification, confidence: float) 
             None if seen.below is None else seen.below / n * _MILLION,
             None if seen.above is None else seen.above / n * _MILLION,
             seen.total_ppm,
-            seen.lower_ppm,
-            seen.upper_ppm,
+            seen.total_lower_ppm,
+            seen.total_upper_ppm,
             bound * _MILLION,
         ),
         observed=seen,

@@ -231,7 +231,7 @@ def sample_sizes(chart: CountChart, data: Counts) -> Floats:
             faults.append(
                 Fault(
                     "count-above-inspected",
-                    f"{counts[at]:g} nonconforming units among {inspected[at]:g} inspected is not possible.",
+                    f"{counts[at]:.15g} nonconforming units among {inspected[at]:.15g} inspected is not possible.",
                     ("data", "counts", at),
                 )
             )
@@ -245,10 +245,10 @@ def sample_sizes(chart: CountChart, data: Counts) -> Floats:
         use = "p" if chart == "np" else "u"
         raise UnusableData.of(
             "size-varies",
-            f"An {chart} chart needs samples of one size; sample {other} holds {inspected[other]:g} where the "
-            f"first holds {sizes[0]:g}. Use the {use} chart."
+            f"An {chart} chart needs samples of one size; sample {other} holds {inspected[other]:.15g} where the "
+            f"first holds {sizes[0]:.15g}. Use the {use} chart."
             if chart == "np"
-            else f"A c chart needs one area of opportunity; sample {other} has {inspected[other]:g} where the "
+            else f"A c chart needs one area of opportunity; sample {other} has {inspected[other]:.15g} where the "
             f"first has {sizes[0]:g}. Use the {use} chart.",
             "data",
             "inspected",
@@ -446,7 +446,7 @@ def judge(
         other = "p" if chart == "np" else "u"
         raise UnusableData.of(
             "size-differs",
-            f"The limits are for samples of {limits.sample_size:g}; these hold {sizes[0]:g}. Use the "
+            f"The limits are for samples of {limits.sample_size:.15g}; these hold {sizes[0]:.15g}. Use the "
             f"{other} chart where sizes vary.",
             "data",
             "inspected",

@@ -265,6 +265,7 @@ def fit(data: Individuals | None, options: IndividualsOptions) -> IndividualsFit
             caution.few_individuals(filled),
             caution.autocorrelated(found.autocorrelation),
             _not_normal(found) if known.shaped is None else None,
+            None if found.normality else caution.normality_untested(filled),
             *nonnormal.cautions(known.choice, filled),
             caution.coarse_resolution(found.resolution),
             change_points.caution_of_level(found.change_point),

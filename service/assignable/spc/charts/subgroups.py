@@ -509,9 +509,12 @@ def _cautions(
     return caution.collect(
         caution.few_subgroups(filled),
         caution.large_subgroups(used),
+        None if used.common_size else caution.single_value_subgroups(used),
         caution.range_inefficient(used) if limits.sigma_estimator in ("mean-range", "median-range") else None,
         caution.autocorrelated(found.autocorrelation),
         caution.not_normal(found.normality),
+        # Summaries have no resolution, and say nothing of normality either.
+        caution.normality_untested(int(used.size.sum())) if found.resolution and not found.normality else None,
         caution.coarse_resolution(found.resolution),
         caution.unstable_spread(found.spread_stability),
         change_points.caution_of_level(found.change_point),

@@ -22,6 +22,7 @@ from typing import Annotated, Literal, TypeAlias
 import numpy as np
 import scipy
 
+from ..cautions import Caution
 from ..data import Booleans, Floats
 from ..errors import UnusableParameter
 from ..rules import Rule
@@ -41,6 +42,15 @@ LARGEST_MULTIPLE = 8.0
 _SHORTEST_HOURS = 1e-6
 _LONGEST_HOURS = 1e6
 _SAME_RATE = 1e-3
+
+
+RULES_LEFT_OUT = Caution(
+    "rules-not-in-plan",
+    "The plan was sought, and the candidates ranked, by the limits alone; the run rules are in the operating "
+    "characteristics, which show how much sooner they find a shift and how many more false alarms they give.",
+    ("rules",),
+    "champ-woodall-1987",
+)
 
 
 @dataclass(frozen=True, slots=True)

@@ -102,15 +102,15 @@ def _rest(pad: Pad, found: CrossedStudy | NestedStudy, asked: Any, process_sd: f
         part = pad.work(
             "Variance of the parts of the process", "total - gauge", None, total=total, gauge=gauge
         )
-    if parts.gauge.study_variation_percent is not None:
+    if parts.gauge.sd_share_percent is not None:
         pad.work(
             "Gauge in percent of the total standard deviation",
             "100 * sqrt(gauge / total)",
-            "#/components/gauge/study_variation_percent",
+            "#/components/gauge/sd_share_percent",
             gauge=gauge,
             total=total,
         )
-    if parts.gauge.tolerance_percent is not None:
+    if parts.gauge.share_of_tolerance_percent is not None:
         room: Value
         if isinstance(asked, OneSidedTolerance):
             room = pad.work(
@@ -125,8 +125,8 @@ def _rest(pad: Pad, found: CrossedStudy | NestedStudy, asked: Any, process_sd: f
         pad.work(
             "Gauge in percent of the specification",
             "100 * multiple * sqrt(gauge) / width",
-            "#/components/gauge/tolerance_percent",
-            multiple=found.study_multiple,
+            "#/components/gauge/share_of_tolerance_percent",
+            multiple=found.spread_multiple,
             gauge=gauge,
             width=room,
         )

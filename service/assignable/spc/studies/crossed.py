@@ -80,7 +80,7 @@ class CrossedStudy:
         "The one with the interaction kept; null where the design cannot estimate it (one trial, one appraiser).",
     ]
     confidence: Annotated[float, "Of each interval by itself."]
-    study_multiple: Annotated[float, "Standard deviations that make up the study variation."]
+    spread_multiple: Annotated[float, "Standard deviations that make up a spread."]
     components: Annotated[GaugeComponents, "The components of the variation."]
     discrimination: Annotated[GaugeDiscrimination, "How finely the gauge tells parts apart."]
     capability: Annotated[GaugeOnCapability, "What the gauge does to a capability index."]
@@ -98,7 +98,7 @@ def crossed(
     measurements: Floats,
     *,
     tolerance: float | OneSidedTolerance | None = None,
-    study_multiple: float = 6.0,
+    spread_multiple: float = 6.0,
     pooling_alpha: float | None = 0.05,
     process_sd: float | None = None,
     confidence: float = 0.95,
@@ -109,7 +109,7 @@ def crossed(
 
     measurements: (parts, appraisers, trials), no cell missing.
     tolerance: width of the specification in the unit of measurement, or its only limit.
-    study_multiple: standard deviations that make up the study variation (6; 5.15 in older practice).
+    spread_multiple: standard deviations that make up a spread (6; 5.15 in older practice).
     pooling_alpha: the interaction is pooled into repeatability when its p-value exceeds this; ``None``
         keeps it always.
     process_sd: standard deviation seen in production (gauge included); shares, categories and effects
@@ -127,7 +127,7 @@ def crossed(
     """
     asked = terms(
         tolerance=tolerance,
-        study_multiple=study_multiple,
+        spread_multiple=spread_multiple,
         process_sd=process_sd,
         confidence=confidence,
         chart_shift=chart_shift,
@@ -254,7 +254,7 @@ def crossed(
         table,
         full,
         confidence,
-        study_multiple,
+        spread_multiple,
         made.components,
         made.discrimination,
         made.capability,

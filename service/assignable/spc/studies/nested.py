@@ -44,7 +44,7 @@ class NestedStudy:
     grand_mean: Annotated[float, "Mean of all measurements."]
     table: Annotated[tuple[AnovaRow, ...], "The analysis of variance."]
     confidence: Annotated[float, "Of each interval by itself."]
-    study_multiple: Annotated[float, "Standard deviations that make up the study variation."]
+    spread_multiple: Annotated[float, "Standard deviations that make up a spread."]
     components: Annotated[GaugeComponents, "The components of the variation."]
     discrimination: Annotated[GaugeDiscrimination, "How finely the gauge tells parts apart."]
     capability: Annotated[GaugeOnCapability, "What the gauge does to a capability index."]
@@ -61,7 +61,7 @@ def nested(
     measurements: Floats,
     *,
     tolerance: float | OneSidedTolerance | None = None,
-    study_multiple: float = 6.0,
+    spread_multiple: float = 6.0,
     process_sd: float | None = None,
     confidence: float = 0.95,
     chart_shift: float = 1.0,
@@ -81,7 +81,7 @@ def nested(
     """
     asked = terms(
         tolerance=tolerance,
-        study_multiple=study_multiple,
+        spread_multiple=spread_multiple,
         process_sd=process_sd,
         confidence=confidence,
         chart_shift=chart_shift,
@@ -151,7 +151,7 @@ def nested(
         grand_mean,
         (*rows, total_row(rows)),
         confidence,
-        study_multiple,
+        spread_multiple,
         made.components,
         made.discrimination,
         made.capability,

@@ -81,20 +81,20 @@ class VarianceComponent:
     sd: Annotated[float, "Standard deviation: the root of the variance, in the unit of the measurements."]
     sd_lower: Annotated[float, "Its lower confidence bound."]
     sd_upper: Annotated[float, "Its upper confidence bound."]
-    contribution_percent: Annotated[
+    variance_share_percent: Annotated[
         float | None, "Share of the total variance, in percent; null where nothing varies at all."
     ]
-    study_variation: Annotated[
-        float, "The study multiple times the standard deviation, in the unit of the measurements."
+    spread: Annotated[
+        float, "The spread multiple times the standard deviation, in the unit of the measurements."
     ]
-    study_variation_percent: Annotated[
+    sd_share_percent: Annotated[
         float | None,
         "Standard deviation over the total standard deviation, in percent; these do not add up to 100. Null where "
         "nothing varies at all.",
     ]
-    tolerance_percent: Annotated[
+    share_of_tolerance_percent: Annotated[
         float | None,
-        "Study variation over the width of the specification, in percent; with one limit, half of it over the "
+        "That spread over the width of the specification, in percent; with one limit, half of it over the "
         "distance from the mean to that limit. Null without a specification, or with the mean beyond its only limit.",
     ]
 
@@ -137,14 +137,14 @@ class GaugeDiscrimination:
     distinct_categories_ratio: Annotated[float | None, "The root of 2 times that ratio, not cut."]
     distinct_categories_ratio_lower: Annotated[float | None, "Lower confidence bound of the ratio."]
     distinct_categories_ratio_upper: Annotated[float | None, "Upper confidence bound of the ratio."]
-    gauge_contribution_percent: Annotated[float | None, "Gauge variance over total variance, in percent."]
-    gauge_contribution_percent_lower: Annotated[float | None, "Its lower confidence bound."]
-    gauge_contribution_percent_upper: Annotated[float | None, "Its upper confidence bound."]
-    part_contribution_percent: Annotated[
+    gauge_variance_share_percent: Annotated[float | None, "Gauge variance over total variance, in percent."]
+    gauge_variance_share_percent_lower: Annotated[float | None, "Its lower confidence bound."]
+    gauge_variance_share_percent_upper: Annotated[float | None, "Its upper confidence bound."]
+    part_variance_share_percent: Annotated[
         float | None, "Its complement to 100: the intraclass correlation, in percent."
     ]
-    part_contribution_percent_lower: Annotated[float | None, "Its lower confidence bound."]
-    part_contribution_percent_upper: Annotated[float | None, "Its upper confidence bound."]
+    part_variance_share_percent_lower: Annotated[float | None, "Its lower confidence bound."]
+    part_variance_share_percent_upper: Annotated[float | None, "Its upper confidence bound."]
 
 
 @dataclass(frozen=True, slots=True)
@@ -193,7 +193,7 @@ class Terms:
     """The options the studies share, validated by :func:`terms`."""
 
     tolerance: float | OneSidedTolerance | None
-    study_multiple: float
+    spread_multiple: float
     process_sd: float | None
     confidence: float
     chart_shift: float
@@ -212,7 +212,7 @@ def confidence_faults(confidence: float) -> list[Fault]:
 def terms(
     *,
     tolerance: float | OneSidedTolerance | None,
-    study_multiple: float,
+    spread_multiple: float,
     process_sd: float | None,
     confidence: float,
     chart_shift: float,
@@ -231,7 +231,7 @@ def terms(
             faults.append(Fault("out-of-range", detail, ("specification", tolerance.side)))
     elif tolerance is not None:
         positive(tolerance, "specification", "The width of the tolerance")
-    positive(study_multiple, "study_multiple", "The study multiple")
+    positive(spread_multiple, "spread_multiple", "The spread multiple")
     if process_sd is not None:
         positive(process_sd, "process_sd", "The standard deviation of the process")
     positive(chart_shift, "chart_shift", "The shift of the process")
@@ -240,7 +240,7 @@ def terms(
     faults += confidence_faults(confidence)
     if faults:
         raise UnusableParameter(*faults)
-    return Terms(tolerance, study_multiple, process_sd, confidence, chart_shift, chart_subgroup_size)
+    return Terms(tolerance, spread_multiple, process_sd, confidence, chart_shift, chart_subgroup_size)
 
 
 def complete(measurements: Floats, *, axes: str) -> None:
@@ -537,9 +537,9 @@ def assemble(model: Model, asked: Terms, grand_mean: float) -> Assembled:
             math.sqrt(lower),
             math.sqrt(upper),
             100 * variance / total_variance if total_variance > 0 else None,
-            asked.study_multiple * sd,
+            asked.spread_multiple * sd,
             100 * math.sqrt(variance / total_variance) if total_variance > 0 else None,
-            None if distance is None else 100 * asked.study_multiple * sd / distance,
+            None if distance is None else 100 * asked.spread_multiple * sd / distance,
         )
 
     several = model.appraiser is not None
