@@ -8,6 +8,7 @@ Ratios of one run are what to quote: absolute times change with the machine. Not
 
 from __future__ import annotations
 
+import functools
 import io
 import os
 import resource
@@ -21,6 +22,10 @@ import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from flask import Flask
 
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 os.environ["ASSIGNABLE_LOG"] = "off"
@@ -53,11 +58,16 @@ def fit_body() -> bytes:
     )
 
 
-def post(path: str, body: bytes, application=None) -> bytes:
-    """One request through the application, without a socket."""
+@functools.cache
+def application() -> Flask:
+    """The application, made once."""
     from assignable.api.app import create_app
 
-    application = application or post.__dict__.setdefault("application", create_app())
+    return create_app()
+
+
+def post(path: str, body: bytes) -> bytes:
+    """One request through the application, without a socket."""
     environ = {
         "REQUEST_METHOD": "POST",
         "PATH_INFO": path,
@@ -78,7 +88,7 @@ def post(path: str, body: bytes, application=None) -> bytes:
         "HTTP_HOST": "localhost",
     }
     status: list[str] = []
-    answer = application.wsgi_app(environ, lambda s, h, e=None: status.append(s))
+    answer = application().wsgi_app(environ, lambda s, h, e=None: status.append(s))
     written = b"".join(answer)
     assert status[0].startswith("200"), written[:500]
     return written
@@ -549,10 +559,126 @@ def designs() -> None:
         )
 
 
+# ---------------------------------------------------------------------------------------------------
+# Every chart at 200,000 points
+
+
+def _series(name: str, m: int) -> dict[str, object]:
+    """The chart's own example with invented data of m points in its place."""
+    import json
+
+    import numpy as np
+
+    example = HERE.parents[1] / "openapi" / "examples" / f"{name}-limits.request.json"
+    asked = json.loads(example.read_text())
+    for left_out in ("exclude", "subgroup_size", "adjustment"):
+        asked.pop(left_out, None)
+    draw = np.random.default_rng(3)
+    values = draw.normal(2.5, 0.012, m).round(4).tolist()
+    data: dict[str, object]
+    if name in ("ewma", "cusum", "moving-average", "trend", "residual"):
+        data = (
+            {"values": values}
+            if "values" in asked["data"] and name == "residual"
+            else {"individuals": values}
+        )
+    elif name == "individuals":
+        data = {"values": values}
+    elif name in ("p", "np", "p-prime"):
+        data = {"counts": draw.binomial(120, 0.06, m).tolist(), "inspected": 120}
+    elif name in ("c", "u", "u-prime"):
+        data = {"counts": draw.poisson(9.0, m).tolist(), **({} if name == "c" else {"inspected": 1.5})}
+    elif name in ("g", "t"):
+        spread = draw.geometric(0.02, m) if name == "g" else draw.exponential(40.0, m).round(3)
+        data = {"intervals": spread.tolist()}
+    elif name in ("t-squared", "mewma"):
+        variables = asked["data"]["variables"]
+        data = {
+            "variables": variables,
+            "values": draw.normal(0.0, 1.0, (m, len(variables))).round(3).tolist(),
+        }
+    else:
+        data = {"values": draw.normal(2.5, 0.012, (m, 5)).round(4).tolist()}
+    return {**asked, "data": data}
+
+
+def _plain_work(name: str, data: dict[str, object]) -> dict[str, object]:
+    """The chart's own arithmetic in a few array calls: what any implementation must do."""
+    import numpy as np
+    import scipy
+
+    column = next(data[key] for key in ("values", "individuals", "counts", "intervals") if key in data)
+    x = np.array(column, dtype=float)
+    if x.ndim == 2 and name in ("t-squared", "mewma"):
+        if name == "mewma":
+            x = scipy.signal.lfilter([0.1], [1.0, -0.9], x, axis=0)
+        z = x - x.mean(axis=0)
+        factor = np.linalg.cholesky(np.cov(z.T))
+        return {"t_squared": (np.linalg.solve(factor, z.T) ** 2).sum(axis=0)}
+    if x.ndim == 2:
+        return {"mean": x.mean(axis=1), "spread": x.std(axis=1, ddof=1)}
+    z = (x - x.mean()) / x.std()
+    if name == "ewma":
+        return {"ewma": scipy.signal.lfilter([0.1], [1.0, -0.9], z)}
+    if name == "cusum":
+        upper, lower = np.cumsum(z - 0.5), np.cumsum(-z - 0.5)
+        return {"upper": upper - np.minimum.accumulate(upper), "lower": lower - np.minimum.accumulate(lower)}
+    if name == "moving-average":
+        return {"average": np.convolve(z, np.full(4, 0.25), "same")}
+    if name in ("individuals", "trend", "residual"):
+        return {"value": x, "moving_range": np.abs(np.diff(x))}
+    return {"value": x / x.mean()}
+
+
+def _as_answered(found: dict[str, object]) -> dict[str, object]:
+    """The points with their places and lines, which is what the answer has to write."""
+    import numpy as np
+
+    return {
+        name: {
+            "index": np.arange(len(value)),
+            "value": value,
+            **{line: np.full(len(value), 2.5162123) for line in ("centre", "lower", "upper")},
+        }
+        for name, value in found.items()
+    }
+
+
+def charts() -> None:
+    """Fit and judge of 200,000 points, bytes in and bytes out, against the chart's own arithmetic so done."""
+    import orjson
+    import scipy.signal  # noqa: F401 - loading it is no part of the arithmetic
+
+    from assignable.spc.charts import CHARTS
+
+    chosen = [name for name in CHARTS if name not in ("xbar-r", "short-run", "acceptance")]
+    for name in chosen:
+        asked = _series(name, 200_000)
+        body = orjson.dumps(asked)
+        small = orjson.dumps(_series(name, 60))
+        path = f"/v1/charts/{name}"
+        post(f"{path}/limits", small)
+        limits = orjson.loads(post(f"{path}/limits", body))["limits"]
+        judged = orjson.dumps({"limits": limits, "data": asked["data"]})
+
+        def floor(body: bytes = body, name: str = name) -> bytes:
+            found = _plain_work(name, orjson.loads(body)["data"])
+            return orjson.dumps(_as_answered(found), option=orjson.OPT_SERIALIZE_NUMPY)
+
+        for verb, sent in (("limits", body), ("signals", judged)):
+            ask = functools.partial(post, f"{path}/{verb}", sent)
+            pairs = [(_cpu(ask, 1), _cpu(floor, 1)) for _ in range(3)]
+            ours, bare = min(a for a, _ in pairs), min(b for _, b in pairs)
+            what = "fit" if verb == "limits" else "judge"
+            measured = f"{ours * 1e3:.0f} of {bare * 1e3:.0f} ms CPU"
+            row(f"charts: {name}, {what}, 200,000 points", measured, ours / bare, "aim ≤ 2")
+
+
 ROWS = {
     "http": http,
     "large": large,
     "memory": memory,
+    "charts": charts,
     "runs": runs,
     "designs": designs,
     "start": start,
