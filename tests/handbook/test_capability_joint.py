@@ -74,7 +74,9 @@ def test_its_parts_agree() -> None:
     for one in found.characteristics:
         assert one.alone_ppm <= one.nonconforming_ppm
     assert sum(one.share for one in found.characteristics) == pytest.approx(1.0)
-    assert found.total_lower_ppm < found.nonconforming_ppm < found.total_upper_bound_ppm < found.total_upper_ppm
+    assert (
+        found.total_lower_ppm < found.nonconforming_ppm < found.total_upper_bound_ppm < found.total_upper_ppm
+    )
     assert found.index is not None
     assert 1e6 * scipy.special.ndtr(-3.0 * found.index) == pytest.approx(found.nonconforming_ppm)
     outside = (np.abs(z[:, 0]) > 3.0) | (z[:, 1] > 2.5) | (np.abs(z[:, 2]) > 4.0)

@@ -306,7 +306,9 @@ def _expected(found: Capability | QuantileCapability) -> list[str]:
         else found.expected_total or found.expected_within
     )
     if expected is not None:
-        low, high = ("…" if at is None else _ppm(at) for at in (expected.total_lower_ppm, expected.total_upper_ppm))
+        low, high = (
+            "…" if at is None else _ppm(at) for at in (expected.total_lower_ppm, expected.total_upper_ppm)
+        )
         words.append(f"Expected nonconforming: {_ppm(expected.total_ppm)} ppm ({low} to {high}).")
     if found.observed is not None:
         words.append(f"Observed: {found.observed.total:,} of {found.observed.inspected:,}.")

@@ -31,7 +31,9 @@ class Nonconforming:
     below_ppm: Annotated[float | None, "Below the lower limit; null where there is none."]
     above_ppm: Annotated[float | None, "Above the upper limit; null where there is none."]
     total_ppm: Annotated[float, "Outside the limits there are."]
-    total_lower_ppm: Annotated[float, "Lower end of the two-sided interval for the total, at the confidence asked."]
+    total_lower_ppm: Annotated[
+        float, "Lower end of the two-sided interval for the total, at the confidence asked."
+    ]
     total_upper_ppm: Annotated[float, "Upper end of it."]
     total_upper_bound_ppm: Annotated[
         float, "One-sided bound: the true total is at most this, with the confidence asked."

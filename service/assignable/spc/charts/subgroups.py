@@ -514,7 +514,9 @@ def _cautions(
         caution.autocorrelated(found.autocorrelation),
         caution.not_normal(found.normality),
         # Summaries have no resolution, and say nothing of normality either.
-        caution.normality_untested(int(used.size.sum())) if found.resolution and not found.normality else None,
+        caution.normality_untested(int(used.size.sum()))
+        if found.resolution and not found.normality
+        else None,
         caution.coarse_resolution(found.resolution),
         caution.unstable_spread(found.spread_stability),
         change_points.caution_of_level(found.change_point),
