@@ -35,6 +35,7 @@ from ..api.settings import BadSettings, Settings
 
 # Seconds a stopping server waits for the requests it has; whoever kills it must wait longer.
 GRACE_SECONDS = 30
+SWITCH_SECONDS = 0.02
 
 _LOADED_BEFORE_FORK = ("scipy.special", "scipy.linalg", "scipy.sparse")
 _FIRST_CALCULATION = ("fitXbarRLimits", "xbar-r-limits")
@@ -148,6 +149,9 @@ class Server(BaseApplication):  # type: ignore[misc]
     """Gunicorn around an application that is loaded already."""
 
     def __init__(self, app: Flask, settings: Settings, *, demonstrate: bool = False) -> None:
+        # Threads that wait for the interpreter ask for it at this interval. At Python's own, 5 ms, a worker
+        # under load can spend more than half of its time on handing it over.
+        sys.setswitchinterval(SWITCH_SECONDS)
         self._app = app
         self._settings = settings
         self._demonstrate = demonstrate
