@@ -9,8 +9,9 @@ from typing import Any
 from ...verification import runner
 from .. import fields as f
 from .. import strict_json
-from ..contract import Contract, Provenance
+from ..contract import Contract
 from ..schemas import derive
+from ..schemas.common import PROVENANCE
 
 TAG = "Verification"
 _KEPT = "assignable.verification"
@@ -19,11 +20,7 @@ VerificationAnswer = derive.answer(
     runner.Verification,
     "VerificationAnswer",
     "Every published case, run on this installation.",
-    {
-        "provenance": f.Object(
-            Provenance, required=True, metadata={"description": "What computed this answer."}
-        )
-    },
+    {"provenance": PROVENANCE},
 )
 
 

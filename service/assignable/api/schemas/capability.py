@@ -32,9 +32,8 @@ from ...spc.diagnostics import Dispersion
 from ...spc.errors import UnusableData, UnusableParameter
 from ...spc.sigma import WITHIN, SigmaEstimate
 from .. import fields as f
-from ..contract import Provenance
 from . import derive
-from .common import CAUTIONS, CautionAnswer, Characteristic
+from .common import CAUTIONS, PROVENANCE, CautionAnswer, Characteristic
 
 
 class SpecificationRequest(f.RequestShape):
@@ -225,7 +224,7 @@ class MeasurementsAnswer(f.AnswerShape):
         metadata={"description": "What the values show about themselves; null from a summary."},
     )
     cautions = f.ObjectList(CautionAnswer, **CAUTIONS)
-    provenance = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
+    provenance = PROVENANCE
 
 
 # Counted characteristics ----------------------------------------------------------------------------
@@ -305,7 +304,7 @@ class AttributeCapabilityAnswer(f.AnswerShape):
         },
     )
     cautions = f.ObjectList(CautionAnswer, **CAUTIONS)
-    provenance = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
+    provenance = PROVENANCE
 
 
 # Several characteristics ----------------------------------------------------------------------------
@@ -359,7 +358,7 @@ class SeveralAnswer(f.AnswerShape):
         metadata={"description": "The share, what each characteristic does to it, and its interval."},
     )
     cautions = f.ObjectList(CautionAnswer, **CAUTIONS)
-    provenance = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
+    provenance = PROVENANCE
 
 
 # Conformance under measurement uncertainty ----------------------------------------------------------
@@ -497,4 +496,4 @@ class ConformanceAnswer(f.AnswerShape):
         },
     )
     cautions = f.ObjectList(CautionAnswer, **CAUTIONS)
-    provenance = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
+    provenance = PROVENANCE

@@ -11,6 +11,7 @@ from ...spc.cautions import Caution
 from ...spc.errors import Fault, SpcError, UnusableParameter, Where
 from ...spc.rules import FARTHEST_DISTANCE, LONGEST_WINDOW, MOST_RULES, PUBLISHED, Rule
 from .. import fields as f
+from ..contract import Provenance
 
 
 class Characteristic(f.RequestShape):
@@ -52,6 +53,7 @@ CAUTIONS: dict[str, Any] = {
     "required": True,
     "metadata": {"description": "What a qualified person should know about this answer; often empty."},
 }
+PROVENANCE = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
 
 
 @contextmanager

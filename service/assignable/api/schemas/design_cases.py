@@ -9,7 +9,7 @@ from ...spc.factors import LARGEST_SIZE
 from ...spc.runlength import estimated
 from .. import fields as f
 from . import derive
-from .designs import PROVENANCE
+from .common import PROVENANCE
 
 MOST_LEVELS = 100
 _LEVEL: dict[str, Any] = {"least": attributes.SMALLEST_LEVEL, "most": attributes.LARGEST_MEAN}

@@ -23,14 +23,12 @@ from ...spc.design.subgroups import (
 )
 from ...spc.runlength import memory
 from .. import fields as f
-from ..contract import Provenance
 from . import derive
-from .common import CAUTIONS, CautionAnswer, RulesRequest
+from .common import CAUTIONS, PROVENANCE, CautionAnswer, RulesRequest
 
 HOURS = {"least": 1e-6, "most": 1e6}
 MOST_PLANS = 100
 USUAL_SHIFTS = (0.25, 0.5, 0.75, 1.0, 1.5, 2.0, 3.0)
-PROVENANCE = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
 
 
 class PlanRequest(f.RequestShape):

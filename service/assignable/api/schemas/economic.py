@@ -8,8 +8,8 @@ from ...spc.design import economic
 from ...spc.design.economic import EconomicDesign, ProcessEconomics, Requirements
 from .. import fields as f
 from . import derive
-from .common import RulesRequest
-from .designs import HOURS, PROVENANCE, PlanRequest
+from .common import PROVENANCE, RulesRequest
+from .designs import HOURS, PlanRequest
 
 _COST = {"least": 0.0, "most": economic.LARGEST_COST}
 _TIME = {"least": 0.0, "most": economic.LONGEST_HOURS}

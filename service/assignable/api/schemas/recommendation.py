@@ -11,9 +11,8 @@ from ...spc.errors import Fault, UnusableData, UnusableParameter
 from ...spc.factors import LARGEST_SIZE
 from ...spc.recommendation import Description, Dispersion, Evidence, Kind, Recommendation
 from .. import fields as f
-from ..contract import Provenance
 from . import derive
-from .common import Characteristic
+from .common import PROVENANCE, Characteristic
 
 MOST_VARIABLES = 50
 
@@ -217,4 +216,4 @@ class RecommendationAnswer(derive.answer(Recommendation)):  # type: ignore[misc]
         allow_none=True,
         metadata={"description": "What the sample shows; null without one."},
     )
-    provenance = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
+    provenance = PROVENANCE

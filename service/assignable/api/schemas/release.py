@@ -16,10 +16,9 @@ from ...spc.errors import Fault, UnusableParameter
 from ...spc.exact import Rounding
 from ...spc.rules import Signal
 from .. import fields as f
-from ..contract import Provenance
 from . import derive
 from .capability import SpecificationRequest, specification_of
-from .common import CAUTIONS, CautionAnswer
+from .common import CAUTIONS, PROVENANCE, CautionAnswer
 
 MOST_CHARACTERISTICS = 200
 MOST_SINGLE = 500  # results of a characteristic in one list
@@ -443,4 +442,4 @@ class ReleaseCheckAnswer(f.AnswerShape):
         ReleaseCharacteristicAnswer, required=True, metadata={"description": "In the order of the request."}
     )
     cautions = f.ObjectList(CautionAnswer, **CAUTIONS)
-    provenance = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
+    provenance = PROVENANCE

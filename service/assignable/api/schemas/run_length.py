@@ -13,8 +13,8 @@ from ...spc.design.subgroups import LARGEST_SIZE
 from ...spc.errors import UnusableParameter
 from ...spc.runlength import memory, mewma, moving
 from .. import fields as f
-from .common import RulesRequest
-from .designs import HOURS, PROVENANCE, USUAL_SHIFTS
+from .common import PROVENANCE, RulesRequest
+from .designs import HOURS, USUAL_SHIFTS
 
 MOST_RUN_LENGTHS = 50
 KINDS = ("shewhart", "ewma", "cusum", "moving_average", "mewma", "counts")

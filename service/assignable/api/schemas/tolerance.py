@@ -13,9 +13,8 @@ from ...spc.capability.tolerance import (
 )
 from ...spc.diagnostics import Normality
 from .. import fields as f
-from ..contract import Provenance
 from . import derive
-from .common import CAUTIONS, CautionAnswer, Characteristic
+from .common import CAUTIONS, PROVENANCE, CautionAnswer, Characteristic
 
 
 class ToleranceData(f.RequestShape):
@@ -117,7 +116,7 @@ class ToleranceAnswer(f.AnswerShape):
         metadata={"description": "Tests of the values' normality; null without values, or with too few."},
     )
     cautions = f.ObjectList(CautionAnswer, **CAUTIONS)
-    provenance = f.Object(Provenance, required=True, metadata={"description": "What computed this answer."})
+    provenance = PROVENANCE
 
 
 def asked_of(loaded: dict[str, Any]) -> list[str]:
