@@ -7,7 +7,6 @@ from collections.abc import Callable
 from typing import Any
 
 from ...verification import runner
-from .. import fields as f
 from .. import strict_json
 from ..contract import Contract
 from ..schemas import derive
