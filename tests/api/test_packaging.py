@@ -205,7 +205,7 @@ def examples(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     """A copy of the example requests, with neither answers nor document."""
     folder = tmp_path / "openapi" / "examples"
     folder.mkdir(parents=True)
-    for path in contract.examples_directory().glob("*.request.json"):
+    for path in contract.examples_directory().glob("*.request.*json"):
         shutil.copy(path, folder)
     for module in (contract, openapi, contract_files):
         monkeypatch.setattr(module, "examples_directory", lambda: folder)

@@ -7,9 +7,9 @@ from collections.abc import Callable
 from flask import Flask, Response, request
 
 from . import problems
-from .contract import Contract
+from .contract import REQUEST_ID, Contract
 from .cors import Cors
-from .observability import REQUEST_ID, Edge, Log
+from .observability import Edge, Log
 from .operations import announce, documentation
 from .sealing import seals_in
 from .security import access_of, guard
@@ -32,7 +32,7 @@ def create_app(
     app = Flask("assignable", static_folder=None, template_folder=None)
     app.json.sort_keys = False  # type: ignore[attr-defined]
     access = access_of(settings)
-    contract = Contract(app, settings, seals_in(settings), access)
+    contract = Contract(app, settings, seals_in(settings), access, log.failure)
     app.extensions["assignable.contract"] = contract
 
     def failed(error: Exception) -> Response:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import zlib
+from collections.abc import Iterable, Iterator
 from typing import Any
 
 from werkzeug.datastructures import MIMEAccept
@@ -19,7 +20,9 @@ from .problems import (
 )
 
 JSON = "application/json"
+NDJSON = "application/x-ndjson"
 _CHUNK = 65536
+_NOT_ONE_GZIP = "The gzip body is cut off, or has more after its end."
 
 Environ = dict[str, Any]
 
@@ -35,19 +38,19 @@ def require_acceptable(environ: Environ, media_type: str) -> None:
         )
 
 
-def require_json(environ: Environ) -> None:
-    """Raises the problem ``unsupported-media-type`` for a body that does not call itself JSON in UTF-8."""
+def require(environ: Environ, expected: str) -> None:
+    """Raises the problem ``unsupported-media-type`` for a body that does not call itself this, in UTF-8."""
     content_type = environ.get("CONTENT_TYPE", "")
-    if content_type == JSON:
+    if content_type == expected:
         return
     media_type, options = parse_options_header(content_type)
-    if media_type.lower() == JSON and options.get("charset", "utf-8").lower() in ("utf-8", "utf8"):
+    if media_type.lower() == expected and options.get("charset", "utf-8").lower() in ("utf-8", "utf8"):
         return
     shown = "has no Content-Type" if not content_type else "has another Content-Type"
     raise Problem(
         UNSUPPORTED_MEDIA_TYPE,
-        f"The body {shown}; this operation reads {JSON} in UTF-8.",
-        headers=(("Accept-Post", JSON),),
+        f"The body {shown}; this operation reads {expected} in UTF-8.",
+        headers=(("Accept-Post", expected),),
     )
 
 
@@ -75,7 +78,7 @@ def read(environ: Environ, limit: int) -> bytes:
                 raise Problem(BAD_REQUEST, "Content-Length is not a whole number.")
             length = int(declared)
             if length > limit:
-                raise _too_large(limit)
+                raise too_large(limit)
             body: bytes = stream.read(length)
             if len(body) < length:
                 body += _rest(stream, length - len(body))
@@ -87,11 +90,62 @@ def read(environ: Environ, limit: int) -> bytes:
         while part := stream.read(_CHUNK):
             total += len(part)
             if total > limit:
-                raise _too_large(limit)
+                raise too_large(limit)
             parts.append(part)
         return b"".join(parts)
     except (OSError, EOFError):
         raise Problem(BAD_REQUEST, "The body could not be read to its end.") from None
+
+
+def pieces(environ: Environ, limit: int) -> Iterator[bytes]:
+    """The body piece by piece as it arrives, for what is never whole in memory. Raises as :func:`read` does."""
+    stream = environ["wsgi.input"]
+    declared = environ.get("CONTENT_LENGTH") or ""
+    if declared and not (declared.isascii() and declared.isdigit()):
+        raise Problem(BAD_REQUEST, "Content-Length is not a whole number.")
+    if not declared and not environ.get("wsgi.input_terminated"):
+        return
+    missing = int(declared) if declared else None
+    total = 0
+    while missing is None or missing:
+        try:
+            piece = stream.read(_CHUNK if missing is None else min(_CHUNK, missing))
+        except (OSError, EOFError):
+            raise Problem(BAD_REQUEST, "The body could not be read to its end.") from None
+        if not piece:
+            if missing:
+                raise Problem(BAD_REQUEST, "The body ends before the length it was announced with.")
+            return
+        total += len(piece)
+        if total > limit:
+            raise too_large(limit)
+        missing = None if missing is None else missing - len(piece)
+        yield piece
+
+
+def inflated(packed: Iterable[bytes], limit: int) -> Iterator[bytes]:
+    """A gzip body undone piece by piece, as far as the limit."""
+    unpacker = zlib.decompressobj(31)
+    total = 0
+    for piece in packed:
+        rest, part = piece, b""
+        # Output may be left inside when all input is taken: as long as parts are full there may be more.
+        while rest or len(part) == _CHUNK:
+            if unpacker.eof:
+                raise Problem(NOT_JSON, _NOT_ONE_GZIP)
+            try:
+                part = unpacker.decompress(rest, _CHUNK)
+            except zlib.error:
+                raise Problem(NOT_JSON, "The body calls itself gzip and is not.") from None
+            total += len(part)
+            if total > limit:
+                raise _inflates_too_far(limit)
+            yield part
+            rest = unpacker.unused_data if unpacker.eof else unpacker.unconsumed_tail
+            if unpacker.eof and not rest:
+                break
+    if not unpacker.eof:
+        raise Problem(NOT_JSON, _NOT_ONE_GZIP)
 
 
 def _rest(stream: Any, missing: int) -> bytes:
@@ -109,17 +163,20 @@ def inflate(body: bytes, limit: int) -> bytes:
     """A gzip body undone, as far as the limit and not a byte further."""
     unpacker = zlib.decompressobj(31)
     try:
-        inflated = unpacker.decompress(body, limit + 1)
+        whole = unpacker.decompress(body, limit + 1)
     except zlib.error:
         raise Problem(NOT_JSON, "The body calls itself gzip and is not.") from None
-    if len(inflated) > limit:
-        raise Problem(
-            CONTENT_TOO_LARGE, f"The body inflates to more than the {limit} bytes this server takes."
-        )
+    if len(whole) > limit:
+        raise _inflates_too_far(limit)
     if not unpacker.eof or unpacker.unused_data:
-        raise Problem(NOT_JSON, "The gzip body is cut off, or has more after its end.")
-    return inflated
+        raise Problem(NOT_JSON, _NOT_ONE_GZIP)
+    return whole
 
 
-def _too_large(limit: int) -> Problem:
+def _inflates_too_far(limit: int) -> Problem:
+    return Problem(CONTENT_TOO_LARGE, f"The body inflates to more than the {limit} bytes this server takes.")
+
+
+def too_large(limit: int) -> Problem:
+    """The problem of a body beyond this limit."""
     return Problem(CONTENT_TOO_LARGE, f"The body is larger than the {limit} bytes this server takes.")

@@ -14,6 +14,7 @@ from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
+from uuid import uuid4
 
 import orjson
 from flask import Flask, Response, request
@@ -21,7 +22,7 @@ from marshmallow import Schema, ValidationError
 
 from ..documents.seal import UNSEALED, Seals
 from ..spc.errors import SpcError
-from . import answers, bodies, explaining, problems, strict_json
+from . import answers, bodies, explaining, problems, streams, strict_json
 from .fields import AnswerShape, ObjectList, StrictInteger, StrictString, known_names
 from .problems import Entry, Problem, ProblemType
 from .settings import Settings
@@ -32,10 +33,13 @@ if TYPE_CHECKING:
 
 View = Callable[..., Any]
 Link = Mapping[str, Any]
+Failed = Callable[[Exception, dict[str, Any]], None]
+"""Is told of what no layer expected, with the request's environ."""
 Route = tuple[str, str, str]
 """Method, path and operation id."""
 
 OPERATION = "assignable.operation"  # the environ's key for the id of the operation that answers
+REQUEST_ID = "assignable.request_id"  # and for the id of the request
 
 _OF_A_PICTURE = (("Content-Security-Policy", "default-src 'none'; style-src 'unsafe-inline'"),)
 
@@ -84,6 +88,15 @@ class Provenance(AnswerShape):
     )
 
 
+@dataclass(frozen=True, slots=True)
+class Lines:
+    """What an operation reads and answers where both are streams of JSON, a value a line."""
+
+    asked: tuple[type[Schema], ...]
+    answered: tuple[type[Schema], ...]
+    example: str
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Operation:
     """One operation as it was bound; :meth:`execute` walks its road without HTTP."""
@@ -98,6 +111,7 @@ class Operation:
     request: Schema | None = None
     query: Schema | None = None
     response: Schema | None = None
+    lines: Lines | None = None
     media_type: str = answers.JSON
     problems: tuple[ProblemType, ...] = ()
     examples: tuple[str, ...] = ()
@@ -107,7 +121,9 @@ class Operation:
     cache_seconds: int | None = 300
 
     def execute(self, body: bytes) -> bytes:
-        """The answer to a JSON body; raises what :func:`assignable.api.problems.of` understands."""
+        """The answer to a body; raises what :func:`assignable.api.problems.of` understands."""
+        if self.lines is not None:
+            return b"".join(streams.stream(self.view, streams.Call(str(uuid4())), (body,), _ALONE, len(body)))
         return self.answer_to(strict_json.loads(body), body)
 
     def answer_to(self, document: Any, body: bytes) -> bytes:
@@ -115,10 +131,13 @@ class Operation:
         return self.write(self.computed(document), body)
 
     def computed(self, document: Any, **path: str) -> Any:
-        """What the view makes of a body that is parsed already; faults are told where the body has them."""
-        assert self.request is not None
+        """What the view makes of a body that is parsed already; faults are told where the body has them.
+
+        Of an operation without a body it is the parameters of the query, or nothing.
+        """
+        shape = self.request or self.query
         try:
-            return self.view(self.request.load(document), **path)
+            return self.view(**path) if shape is None else self.view(shape.load(document), **path)
         except SpcError as error:
             raise problems.placed(error, document) from error
 
@@ -131,17 +150,28 @@ class Operation:
         return answers.dumps(result)
 
 
+_ALONE = Slots(1, 0.0)
+
+
 class Contract:
     """All operations of an application, in the order in which they were bound."""
 
     def __init__(
-        self, app: Flask, settings: Settings, seals: Seals = UNSEALED, access: Access | None = None
+        self,
+        app: Flask,
+        settings: Settings,
+        seals: Seals = UNSEALED,
+        access: Access | None = None,
+        failed: Failed = lambda error, environ: None,
     ) -> None:
         self.seals = seals
+        self._failed = failed
         self._access = access
         self._app = app
         self._settings = settings
         self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds)
+        # Each occupies a thread for as long as it lasts; the others are for everybody else.
+        self._streams = Slots(max(1, settings.threads // 2), 0.0)
         self._tags: dict[str, str] = {}
         self._constant: dict[str, tuple[bytes, str]] = {}
         self._bound: dict[str, Operation] = {}
@@ -164,6 +194,12 @@ class Contract:
         """An operation by its id, bound now where it was only announced."""
         self._bind_announced(operation_id)
         return self._bound[operation_id]
+
+    def find(self, operation_id: str) -> Operation | None:
+        """An operation by its id, if there is such."""
+        if operation_id in self._announced:
+            self._bind_announced(operation_id)
+        return self._bound.get(operation_id)
 
     def announce(self, routes: Iterable[Route], register: Callable[[Contract], None]) -> None:
         """Takes up routes now whose operations ``register`` binds when one of them is first needed.
@@ -209,6 +245,7 @@ class Contract:
         response: Schema | None,
         request: Schema | None = None,
         query: Schema | None = None,
+        lines: Lines | None = None,
         media_type: str = answers.JSON,
         problems: tuple[ProblemType, ...] = (),
         example: str | tuple[str, ...] = (),
@@ -222,9 +259,10 @@ class Contract:
 
         ``request``, ``query`` and ``response`` are instances of shapes. A view is called with what its
         request's or its query's shape loads (or nothing), and with the path's parameters by name; it
-        returns plain values, arrays or dataclasses, or text for another ``media_type``. ``problems`` are
-        those beyond the ones every such operation can answer. ``example`` names files of
-        ``openapi/examples``. ``provenance`` is the method's name; with it the answer gets that member.
+        returns plain values, arrays or dataclasses, or text for another ``media_type``. With ``lines`` it is
+        a :data:`assignable.api.streams.Converse` instead. ``problems`` are those beyond the ones every such
+        operation can answer. ``example`` names files of ``openapi/examples``. ``provenance`` is the method's
+        name; with it the answer gets that member.
         ``explain`` gives the worked steps; with it a request may ask for them, and the answer then has them.
         ``computes`` takes a compute slot. ``cache_seconds`` is how long a GET may be kept, None not at all.
         """
@@ -247,6 +285,7 @@ class Contract:
                 request=request,
                 query=query,
                 response=response,
+                lines=lines,
                 media_type=media_type,
                 problems=problems,
                 examples=(example,) if isinstance(example, str) else example,
@@ -269,9 +308,35 @@ class Contract:
         return bind
 
     def _endpoint(self, operation: Operation) -> Callable[..., Response]:
+        if operation.lines is not None:
+            return self._taking_lines(operation)
         if operation.request is not None:
             return self._taking_body(operation)
         return self._taking_none(operation)
+
+    def _taking_lines(self, operation: Operation) -> Callable[..., Response]:
+        settings = self._settings
+
+        def answer() -> Response:
+            environ = request.environ
+            environ[OPERATION] = operation.operation_id
+            bodies.require_acceptable(environ, bodies.NDJSON)
+            bodies.require(environ, bodies.NDJSON)
+            packed = bodies.encoding_of(environ)
+            declared = environ.get("CONTENT_LENGTH") or ""
+            if declared.isascii() and declared.isdigit() and int(declared) > settings.max_stream_bytes:
+                raise bodies.too_large(settings.max_stream_bytes)
+            pieces = bodies.pieces(environ, settings.max_stream_bytes)
+            if packed:
+                pieces = bodies.inflated(pieces, settings.max_stream_bytes)
+            call = streams.Call(environ[REQUEST_ID], lambda error: self._failed(error, environ))
+            parts = streams.stream(operation.view, call, pieces, self._slots, settings.max_body_bytes)
+            told = self._streams.occupied_by(parts)
+            answered = Response(told, headers=[("Cache-Control", "no-store")], content_type=bodies.NDJSON)
+            answered.call_on_close(told.close)
+            return answered
+
+        return answer
 
     def _taking_body(self, operation: Operation) -> Callable[..., Response]:
         content_type = operation.media_type
@@ -281,7 +346,7 @@ class Contract:
             environ = request.environ
             environ[OPERATION] = operation_id
             bodies.require_acceptable(environ, content_type)
-            bodies.require_json(environ)
+            bodies.require(environ, bodies.JSON)
             packed = bodies.encoding_of(environ)
             body = bodies.read(environ, self._settings.max_body_bytes)
             # The place is taken before parsing: objects weigh many times what the text does.

@@ -19,11 +19,9 @@ from uuid import UUID
 import orjson
 
 from .answers import service_version
-from .contract import OPERATION
+from .contract import OPERATION, REQUEST_ID
 from .cors import Cors
 from .problems import INTERNAL, MEDIA_TYPE, Problem
-
-REQUEST_ID = "assignable.request_id"
 
 _GOOD_ID = re.compile(r"[A-Za-z0-9._-]{1,128}")
 _TRACEPARENT = re.compile(

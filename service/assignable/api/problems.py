@@ -8,7 +8,7 @@ table of types titles the answers, describes them in the OpenAPI document, and i
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from urllib.parse import quote
 
 import orjson
@@ -275,6 +275,14 @@ class Problem(Exception):
         if self.errors:
             members["errors"] = [_members(entry) for entry in self.errors]
         return members
+
+    def below(self, root: str) -> Problem:
+        """The same problem of a body that stands in a larger one, at this pointer."""
+        moved = (
+            replace(entry, pointer=root + entry.pointer[1:] if entry.pointer else root)
+            for entry in self.errors
+        )
+        return Problem(self.kind, self.detail, errors=moved, more=self.more, headers=self.headers)
 
     def body(self, request_id: str) -> bytes:
         return orjson.dumps(self.members(request_id))

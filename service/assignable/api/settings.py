@@ -138,6 +138,11 @@ class Settings:
     max_inflated_bytes: int = _setting(
         32 * MIB, "Largest request body after gzip is undone, in bytes.", _whole(1024, 1024 * MIB)
     )
+    max_stream_bytes: int = _setting(
+        4096 * MIB,
+        "Largest body of lines (/v1/bulk), in bytes, gzip undone; a line of it is bounded as a body is.",
+        _whole(1024, 1024 * 1024 * MIB),
+    )
     log: str = _setting(
         "requests",
         "What is logged, one JSON object a line on standard error: requests, errors or off.",

@@ -6,16 +6,21 @@ quick, the refused ones hear so early, and the health probes need no place at al
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from queue import Empty, SimpleQueue
+from time import sleep
 from types import TracebackType
 
 from .problems import BUSY, Problem
+
+_STEP_BACK_SECONDS = 0.001
 
 
 class Slots:
     """``count`` places; entering waits up to ``wait_seconds``, then raises the problem ``busy``."""
 
-    __slots__ = ("_places", "_wait_seconds")
+    __slots__ = ("_places", "_wait_seconds", "_waiting")
 
     def __init__(self, count: int, wait_seconds: float) -> None:
         # A queue of places waits and wakes in C; a semaphore does so in Python, which under load cost more
@@ -24,14 +29,70 @@ class Slots:
         for _ in range(count):
             self._places.put(None)
         self._wait_seconds = wait_seconds
+        self._waiting: SimpleQueue[None] = SimpleQueue()
 
     def __enter__(self) -> None:
+        try:
+            self._places.get(False)
+        except Empty:
+            self._wait()
+
+    def _wait(self) -> None:
+        self._waiting.put(None)
         try:
             self._places.get(timeout=self._wait_seconds)
         except Empty:
             raise Problem(BUSY, headers=(("Retry-After", "1"),)) from None
+        finally:
+            self._waiting.get(False)
 
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
+        self.release()
+
+    def release(self) -> None:
+        """Gives a place back."""
         self._places.put(None)
+
+    def occupied_by(self, parts: Iterator[bytes]) -> Occupying:
+        """An answer that is not whole yet and takes a place until it is over. Raises the problem ``busy``."""
+        self.__enter__()
+        return Occupying(parts, self.release)
+
+    @contextmanager
+    def in_turn(self) -> Iterator[None]:
+        """A place for one turn of work that has begun and cannot be refused any more: waits as long as it takes.
+
+        After the turn whoever waits goes first; the thread that gives a place back would else be the one to take
+        it again.
+        """
+        self._places.get()
+        try:
+            yield
+        finally:
+            self.release()
+            if not self._waiting.empty():
+                sleep(_STEP_BACK_SECONDS)
+
+
+class Occupying:
+    """Parts of an answer; when they are over, or nobody wants the rest, ``over`` is called once."""
+
+    __slots__ = ("_over", "_parts")
+
+    def __init__(self, parts: Iterator[bytes], over: Callable[[], None]) -> None:
+        self._parts = parts
+        self._over: Callable[[], None] | None = over
+
+    def __iter__(self) -> Iterator[bytes]:
+        try:
+            yield from self._parts
+        finally:
+            self.close()
+
+    def close(self) -> None:
+        """Nobody wants the rest."""
+        if (over := self._over) is not None:
+            self._over = None
+            over()
