@@ -9,8 +9,10 @@ Ratios of one run are what to quote: absolute times change with the machine. Not
 from __future__ import annotations
 
 import functools
+import http.client as http_client
 import io
 import os
+import random
 import resource
 import shutil
 import socket
@@ -245,6 +247,59 @@ def http() -> None:
 
 # ---------------------------------------------------------------------------------------------------
 # In process
+
+
+CHARACTERISTICS = 200
+LINES = 20_000
+
+
+def _lines_a_second(port: int, path: str, head: bytes, lines: list[bytes]) -> float:
+    """Lines a second that as many streams as there are processors carry together."""
+    body = head + b"".join(lines)
+    began = time.monotonic()
+    streams = os.cpu_count() or 1
+
+    def stream() -> None:
+        connection = http_client.HTTPConnection("127.0.0.1", port, timeout=120)
+        connection.request("POST", path, body, {"Content-Type": "application/x-ndjson"})
+        told = connection.getresponse().read()
+        connection.close()
+        assert told.rpartition(b'{"done":true')[2].endswith(b'"problems":0}\n'), told[-300:]
+
+    threads = [threading.Thread(target=stream) for _ in range(streams)]
+    for thread in threads:
+        thread.start()
+    for thread in threads:
+        thread.join()
+    return streams * len(lines) / (time.monotonic() - began)
+
+
+def bulk() -> None:
+    """Single subgroups of many characteristics: a call each, and a line each."""
+    import orjson
+
+    limits = orjson.loads(judge_body())["limits"]
+    chance = random.Random(1)
+    data = [[[round(chance.gauss(2.5, 0.012), 3) for _ in range(5)]] for _ in range(LINES)]
+    head = b"".join(
+        orjson.dumps({"characteristic": f"c{at}", "limits": limits}) + b"\n" for at in range(CHARACTERISTICS)
+    )
+    brought = [
+        orjson.dumps({"characteristic": f"c{at % CHARACTERISTICS}", "data": {"values": values}}) + b"\n"
+        for at, values in enumerate(data)
+    ]
+    whole = b'{"operation":"judgeXbarR","body":' + judge_body() + b"}\n"
+    with tempfile.TemporaryDirectory() as folder, _server(OURS) as port:
+        single = _rate(port, "/v1/charts/xbar-r/signals", judge_body(), Path(folder))
+        series = _lines_a_second(port, "/v1/bulk/signals", head, brought)
+        plain = _lines_a_second(port, "/v1/bulk", b"", [whole] * (LINES // 4))
+    row(
+        f"one subgroup a line, {CHARACTERISTICS} characteristics, against a call each",
+        f"{series:,.0f} lines/s, {single:,.0f} calls/s",
+        series / single,
+        "at least 5",
+    )
+    row("the same as whole requests in lines", f"{plain:,.0f} lines/s", plain / single, "-")
 
 
 def _cpu(action: Callable[[], object], times: int = 3) -> float:
@@ -677,6 +732,7 @@ def charts() -> None:
 ROWS = {
     "http": http,
     "large": large,
+    "bulk": bulk,
     "memory": memory,
     "charts": charts,
     "runs": runs,

@@ -82,6 +82,7 @@ class Reading:
     sends: tuple[Field, ...] | None
     examples: tuple[Example, ...]
     media_type: str
+    by_line: bool
     answers: tuple[Field, ...]
     failures: tuple[Failure, ...]
     leads_to: tuple[tuple[str, str], ...]
@@ -124,7 +125,7 @@ class Document:
             return None
         method, path, entry = self._found[operation_id]
         (media_type, content), *_ = entry["responses"]["200"]["content"].items()
-        body = entry.get("requestBody", {}).get("content", {}).get("application/json")
+        body = next(iter(entry.get("requestBody", {}).get("content", {}).values()), None)
         return Reading(
             operation_id=operation_id,
             draws=next(
@@ -140,10 +141,11 @@ class Document:
                 Field("", one["name"], self._kind(one["schema"]), one["required"], one.get("description", ""))
                 for one in entry.get("parameters", ())
             ),
-            sends=None if body is None else tuple(self._fields(body["schema"], "", ())),
+            sends=None if body is None else tuple(self._fields(_each(body["schema"]), "", ())),
             examples=() if body is None else self._examples(body, content),
             media_type=media_type,
-            answers=tuple(self._fields(content["schema"], "", ())),
+            by_line="x-line" in content["schema"],
+            answers=tuple(self._fields(_each(content["schema"]), "", ())),
             failures=tuple(self._failures(entry["responses"])),
             leads_to=tuple(
                 (name, link["operationId"])
@@ -157,8 +159,8 @@ class Document:
         return tuple(
             Example(
                 name,
-                laid_out(given["value"]),
-                laid_out(answers[name]["value"]) if name in answers else None,
+                shown(given["value"]),
+                shown(answers[name]["value"]) if name in answers else None,
             )
             for name, given in body.get("examples", {}).items()
         )
@@ -245,6 +247,11 @@ class Document:
         return " ".join(part for part in (found, more[:1].upper() + more[1:]) if part)
 
 
+def shown(value: Any) -> str:
+    """An example for people: a stream of lines as it is, anything else laid out."""
+    return value if isinstance(value, str) else laid_out(value)
+
+
 def laid_out(value: Any, indent: str = "") -> str:
     """JSON for people: a member a line, a row of numbers a line."""
     inner = indent + "  "
@@ -258,6 +265,12 @@ def laid_out(value: Any, indent: str = "") -> str:
 
 def _written(value: Any) -> str:
     return json.dumps(value, ensure_ascii=False)
+
+
+def _each(schema: Mapping[str, Any]) -> Mapping[str, Any]:
+    """The shape of a whole body, or of each line of one."""
+    found: Mapping[str, Any] = schema.get("x-line", schema)
+    return found
 
 
 def _main(schema: Mapping[str, Any]) -> str:
