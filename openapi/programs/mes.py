@@ -14,7 +14,6 @@ from __future__ import annotations
 
 import argparse
 import json
-import logging
 import re
 import sqlite3
 import sys
@@ -24,9 +23,9 @@ from contextlib import closing, contextmanager
 from pathlib import Path
 from typing import Any
 
-import service
+import calls
+from calls import Answer, Away, Refused, Service
 from plant import CHARACTERISTICS, CannotGoOn, Characteristic, JsonLines, Subgroup
-from service import Answer, Away, Refused, Service
 
 BASELINE = 25
 """Subgroups from which limits are fitted, once."""
@@ -124,7 +123,9 @@ class Store:
     def judged(self, name: str, sequence: int, answer: Answer) -> None:
         """Keeps verdict, signals and carry."""
         with self._transaction() as db:
-            db.execute("UPDATE characteristic SET carry = ? WHERE name = ?", (json.dumps(answer.body["carry"]), name))
+            db.execute(
+                "UPDATE characteristic SET carry = ? WHERE name = ?", (json.dumps(answer.body["carry"]), name)
+            )
             self._settle(name, [sequence], "judged", answer.body, answer)
 
     def _settle(
@@ -161,8 +162,12 @@ class Store:
         ).fetchall():
             one = json.loads(text)
             where = f"{name} {one['id']} ({sequence}, {one['panel']})"
-            print(f"SIGNAL {'in the baseline, ' * (state == 'baseline')}{where}: {one['sentence']}", flush=True)
-            self._db.execute("UPDATE signal SET told = 1 WHERE sequence = ? AND position = ?", (sequence, position))
+            print(
+                f"SIGNAL {'in the baseline, ' * (state == 'baseline')}{where}: {one['sentence']}", flush=True
+            )
+            self._db.execute(
+                "UPDATE signal SET told = 1 WHERE sequence = ? AND position = ?", (sequence, position)
+            )
 
 
 # What is done ----------------------------------------------------------------------------------------
@@ -189,7 +194,7 @@ class Line:
                     self._store.tell()
         except Away as away:
             self._failures += 1
-            seconds = service.pause(self._failures, away)
+            seconds = calls.pause(self._failures, away)
             self._not_before = time.monotonic() + seconds
             print(f"WAITING {seconds:.1f} s: {away}", flush=True)
             return False
@@ -209,7 +214,10 @@ class Line:
                 body = {"characteristic": {"name": one.name, **unit}, "data": data, **one.options}
                 answer = self._post(one, "limits", body)
                 self._store.freeze(one.name, subgroups, answer)
-                print(f"FROZEN limits of {one.name}, from {BASELINE} subgroups up to {subgroups[-1]}", flush=True)
+                print(
+                    f"FROZEN limits of {one.name}, from {BASELINE} subgroups up to {subgroups[-1]}",
+                    flush=True,
+                )
                 for caution in answer.body["cautions"]:
                     print(f"CAUTION {one.name}: {caution['sentence']}", flush=True)
             else:
@@ -228,7 +236,9 @@ class Line:
         return True
 
     def _post(self, one: Characteristic, verb: str, body: Mapping[str, Any]) -> Answer:
-        return self._service.post(f"/v1/charts/{one.chart}/{verb}", json.dumps(body, allow_nan=False).encode())
+        return self._service.post(
+            f"/v1/charts/{one.chart}/{verb}", json.dumps(body, allow_nan=False).encode()
+        )
 
 
 def _faulty(refused: Refused, subgroups: Sequence[int]) -> list[int]:
@@ -244,20 +254,24 @@ def _faulty(refused: Refused, subgroups: Sequence[int]) -> list[int]:
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """0: all judged; 1: a characteristic is stopped; 2: the program cannot go on."""
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
     parser.add_argument("source", type=Path, help="file of JSON lines, one a subgroup")
-    parser.add_argument("--database", type=Path, default=Path("mes.sqlite"), help="what is kept (%(default)s)")
+    parser.add_argument(
+        "--database", type=Path, default=Path("mes.sqlite"), help="what is kept (%(default)s)"
+    )
     parser.add_argument("--follow", action="store_true", help="wait for more at the end of the file")
-    service.add_options(parser)
+    calls.add_options(parser)
     given = parser.parse_args(arguments)
-    logging.basicConfig(level=logging.INFO, format="%(asctime)s %(message)s")
+    calls.set_up_output()
     try:
-        with closing(service.from_options(given)) as called, closing(Store(given.database)) as store:
+        with closing(calls.from_options(given)) as called, closing(Store(given.database)) as store:
             return _run(Line(store, called), store, JsonLines(given.source, given.follow))
     except KeyboardInterrupt:
         print("ENDED by hand; a restart goes on from here", flush=True)
         return 0
-    except (CannotGoOn, service.BadOptions, OSError, sqlite3.Error) as error:
+    except (CannotGoOn, calls.BadOptions, OSError, sqlite3.Error) as error:
         print(f"CANNOT GO ON: {error}", file=sys.stderr)
         return 2
 

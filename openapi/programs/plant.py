@@ -9,6 +9,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
+
 @dataclass(frozen=True)
 class Characteristic:
     """What is measured; ``columns`` are the members of a subgroup's data that its chart takes."""
@@ -52,7 +53,11 @@ class Subgroup:
         sequence, name, fault = found["sequence"], found.get("characteristic"), None
         if type(sequence) is not int or not 0 < sequence < 2**63:
             raise ValueError("sequence is no number from 1")
-        if not isinstance(name, str) or name not in CHARACTERISTICS or not isinstance(found.get("data"), dict):
+        if (
+            not isinstance(name, str)
+            or name not in CHARACTERISTICS
+            or not isinstance(found.get("data"), dict)
+        ):
             name, fault = "", "No characteristic of this program, or no data."
         try:
             return Subgroup(sequence, name, json.dumps(found, allow_nan=False), fault)

@@ -37,7 +37,16 @@ class Server:
         self._process: subprocess.Popen[bytes] | None = None
 
     def start(self) -> None:
-        command = [sys.executable, "-m", "assignable.cli", "serve", "--port", str(self.port), "--workers", "1"]
+        command = [
+            sys.executable,
+            "-m",
+            "assignable.cli",
+            "serve",
+            "--port",
+            str(self.port),
+            "--workers",
+            "1",
+        ]
         self._process = subprocess.Popen(
             command,
             env={**PLAIN, "ASSIGNABLE_LOG": "off", **self._variables},
@@ -87,7 +96,12 @@ def command(program: str, *arguments: object) -> list[str]:
 def run(program: str, *arguments: object) -> subprocess.CompletedProcess[str]:
     """The program as a person starts it, to its end."""
     return subprocess.run(
-        command(program, *arguments), capture_output=True, text=True, timeout=PATIENCE_SECONDS, check=False, env=PLAIN
+        command(program, *arguments),
+        capture_output=True,
+        text=True,
+        timeout=PATIENCE_SECONDS,
+        check=False,
+        env=PLAIN,
     )
 
 

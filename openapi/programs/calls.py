@@ -6,9 +6,11 @@ Every call is pure: it changes nothing on the server, so whoever is not sure tha
 from __future__ import annotations
 
 import http.client
+import io
 import json
 import logging
 import random
+import sys
 import time
 import uuid
 from argparse import ArgumentParser, Namespace
@@ -17,7 +19,7 @@ from pathlib import Path
 from typing import Any
 from urllib.parse import urlsplit
 
-LOG = logging.getLogger("service")
+LOG = logging.getLogger("calls")
 LATER = (429, 502, 503, 504)
 """Statuses of a service, or of a proxy before it, that will take the same request another time."""
 
@@ -102,7 +104,9 @@ class Service:
             raise Refused(status, found, request_id)
         return Answer(found, request_id)
 
-    def _exchange(self, path: str, body: bytes, request_id: str) -> tuple[int, http.client.HTTPMessage, bytes]:
+    def _exchange(
+        self, path: str, body: bytes, request_id: str
+    ) -> tuple[int, http.client.HTTPMessage, bytes]:
         kept = self._connection.sock is not None
         try:
             return self._once(path, body, request_id)
@@ -122,6 +126,14 @@ class Service:
 def pause(failures: int, away: Away) -> float:
     """Seconds to wait after so many failures in a row: longer each time, never as one with all other callers."""
     return max(away.seconds, min(30.0, 0.5 * 2.0 ** min(failures - 1, 10)) * random.uniform(0.5, 1.0))
+
+
+def set_up_output() -> None:
+    """The log of calls on standard error; and no text, whatever a source sent, that cannot be printed."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")
+    logging.basicConfig(level=logging.INFO, format="%(asctime)s %(message)s")
 
 
 def add_options(parser: ArgumentParser) -> None:
