@@ -44,7 +44,7 @@ class Refused(Exception):
         self.problem = problem
         self.kind = str(problem.get("type", "")).rpartition("/")[2]
         self.errors: list[dict[str, str]] = problem.get("errors", [])
-        said = " ".join(f"{one.get('pointer', '')} {one['detail']}" for one in self.errors[:5])
+        said = " ".join(f"{one.get('pointer', '')} {one.get('detail', '')}" for one in self.errors[:5])
         super().__init__(f"{problem.get('title')} ({status}): {said or problem.get('detail')} [{request_id}]")
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import random
+import re
 import shutil
 import sqlite3
 import subprocess
@@ -306,6 +307,44 @@ def test_nothing_that_comes_stops_the_line(server: Server, folder: Path) -> None
     assert states == ["put-aside", "judged"] * len(wrong)
     ((carry,),) = rows(database, "SELECT carry FROM characteristic WHERE name = 'wall thickness'")
     assert json.loads(carry)["points"] == len(wrong)
+
+
+def test_limits_fitted_again_and_rules_that_forget(server: Server, tmp_path: Path) -> None:
+    """The statements that the page of the program gives."""
+    for_limits, for_carry = re.findall(
+        r"`((?:DELETE|UPDATE) [^`]+)`", (PROGRAMS / "MES.md").read_text(encoding="utf-8")
+    )
+    chance = random.Random(5)
+    source, database = tmp_path / "line.jsonl", tmp_path / "mes.sqlite"
+
+    def come(number: int, level: float) -> str:
+        last = (
+            rows(database, "SELECT coalesce(max(sequence), 0) FROM subgroup")[0][0]
+            if database.exists()
+            else 0
+        )
+        values = [[round(chance.gauss(level, 0.012), 3) for _ in range(5)] for _ in range(number)]
+        with source.open("a", encoding="utf-8") as file:
+            file.write("".join(line(last + at, one) for at, one in enumerate(values, 1)))
+        done = run("mes", source, "--database", database, "--address", server.address)
+        assert done.returncode == 0, done.stderr
+        return done.stdout
+
+    def points() -> Any:
+        return json.loads(rows(database, "SELECT carry FROM characteristic")[0][0])["points"]
+
+    assert "in the baseline" not in come(24, 2.5)
+    assert "SIGNAL in the baseline, wall thickness 25 (25, mean)" in come(1, 2.6)
+    come(3, 2.5)
+    assert points() == 3
+    change(database, for_carry)
+    come(2, 2.5)
+    assert points() == 2
+    assert "SIGNAL wall thickness 31" in come(1, 2.7)
+    change(database, for_limits)
+    assert "SIGNAL" not in come(24, 2.7)
+    assert "FROZEN limits of wall thickness, from 25 subgroups up to 56" in come(1, 2.7)
+    assert "SIGNAL" not in come(1, 2.7)
 
 
 def test_a_source_that_begins_anew_is_noticed(server: Server, folder: Path) -> None:
