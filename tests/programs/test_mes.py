@@ -363,8 +363,24 @@ def test_a_source_that_begins_anew_is_noticed(server: Server, folder: Path) -> N
 
 def test_what_makes_no_sense_is_told(server: Server, folder: Path) -> None:
     assert "source" in run("mes", "--help").stdout
-    for address in ("nowhere", "http://127.0.0.1:99999", f"{server.address}/elsewhere"):
+    for address in ("nowhere", "http://127.0.0.1:99999"):
         done = run("mes", folder / "line.jsonl", "--database", folder / "mes.sqlite", "--address", address)
         assert done.returncode == 2
         assert done.stderr.splitlines()[-1].startswith("CANNOT GO ON")
     assert run("mes", folder / "gone.jsonl", "--database", folder / "mes.sqlite").returncode == 2
+
+
+def test_a_wrong_address_loses_nothing(server: Server, folder: Path, undisturbed: tuple[Any, Any]) -> None:
+    database = folder / "mes.sqlite"
+    words = command("mes", folder / "line.jsonl", "--database", database, "--address")
+    wrong = [*words, f"{server.address}/elsewhere"]
+    with subprocess.Popen(
+        wrong, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL, text=True, env=PLAIN
+    ) as process:
+        assert process.stdout is not None
+        waiting = next(text for text in iter(process.stdout.readline, "") if text.startswith("WAITING"))
+        until(database, "SELECT count(*) FROM subgroup WHERE state = 'waiting'", len(LINES))
+        process.kill()
+    assert "Not found (404)" in waiting
+    assert run("mes", folder / "line.jsonl", "--database", database, "--address", server.address).returncode == 0
+    assert kept(database) == undisturbed[0]
