@@ -382,5 +382,7 @@ def test_a_wrong_address_loses_nothing(server: Server, folder: Path, undisturbed
         until(database, "SELECT count(*) FROM subgroup WHERE state = 'waiting'", len(LINES))
         process.kill()
     assert "Not found (404)" in waiting
-    assert run("mes", folder / "line.jsonl", "--database", database, "--address", server.address).returncode == 0
+    assert (
+        run("mes", folder / "line.jsonl", "--database", database, "--address", server.address).returncode == 0
+    )
     assert kept(database) == undisturbed[0]

@@ -19,9 +19,12 @@ def test_what_a_page_says_is_what_happens(server: Server, tmp_path: Path, name: 
     said = ""
     for language, block in re.findall(r"^```(sh|text)\n(.*?)^```$", text, re.M | re.S):
         if language == "sh":
-            script = re.sub(r"/tmp/", f"{tmp_path}/", block)
-            script = re.sub(r"python3 \w+\.py", rf"\g<0> --address {server.address}", script)
-            environment = {**PLAIN, "PATH": f"{Path(sys.executable).parent}:{os.environ['PATH']}"}
+            script = re.sub(r"python3 \w+\.py", rf"\g<0> --address {server.address}", block)
+            environment = {
+                **PLAIN,
+                "HOME": str(tmp_path),
+                "PATH": f"{Path(sys.executable).parent}:{os.environ['PATH']}",
+            }
             done = subprocess.run(
                 ["bash", "-euo", "pipefail", "-c", script],
                 cwd=ROOT,
