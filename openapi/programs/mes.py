@@ -82,9 +82,8 @@ class Line:
                 self._store.judged(one.name, subgroups[0], self._post(one, "signals", body))
         except Refused as refused:
             if not refused.kind or refused.status in (401, 403, 404, 405):
-                raise Away(
-                    str(refused)
-                ) from refused  # a key or an address to put right; the line is received
+                # A key or an address is to be put right; until then the line is received.
+                raise Away(str(refused)) from refused
             faulty = _faulty(refused, subgroups)
             if faulty:
                 self._store.put_aside(faulty, refused)

@@ -1,7 +1,7 @@
 """Runs an example program that is killed (SIGKILL) at the n-th step, over and over; no part of the program knows.
 
 A step is what stands between two effects: before each statement to a database, before and after each call of the
-service, after each line that is printed, before a file is put in its place. Standard input has
+service and each line that is printed, before a file is put in its place. Standard input has
 ``{"program": "mes", "runs": [{"arguments": [...], "output": "file", "kill_at": [3, 17, null]}, ...]}``: each run goes
 through its numbers, one process after the other, null for one that is left alone. Standard output has, for each run,
 the exit status of each process (-9: killed) and the steps it got to.
@@ -66,6 +66,7 @@ def prepared(program: Any, step: Steps) -> None:
         return answer
 
     def stepped_print(*args: Any, **kwargs: Any) -> None:
+        step()
         say(*args, **kwargs)
         step()
 
