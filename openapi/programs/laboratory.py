@@ -57,10 +57,15 @@ def _results(file: Path, batch: str, names: Sequence[str]) -> dict[str, list[str
     if len(found) < len(names):
         raise CannotCheck("The plan has two characteristics of one name.")
     with file.open(encoding="utf-8-sig", newline="") as lines:
-        for number, row in enumerate(csv.DictReader(lines, strict=True), 2):
+        table = csv.DictReader(lines, strict=True)
+        if not {"batch", "characteristic", "result"} <= set(table.fieldnames or ()):
+            raise CannotCheck(
+                f"{file} needs the columns batch, characteristic and result, separated by commas."
+            )
+        for number, row in enumerate(table, 2):
             if row["batch"] != batch:
                 continue
-            name, text = row["characteristic"], row["result"].strip()
+            name, text = row["characteristic"], (row["result"] or "").strip()
             if name not in found:
                 raise CannotCheck(f"{file}, line {number}: the plan does not know the characteristic {name}.")
             if text and not _NUMBER.fullmatch(text):

@@ -26,7 +26,7 @@ PROGRAMS = Path(__file__).resolve().parents[2] / "openapi" / "programs"
 
 
 class Steps:
-    """Counts steps into a pipe, and ends this process at its last."""
+    """Counts steps into a file, and ends this process at its last."""
 
     def __init__(self, kill_at: int | None, counted: int) -> None:
         self.taken = 0

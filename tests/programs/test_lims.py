@@ -199,7 +199,7 @@ def test_other_limits_start_afresh(laboratory: Laboratory) -> None:
         ("results.csv", "B-201,leachable lead,2.1", "B-201,leachable lead,nan", "nan is neither a number"),
         ("results.csv", "B-201,leachable lead,2.1", "B-201,leachable lead,>2.1", ">2.1 is neither a number"),
         ("results.csv", "B-201,leachable lead,2.1", 'B-201,leachable lead,"2,1"', "2,1 is neither a number"),
-        ("results.csv", "batch,", "Charge,", "cannot be read"),
+        ("results.csv", "batch,", "Charge,", "needs the columns batch, characteristic and result"),
     ],
 )
 def test_what_cannot_be_checked_is_told(
