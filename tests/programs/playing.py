@@ -10,7 +10,10 @@ import socket
 import sqlite3
 import subprocess
 import sys
+import threading
 import time
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -103,6 +106,21 @@ def run(program: str, *arguments: object) -> subprocess.CompletedProcess[str]:
         check=False,
         env=PLAIN,
     )
+
+
+@contextmanager
+def started(program: str, *arguments: object) -> Iterator[subprocess.Popen[str]]:
+    """The program at work, all that it says on standard output; it ends with the block, or when patience does."""
+    with subprocess.Popen(
+        command(program, *arguments), stdout=subprocess.PIPE, stderr=subprocess.STDOUT, text=True, env=PLAIN
+    ) as process:
+        watch = threading.Timer(4 * PATIENCE_SECONDS, process.kill)
+        watch.start()
+        try:
+            yield process
+        finally:
+            watch.cancel()
+            process.kill()
 
 
 def killed(program: str, runs: list[dict[str, Any]]) -> list[list[tuple[int, int]]]:

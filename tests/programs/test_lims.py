@@ -13,7 +13,7 @@ from typing import Any
 import pytest
 
 from assignable.documents.seal import new_key, public_set
-from programs.playing import PLAIN, PROGRAMS, ROOT, Server, command, killed, rows, run
+from programs.playing import PLAIN, PROGRAMS, ROOT, Server, command, killed, rows, run, started
 
 SAMPLE = PROGRAMS / "sample" / "laboratory"
 BATCHES = ("B-201", "B-202", "B-203", "B-204", "B-205")
@@ -238,20 +238,16 @@ def test_a_service_that_is_away_is_waited_for(laboratory: Laboratory) -> None:
     assert done.returncode == 2
     assert "cannot be reached" in done.stderr.splitlines()[-1]
     assert laboratory.kept() == [[], [], [], []]
-    words = command("lims", *laboratory.arguments("B-201", "--patience", "30"))
-    with subprocess.Popen(
-        words, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, env=PLAIN
-    ) as process:
+    with started("lims", *laboratory.arguments("B-201", "--patience", "30")) as process:
         try:
-            assert process.stderr is not None
-            assert "failed" in process.stderr.readline()
+            assert process.stdout is not None
+            assert "failed" in process.stdout.readline()
             laboratory.server.start()
-            out, errors = process.communicate(timeout=30)
+            said = process.stdout.read()
         finally:
             laboratory.server.kill()
-            process.kill()
-    assert process.returncode == 0, errors
-    assert out.startswith("B-201 supports-release")
+    assert process.returncode == 0
+    assert said.splitlines()[-1].startswith("B-201 supports-release")
 
 
 def test_killed_at_every_step(laboratory: Laboratory, tmp_path: Path, server: Server) -> None:
