@@ -142,7 +142,7 @@ def test_a_bad_line_is_told_and_harms_no_other(line: bytes) -> None:
 
 def test_an_unknown_operation_is_helped() -> None:
     (found,), _ = told("/v1/bulk", b'{"operation": "fitXbarRlimits"}')
-    assert found["problem"]["detail"].endswith("Did you mean fitXbarRLimits?")
+    assert found["problem"]["detail"].endswith("Did you mean fitXbarRLimits? (At #/operation.)")
 
 
 def test_a_fault_of_the_service_harms_only_its_line(monkeypatch: pytest.MonkeyPatch) -> None:

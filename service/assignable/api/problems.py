@@ -268,13 +268,20 @@ class Problem(Exception):
             "type": self.kind.uri,
             "title": self.kind.title,
             "status": self.kind.status,
-            "detail": _encodable(self.detail),
+            "detail": _encodable(self.detail + self._place()),
             "instance": _instance(request_id),
             "request_id": request_id,
         }
         if self.errors:
             members["errors"] = [_members(entry) for entry in self.errors]
         return members
+
+    def _place(self) -> str:
+        """Where the one fault is that the detail tells: not everybody looks at the entry beside it."""
+        if len(self.errors) != 1 or self.errors[0].detail != self.detail:
+            return ""
+        pointer = self.errors[0].pointer
+        return "" if pointer in (None, "#") else f" (At {pointer}.)"
 
     def below(self, root: str) -> Problem:
         """The same problem of a body that stands in a larger one, at this pointer."""
