@@ -120,6 +120,9 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: A
         for name, scheme in access.schemes().items():
             spec.components.security_scheme(name, scheme)
     spec.components.schema("Problem", schema=ProblemDetails)
+    options = {operation.tabled.name: operation.tabled for operation in operations if operation.tabled}
+    for name, tabled in options.items():
+        spec.components.schema(name, schema=tabled.shape())
     for operation in operations:
         for shape in () if operation.lines is None else (*operation.lines.asked, *operation.lines.answered):
             if shape.__name__ not in spec.components.schemas:
@@ -179,7 +182,7 @@ def _options(operation: Operation, tabled: tables.Tabled) -> dict[str, Any]:
         "style": "form",
         "explode": True,
         "description": tables.PARAMETER_TEXT,
-        "schema": tabled.shape(),
+        "schema": {"$ref": f"#/components/schemas/{tabled.name}"},
     }
     if asked := {name: {"value": given} for name, given, _ in operation.tables()}:
         described["examples"] = asked

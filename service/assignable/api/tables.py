@@ -146,8 +146,8 @@ _KINDS_OF_TEXT = tuple(
         (
             rf"\s*[<>\u2264\u2265]=?\s*{_LOOSE}.*",
             "beyond-limit",
-            "{} is a result beyond a limit. Capability of measurements takes such results: the limit in a column "
-            "`below`, the cell of `value` empty. Elsewhere leave the cell empty.",
+            "{} is a result beyond a limit. Capability of measurements takes such results: the limit alone in a "
+            "column `below`, the cell of `value` empty. Elsewhere leave the cell empty.",
         ),
         (
             r"nan|n\.?/?a\.?|null|nil|none|missing|-+|\u2013|\u2014|\*|\.|\?|#n/?a|inf|-?inf(?:inity)?",
@@ -575,13 +575,17 @@ class Tabled:
         """The options by their names in a query, dotted where they are nested, and a field for each."""
         return _parameters(self.request, self.columns, self.data)
 
+    @property
+    def name(self) -> str:
+        """Of the shape of the query."""
+        return f"{type(self.request).__name__}Query"
+
     def shape(self) -> Schema:
         """What the query takes, as a shape of the contract."""
-        kind = type(self.request)
         members = {**self.parameters, "delimiter": _DELIMITER}
-        text = f"The options of `{kind.__name__}` beside a table, by the names they have in a query."
+        text = f"The options of `{type(self.request).__name__}` beside a table, by the names they have in a query."
         meta = type("Meta", (f.RequestShape.Meta,), {"description": text})
-        made: Schema = type(f"{kind.__name__}Query", (f.RequestShape,), {**members, "Meta": meta})()
+        made: Schema = type(self.name, (f.RequestShape,), {**members, "Meta": meta})()
         return made
 
     def described(self) -> str:
@@ -663,7 +667,8 @@ class Tabled:
         path = _path_of(entry.pointer or "#")
         if not path or (path[0] != "data" and path[0] not in self.columns.takes):
             return self._of_option(entry, path)
-        if ".".join(map(str, path)) in self.parameters and path[-1] not in read.data:
+        name = ".".join(map(str, path[:2]))
+        if name in self.parameters and path[1] in document["data"] and path[1] not in read.data:
             return self._of_option(entry, path)
         code, detail = entry.code, entry.detail
         row, column = read.place(path)
@@ -674,7 +679,8 @@ class Tabled:
         elif code == "null":
             detail = "This cell is empty, and a number is needed here."
         elif code == "required" and column is not None:
-            row, detail = 1, f"The table needs a column {column}."
+            instead = f", or the parameter {name}" if name in self.parameters else ""
+            row, detail = 1, f"The table needs a column {column}{instead}."
         return Entry(code, detail, None if row or column else "#", row=row, column=column)
 
     def _of_option(self, entry: Entry, path: Path) -> Entry:
@@ -682,7 +688,10 @@ class Tabled:
             name = ".".join(map(str, path[:at]))
             if name in self.parameters:
                 rest = problems.pointer(path[at:]) if path[at:] else None
-                return Entry(entry.code, entry.detail, rest, parameter=name)
+                detail = (
+                    "This parameter is required." if entry.code == "required" and not rest else entry.detail
+                )
+                return Entry(entry.code, detail, rest, parameter=name)
         name = ".".join(map(str, path))
         inner = [known for known in self.parameters if known.startswith(f"{name}.")]
         if entry.code == "required" and inner:

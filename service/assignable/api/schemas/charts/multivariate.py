@@ -39,7 +39,7 @@ class _VectorColumns(Columns):
             for member in ("ids", "times"):
                 labels = made.data.get(member, [])
                 own = labels[::size]
-                if labels == [label for label in own for _ in range(size)]:
+                if labels and labels == [label for label in own for _ in range(size)]:
                     made.data[member] = own
                     made.places["data", member] = [(2 + at * size, member[:-1]) for at in range(len(own))]
         return made
