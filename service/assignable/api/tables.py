@@ -17,6 +17,7 @@ import re
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
+from itertools import chain
 from typing import Any
 from urllib.parse import parse_qsl, unquote
 
@@ -199,28 +200,87 @@ def _shown(text: str) -> str:
 
 @dataclass(slots=True)
 class Table:
-    """The columns of a body by their names, in their order; taking one leaves it out."""
+    """A body with its header read; its rows are taken apart when a column is first asked for.
 
-    columns: dict[str, list[str]]
+    A column can be taken once: as many texts, kept alive, would cost more than the reading. What takes columns
+    raises :class:`Faulty` where the rows cannot be taken apart.
+    """
+
+    names: list[str]
     rows: int
+    mark: str
+    _text: str
     faults: list[Entry] = field(default_factory=list)
+    _columns: dict[str, list[str]] | None = None
 
     def __contains__(self, name: str) -> bool:
-        return name in self.columns
+        return name in self.names
 
     def texts(self, name: str) -> list[str]:
-        return self.columns.pop(name)
+        """A column as it stands."""
+        if self._columns is None:
+            flat = _cells(self._text, self.mark, self.rows, self.names)
+            self._text = ""
+            self._columns = {known: flat[at :: len(self.names)] for at, known in enumerate(self.names)}
+        return self._columns.pop(name)
 
     def numbers(self, name: str) -> list[Any]:
         """A column of numbers; what is no number stays a text."""
-        return numbers([self.columns.pop(name)], rows=False)
+        return numbers([self.texts(name)], rows=False)
 
     def rows_of(self, names: Sequence[str]) -> list[list[Any]]:
         """Some columns of numbers, row by row."""
-        return numbers([self.columns.pop(name) for name in names], rows=True)
+        before = self.names[: -len(names)]
+        if self._columns is None and self.names == [*before, *names]:
+            found = _rows_at_end(self._text, self.mark, self.rows, len(before), len(names))
+            if found is not None:
+                columns, read = found
+                self._text = ""
+                self._columns = dict(zip(before, columns, strict=True))
+                return read
+        return numbers([self.texts(name) for name in names], rows=True)
 
 
-class _Faulty(Exception):
+def _rows_at_end(
+    text: str, mark: str, rows: int, before: int, across: int
+) -> tuple[list[list[str]], list[list[Any]]] | None:
+    """The cells of the columns before, and the numbers at the end of each line; the quick road of most tables.
+
+    ``None`` where anything is out of the ordinary, which the slower road then sees to.
+    """
+    columns: list[list[str]] = []
+    if before:
+        # One flat list of texts: a list for each line would keep the collector of garbage busy.
+        quoted = '"' in text
+        cell = rf'("[^"\n]*"|[^"{mark}\n]*){mark}' if quoted else rf"([^{mark}\n]*){mark}"
+        parts = re.split(f"(?m)^{cell * before}", text)
+        if len(parts) != rows * (before + 1) + 1:
+            return None
+        columns = [parts[at :: before + 1] for at in range(1, before + 1)]
+        if quoted:
+            columns = [[one[1:-1] if one[:1] == '"' else one for one in column] for column in columns]
+        text = "".join(parts[before + 1 :: before + 1])
+        del parts
+    ends = text.encode()
+    if mark != ",":
+        if b"," in ends:
+            return None
+        ends = ends.replace(mark.encode(), b",")
+    if ends.translate(None, b"0123456789+-.eE, \n") or ends.count(b",") != rows * (across - 1):
+        return None
+    ends = b"[" + ends.replace(b"\n", b"],[") + b"]"
+    if b",," in ends or b"[," in ends or b",]" in ends or b"[]" in ends:
+        for gap, null in ((b",,", b",null,"), (b",,", b",null,"), (b"[,", b"[null,"), (b",]", b",null]")):
+            ends = ends.replace(gap, null)
+        ends = ends.replace(b"[]", b"[null]")
+    try:
+        read: list[list[Any]] = orjson.loads(b"[" + ends + b"]")
+    except orjson.JSONDecodeError:
+        return None
+    return (columns, read) if set(map(len, read)) == {across} else None
+
+
+class Faulty(Exception):
     """The table cannot be taken apart: its faults, and where there are more, how many."""
 
     def __init__(self, *found: Entry | int, kind: problems.ProblemType = CONTRACT_VIOLATION) -> None:
@@ -229,31 +289,28 @@ class _Faulty(Exception):
         self.found = found
 
 
-def _unreadable(code: str, detail: str, row: int | None = None) -> _Faulty:
+def _unreadable(code: str, detail: str, row: int | None = None) -> Faulty:
     shown = detail if row is None else f"{detail} (Row {row}.)"
-    return _Faulty(Entry(code, shown, row=row, pointer=None if row else "#"), kind=NOT_CSV)
+    return Faulty(Entry(code, shown, row=row, pointer=None if row else "#"), kind=NOT_CSV)
 
 
 def taken_apart(body: bytes, mark: str) -> Table:
-    """The table that a body holds. Raises :class:`_Faulty`."""
+    """The table that a body holds. Raises :class:`Faulty` for a text or a header that cannot be read."""
     text = _text_of(body)
     header, _, rest = text.partition("\n")
     names = _names_of(header, mark)
     del text
     rows = rest.count("\n") + 1
     if not rest:
-        raise _Faulty(Entry("no-rows", "There are no rows below the header.", row=1))
+        raise Faulty(Entry("no-rows", "There are no rows below the header.", row=1))
     if rows > MOST_ROWS:
-        raise _Faulty(
+        raise Faulty(
             Entry("too-many-rows", f"The table has {rows} rows; at most {MOST_ROWS} are taken.", "#")
         )
     if rows * len(names) > MOST_CELLS:
         detail = f"The table has {rows} rows of {len(names)} columns; at most {MOST_CELLS} cells are taken."
-        raise _Faulty(Entry("too-many-values", detail, "#"))
-    flat = _cells_without_quotes(rest, mark, rows, len(names))
-    if flat is None:
-        flat = list(_cells_line_by_line(rest, mark, names))
-    return Table({name: flat[at :: len(names)] for at, name in enumerate(names)}, rows)
+        raise Faulty(Entry("too-many-values", detail, "#"))
+    return Table(names, rows, mark, rest)
 
 
 def _text_of(body: bytes) -> str:
@@ -283,19 +340,19 @@ def _names_of(header: str, mark: str) -> list[str]:
     names = _cells_of_line(header, mark, 1)
     if len(names) > MOST_COLUMNS:
         detail = f"The header names {len(names)} columns; at most {MOST_COLUMNS} are taken."
-        raise _Faulty(Entry("too-many-columns", detail, row=1))
+        raise Faulty(Entry("too-many-columns", detail, row=1))
     other = next((name for name, other in DELIMITERS.items() if other != mark and other in header), None)
     if len(names) == 1 and other is not None:
         detail = (
             f"The header holds a {other} and is one column as it is read. If that parts the columns, add "
         )
-        raise _Faulty(Entry("other-delimiter", f"{detail}delimiter={other} to the query.", row=1))
+        raise Faulty(Entry("other-delimiter", f"{detail}delimiter={other} to the query.", row=1))
     faults: list[Entry] = []
     for at, name in enumerate(names):
         if fault := _fault_of_name(name, names[:at]):
             faults.append(Entry(fault.code, fault, row=1, column=_printable(name) or str(at + 1)))
     if faults:
-        raise _Faulty(*faults)
+        raise Faulty(*faults)
     return names
 
 
@@ -318,9 +375,16 @@ def _fault_of_name(name: str, before: Sequence[str]) -> Coded | None:
     return None
 
 
+def _cells(text: str, mark: str, rows: int, names: Sequence[str]) -> list[str]:
+    """All cells, row by row. Raises :class:`Faulty`."""
+    quick = _cells_without_quotes if '"' not in text else _cells_in_quotes
+    found = quick(text, mark, rows, len(names))
+    return list(_cells_line_by_line(text, mark, names)) if found is None else found
+
+
 def _cells_without_quotes(text: str, mark: str, rows: int, across: int) -> list[str] | None:
-    """All cells, row by row; ``None`` where there are quotes, or rows of another length."""
-    if '"' in text or text.count(mark) != rows * (across - 1):
+    """All cells, row by row; ``None`` where rows are of another length."""
+    if text.count(mark) != rows * (across - 1):
         return None
     if across == 1:
         return text.split("\n")
@@ -333,8 +397,23 @@ def _cells_without_quotes(text: str, mark: str, rows: int, across: int) -> list[
     return flat
 
 
+def _cells_in_quotes(text: str, mark: str, rows: int, across: int) -> list[str] | None:
+    """All cells, row by row; ``None`` where anything is wrong."""
+    lines = text.split("\n")
+    if "" in lines or max(map(len, lines)) > LONGEST_LINE:
+        return None
+    try:
+        found = list(csv.reader(lines, delimiter=mark, strict=True))
+    except csv.Error:
+        return None
+    # A quote that stays open takes the next line into its cell.
+    if len(found) != rows or set(map(len, found)) != {across}:
+        return None
+    return list(chain.from_iterable(found))
+
+
 def _cells_line_by_line(text: str, mark: str, names: Sequence[str]) -> Iterator[str]:
-    """All cells, row by row. Raises :class:`_Faulty` with every row that is not as long as the header."""
+    """All cells, row by row. Raises :class:`Faulty` with every row that is not as long as the header."""
     across = len(names)
     faults: list[Entry] = []
     more = 0
@@ -353,7 +432,7 @@ def _cells_line_by_line(text: str, mark: str, names: Sequence[str]) -> Iterator[
         else:
             more += 1
     if faults:
-        raise _Faulty(*faults, more)
+        raise Faulty(*faults, more)
 
 
 def _cells_of_line(line: str, mark: str, row: int) -> list[str]:
@@ -466,27 +545,30 @@ class Columns:
         fields = f.known_names(shape)
         others = self.others(table)
         made = Read({}, {member: (name,) for name, member in self.of.items()})
-        for name, member in self.of.items():
-            if name in table:
-                is_text = isinstance(fields[member], f.StringList | f.TimeList)
-                made.data[member] = table.texts(name) if is_text else table.numbers(name)
         if others and self.rows_of is not None:
             made.columns[self.rows_of] = tuple(others)
             made.data[self.rows_of] = table.rows_of(others)
             if self.names is not None:
                 made.data[self.names] = others
                 made.places["data", self.names] = [(1, name) for name in others]
+        for name, member in self.of.items():
+            if name in table:
+                is_text = isinstance(fields[member], f.StringList | f.TimeList)
+                made.data[member] = table.texts(name) if is_text else table.numbers(name)
         return made
 
     def others(self, table: Table) -> list[str]:
         """The columns of pieces. A name that is unknown, or that no pieces can have, is a fault."""
         several = self.rows_of is not None and not any(name in table for name in _ALONE)
         found: list[str] = []
-        for name in table.columns:
-            if name in self.of or name in _UNLOOKED:
+        for name in table.names:
+            if name in self.of or name in self.takes or name in _UNLOOKED:
                 continue
             plain = name.strip().casefold()
-            meant = next((known for known in (*self.of, *_UNLOOKED) if plain in (known, f"{known}s")), None)
+            meant = next(
+                (known for known in (*self.of, *self.takes, *_UNLOOKED) if plain in (known, f"{known}s")),
+                None,
+            )
             if several and meant is None and not {plain, plain.removesuffix("s")} & _OF_PLACES:
                 found.append(name)
                 continue
@@ -499,7 +581,7 @@ class Columns:
         return found
 
     def _known(self) -> str:
-        known = ", ".join(dict.fromkeys((*self.of, *_UNLOOKED)))
+        known = ", ".join(dict.fromkeys((*self.of, *self.takes, *_UNLOOKED)))
         return known if self.rows_of is None else f"{known} and columns of measurements"
 
 
@@ -607,9 +689,9 @@ class Tabled:
         kind = CONTRACT_VIOLATION
         try:
             table = taken_apart(body, mark)
+            faults = table.faults = [*faults, *table.faults]
             read = self.columns.read(table, self.data, options)
-            faults.extend(table.faults)
-        except _Faulty as found:
+        except Faulty as found:
             table_faults, kind = found.found, found.kind
         if faults or table_faults:
             raise problems.listed(kind, (*faults, *table_faults))
