@@ -32,10 +32,11 @@ load_all_checks()
 
 
 def wired(document: dict[str, Any]) -> dict[str, Any]:
-    """The document with its links in a form that the generator follows, and without what is for tables.
+    """The document with its links in a form that the generator follows, and without tables.
 
-    No document can say that parameters go with one media type only: tables have tests of their own. OpenAPI allows a link one runtime expression for the whole body, so the wiring of the members is in an
-    extension; the data of the request that was answered goes along.
+    OpenAPI allows a link one runtime expression for the whole body, so the wiring of the members is in an
+    extension; the data of the request that was answered goes along. It has no words for parameters that go with
+    one media type only, so CSV bodies have tests of their own.
     """
     for path in document["paths"].values():
         for operation in path.values():
