@@ -515,3 +515,10 @@ def test_a_large_table_takes_about_as_long_as_its_json() -> None:
 
     as_table = seconds(lambda: operation.tabled.loaded(body, b"")[0])  # type: ignore[union-attr]
     assert as_table < 3 * seconds(lambda: strict_json.loads(sent))
+
+
+def test_the_page_to_read_tells_of_the_table() -> None:
+    page = served.app().test_client().get(f"/docs/reading/{XBAR}").get_data(as_text=True)
+    for text in ("Or a table", "rules.published", "K-0412,2026-03-02T06:00:00Z,2.49", "rows more"):
+        assert text.replace("_", "_\u200b") in page, text
+    assert "Or a table" not in served.app().test_client().get("/docs/reading/judgeXbarR").get_data(as_text=True)

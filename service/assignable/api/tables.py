@@ -298,11 +298,12 @@ def taken_apart(body: bytes, mark: str) -> Table:
     """The table that a body holds. Raises :class:`Faulty` for a text or a header that cannot be read."""
     text = _text_of(body)
     header, _, rest = text.partition("\n")
-    names = _names_of(header, mark)
     del text
-    rows = rest.count("\n") + 1
     if not rest:
-        raise Faulty(Entry("no-rows", "There are no rows below the header.", row=1))
+        detail = "There are no rows below the header. (curl keeps the ends of lines with --data-binary alone.)"
+        raise Faulty(Entry("no-rows", detail, row=1))
+    names = _names_of(header, mark)
+    rows = rest.count("\n") + 1
     if rows > MOST_ROWS:
         raise Faulty(
             Entry("too-many-rows", f"The table has {rows} rows; at most {MOST_ROWS} are taken.", "#")
