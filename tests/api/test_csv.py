@@ -17,6 +17,7 @@ from werkzeug.test import TestResponse
 
 from assignable.api import problems, strict_json
 from assignable.api.answers import digest_of
+from assignable.api.contract import examples_directory
 from assignable.api.settings import Settings
 from contract import served
 
@@ -97,6 +98,10 @@ def test_every_operation_of_one_table_takes_csv() -> None:
     }
     assert set(TABLED) == fits | pictures | others
     assert {operation_id for operation_id, _ in EXAMPLES} == set(TABLED)
+    tables = {file.name.removesuffix(".request.csv") for file in examples_directory().glob("*.request.csv")}
+    queries = {file.name.removesuffix(".query.json") for file in examples_directory().glob("*.query.json")}
+    assert {name for _, name in EXAMPLES} == tables
+    assert queries <= tables
 
 
 @pytest.mark.parametrize(("operation_id", "name"), EXAMPLES)
@@ -304,6 +309,7 @@ H = "id,x1,x2\n"
         ("id,2.51\na,2.49\n", "", ("number-as-name", 1, "2.51")),
         ("ID,x1,x2\n1,1,2\n", "", ("unknown-column", 1, "ID")),
         ("batch,x1,x2\n1,1,2\n", "", ("unknown-column", 1, "batch")),
+        ("value\n1\n2\n", "", ("unknown-column", 1, "value")),
         ("mean,range,other\n1,2,3\n", "data.sizes=5", ("unknown-column", 1, "other")),
         # What the shape, and the calculation, find afterwards.
         ("id,time,x1,x2\na,2026-03-02 06:00,1,2\n", "", ("not-a-time", 2, "time")),
@@ -521,4 +527,6 @@ def test_the_page_to_read_tells_of_the_table() -> None:
     page = served.app().test_client().get(f"/docs/reading/{XBAR}").get_data(as_text=True)
     for text in ("Or a table", "rules.published", "K-0412,2026-03-02T06:00:00Z,2.49", "rows more"):
         assert text.replace("_", "_\u200b") in page, text
-    assert "Or a table" not in served.app().test_client().get("/docs/reading/judgeXbarR").get_data(as_text=True)
+    assert "Or a table" not in served.app().test_client().get("/docs/reading/judgeXbarR").get_data(
+        as_text=True
+    )

@@ -161,13 +161,13 @@ class Operation:
         """The request as a CSV table with options in the query, where its data is one rectangular table."""
         return tables.of(self.request)
 
-    def answer_to_table(self, body: bytes, query: bytes = b"") -> bytes:
+    def answer_to_table(self, body: bytes, query: bytes = b"", **path: str) -> bytes:
         """The answer to a CSV body; its digest is of the query, a line feed and the body."""
         assert self.tabled is not None
         assert self.request is not None
         document, read = self.tabled.loaded(body, query)
         try:
-            return self.write(self.view(self.request.load(document)), query + b"\n" + body)
+            return self.write(self.view(self.request.load(document), **path), query + b"\n" + body)
         except (ValidationError, SpcError) as error:
             raise self.tabled.placed(error, document, read) from error
 
@@ -395,7 +395,7 @@ class Contract:
                     kind = problems.NOT_CSV if as_table else problems.NOT_JSON
                     body = bodies.inflate(body, self._settings.max_inflated_bytes, kind)
                 if as_table:
-                    written = operation.answer_to_table(body, request.query_string)
+                    written = operation.answer_to_table(body, request.query_string, **path)
                 else:
                     if tabled is not None and environ.get("QUERY_STRING"):
                         tables.refuse_parameters(request.args)

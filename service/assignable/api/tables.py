@@ -15,6 +15,7 @@ import copy
 import csv
 import re
 from collections.abc import Iterable, Iterator, Mapping, Sequence
+from contextlib import suppress
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 from itertools import chain
@@ -44,7 +45,7 @@ _UNLOOKED = ("id", "time")  # may stand in any table: an export has them whether
 _OF_PLACES = frozenset(
     """
     id time date timestamp datetime no nr number index row sample subgroup batch lot serial shift operator
-    mean range sd size count inspected interval position part appraiser item rating reference below
+    mean range sd size count inspected interval position part appraiser item rating reference below value
     """.split()  # noqa: SIM905 - as a list it would take forty lines
 )
 """Names that a column of measurements cannot have: their numbers would enter the statistics unseen."""
@@ -64,7 +65,7 @@ def numbers(columns: list[list[str]], *, rows: bool) -> list[Any]:
     Empty cells are ``None``. ``columns`` is emptied: as many texts, still alive, would cost more than the
     reading. The numbers are those that JSON's reader makes of the same digits, for it reads them.
     """
-    count, across = len(columns[0]), len(columns)
+    across = len(columns)
     joined = _joined(columns, rows)
     if joined is not None:
         columns.clear()
@@ -78,7 +79,7 @@ def numbers(columns: list[list[str]], *, rows: bool) -> list[Any]:
             )
     read = [[_number(cell) for cell in column] for column in columns]
     columns.clear()
-    return [list(row) for row in zip(*read, strict=True)] if rows else read[0][:count]
+    return [list(row) for row in zip(*read, strict=True)] if rows else read[0]
 
 
 def _joined(columns: list[list[str]], rows: bool) -> bytes | None:
@@ -300,7 +301,9 @@ def taken_apart(body: bytes, mark: str) -> Table:
     header, _, rest = text.partition("\n")
     del text
     if not rest:
-        detail = "There are no rows below the header. (curl keeps the ends of lines with --data-binary alone.)"
+        detail = (
+            "There are no rows below the header. (curl keeps the ends of lines with --data-binary alone.)"
+        )
         raise Faulty(Entry("no-rows", detail, row=1))
     names = _names_of(header, mark)
     rows = rest.count("\n") + 1
@@ -501,7 +504,7 @@ class Read:
     def place(self, path: Path) -> Place:
         """Where in the table stands what a path of the document is about."""
         for at in range(len(path) - 1, 0, -1):
-            if path[:at] in self.places:
+            with suppress(LookupError, TypeError):
                 found: Place = self.places[path[:at]][path[at]]
                 return found
         columns = self.columns.get(str(path[1]), ()) if len(path) > 1 else ()
@@ -516,7 +519,7 @@ class Columns:
     """Which columns a data shape takes, and the member that each becomes.
 
     ``rows_of`` is the member that all other columns become together, row by row; ``names`` the one that
-    their names become. A column ``value`` is all that is measured, and nothing else beside it then is.
+    their names become. Beside a column ``value`` or ``mean`` that is known there are no others.
     """
 
     of: Mapping[str, str]
@@ -560,7 +563,7 @@ class Columns:
 
     def others(self, table: Table) -> list[str]:
         """The columns of pieces. A name that is unknown, or that no pieces can have, is a fault."""
-        several = self.rows_of is not None and not any(name in table for name in _ALONE)
+        several = self.rows_of is not None and not any(name in self.of and name in table for name in _ALONE)
         found: list[str] = []
         for name in table.names:
             if name in self.of or name in self.takes or name in _UNLOOKED:
@@ -597,6 +600,7 @@ class JsonText(f.Field):
 
 
 def _parameters(shape: Schema, table: Columns, data: Schema) -> dict[str, Any]:
+    """A number of ``data`` that may hold for all rows is an option; so is every member no column gives."""
     found: dict[str, Any] = {}
     for name, option in f.known_names(shape).items():
         if name == "data":
