@@ -17,10 +17,12 @@ from .problems import (
     UNSUPPORTED_CONTENT_ENCODING,
     UNSUPPORTED_MEDIA_TYPE,
     Problem,
+    ProblemType,
 )
 
 JSON = "application/json"
 NDJSON = "application/x-ndjson"
+CSV = "text/csv"
 _CHUNK = 65536
 _NOT_ONE_GZIP = "The gzip body is cut off, or has more after its end."
 
@@ -38,19 +40,24 @@ def require_acceptable(environ: Environ, media_type: str) -> None:
         )
 
 
-def require(environ: Environ, expected: str) -> None:
-    """Raises the problem ``unsupported-media-type`` for a body that does not call itself this, in UTF-8."""
-    content_type = environ.get("CONTENT_TYPE", "")
-    if content_type == expected:
-        return
+def require(environ: Environ, *expected: str) -> str:
+    """Which of these media types the body calls itself, in UTF-8, and a table with a header row.
+
+    Raises the problem ``unsupported-media-type`` for anything else.
+    """
+    content_type: str = environ.get("CONTENT_TYPE", "")
+    if content_type == expected[0]:
+        return content_type
     media_type, options = parse_options_header(content_type)
-    if media_type.lower() == expected and options.get("charset", "utf-8").lower() in ("utf-8", "utf8"):
-        return
+    named = media_type.lower()
+    utf_8 = options.get("charset", "utf-8").lower() in ("utf-8", "utf8")
+    if named in expected and utf_8 and options.get("header", "present") == "present":
+        return named
     shown = "has no Content-Type" if not content_type else "has another Content-Type"
     raise Problem(
         UNSUPPORTED_MEDIA_TYPE,
-        f"The body {shown}; this operation reads {expected} in UTF-8.",
-        headers=(("Accept-Post", expected),),
+        f"The body {shown}; this operation reads {' or '.join(expected)} in UTF-8.",
+        headers=(("Accept-Post", ", ".join(expected)),),
     )
 
 
@@ -159,17 +166,17 @@ def _rest(stream: Any, missing: int) -> bytes:
     return b"".join(parts)
 
 
-def inflate(body: bytes, limit: int) -> bytes:
-    """A gzip body undone, as far as the limit and not a byte further."""
+def inflate(body: bytes, limit: int, unreadable: ProblemType = NOT_JSON) -> bytes:
+    """A gzip body undone, as far as the limit and not a byte further; ``unreadable`` where it is none."""
     unpacker = zlib.decompressobj(31)
     try:
         whole = unpacker.decompress(body, limit + 1)
     except zlib.error:
-        raise Problem(NOT_JSON, "The body calls itself gzip and is not.") from None
+        raise Problem(unreadable, "The body calls itself gzip and is not.") from None
     if len(whole) > limit:
         raise _inflates_too_far(limit)
     if not unpacker.eof or unpacker.unused_data:
-        raise Problem(NOT_JSON, _NOT_ONE_GZIP)
+        raise Problem(unreadable, _NOT_ONE_GZIP)
     return whole
 
 

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import re
 import threading
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
@@ -22,8 +22,16 @@ from marshmallow import Schema, ValidationError
 
 from ..documents.seal import UNSEALED, Seals
 from ..spc.errors import SpcError
-from . import answers, bodies, explaining, problems, streams, strict_json
-from .fields import AnswerShape, ObjectList, StrictInteger, StrictString, known_names
+from . import answers, bodies, explaining, problems, streams, strict_json, tables
+from .fields import (
+    AnswerShape,
+    ObjectList,
+    StrictInteger,
+    StrictString,
+    from_text,
+    known_names,
+    reads_json,
+)
 from .problems import Entry, Problem, ProblemType
 from .settings import Settings
 from .shedding import Slots
@@ -54,6 +62,10 @@ class ProblemEntry(AnswerShape):
         metadata={"description": "Where in the body, as a JSON Pointer (RFC 6901): #/data/values/3/1."}
     )
     parameter = StrictString(metadata={"description": "Which parameter of the query."})
+    row = StrictInteger(metadata={"description": "Of a CSV body: which row; the header is row 1."})
+    column = StrictString(
+        metadata={"description": "Of a CSV body: which column, by its name; by its number where it has none."}
+    )
     code = StrictString(required=True, metadata={"description": "Stable; for programs."})
     detail = StrictString(required=True, metadata={"description": "A sentence; for people."})
 
@@ -84,7 +96,10 @@ class Provenance(AnswerShape):
     method = StrictString(required=True, metadata={"description": "The method's name in this service."})
     request_digest = StrictString(
         required=True,
-        metadata={"description": "Of the request's body, gzip undone: sha-256: and hexadecimal digits."},
+        metadata={
+            "description": "Of the request's body, gzip undone: sha-256: and hexadecimal digits. Of a CSV request: of "
+            "its query as it was sent, a line feed, and the body."
+        },
     )
 
 
@@ -97,7 +112,7 @@ class Lines:
     example: str
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, kw_only=True)
 class Operation:
     """One operation as it was bound; :meth:`execute` walks its road without HTTP."""
 
@@ -140,6 +155,29 @@ class Operation:
             return self.view(**path) if shape is None else self.view(shape.load(document), **path)
         except SpcError as error:
             raise problems.placed(error, document) from error
+
+    @cached_property
+    def tabled(self) -> tables.Tabled | None:
+        """The request as a CSV table with options in the query, where its data is one rectangular table."""
+        return tables.of(self.request)
+
+    def answer_to_table(self, body: bytes, query: bytes = b"", **path: str) -> bytes:
+        """The answer to a CSV body; its digest is of the query, a line feed and the body."""
+        assert self.tabled is not None
+        assert self.request is not None
+        document, read = self.tabled.loaded(body, query)
+        try:
+            return self.write(self.view(self.request.load(document), **path), query + b"\n" + body)
+        except (ValidationError, SpcError) as error:
+            raise self.tabled.placed(error, document, read) from error
+
+    def tables(self) -> Iterator[tuple[str, dict[str, Any], bytes]]:
+        """The examples that are tables: the name, the parameters and the body of each."""
+        directory = examples_directory()
+        for name in self.examples if self.tabled is not None else ():
+            if (file := directory / f"{name}.request.csv").exists():
+                query = directory / f"{name}.query.json"
+                yield name, orjson.loads(query.read_bytes()) if query.exists() else {}, file.read_bytes()
 
     def write(self, result: Any, body: bytes = b"") -> bytes:
         """A view's result as the bytes of the answer."""
@@ -341,19 +379,27 @@ class Contract:
     def _taking_body(self, operation: Operation) -> Callable[..., Response]:
         content_type = operation.media_type
         operation_id = operation.operation_id
+        tabled = operation.tabled
+        taken = (bodies.JSON,) if tabled is None else (bodies.JSON, bodies.CSV)
 
         def answer(**path: str) -> Response:
             environ = request.environ
             environ[OPERATION] = operation_id
             bodies.require_acceptable(environ, content_type)
-            bodies.require(environ, bodies.JSON)
+            as_table = bodies.require(environ, *taken) == bodies.CSV
             packed = bodies.encoding_of(environ)
             body = bodies.read(environ, self._settings.max_body_bytes)
             # The place is taken before parsing: objects weigh many times what the text does.
             with self._slots:
                 if packed:
-                    body = bodies.inflate(body, self._settings.max_inflated_bytes)
-                written = operation.write(operation.computed(strict_json.loads(body), **path), body)
+                    kind = problems.NOT_CSV if as_table else problems.NOT_JSON
+                    body = bodies.inflate(body, self._settings.max_inflated_bytes, kind)
+                if as_table:
+                    written = operation.answer_to_table(body, request.query_string, **path)
+                else:
+                    if tabled is not None and environ.get("QUERY_STRING"):
+                        tables.refuse_parameters(request.args)
+                    written = operation.write(operation.computed(strict_json.loads(body), **path), body)
             return _response(written, content_type, (("Cache-Control", "no-store"),))
 
         return answer
@@ -429,7 +475,7 @@ def _load_query(shape: Schema) -> Any:
     for name, texts in request.args.lists():
         if len(texts) > 1:
             faults.append(Entry("repeated-parameter", "This parameter is given twice.", parameter=name))
-        given[name] = _from_text(texts[0]) if name in known and _reads_json(known[name]) else texts[0]
+        given[name] = from_text(texts[0]) if name in known and reads_json(known[name]) else texts[0]
     try:
         loaded = shape.load(given)
     except ValidationError as error:
@@ -441,17 +487,6 @@ def _load_query(shape: Schema) -> Any:
         detail = faults[0].detail if len(faults) == 1 else f"{len(faults)} parameters are at fault."
         raise Problem(problems.CONTRACT_VIOLATION, detail, errors=faults[: problems.MAX_ERRORS])
     return loaded
-
-
-def _reads_json(parameter: Any) -> bool:
-    return parameter.json_schema().get("type") in ("number", "integer", "boolean")
-
-
-def _from_text(text: str) -> Any:
-    try:
-        return orjson.loads(text)
-    except orjson.JSONDecodeError:
-        return text
 
 
 def _check(

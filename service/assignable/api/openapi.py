@@ -15,8 +15,8 @@ from apispec.ext.marshmallow.common import resolve_schema_instance
 from apispec.ext.marshmallow.openapi import OpenAPIConverter
 from marshmallow import INCLUDE, Schema
 
-from . import answers, problems
-from .bodies import NDJSON
+from . import answers, problems, tables
+from .bodies import CSV, NDJSON
 from .contract import _PARAMETER, Operation, ProblemDetails, examples_directory
 from .fields import json_schema_of, list_bounds_of
 from .problems import ProblemType
@@ -79,6 +79,8 @@ def problems_of(operation: Operation, access: Access | None = None) -> tuple[Pro
         possible |= set(access.problems())
     if operation.request is not None:
         possible |= set(_OF_A_BODY)
+        if operation.tabled is not None:
+            possible.add(problems.NOT_CSV)
     if operation.lines is not None:
         possible |= set(_OF_A_STREAM)
     if operation.query is not None:
@@ -118,6 +120,9 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: A
         for name, scheme in access.schemes().items():
             spec.components.security_scheme(name, scheme)
     spec.components.schema("Problem", schema=ProblemDetails)
+    options = {operation.tabled.name: operation.tabled for operation in operations if operation.tabled}
+    for name, tabled in options.items():
+        spec.components.schema(name, schema=tabled.shape())
     for operation in operations:
         for shape in () if operation.lines is None else (*operation.lines.asked, *operation.lines.answered):
             if shape.__name__ not in spec.components.schemas:
@@ -145,13 +150,18 @@ def _operation(operation: Operation, access: Access | None) -> dict[str, Any]:
     ]
     if operation.query is not None:
         parameters.append({"in": "query", "schema": operation.query})
+    if operation.tabled is not None:
+        parameters.append(_options(operation, operation.tabled))
     if parameters:
         described["parameters"] = parameters
     if operation.request is not None:
         content: dict[str, Any] = {"schema": operation.request}
         if examples := _examples(operation, "request", required=True):
             content["examples"] = examples
-        described["requestBody"] = {"required": True, "content": {answers.JSON: content}}
+        bodies: dict[str, Any] = {answers.JSON: content}
+        if operation.tabled is not None:
+            bodies[CSV] = _table(operation, operation.tabled)
+        described["requestBody"] = {"required": True, "content": bodies}
     if operation.lines is not None:
         described["requestBody"] = {
             "required": True,
@@ -161,6 +171,29 @@ def _operation(operation: Operation, access: Access | None) -> dict[str, Any]:
     if access is not None and operation.operation_id not in OPEN:
         described["security"] = [{name: []} for name in access.schemes()]
     return described
+
+
+def _options(operation: Operation, tabled: tables.Tabled) -> dict[str, Any]:
+    """The options beside a table: one parameter for generated clients, whose members are those of the query."""
+    described: dict[str, Any] = {
+        "in": "query",
+        "name": "options",
+        "required": False,
+        "style": "form",
+        "explode": True,
+        "description": tables.PARAMETER_TEXT,
+        "schema": {"$ref": f"#/components/schemas/{tabled.name}"},
+    }
+    if asked := {name: {"value": given} for name, given, _ in operation.tables()}:
+        described["examples"] = asked
+    return described
+
+
+def _table(operation: Operation, tabled: tables.Tabled) -> dict[str, Any]:
+    content: dict[str, Any] = {"schema": {"type": "string", "description": tabled.described()}}
+    if found := {name: {"value": body.decode()} for name, _, body in operation.tables()}:
+        content["examples"] = found
+    return content
 
 
 def _success(operation: Operation) -> dict[str, Any]:

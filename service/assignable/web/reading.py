@@ -6,8 +6,10 @@ import json
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
+from urllib.parse import urlencode
 
 _DEEPEST = 12
+_LINES = 6  # of a table that is shown
 _NO_BOUND = 1e15
 """A bound as large is one of arithmetic: it tells a reader nothing."""
 _BOUNDS = (
@@ -67,6 +69,16 @@ class Example:
 
 
 @dataclass(frozen=True, slots=True)
+class Table:
+    """A body that may be a table instead: what it holds, the options beside it, and the beginning of one."""
+
+    text: str
+    options: tuple[Field, ...]
+    asked: str
+    shown: str
+
+
+@dataclass(frozen=True, slots=True)
 class Reading:
     """An operation as it is read."""
 
@@ -80,6 +92,7 @@ class Reading:
     deprecated: bool
     asks: tuple[Field, ...]
     sends: tuple[Field, ...] | None
+    table: Table | None
     examples: tuple[Example, ...]
     media_type: str
     by_line: bool
@@ -125,7 +138,9 @@ class Document:
             return None
         method, path, entry = self._found[operation_id]
         (media_type, content), *_ = entry["responses"]["200"]["content"].items()
-        body = next(iter(entry.get("requestBody", {}).get("content", {}).values()), None)
+        bodies = entry.get("requestBody", {}).get("content", {})
+        body = next(iter(bodies.values()), None)
+        table = bodies.get("text/csv")
         return Reading(
             operation_id=operation_id,
             draws=next(
@@ -139,9 +154,10 @@ class Document:
             deprecated=entry.get("deprecated", False),
             asks=tuple(
                 Field("", one["name"], self._kind(one["schema"]), one["required"], one.get("description", ""))
-                for one in entry.get("parameters", ())
+                for one in (entry.get("parameters", ()) if table is None else ())
             ),
             sends=None if body is None else tuple(self._fields(_each(body["schema"]), "", ())),
+            table=None if table is None else self._table(path, table, entry["parameters"][0]),
             examples=() if body is None else self._examples(body, content),
             media_type=media_type,
             by_line="x-line" in content["schema"],
@@ -152,6 +168,19 @@ class Document:
                 for name, link in entry["responses"]["200"].get("links", {}).items()
                 if "operationId" in link
             ),
+        )
+
+    def _table(self, path: str, body: Mapping[str, Any], options: Mapping[str, Any]) -> Table:
+        name, given = next(iter(body["examples"].items()))
+        asked = options.get("examples", {}).get(name, {}).get("value", {})
+        query = urlencode({key: one if isinstance(one, str) else _written(one) for key, one in asked.items()})
+        lines = given["value"].splitlines()
+        more = [f"... and {len(lines) - _LINES} rows more"] if len(lines) > _LINES + 1 else []
+        return Table(
+            body["schema"]["description"],
+            tuple(self._fields(options["schema"], "", ())),
+            f"{path}?{query}" if query else path,
+            "\n".join([*lines[: _LINES if more else None], *more]),
         )
 
     def _examples(self, body: Mapping[str, Any], content: Mapping[str, Any]) -> tuple[Example, ...]:
