@@ -28,7 +28,7 @@ from marshmallow import Schema, ValidationError
 from ..spc.errors import SpcError
 from . import fields as f
 from . import problems, strict_json
-from .problems import CONTRACT_VIOLATION, MAX_ERRORS, NOT_CSV, Coded, Entry, Problem
+from .problems import CONTRACT_VIOLATION, MAX_ERRORS, NOT_COMPUTABLE, NOT_CSV, Coded, Entry, Problem
 
 DELIMITERS = {"comma": ",", "semicolon": ";", "tab": "\t"}
 LONGEST_LINE = 131_072  # characters; csv's own bound on a field
@@ -804,11 +804,12 @@ def of(request: Schema | None) -> Tabled | None:
 
 
 def refuse_parameters(query: Iterable[str]) -> None:
-    """Raises the problem of a JSON body with options in the query, where they would be ignored."""
+    """Raises the problem of a JSON body with options in the query, where they would be ignored.
+
+    The contract has no words for parameters of one media type, so that such a request has the shape it states.
+    """
     detail = "Parameters are for CSV bodies; JSON holds its options itself. Put this into the body."
-    raise problems.listed(
-        CONTRACT_VIOLATION, (Entry("only-with-csv", detail, parameter=name) for name in query)
-    )
+    raise problems.listed(NOT_COMPUTABLE, (Entry("only-with-csv", detail, parameter=name) for name in query))
 
 
 def _unknown(name: str, known: Iterable[str]) -> Entry:
