@@ -254,6 +254,17 @@ class Entry:
     row: int | None = None
     column: str | None = None
 
+    @property
+    def place(self) -> str:
+        """Where it is, in words; empty where it is of the body as a whole."""
+        if self.parameter is not None:
+            return f"Parameter {self.parameter}"
+        if self.row is not None:
+            return f"Row {self.row}" + ("" if self.column is None else f", column {self.column}")
+        if self.column is not None:
+            return f"Column {self.column}"
+        return "" if self.pointer in (None, "#") else f"At {self.pointer}"
+
 
 class Problem(Exception):
     """A failure ready to be answered; the edge's own layers raise it."""
@@ -292,8 +303,8 @@ class Problem(Exception):
         """Where the one fault is that the detail tells: not everybody looks at the entry beside it."""
         if len(self.errors) != 1 or self.errors[0].detail != self.detail:
             return ""
-        pointer = self.errors[0].pointer
-        return "" if pointer in (None, "#") else f" (At {pointer}.)"
+        place = self.errors[0].place
+        return f" ({place}.)" if place else ""
 
     def below(self, root: str) -> Problem:
         """The same problem of a body that stands in a larger one, at this pointer."""
