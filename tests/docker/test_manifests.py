@@ -310,6 +310,18 @@ def test_ports_agree() -> None:
     assert [one["port"] for one in rule["ports"]] == ["http"]
 
 
+def test_the_build_is_sent_what_it_copies_and_no_more() -> None:
+    copied = re.findall(r"^COPY (?!--from)(.*) \S+$", DOCKERFILE, re.MULTILINE)
+    first, *sent = [
+        line
+        for line in (ROOT / ".dockerignore").read_text().splitlines()
+        if line and not line.startswith("#")
+    ]
+    assert first == "*"
+    assert {line.removeprefix("!") for line in sent if line.startswith("!")} == set(" ".join(copied).split())
+    assert {line for line in sent if not line.startswith("!")} == {"**/__pycache__"}
+
+
 def test_labels_agree() -> None:
     labels = MANIFESTS["deployment"]["spec"]["template"]["metadata"]["labels"]
     (spread,) = POD["topologySpreadConstraints"]
@@ -389,7 +401,7 @@ def sized(text: str) -> int:
 def needed(settings: Settings) -> int:
     """The most that a server takes, in bytes, by the formula of docker/README.md."""
     most = max(settings.max_body_bytes, settings.max_inflated_bytes)
-    of_a_worker = settings.threads * settings.max_body_bytes + settings.compute_slots * 15 * most
+    of_a_worker = settings.threads * settings.max_body_bytes + settings.compute_slots * 50 * most
     return 256 * MIB + settings.workers * of_a_worker
 
 
