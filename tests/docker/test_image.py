@@ -31,7 +31,7 @@ from typing import Any
 import pytest
 
 from assignable.api.contract import examples_directory
-from docker.machines import PATIENCE_SECONDS, PLAIN, ROOT
+from machines import PATIENCE_SECONDS, PLAIN, ROOT
 from test_house import close
 
 pytestmark = [

@@ -29,12 +29,13 @@ from cryptography.x509.oid import NameOID
 from assignable.api.contract import examples_directory
 from assignable.api.problems import TYPES
 from assignable.api.settings import Settings
-from docker.machines import (
+from machines import (
     PROXY,
     Answer,
     Replica,
     call,
     configure,
+    eventually,
     free_port,
     needs_nginx,
     nginx,
@@ -213,14 +214,15 @@ def test_a_compressed_request_arrives(port: int) -> None:
 def test_a_request_keeps_its_id(port: int, server: Replica) -> None:
     kept = call(port, "POST", LIMITS, EXAMPLE, {"X-Request-ID": "lot-7.b_2"})
     assert kept.headers["X-Request-ID"] == "lot-7.b_2"
-    assert "lot-7.b_2" in server.answered()
+    assert eventually(lambda: "lot-7.b_2" in server.answered())
     for given in ("", "two words", "x" * 129):
         made = call(port, "POST", LIMITS, b"{", {"X-Request-ID": given} if given else {})
         assert made.json["request_id"] == made.headers["X-Request-ID"] != given
         assert re.fullmatch(
             "[0-9a-f]{32}", made.headers["X-Request-ID"]
         )  # nginx's, so that both logs have it
-        assert made.headers["X-Request-ID"] in server.answered()
+        name = made.headers["X-Request-ID"]
+        assert eventually(lambda name=name: name in server.answered())
 
 
 def test_the_server_is_told_who_asked_and_how(tmp_path: Path) -> None:
@@ -346,7 +348,7 @@ def test_a_server_that_is_not_reached_is_passed_over(server: Replica, tmp_path: 
     with black_hole() as gone, proxy(tmp_path, [gone, server.port]) as port:
         began = time.monotonic()
         assert [call(port, "POST", LIMITS, EXAMPLE).status for _ in range(4)] == [200] * 4
-        assert 2.5 < time.monotonic() - began < 6
+        assert 2.5 < time.monotonic() - began < 8
 
 
 def test_none_is_reached(tmp_path: Path) -> None:
@@ -393,7 +395,7 @@ def test_clients_that_stall_do_no_harm(port: int, text: bytes) -> None:
         f"median {quiet * 1000:.1f} ms, beside {STALLED} that stall {statistics.median(taken) * 1000:.1f} ms"
     )
     assert statistics.median(taken) < 5 * quiet + 0.02
-    assert max(taken) < 1
+    assert max(taken) < 3
 
 
 def test_without_it_they_would(server: Replica) -> None:

@@ -11,7 +11,7 @@ import socket
 import subprocess
 import sys
 import time
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -19,7 +19,7 @@ from typing import Any
 
 import pytest
 
-ROOT = Path(__file__).resolve().parents[2]
+ROOT = Path(__file__).resolve().parents[1]
 PROXY = ROOT / "docker" / "proxy"
 PATIENCE_SECONDS = 30
 PLAIN = {name: value for name, value in os.environ.items() if not name.startswith("ASSIGNABLE_")}
@@ -84,6 +84,14 @@ def _wait_for(process: subprocess.Popen[bytes], port: int, path: str, log: Path)
             time.sleep(0.05)
         else:
             return
+
+
+def eventually(condition: Callable[[], bool]) -> bool:
+    """Whether it comes true before patience ends: a server writes its log after it has answered."""
+    until = time.monotonic() + PATIENCE_SECONDS
+    while not condition() and time.monotonic() < until:
+        time.sleep(0.05)
+    return condition()
 
 
 @dataclass
