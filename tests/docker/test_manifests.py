@@ -433,8 +433,14 @@ def test_the_proxy_agrees_with_the_service() -> None:
     for name, value in directives():
         given.setdefault(name, []).append(value)
     chosen = options(Settings())
-    assert [sized(value) for value in given["client_max_body_size"]] == [Settings().max_body_bytes]
-    assert f"the {Settings().max_body_bytes // MIB} MiB this" in (DOCKER / "proxy" / "nginx.conf").read_text()
+    limits = [Settings().max_body_bytes, Settings().max_stream_bytes]
+    assert [sized(value) for value in given["client_max_body_size"]] == limits
+    told = "A body may have {} MiB; one of lines, for /v1/bulk, {} MiB.".format(
+        *(size // MIB for size in limits)
+    )
+    assert told in (DOCKER / "proxy" / "nginx.conf").read_text()
+    (streams,) = given["limit_conn"]
+    assert 0 < int(streams.removeprefix("streams ")) < Settings().threads
     *_, idle = given["keepalive_timeout"]
     assert int(idle.removesuffix("s")) < chosen["keepalive"]
     (wait,) = given["proxy_read_timeout"]

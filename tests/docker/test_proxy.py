@@ -30,6 +30,7 @@ from assignable.api.contract import examples_directory
 from assignable.api.problems import TYPES
 from assignable.api.settings import Settings
 from machines import (
+    PATIENCE_SECONDS,
     PROXY,
     Answer,
     Replica,
@@ -53,7 +54,7 @@ TOO_LARGE = Settings().max_body_bytes + 1
 
 @pytest.fixture(scope="module")
 def server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Replica]:
-    with replica(tmp_path_factory.mktemp("server"), "--threads", "4") as started:
+    with replica(tmp_path_factory.mktemp("server")) as started:
         yield started
 
 
@@ -311,6 +312,57 @@ def test_no_server_is_there(tmp_path: Path) -> None:
         is_problem(call(port, "POST", LIMITS, EXAMPLE), 503, "busy")
 
 
+# Streams of lines -----------------------------------------------------------------------------------
+
+BULK = "/v1/bulk/signals"
+LINES = (examples_directory() / "bulk-signals.request.ndjson").read_bytes()
+AS_LINES = {"Content-Type": "application/x-ndjson", "X-Request-ID": "lines"}
+
+
+def test_lines_are_answered(port: int, server: Replica) -> None:
+    through = call(port, "POST", BULK, LINES, AS_LINES)
+    assert through.status == 200
+    assert through.body == call(server.port, "POST", BULK, LINES, AS_LINES).body
+    assert json.loads(through.body.splitlines()[-1])["done"]
+
+
+def test_a_stream_may_be_longer_than_a_body(port: int) -> None:
+    blank = b" " * 999 + b"\n"
+    longer = call(port, "POST", BULK, LINES + blank * (TOO_LARGE // 1000 + 1), AS_LINES)
+    assert longer.body.splitlines()[:-1] == call(port, "POST", BULK, LINES, AS_LINES).body.splitlines()[:-1]
+    limit = Settings().max_stream_bytes
+    head = f"POST {BULK} HTTP/1.1\r\nHost: here\r\nContent-Length: {limit + 1}\r\n\r\n"
+    is_problem(raw(port, head.encode()), 413, "content-too-large")
+
+
+def test_the_first_answers_leave_before_the_last_lines_come(port: int) -> None:
+    """Held back are the first 8 MiB of answers: here they are more."""
+    refused = b'{"x":1}\n' * 1000
+    with socket.create_connection(("127.0.0.1", port), timeout=PATIENCE_SECONDS) as client:
+        head = b"POST /v1/bulk HTTP/1.1\r\nHost: here\r\nContent-Type: application/x-ndjson\r\n"
+        client.sendall(head + b"Transfer-Encoding: chunked\r\n\r\n")
+        for _ in range(200):
+            client.settimeout(PATIENCE_SECONDS)
+            client.sendall(b"%x\r\n" % len(refused) + refused + b"\r\n")
+            client.settimeout(0.05)
+            try:
+                assert client.recv(1000).startswith(b"HTTP/1.1 200 ")
+            except TimeoutError:
+                continue
+            return
+    pytest.fail("No answer came while lines were sent.")
+
+
+def test_streams_that_stall_leave_threads_to_the_others(port: int) -> None:
+    head = f"POST {BULK} HTTP/1.1\r\nHost: here\r\nContent-Type: application/x-ndjson\r\n".encode()
+    with ExitStack() as stack:
+        stall(stack, port, head + b"Content-Length: 5000\r\n\r\n{", Settings().threads - 2)
+        time.sleep(0.3)
+        is_problem(call(port, "POST", BULK, LINES, AS_LINES), 503, "busy")
+        assert max(seconds(port, 20)) < 3
+    assert eventually(lambda: call(port, "POST", BULK, LINES, AS_LINES).status == 200)
+
+
 # What it does when a server is lost -----------------------------------------------------------------
 
 
@@ -400,7 +452,7 @@ def test_clients_that_stall_do_no_harm(port: int, text: bytes) -> None:
 
 def test_without_it_they_would(server: Replica) -> None:
     with ExitStack() as stack:
-        stall(stack, server.port, STALLS[1], 8)
+        stall(stack, server.port, STALLS[1], Settings().threads)
         time.sleep(0.3)
         with pytest.raises(TimeoutError):
             call(server.port, "POST", LIMITS, EXAMPLE, patience=1)
