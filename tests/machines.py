@@ -5,13 +5,14 @@ from __future__ import annotations
 import http.client
 import json
 import os
+import re
 import shutil
 import signal
 import socket
 import subprocess
 import sys
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -144,9 +145,19 @@ def replica(folder: Path, *arguments: str, **variables: str) -> Iterator[Replica
         started.end()
 
 
-def configure(folder: Path, port: int, upstreams: Sequence[int], more: str = "") -> Path:
-    """The proxy's configuration in ``folder``, with the two files that differ from site to site."""
+def configure(
+    folder: Path, port: int, upstreams: Sequence[int], more: str = "", scaled: Mapping[str, str] | None = None
+) -> Path:
+    """The proxy's configuration in ``folder``, with the two files that differ from site to site.
+
+    ``more`` goes into its ``server``; ``scaled`` gives directives other values, so that a test need not wait long.
+    """
     shutil.copytree(PROXY, folder, dirs_exist_ok=True)
+    text = (folder / "nginx.conf").read_text()
+    for name, value in (scaled or {}).items():
+        text, times = re.subn(rf"(?<= ){name} [^;]+;", f"{name} {value};", text)
+        assert times == 1
+    (folder / "nginx.conf").write_text(text)
     (folder / "listen.conf").write_text(f"listen 127.0.0.1:{port};\n{more}\n")
     servers = "".join(f"server 127.0.0.1:{one} max_fails=1 fail_timeout=5s;\n" for one in upstreams)
     (folder / "upstream.conf").write_text(f"zone service 64k;\n{servers}")
@@ -163,10 +174,12 @@ def nginx(configuration: Path, *arguments: str) -> list[str]:
 
 
 @contextmanager
-def proxy(folder: Path, upstreams: Sequence[int], more: str = "") -> Iterator[int]:
-    """nginx before servers at these ports; gives its own port. Adds ``more`` to its ``server``."""
+def proxy(
+    folder: Path, upstreams: Sequence[int], more: str = "", scaled: Mapping[str, str] | None = None
+) -> Iterator[int]:
+    """nginx before servers at these ports, configured so; gives its own port."""
     port = free_port()
-    configuration = configure(folder / f"proxy-{port}", port, upstreams, more)
+    configuration = configure(folder / f"proxy-{port}", port, upstreams, more, scaled)
     log = configuration.parent / "log"
     with log.open("wb") as errors:
         process = subprocess.Popen(nginx(configuration), stderr=errors, env=PLAIN)

@@ -13,11 +13,12 @@ import threading
 import time
 from base64 import b64encode
 from collections.abc import Iterator, Sequence
-from contextlib import ExitStack, contextmanager
+from contextlib import ExitStack, contextmanager, suppress
 from datetime import UTC, datetime, timedelta
 from hashlib import sha256
 from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
 from pathlib import Path
+from typing import Literal
 
 import pytest
 from cryptography import x509
@@ -65,18 +66,22 @@ def port(server: Replica, tmp_path_factory: pytest.TempPathFactory) -> Iterator[
 
 
 @contextmanager
-def stand_in(*, answers: bool) -> Iterator[tuple[int, list[dict[str, str]]]]:
-    """A server that answers with nothing, or hangs up instead; its port, and the headers it was sent."""
+def stand_in(does: Literal["answer", "hang up", "wait"]) -> Iterator[tuple[int, list[dict[str, str]]]]:
+    """A server that does no work; its port, and the headers it was sent."""
     seen: list[dict[str, str]] = []
+    over = threading.Event()
 
     class Handler(BaseHTTPRequestHandler):
         def do_POST(self) -> None:
             self.rfile.read(int(self.headers["Content-Length"]))
             seen.append({name.lower(): value for name, value in self.headers.items()})
-            if answers:
+            if does == "answer":
                 self.send_response(204)
                 self.end_headers()
-            else:
+                return
+            if does == "wait":
+                over.wait(PATIENCE_SECONDS)
+            with suppress(OSError):  # whoever asked may be gone
                 self.connection.shutdown(socket.SHUT_RDWR)
 
         def log_message(self, *_: object) -> None:
@@ -88,6 +93,7 @@ def stand_in(*, answers: bool) -> Iterator[tuple[int, list[dict[str, str]]]]:
         try:
             yield listening.server_address[1], seen
         finally:
+            over.set()
             listening.shutdown()
             serving.join()
 
@@ -227,7 +233,7 @@ def test_a_request_keeps_its_id(port: int, server: Replica) -> None:
 
 
 def test_the_server_is_told_who_asked_and_how(tmp_path: Path) -> None:
-    with stand_in(answers=True) as (upstream, seen), proxy(tmp_path, [upstream]) as port:
+    with stand_in("answer") as (upstream, seen), proxy(tmp_path, [upstream]) as port:
         headers = {"Host": "spc.plant.example", "X-Forwarded-For": "203.0.113.9", "Connection": "keep-alive"}
         assert call(port, "POST", "/", b"1", headers).status == 204
     (told,) = seen
@@ -367,7 +373,7 @@ def test_streams_that_stall_leave_threads_to_the_others(port: int) -> None:
 
 
 def test_a_calculation_lost_with_its_server_is_done_by_the_next(server: Replica, tmp_path: Path) -> None:
-    with stand_in(answers=False) as (lost, seen), proxy(tmp_path, [lost, server.port]) as port:
+    with stand_in("hang up") as (lost, seen), proxy(tmp_path, [lost, server.port]) as port:
         for _ in range(4):
             assert call(port, "POST", LIMITS, EXAMPLE).status == 200
     assert len(seen) == 1  # tried once, and left alone then
@@ -375,10 +381,20 @@ def test_a_calculation_lost_with_its_server_is_done_by_the_next(server: Replica,
 
 def test_a_calculation_that_ends_servers_does_not_end_all(tmp_path: Path) -> None:
     with ExitStack() as stack:
-        lost = [stack.enter_context(stand_in(answers=False)) for _ in range(3)]
+        lost = [stack.enter_context(stand_in("hang up")) for _ in range(3)]
         port = stack.enter_context(proxy(tmp_path, [upstream for upstream, _ in lost]))
         is_problem(call(port, "POST", LIMITS, EXAMPLE), 503, "busy")
         assert sum(len(seen) for _, seen in lost) == 2
+
+
+def test_a_calculation_that_takes_too_long_is_not_begun_again(tmp_path: Path) -> None:
+    """The proxy's 65 and 10 s, as 2 and 0.5 s."""
+    scaled = {"proxy_read_timeout": "2s", "proxy_next_upstream_timeout": "500ms"}
+    with ExitStack() as stack:
+        slow = [stack.enter_context(stand_in("wait")) for _ in range(2)]
+        port = stack.enter_context(proxy(tmp_path, [upstream for upstream, _ in slow], scaled=scaled))
+        is_problem(call(port, "POST", LIMITS, EXAMPLE), 503, "busy")
+        assert sum(len(seen) for _, seen in slow) == 1
 
 
 @contextmanager
