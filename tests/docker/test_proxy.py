@@ -282,8 +282,8 @@ def test_what_is_no_request(port: int, text: bytes) -> None:
     is_problem(raw(port, text), 400, "bad-request")
 
 
-@pytest.mark.parametrize("path", ["/metrics", "//metrics", "/%6detrics", "/./metrics?a=1"])
-def test_the_metrics_are_not_for_callers(port: int, server: Replica, path: str) -> None:
+@pytest.mark.parametrize("path", ["/metrics", "//metrics", "/%6detrics", "/./metrics?a=1", "/~problem"])
+def test_what_is_not_for_callers(port: int, server: Replica, path: str) -> None:
     before = len(server.answered())
     is_problem(raw(port, f"GET {path} HTTP/1.1\r\nHost: here\r\n\r\n".encode()), 404, "not-found")
     assert len(server.answered()) == before
