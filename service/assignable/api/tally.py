@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterable
 from typing import Any
 
+import numpy as np
+
 from .problems import Problem
 
 TALLY = "assignable.tally"  # the environ's key
@@ -13,6 +15,7 @@ _MEASURED = frozenset(
     ("values", "individuals", "counts", "intervals", "results", "earlier", "means", "ratings")
 )
 """The names under which requests hold what was measured or counted."""
+_DOCUMENTS = frozenset(("limits", "carry"))
 
 
 class Tally:
@@ -33,18 +36,17 @@ class Tally:
 
 
 def measured_in(loaded: Any) -> int:
-    """How many values a loaded request holds, missing pieces included; arrays are asked, not walked.
-
-    Limits documents and carries are tuples by then, and are passed by.
-    """
+    """How many values a loaded request holds, missing pieces included; arrays are asked, not walked."""
     count = 0
     for name, member in loaded.items():
-        if name in _MEASURED:
-            size = getattr(member, "size", None)
-            count += len(member) if size is None else size
-        elif type(member) is dict:
+        kind = type(member)
+        if name in _MEASURED and kind is not dict:
+            count += member.size if kind is np.ndarray else len(member) if kind is list else 0
+        elif name in _DOCUMENTS:
+            continue  # of the past, and where any chart's will do, of any shape
+        elif kind is dict:
             count += measured_in(member)
-        elif type(member) is list and member and type(member[0]) is dict:
+        elif kind is list and member and type(member[0]) is dict:
             for each in member:
                 count += measured_in(each)
     return count

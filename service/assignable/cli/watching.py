@@ -39,7 +39,7 @@ def memory() -> str | None:
 def counts(settings: Settings) -> Iterator[None]:
     """The folder of this server's counts; entered before anything that counts is imported.
 
-    Whoever started it removes it: the workers, forked inside, leave this as well.
+    Whoever made it removes it: the workers, forked inside, leave this as well.
     """
     if settings.metrics == "off":
         yield
@@ -50,6 +50,9 @@ def counts(settings: Settings) -> Iterator[None]:
     try:
         yield
     finally:
+        from prometheus_client.values import close_all_multiprocess_files
+
+        close_all_multiprocess_files()
         if os.getpid() == owner:
             shutil.rmtree(folder, ignore_errors=True)
             os.environ.pop(_FOLDER, None)
