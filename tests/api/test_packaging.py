@@ -18,6 +18,7 @@ from packaging.utils import canonicalize_name
 from packaging.version import Version
 
 from assignable.api import contract, openapi
+from assignable.api.operations.monitoring import ROUTE
 from assignable.api.settings import Settings, described
 from assignable.cli import contract_files, main
 from assignable.cli.serving import GRACE_SECONDS
@@ -191,6 +192,20 @@ def test_a_pod_gets_no_variables_that_read_as_settings() -> None:
 def test_the_proxy_takes_the_bodies_the_service_takes() -> None:
     (size,) = re.findall(r"client_max_body_size (\d+)m;", (DOCKER / "nginx.conf").read_text())
     assert int(size) * 1024 * 1024 == Settings().max_body_bytes
+
+
+def test_the_proxy_passes_no_metrics_out() -> None:
+    blocks = re.findall(r"location (.+?) \{\s*(.*?)\s*\}", (DOCKER / "nginx.conf").read_text(), re.DOTALL)
+    assert dict(blocks)["= /metrics"] == "return 404;"
+
+
+def test_a_scraper_is_sent_to_the_port_that_listens() -> None:
+    template = yaml.safe_load((DOCKER / "kubernetes" / "deployment.yaml").read_text())["spec"]["template"]
+    told = template["metadata"]["annotations"]
+    assert told["prometheus.io/scrape"] == "true"
+    assert told["prometheus.io/path"] == ROUTE[1]
+    (port,) = template["spec"]["containers"][0]["ports"]
+    assert told["prometheus.io/port"] == str(port["containerPort"])
 
 
 def test_the_image_runs_as_nobody_in_particular() -> None:

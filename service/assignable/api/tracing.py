@@ -10,6 +10,7 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Iterable, Mapping
 from importlib.metadata import entry_points
+from threading import Thread
 from typing import Any
 
 from opentelemetry.sdk.resources import OTELResourceDetector, Resource
@@ -23,6 +24,8 @@ from .contract import OPERATION
 from .observability import REQUEST_ID, TRACE_ID, Environ, StartResponse, Streamed, method_of
 from .settings import BadSettings
 from .tally import TALLY
+
+LAST_SECONDS = 5  # for the last spans to get away
 
 _GROUP = "opentelemetry_traces_exporter"
 _OURS = "otlp_proto_http"  # what the extra installs
@@ -97,8 +100,10 @@ class Traced:
         return Streamed(answer, lambda _: _end(span, environ, seen[0]))
 
     def close(self) -> None:
-        """Hands over the spans there are."""
-        self._provider.shutdown()
+        """Hands over the spans there are, as far as that can be done soon: a stopping server is waited for."""
+        closing = Thread(target=self._provider.shutdown, daemon=True)
+        closing.start()
+        closing.join(LAST_SECONDS)
 
 
 def _end(span: Span, environ: Environ, status: str) -> None:
