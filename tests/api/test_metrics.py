@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import fcntl
 import http.client
 import io
 import json
@@ -18,6 +19,7 @@ from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import orjson
 import pytest
 from flask import Flask
@@ -268,7 +270,7 @@ def test_how_values_are_counted() -> None:
     assert count("xbar-r-signals") == sum(map(len, served.example("xbar-r-signals")["data"]["values"]))
     batch = served.example("release-checks")["characteristics"]
     assert count("release-checks") == sum(
-        len(one["results"]) + len(one.get("capability", {}).get("earlier", ())) for one in batch
+        np.size(one["results"]) + len(one.get("capability", {}).get("earlier", ())) for one in batch
     )
 
 
@@ -380,8 +382,8 @@ def test_sums_are_exact_over_workers_and_over_their_deaths(server: Running) -> N
             time.sleep(0.05)
         load(server, 2, 5)
         expected += 10
-    # Three of each that lives, two of all that died, the one of the server itself, and the lock.
-    assert len(list(folder.iterdir())) <= 3 * 3 + 2 + 1 + 1
+    # Three of each that lives, two of all that died, the one of the server itself, and two locks.
+    assert len(list(folder.iterdir())) <= 3 * 3 + 2 + 1 + 2
 
 
 def _is_of(folder: Path, pid: int) -> bool:
@@ -433,6 +435,31 @@ def test_the_folder_goes_with_the_server() -> None:
         assert not folder.exists()
     assert (status, out) == (0, "")
     assert all(json.loads(line)["event"] == "server" for line in errors.splitlines()), errors
+
+
+def test_what_a_killed_server_left_is_removed_by_the_next_and_nothing_else(server: Running) -> None:
+    with running("--workers", "1", ASSIGNABLE_LOG="off") as killed:
+        (left,) = (found for found in folders() if _is_of(found, killed.process.pid))
+        killed.process.kill()
+        killed.process.wait(PATIENCE_SECONDS)
+    until = time.monotonic() + PATIENCE_SECONDS
+    while _is_held(left):  # until its worker has noticed
+        assert time.monotonic() < until
+        time.sleep(0.05)
+    assert left.is_dir()
+    with running("--workers", "1", ASSIGNABLE_LOG="off"):
+        assert not left.exists()
+    assert of(samples(text_of(server)), "compute_slots") == 3
+    assert [found for found in folders() if _is_of(found, server.process.pid)]
+
+
+def _is_held(folder: Path) -> bool:
+    with (folder / "alive").open("rb") as alive:
+        try:
+            fcntl.flock(alive, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except BlockingIOError:
+            return True
+    return False
 
 
 def test_without_metrics_there_is_no_folder() -> None:

@@ -6,12 +6,13 @@ OpenTelemetry's affair: its own variables say whether there are any, and where t
 
 from __future__ import annotations
 
+import fcntl
 import logging
 import os
 import shutil
 import tempfile
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from importlib.util import find_spec
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -21,6 +22,8 @@ from ..api.settings import BadSettings, Settings
 if TYPE_CHECKING:
     from ..api.tracing import Traced
 
+_PREFIX = "assignable-metrics-"
+_ALIVE = "alive"
 _FOLDER = "PROMETHEUS_MULTIPROC_DIR"
 _SPANS_GO_TO = (
     "OTEL_TRACES_EXPORTER",
@@ -45,8 +48,14 @@ def counts(settings: Settings) -> Iterator[None]:
         yield
         return
     owner = os.getpid()
-    folder = tempfile.mkdtemp(prefix="assignable-metrics-", dir=memory())
-    os.environ[_FOLDER] = folder
+    place = Path(memory() or tempfile.gettempdir())
+    _sweep(place)
+    folder = Path(tempfile.mkdtemp(prefix=_PREFIX, dir=place))
+    os.environ[_FOLDER] = str(folder)
+    # Held by this process and by all that are forked from it, until the last of them is gone.
+    alive = (folder / "new").open("wb")
+    fcntl.flock(alive, fcntl.LOCK_EX)
+    (folder / "new").rename(folder / _ALIVE)
     try:
         yield
     finally:
@@ -56,6 +65,15 @@ def counts(settings: Settings) -> Iterator[None]:
         if os.getpid() == owner:
             shutil.rmtree(folder, ignore_errors=True)
             os.environ.pop(_FOLDER, None)
+        alive.close()
+
+
+def _sweep(place: Path) -> None:
+    """Removes what servers left behind that were killed."""
+    for folder in place.glob(_PREFIX + "*"):
+        with suppress(OSError), (folder / _ALIVE).open("rb") as alive:  # another's cannot be opened
+            fcntl.flock(alive, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            shutil.rmtree(folder)
 
 
 def worker_is_gone(log: Any, pid: int) -> None:
