@@ -80,7 +80,7 @@ def client(app: Flask) -> FlaskClient:
 
 def post(client: FlaskClient, body: object, path: str = "/v1/means", **kwargs: Any) -> TestResponse:
     data = body if isinstance(body, bytes) else orjson.dumps(body)
-    return client.post(path, data=data, **{"content_type": "application/json", **kwargs})
+    return client.post(path, data=data, buffered=True, **{"content_type": "application/json", **kwargs})
 
 
 def scraped(client: FlaskClient, headers: Mapping[str, str] | None = None) -> Samples:
@@ -238,6 +238,38 @@ def test_a_line_of_a_bulk_request_is_counted_by_its_own_operation() -> None:
     assert of(found, "problems_total", **judge, problem="not-computable") == 1
     assert of(found, "faults_total", code="too-few") == 1
     assert of(found, "requests_total", **judge, status="200") == 0
+
+
+def test_both_streams_count_their_lines() -> None:
+    client = create_app(Settings(log="off")).test_client()
+    data = {"values": [[2.51, 2.49, 2.5, 2.5, 2.52]]}
+    limits = json.loads(post(client, BODY, "/v1/charts/xbar-r/limits").data)["limits"]
+    before = scraped(client)
+    judged = {"operation": "judgeXbarR", "body": {"limits": limits, "data": data}}
+    lines = [
+        judged,
+        judged,
+        {**judged, "body": {}},
+        {"operation": "nobody", "body": {}},
+        {"operation": "getMetrics"},
+    ]
+    bulk = {"content_type": "application/x-ndjson"}
+    assert post(client, b"\n".join(map(orjson.dumps, lines)), "/v1/bulk", **bulk).data.count(b"\n") == 6
+    opened = {"characteristic": "wall", "limits": limits}
+    brought = {"characteristic": "wall", "data": data}
+    lines = [opened, brought, brought, brought, {"characteristic": "wall", "data": {"values": [[True]]}}]
+    answer = post(client, b"\n".join(map(orjson.dumps, lines)), "/v1/bulk/signals", **bulk)
+    assert json.loads(answer.data.splitlines()[-1])["answered"] == 4
+    found = scraped(client)
+    judge = {"operation": "judgeXbarR"}
+    assert of(found, "bulk_lines_total", **judge, outcome="answered") == 2 + 3
+    assert of(found, "bulk_lines_total", **judge, outcome="contract-violation") == 2
+    assert of(found, "bulk_lines_total", operation="other", outcome="contract-violation") == 2
+    assert of(found, "bulk_lines_total", operation="judgeLines", outcome="answered") == 1
+    assert of(found, "values_total", **judge) - of(before, "values_total", **judge) == 5 * 5
+    assert of(found, "requests_total", operation="answerLines", status="200") == 1
+    assert of(found, "requests_total", operation="judgeLines", status="200") == 1
+    assert of(found, "compute_slots_busy") == 0
 
 
 MEASURING = sorted(

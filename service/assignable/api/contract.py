@@ -143,9 +143,9 @@ class Operation:
             return b"".join(streams.stream(self.view, streams.Call(str(uuid4())), (body,), _ALONE, len(body)))
         return self.answer_to(strict_json.loads(body), body)
 
-    def answer_to(self, document: Any, body: bytes) -> bytes:
+    def answer_to(self, document: Any, body: bytes, tally: Tally | None = None) -> bytes:
         """The answer to a body that is parsed already; ``body`` is what the provenance's digest is of."""
-        return self.write(self.computed(document), body)
+        return self.write(self.computed(document, tally), body)
 
     def computed(self, document: Any, tally: Tally | None = None, /, **path: str) -> Any:
         """What the view makes of a body that is parsed already; faults are told where the body has them.
@@ -381,7 +381,8 @@ class Contract:
             pieces = bodies.pieces(environ, settings.max_stream_bytes)
             if packed:
                 pieces = bodies.inflated(pieces, settings.max_stream_bytes)
-            call = streams.Call(environ[REQUEST_ID], lambda error: self._failed(error, environ))
+            counted = streams.uncounted if self.metrics is None else self.metrics.line
+            call = streams.Call(environ[REQUEST_ID], lambda error: self._failed(error, environ), counted)
             parts = streams.stream(operation.view, call, pieces, self._slots, settings.max_body_bytes)
             told = self._streams.occupied_by(parts)
             answered = Response(told, headers=[("Cache-Control", "no-store")], content_type=bodies.NDJSON)

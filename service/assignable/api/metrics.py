@@ -23,10 +23,9 @@ from prometheus_client.multiprocess import MultiProcessCollector, mark_process_d
 from prometheus_client.registry import Collector
 
 from .answers import CONTRACT_VERSION, service_version
-from .tally import Tally
+from .tally import OTHER, Tally
 
 FOLDER = "PROMETHEUS_MULTIPROC_DIR"
-OTHER = "other"  # the operation of what is none: pages, unknown paths, requests that cannot be read
 ANSWERED = "answered"  # the outcome of a line without a problem
 BUCKETS = (0.001, 0.0025, 0.005, 0.01, 0.025, 0.05, 0.1, 0.25, 0.5, 1.0, 2.5, 5.0, 10.0)
 MOST_CODES = 1000  # far more than there are; beyond, a code counts as "other"
@@ -136,12 +135,15 @@ class Metrics:
         if tally.cautions or tally.problem is not None:
             self._told(operation, tally)
 
-    def line(self, operation: str, tally: Tally) -> None:
-        """Counts a line of a bulk request; ``operation`` is the id of one there is, or ``OTHER``."""
+    def line(self, operation: str, tally: Tally, lines: int = 1) -> None:
+        """Counts a line of a bulk request, or several in one calculation.
+
+        ``operation`` is the id of one there is, or ``OTHER``.
+        """
         if not self._counting:
             return
         outcome = ANSWERED if tally.problem is None else tally.problem.kind.code
-        self._lines.labels(operation, outcome).inc()
+        self._lines.labels(operation, outcome).inc(lines)
         if tally.values:
             self._valued(operation, tally.values)
         self._told(operation, tally)

@@ -22,7 +22,7 @@ from .answers import service_version
 from .contract import OPERATION, REQUEST_ID
 from .cors import Cors
 from .problems import INTERNAL, MEDIA_TYPE, Problem
-from .tally import TALLY, Tally
+from .tally import OTHER, TALLY, Tally
 
 if TYPE_CHECKING:
     from .metrics import Metrics
@@ -155,7 +155,7 @@ class Edge:
     def _over(self, environ: Environ, tally: Tally, status: str, sent: int, began: int) -> None:
         taken = perf_counter_ns() - began
         if self._metrics is not None:
-            self._metrics.request(environ.get(OPERATION, "other"), status[:3], taken / 1e9, tally)
+            self._metrics.request(environ.get(OPERATION, OTHER), status[:3], taken / 1e9, tally)
         if self._log.requests:
             self._line(environ, tally, status, sent, taken)
 

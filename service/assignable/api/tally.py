@@ -10,6 +10,7 @@ import numpy as np
 from .problems import Problem
 
 TALLY = "assignable.tally"  # the environ's key
+OTHER = "other"  # the operation of what is none: pages, unknown paths, requests that cannot be read
 
 _MEASURED = frozenset(
     ("values", "individuals", "counts", "intervals", "results", "earlier", "means", "ratings")

@@ -20,8 +20,8 @@ from opentelemetry.trace import Span, SpanKind, Status, StatusCode, format_trace
 from opentelemetry.trace.propagation.tracecontext import TraceContextTextMapPropagator
 
 from .answers import service_version
-from .contract import OPERATION
-from .observability import REQUEST_ID, TRACE_ID, Environ, StartResponse, Streamed, method_of
+from .contract import OPERATION, REQUEST_ID
+from .observability import TRACE_ID, Environ, StartResponse, Streamed, method_of
 from .settings import BadSettings
 from .tally import TALLY
 

@@ -31,7 +31,7 @@ from ..api import problems
 from ..api.app import create_app
 from ..api.contract import Contract, examples_directory
 from ..api.settings import BadSettings, Settings
-from ..api.tally import Tally
+from ..api.tally import OTHER, Tally
 from . import watching
 
 # Seconds a stopping server waits for the requests it has; whoever kills it must wait longer.
@@ -222,7 +222,7 @@ class Worker(ThreadWorker):  # type: ignore[misc]
         if (metrics := _contract_of(self.wsgi).metrics) is not None:
             tally = Tally()
             tally.problem = problem
-            metrics.request("other", str(problem.kind.status), 0.0, tally)
+            metrics.request(OTHER, str(problem.kind.status), 0.0, tally)
         request_id = str(uuid4())
         body = problem.body(request_id)
         reason = "Bad Request" if problem.kind.status == 400 else "Internal Server Error"
