@@ -141,6 +141,16 @@ def test_cautions_are_counted_where_answers_have_them() -> None:
     )
 
 
+def test_a_table_counts_as_its_values_do() -> None:
+    client = create_app(Settings(log="off")).test_client()
+    table = b"a,b\n2.51,2.49\n2.48,2.52\n2.5,2.47\n"
+    answer = post(client, table, "/v1/charts/xbar-r/limits", content_type="text/csv")
+    assert answer.status_code == 200, answer.text
+    found = scraped(client)
+    assert of(found, "values_total", operation="fitXbarRLimits") == 6
+    assert of(found, "cautions_total", code="few-subgroups") == 1
+
+
 def test_the_buckets_go_from_a_millisecond_to_ten_seconds(client: FlaskClient) -> None:
     post(client, GOOD)
     edges = [
