@@ -85,9 +85,12 @@ def running(*arguments: str, **variables: str) -> Iterator[Running]:
             break
         yield server
     finally:
-        if process.poll() is None:
+        process.terminate()  # so that it clears up; of no effect where it has ended
+        try:
+            process.communicate(timeout=PATIENCE_SECONDS)
+        except subprocess.TimeoutExpired:
             process.kill()
-        process.communicate(timeout=PATIENCE_SECONDS)
+            process.communicate(timeout=PATIENCE_SECONDS)
 
 
 @pytest.fixture(scope="module")

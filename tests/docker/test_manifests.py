@@ -19,6 +19,7 @@ from jsonschema.validators import validator_for
 
 from assignable.api.app import create_app
 from assignable.api.contract import Contract
+from assignable.api.operations.monitoring import ROUTE
 from assignable.api.settings import Settings, described
 from assignable.cli.serving import GRACE_SECONDS, options
 
@@ -308,6 +309,15 @@ def test_ports_agree() -> None:
     assert [one["targetPort"] for one in MANIFESTS["service"]["spec"]["ports"]] == ["http"]
     (rule,) = MANIFESTS["network-policy"]["spec"]["ingress"]
     assert [one["port"] for one in rule["ports"]] == ["http"]
+
+
+def test_a_scraper_is_sent_to_the_port_that_listens() -> None:
+    template = load(KUBERNETES / "base" / "deployment.yaml")["spec"]["template"]
+    told = template["metadata"]["annotations"]
+    assert told["prometheus.io/scrape"] == "true"
+    assert told["prometheus.io/path"] == ROUTE[1]
+    (port,) = template["spec"]["containers"][0]["ports"]
+    assert told["prometheus.io/port"] == str(port["containerPort"])
 
 
 def test_the_build_is_sent_what_it_copies_and_no_more() -> None:

@@ -34,7 +34,11 @@ def require_acceptable(environ: Environ, media_type: str) -> None:
     accept = environ.get("HTTP_ACCEPT")
     if not accept or accept == "*/*" or accept == media_type:
         return
-    if not parse_accept_header(accept, MIMEAccept).quality(media_type) > 0:
+    ranges = parse_accept_header(accept, MIMEAccept)
+    # A parameter, such as the version that a scraper names, narrows nothing here.
+    if not ranges.quality(media_type) > 0 and not any(
+        range_.partition(";")[0].strip().lower() == media_type and quality > 0 for range_, quality in ranges
+    ):
         raise Problem(
             NOT_ACCEPTABLE, f"This operation answers {media_type}, which the Accept header rules out."
         )

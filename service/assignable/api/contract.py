@@ -35,8 +35,10 @@ from .fields import (
 from .problems import Entry, Problem, ProblemType
 from .settings import Settings
 from .shedding import Slots
+from .tally import TALLY, Tally
 
 if TYPE_CHECKING:
+    from .metrics import Metrics
     from .security import Access
 
 View = Callable[..., Any]
@@ -141,33 +143,43 @@ class Operation:
             return b"".join(streams.stream(self.view, streams.Call(str(uuid4())), (body,), _ALONE, len(body)))
         return self.answer_to(strict_json.loads(body), body)
 
-    def answer_to(self, document: Any, body: bytes) -> bytes:
+    def answer_to(self, document: Any, body: bytes, tally: Tally | None = None) -> bytes:
         """The answer to a body that is parsed already; ``body`` is what the provenance's digest is of."""
-        return self.write(self.computed(document), body)
+        return self.write(self.computed(document, tally), body)
 
-    def computed(self, document: Any, **path: str) -> Any:
+    def computed(self, document: Any, tally: Tally | None = None, /, **path: str) -> Any:
         """What the view makes of a body that is parsed already; faults are told where the body has them.
 
         Of an operation without a body it is the parameters of the query, or nothing.
         """
         shape = self.request or self.query
         try:
-            return self.view(**path) if shape is None else self.view(shape.load(document), **path)
+            loaded = None if shape is None else shape.load(document)
+            result = self.view(**path) if shape is None else self.view(loaded, **path)
         except SpcError as error:
             raise problems.placed(error, document) from error
+        if tally is not None and loaded is not None:
+            tally.computed(loaded, result)
+        return result
 
     @cached_property
     def tabled(self) -> tables.Tabled | None:
         """The request as a CSV table with options in the query, where its data is one rectangular table."""
         return tables.of(self.request)
 
-    def answer_to_table(self, body: bytes, query: bytes = b"", **path: str) -> bytes:
+    def answer_to_table(
+        self, body: bytes, query: bytes = b"", tally: Tally | None = None, /, **path: str
+    ) -> bytes:
         """The answer to a CSV body; its digest is of the query, a line feed and the body."""
         assert self.tabled is not None
         assert self.request is not None
         document, read = self.tabled.loaded(body, query)
         try:
-            return self.write(self.view(self.request.load(document), **path), query + b"\n" + body)
+            loaded = self.request.load(document)
+            result = self.view(loaded, **path)
+            if tally is not None:
+                tally.computed(loaded, result)
+            return self.write(result, query + b"\n" + body)
         except (ValidationError, SpcError) as error:
             raise self.tabled.placed(error, document, read) from error
 
@@ -201,13 +213,15 @@ class Contract:
         seals: Seals = UNSEALED,
         access: Access | None = None,
         failed: Failed = lambda error, environ: None,
+        metrics: Metrics | None = None,
     ) -> None:
         self.seals = seals
+        self.metrics = metrics
         self._failed = failed
         self._access = access
         self._app = app
         self._settings = settings
-        self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds)
+        self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds, metrics)
         # Each occupies a thread for as long as it lasts; the others are for everybody else.
         self._streams = Slots(max(1, settings.threads // 2), 0.0)
         self._tags: dict[str, str] = {}
@@ -367,7 +381,8 @@ class Contract:
             pieces = bodies.pieces(environ, settings.max_stream_bytes)
             if packed:
                 pieces = bodies.inflated(pieces, settings.max_stream_bytes)
-            call = streams.Call(environ[REQUEST_ID], lambda error: self._failed(error, environ))
+            counted = streams.uncounted if self.metrics is None else self.metrics.line
+            call = streams.Call(environ[REQUEST_ID], lambda error: self._failed(error, environ), counted)
             parts = streams.stream(operation.view, call, pieces, self._slots, settings.max_body_bytes)
             told = self._streams.occupied_by(parts)
             answered = Response(told, headers=[("Cache-Control", "no-store")], content_type=bodies.NDJSON)
@@ -389,17 +404,19 @@ class Contract:
             as_table = bodies.require(environ, *taken) == bodies.CSV
             packed = bodies.encoding_of(environ)
             body = bodies.read(environ, self._settings.max_body_bytes)
+            tally = environ.get(TALLY)
             # The place is taken before parsing: objects weigh many times what the text does.
             with self._slots:
                 if packed:
                     kind = problems.NOT_CSV if as_table else problems.NOT_JSON
                     body = bodies.inflate(body, self._settings.max_inflated_bytes, kind)
                 if as_table:
-                    written = operation.answer_to_table(body, request.query_string, **path)
+                    written = operation.answer_to_table(body, request.query_string, tally, **path)
                 else:
                     if tabled is not None and environ.get("QUERY_STRING"):
                         tables.refuse_parameters(request.args)
-                    written = operation.write(operation.computed(strict_json.loads(body), **path), body)
+                    result = operation.computed(strict_json.loads(body), tally, **path)
+                    written = operation.write(result, body)
             return _response(written, content_type, (("Cache-Control", "no-store"),))
 
         return answer

@@ -20,7 +20,7 @@ from .bodies import CSV, NDJSON
 from .contract import _PARAMETER, Operation, ProblemDetails, examples_directory
 from .fields import json_schema_of, list_bounds_of
 from .problems import ProblemType
-from .security import OPEN, Access
+from .security import Access
 
 _HEADERS = {
     "X-Request-ID": "The request's id: the one that was sent, or one made for it.",
@@ -75,7 +75,7 @@ def _text_of(shape: Any) -> str:
 def problems_of(operation: Operation, access: Access | None = None) -> tuple[ProblemType, ...]:
     """Every problem an operation can answer, by status and in the order of the table."""
     possible = set(operation.problems) | set(_OF_EVERY_OPERATION)
-    if access is not None and operation.operation_id not in OPEN:
+    if access is not None and operation.operation_id not in access.open:
         possible |= set(access.problems())
     if operation.request is not None:
         possible |= set(_OF_A_BODY)
@@ -168,7 +168,7 @@ def _operation(operation: Operation, access: Access | None) -> dict[str, Any]:
             "content": {NDJSON: _of_lines(operation.lines.asked, operation.lines.example, "request")},
         }
     described["responses"] = {"200": _success(operation), **_failures(operation, access)}
-    if access is not None and operation.operation_id not in OPEN:
+    if access is not None and operation.operation_id not in access.open:
         described["security"] = [{name: []} for name in access.schemes()]
     return described
 

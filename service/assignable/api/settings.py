@@ -148,6 +148,12 @@ class Settings:
         "What is logged, one JSON object a line on standard error: requests, errors or off.",
         _one_of("requests", "errors", "off"),
     )
+    metrics: str = _setting(
+        "on",
+        "Whether GET /metrics tells what was counted: on (to callers with a credential, where callers need one), open "
+        "(to anyone) or off.",
+        _one_of("on", "open", "off"),
+    )
     cors_origins: tuple[str, ...] = _setting(
         (), "Origins whose pages may call the service from a browser, separated by commas.", _origins
     )

@@ -11,18 +11,27 @@ from contextlib import contextmanager
 from queue import Empty, SimpleQueue
 from time import sleep
 from types import TracebackType
+from typing import Protocol
 
 from .problems import BUSY, Problem
 
 _STEP_BACK_SECONDS = 0.001
 
 
+class Watch(Protocol):
+    """Who is told when a place is taken, and when it is free again; neither may raise anything."""
+
+    def place_taken(self) -> None: ...
+
+    def place_freed(self) -> None: ...
+
+
 class Slots:
     """``count`` places; entering waits up to ``wait_seconds``, then raises the problem ``busy``."""
 
-    __slots__ = ("_places", "_wait_seconds", "_waiting")
+    __slots__ = ("_places", "_wait_seconds", "_waiting", "_watch")
 
-    def __init__(self, count: int, wait_seconds: float) -> None:
+    def __init__(self, count: int, wait_seconds: float, watch: Watch | None = None) -> None:
         # A queue of places waits and wakes in C; a semaphore does so in Python, which under load cost more
         # than the calculations.
         self._places: SimpleQueue[None] = SimpleQueue()
@@ -30,12 +39,15 @@ class Slots:
             self._places.put(None)
         self._wait_seconds = wait_seconds
         self._waiting: SimpleQueue[None] = SimpleQueue()
+        self._watch = watch
 
     def __enter__(self) -> None:
         try:
             self._places.get(False)
         except Empty:
             self._wait()
+        if self._watch is not None:
+            self._watch.place_taken()
 
     def _wait(self) -> None:
         self._waiting.put(None)
@@ -53,6 +65,8 @@ class Slots:
 
     def release(self) -> None:
         """Gives a place back."""
+        if self._watch is not None:
+            self._watch.place_freed()
         self._places.put(None)
 
     def occupied_by(self, parts: Iterator[bytes]) -> Occupying:
@@ -68,6 +82,8 @@ class Slots:
         it again.
         """
         self._places.get()
+        if self._watch is not None:
+            self._watch.place_taken()
         try:
             yield
         finally:

@@ -18,6 +18,8 @@ from . import answers, problems
 from .problems import CONTENT_TOO_LARGE, Problem
 from .shedding import Slots
 from .strict_json import loads
+from .tally import OTHER
+from .tally import Tally as OfCalculation
 
 BLOCK_BYTES = 1024 * 1024
 BLOCK_LINES = 16_384
@@ -57,6 +59,14 @@ class Conversation(Protocol):
         """What is left to be told when the lines are over, however they ended."""
 
 
+Counted = Callable[[str, OfCalculation, int], None]
+"""Is told of lines that are over: the operation's id, what came to light, how many lines it was of."""
+
+
+def uncounted(operation: str, tally: OfCalculation, lines: int) -> None:
+    """Where nobody counts."""
+
+
 Converse = Callable[["Call"], Conversation]
 
 
@@ -67,6 +77,7 @@ class Call:
     request_id: str
     failed: Callable[[Exception], None] = lambda error: None
     """Is told of what no layer expected."""
+    counted: Counted = uncounted
     tally: Tally = field(default_factory=Tally)
 
     def told(self, line: dict[str, Any], name: bytes, answer: bytes) -> bytes:
@@ -74,12 +85,17 @@ class Call:
         self.tally.answered += 1
         return orjson.dumps({**line, "status": 200})[:-1] + b',"' + name + b'":' + answer + b"}\n"
 
-    def refused(self, line: dict[str, Any], error: Exception, root: str = "#") -> bytes:
-        """The line of a problem; pointers are into the line, below ``root``."""
+    def refused(
+        self, line: dict[str, Any], error: Exception, root: str = "#", operation: str = OTHER
+    ) -> bytes:
+        """The line of a problem of this operation; pointers are into the line, below ``root``."""
         self.tally.problems += 1
         if (unforeseen := problems.unforeseen(error)) is not None:
             self.failed(unforeseen)
         problem = problems.of(error).below(root)
+        tally = OfCalculation()
+        tally.problem = problem
+        self.counted(operation, tally, 1)
         members = {**line, "status": problem.kind.status, "problem": problem.members(self.request_id)}
         return orjson.dumps(members) + b"\n"
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from dataclasses import replace
 from difflib import get_close_matches
 from pathlib import Path
 from uuid import uuid4
@@ -16,7 +17,9 @@ from ..api.settings import BadSettings, Settings
 def compute(operation_id: str, file: str | None) -> int:
     """Prints the answer to a file's body; a problem goes to standard error, with status 1."""
     try:
-        contract: Contract = create_app(Settings.from_environment()).extensions["assignable.contract"]
+        contract: Contract = create_app(replace(Settings.from_environment(), metrics="off")).extensions[
+            "assignable.contract"
+        ]
     except BadSettings as error:
         return _not_understood(str(error))
     operation = contract.operations.get(operation_id)

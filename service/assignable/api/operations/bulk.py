@@ -24,6 +24,7 @@ from ..schemas import bulk as shapes
 from ..schemas.charts import ChartRequest, request_of
 from ..schemas.common import cautions, labels_of
 from ..streams import Call, Line
+from ..tally import OTHER, Tally, measured_in
 from .charts import VERDICT_NOTE, carried, documents_of, judgement, labelled
 
 TAG = "Bulk"
@@ -31,7 +32,8 @@ MOST_OPEN = 10_000
 MOST_LIMITS_BYTES = 64 * 1024 * 1024
 MOST_TOGETHER = 4_096  # points judged in one calculation
 
-_IDS = ("answerLines", "judgeLines")
+# What no line can ask for: the streams themselves, and what is for whoever runs the service.
+_IDS = ("answerLines", "judgeLines", "getMetrics")
 _READING = (
     "Answers begin to come when the request is whole, or when there are 8 MiB of them: a client that sends more "
     "reads while it sends."
@@ -63,15 +65,16 @@ class AnyLines:
 
     def _answered(self, line: Line) -> bytes:
         named: dict[str, Any] = {"line": line.number, "id": None}
-        root = "#"
+        root, operation_id, tally = "#", OTHER, Tally()
         try:
             asked = _BULK_LINE.load(line.parsed())
             named["id"] = asked["id"]
             operation = self._operation(asked["operation"])
-            root = "#/body"
-            written = operation.answer_to(asked["body"], line.text)
+            root, operation_id = "#/body", operation.operation_id
+            written = operation.answer_to(asked["body"], line.text, tally)
         except Exception as error:
-            return self.call.refused(named, error, root)
+            return self.call.refused(named, error, root, operation_id)
+        self.call.counted(operation_id, tally, 1)
         if operation.media_type == answers.JSON:
             return self.call.told(named, b"answer", written)
         return self.call.told(named, b"picture", orjson.dumps(written.decode()))
@@ -209,6 +212,7 @@ class SeriesLines:
         digest, limits = loaded["limits"]
         self._open[name] = Series(found, request_of(found.name), _data_of(found.name), digest, limits, carry)
         self._call.tally.answered += 1
+        self._call.counted("judgeLines", Tally(), 1)
         told = {"line": line.number, "characteristic": name, "status": 200, "opened": found.name}
         return orjson.dumps(told) + b"\n"
 
@@ -239,7 +243,9 @@ class SeriesLines:
                 if isinstance(error, SpcError):
                     error = problems.placed(error, {"data": data})
                 told[lines[0].at] = self._call.refused(
-                    {"line": lines[0].number, "characteristic": name}, error
+                    {"line": lines[0].number, "characteristic": name},
+                    error,
+                    operation=f"judge{series.chart.stem}",
                 )
                 return
             found = None
@@ -249,6 +255,10 @@ class SeriesLines:
             self._judge_together(name, series, lines[half:], told, returned)
             return
         series.carry = found.carry
+        tally = Tally()
+        tally.values = measured_in(loaded)
+        tally.cautions = [caution.code for caution in found.cautions]
+        self._call.counted(f"judge{series.chart.stem}", tally, len(lines))
         self._tell(name, series, lines, found, labels_of(loaded), told, returned)
 
     def _tell(
