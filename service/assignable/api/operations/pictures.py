@@ -15,7 +15,7 @@ from ..contract import Contract
 from ..schemas.capability import specification_of
 from ..schemas.charts import ChartRequest, request_of
 from ..schemas.common import labels_of
-from .capability import measurements
+from .capability import study_of
 from .charts import fitted, judged
 from .designs import design_subgroups
 from .run_length import run_length
@@ -121,7 +121,7 @@ def _draw(
 
 def draw_measurements(loaded: dict[str, Any]) -> str:
     """A capability study."""
-    answer = measurements(loaded)
+    found = study_of(loaded)
     of = loaded.get("characteristic") or {}
     return capability.draw(
         capability.Studied(
@@ -129,11 +129,12 @@ def draw_measurements(loaded: dict[str, Any]) -> str:
             unit=of.get("unit"),
             values=loaded["data"]["values"] if "data" in loaded else None,
             specification=specification_of(loaded["specification"]).effective,
-            status=answer["status"],
-            capability=answer["capability"],
-            quantiles=answer["quantiles"],
-            machine=answer["machine"],
-            cautions=tuple(caution["code"] for caution in answer["cautions"]),
+            status=found.status,
+            capability=found.capability,
+            quantiles=found.quantiles,
+            machine=found.machine,
+            fitted=found.fitted,
+            cautions=tuple(caution.code for caution in found.cautions),
         )
     )
 
