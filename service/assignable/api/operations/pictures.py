@@ -6,9 +6,14 @@ from collections.abc import Callable, Mapping, Sequence
 from functools import partial
 from typing import Any
 
-from ...pictures import capability, charts, curves
+import numpy as np
+
+from ...pictures import agreement, bias, capability, charts, curves, economic, gauge
 from ...spc.cautions import Caution
 from ...spc.charts import CHARTS, Chart
+from ...spc.studies.bias import bias as bias_study
+from ...spc.studies.crossed import CrossedStudy
+from ...spc.studies.nested import NestedStudy
 from ...spc.charts.common import PanelLimits
 from .. import answers
 from ..contract import Contract
@@ -17,8 +22,13 @@ from ..schemas.charts import ChartRequest, request_of
 from ..schemas.common import labels_of
 from .capability import study_of
 from .charts import fitted, judged
-from .designs import design_subgroups
+from ...spc.design.economic import ProcessEconomics, neighbourhood
+from ..schemas.economic import requirements_of
+from ..schemas.studies import levels_of
+from ..schemas.common import rules_of
+from .designs import design_economic, design_subgroups
 from .run_length import run_length
+from .studies import agreement_of, crossed_of, nested_of
 
 TAG = "Pictures"
 Drawing = Callable[[dict[str, Any]], str]
@@ -39,6 +49,11 @@ def register(contract: Contract) -> None:
     _bind(contract, "assessMeasurements", "drawMeasurements", draw_measurements)
     _bind(contract, "designSubgroups", "drawSubgroupDesign", draw_subgroup_design)
     _bind(contract, "computeRunLength", "drawRunLength", draw_run_length)
+    _bind(contract, "designEconomic", "drawEconomicDesign", draw_economic_design)
+    _bind(contract, "analyseCrossedStudy", "drawCrossedStudy", draw_crossed_study)
+    _bind(contract, "analyseNestedStudy", "drawNestedStudy", draw_nested_study)
+    _bind(contract, "analyseAgreementStudy", "drawAgreementStudy", draw_agreement_study)
+    _bind(contract, "analyseBiasStudy", "drawBiasStudy", draw_bias_study)
 
 
 def _bind(contract: Contract, source_id: str, operation_id: str, drawing: Drawing) -> None:
@@ -147,6 +162,18 @@ def draw_subgroup_design(loaded: dict[str, Any]) -> str:
     )
 
 
+def draw_economic_design(loaded: dict[str, Any]) -> str:
+    """The cost around the plan of least cost."""
+    found = design_economic(loaded)["design"]
+    around = neighbourhood(
+        ProcessEconomics(**loaded["process"]),
+        found,
+        requirements=requirements_of(loaded),
+        rules=rules_of(loaded.get("rules")) or None,
+    )
+    return economic.draw(found, around)
+
+
 def draw_run_length(loaded: dict[str, Any]) -> str:
     """Run lengths by shift."""
     answer = run_length(loaded)
@@ -163,4 +190,96 @@ def draw_run_length(loaded: dict[str, Any]) -> str:
             )
             for one in answer["run_lengths"]
         ),
+    )
+
+
+# Measurement studies --------------------------------------------------------------------------------
+
+
+def draw_crossed_study(loaded: dict[str, Any]) -> str:
+    """Where the spread of a crossed study comes from, and what each appraiser found."""
+    table, found = crossed_of(loaded)
+    interaction = None
+    if found.interaction_p_value is not None:
+        interaction = f"Appraisers differing from part to part (interaction): p = {found.interaction_p_value:.3g}"
+        interaction += ", counted as repeatability." if found.interaction_pooled else "."
+    return gauge.draw(
+        gauge.Gauged(
+            **_characteristic(loaded),
+            shared=True,
+            appraisers=table.appraisers,
+            parts=(table.parts,) * len(table.appraisers),
+            measurements=table.measurements.swapaxes(0, 1),
+            interaction=interaction,
+            **_gauge_of(found),
+            cautions=_codes(found.cautions),
+        )
+    )
+
+
+def draw_nested_study(loaded: dict[str, Any]) -> str:
+    """The same of a nested study."""
+    table, found = nested_of(loaded)
+    return gauge.draw(
+        gauge.Gauged(
+            **_characteristic(loaded),
+            shared=False,
+            appraisers=table.appraisers,
+            parts=table.parts,
+            measurements=table.measurements,
+            interaction=None,
+            **_gauge_of(found),
+            cautions=_codes((*table.cautions, *found.cautions)),
+        )
+    )
+
+
+def _gauge_of(found: CrossedStudy | NestedStudy) -> dict[str, Any]:
+    """What both kinds of study say of a gauge."""
+    return {
+        "grand_mean": found.grand_mean,
+        "components": found.components,
+        "discrimination": found.discrimination,
+        "own": found.repeatability_by_appraiser,
+        "confidence": found.confidence,
+    }
+
+
+def _characteristic(loaded: Mapping[str, Any]) -> dict[str, str | None]:
+    of = loaded.get("characteristic") or {}
+    return {"name": of.get("name"), "unit": of.get("unit")}
+
+
+def _codes(found: Sequence[Caution]) -> tuple[str, ...]:
+    return tuple(caution.code for caution in found)
+
+
+def draw_agreement_study(loaded: dict[str, Any]) -> str:
+    """How far people who sort agree, and on which items they do not."""
+    table, found = agreement_of(loaded)
+    ratings = table.ratings.reshape(len(table.items), -1)
+    right = ratings[:, 0] if table.reference is None else table.reference
+    disputed = np.flatnonzero((ratings != right[:, None]).any(axis=1))
+    return agreement.draw(
+        agreement.Agreed(
+            name=_characteristic(loaded)["name"],
+            study=found,
+            disputed=[table.items[at] for at in disputed.tolist()],
+            right_known=table.reference is not None,
+            cautions=_codes(found.cautions),
+        )
+    )
+
+
+def draw_bias_study(loaded: dict[str, Any]) -> str:
+    """Bias against the reference, with its line."""
+    levels = levels_of(loaded["data"])
+    found = bias_study(levels, confidence=loaded["confidence"])
+    return bias.draw(
+        bias.Biased(
+            **_characteristic(loaded),
+            study=found,
+            values=[level.values for level in levels],
+            cautions=_codes(found.cautions),
+        )
     )

@@ -25,7 +25,7 @@ from typing import Annotated
 import numpy as np
 import scipy
 
-from ..data import Booleans, Floats
+from ..data import Floats
 from ..errors import Fault, UnusableParameter
 from ..rules import Rule, watched
 from ..runlength import shewhart
@@ -51,6 +51,7 @@ _SURFACE = 15
 # A picture is finer, and reaches no farther than this ratio of intervals.
 _FINE = 81
 _FARTHEST = 40.0
+_NO_SHORTFALL = math.exp(-1.0)
 _STEP = 1e-4
 _ARL_BEYOND = 1e15
 # States times regions times sizes of the chains that rules need: about a second.
@@ -262,14 +263,15 @@ class Neighbourhood:
     """The cost an hour of plans around the best one, at its sample size.
 
     multiples: (k,), a single one where it is held; interval_hours: (m,), equal ratios apart; cost_per_hour:
-    (k, m); allowed: (k, m), whether a plan meets every requirement.
+    (k, m); shortfall: (k, m), the logarithm of how far the requirement missed most is missed, zero or below where
+    all are met.
     """
 
     size: int
     multiples: Floats
     interval_hours: Floats
     cost_per_hour: Floats
-    allowed: Booleans
+    shortfall: Floats
 
 
 # ---------------------------------------------------------------------------------------------------
@@ -798,16 +800,12 @@ def neighbourhood(
     k = np.array([best.multiple]) if held else np.linspace(low, high, _FINE)
     n, column = np.array(float(best.size)), k[:, None]
     shortest, longest, arl0, arl1 = _intervals(r, laws, n, column, (0.0, math.inf))
-    # An interval on its bound has met it, whatever the last digit of the search.
-    at_least, at_most = shortest * (1 - 1e-9), longest * (1 + 1e-9)
-    allowed = (h >= at_least) & (h <= at_most)
-    if r.smallest_in_control_arl is not None:
-        allowed &= arl0 >= r.smallest_in_control_arl * (1 - 1e-9)
-    if r.shortest_interval_hours is not None:
-        allowed &= h >= r.shortest_interval_hours * (1 - 1e-9)
-    if r.longest_interval_hours is not None:
-        allowed &= h <= r.longest_interval_hours * (1 + 1e-9)
-    return Neighbourhood(best.size, k, h, _cycle(economics, n, h, arl0, arl1).per_hour, allowed)
+    shortest = np.maximum(shortest, r.shortest_interval_hours or 0.0)
+    longest = np.minimum(longest, r.longest_interval_hours or math.inf)
+    shortfall = np.full((len(k), len(h)), -1.0)
+    for missed in (shortest / h, h / longest, (r.smallest_in_control_arl or 0.0) / arl0):
+        shortfall = np.maximum(shortfall, np.log(np.maximum(missed, _NO_SHORTFALL)))
+    return Neighbourhood(best.size, k, h, _cycle(economics, n, h, arl0, arl1).per_hour, shortfall)
 
 
 def _at_bounds(plan: PricedPlan, r: Requirements, found: _Best, held: bool) -> tuple[str, ...]:
