@@ -118,9 +118,7 @@ def _verdict(study: AgreementStudy) -> str:
     def told(share: AgreementShare) -> str:
         if share.proportion is None or share.lower is None or share.upper is None:
             return f"{share.count:,} of {share.opportunities:,} items"
-        return (
-            f"{100 * share.proportion:.3g} % of items ({100 * share.lower:.3g} to {100 * share.upper:.3g})"
-        )
+        return f"{100 * share.proportion:.3g} % of items ({100 * share.lower:.3g} to {100 * share.upper:.3g})"
 
     if study.all_matched is not None and len(study.by_appraiser) > 1:
         return f"All appraisers are right every time on {told(study.all_matched)}."
@@ -160,4 +158,5 @@ def _disputed(agreed: Agreed) -> str:
         return f"Every item was rated alike{right} by all, every time."
     more = len(agreed.disputed) - len(named)
     rest = f" and {more:,} more" if more else ""
-    return f"Look again at {counted(len(agreed.disputed), 'item')} not rated alike{right} every time: {', '.join(named)}{rest}."
+    many = counted(len(agreed.disputed), "item")
+    return f"Look again at {many} not rated alike{right} every time: {', '.join(named)}{rest}."

@@ -37,7 +37,9 @@ def draw(biased: Biased) -> str:
     title = f"{name} ({unit})" if unit else name
     paper.text(LEFT, 30, cut(title, 16, RIGHT - LEFT), size=16, bold=True)
     count = sum(level.size for level in study.levels)
-    what = f"Bias of the gauge · {counted(len(study.levels), 'reference part')}, {counted(count, 'measurement')}"
+    what = (
+        f"Bias of the gauge · {counted(len(study.levels), 'reference part')}, {counted(count, 'measurement')}"
+    )
     paper.text(LEFT, 50, what, colour=SOFT)
     verdict = _verdict(study)
     y = 72.0
@@ -68,7 +70,9 @@ def _verdict(study: BiasStudy) -> str:
     judged = sum(level.lower is not None for level in study.levels)
     words = f"Bias differs from zero at {off} of {counted(judged, 'reference part')}" if judged else ""
     if not judged:
-        words = f"Mean bias {minus(f'{study.mean_bias:.3g}')}; no part was measured often enough for an interval"
+        words = (
+            f"Mean bias {minus(f'{study.mean_bias:.3g}')}; no part was measured often enough for an interval"
+        )
     if (line := study.linearity) is not None:
         slope = line.slope
         changes = "changes" if _apart(slope.lower, slope.upper) else "shows no change"
@@ -112,9 +116,7 @@ def _field(paper: Paper, biased: Biased, top: float) -> float:
     zero = to_y(0.0)
     paper.line(_LOW, zero, _HIGH, zero, stroke=SOFT, width=0.8, more=' stroke-dasharray="5 4"')
     paper.text(_HIGH + 6, zero + 4, "0", size=_SMALL, colour=SOFT)
-    for number, text in zip(
-        (ticks := scale.ticks(to_y.low, to_y.high, 6)), figures.even(ticks), strict=True
-    ):
+    for number, text in zip((ticks := scale.ticks(to_y.low, to_y.high, 6)), figures.even(ticks), strict=True):
         here = to_y(number)
         if abs(here - zero) > 12:
             paper.line(_HIGH, here, _HIGH + 4, here, stroke=EDGE, width=0.8)
@@ -134,14 +136,20 @@ def _field(paper: Paper, biased: Biased, top: float) -> float:
         here = to_x(level.reference), to_y(level.bias)
         if level.lower is not None and level.upper is not None:
             up, down = (min(max(to_y(end), top), bottom) for end in (level.upper, level.lower))
-            paper.path(f"M{here[0]:.1f} {up:.1f}V{down:.1f}M{here[0] - 4:.1f} {up:.1f}h8M{here[0] - 4:.1f} {down:.1f}h8", stroke=SOFT, width=1.2)
+            paper.path(
+                f"M{here[0]:.1f} {up:.1f}V{down:.1f}M{here[0] - 4:.1f} {up:.1f}h8M{here[0] - 4:.1f} {down:.1f}h8",
+                stroke=SOFT,
+                width=1.2,
+            )
         means.append(here)
         if _apart(level.lower, level.upper):
             off.append(here)
     paper.add(svg.dots(means, 3.2))
     if off:
         paper.add(svg.rings(off))
-    paper.path(f"M{_LOW:.1f} {bottom:.1f}H{_HIGH:.1f}M{_HIGH:.1f} {top:.1f}V{bottom:.1f}", stroke=EDGE, width=0.8)
+    paper.path(
+        f"M{_LOW:.1f} {bottom:.1f}H{_HIGH:.1f}M{_HIGH:.1f} {top:.1f}V{bottom:.1f}", stroke=EDGE, width=0.8
+    )
     references = Figures(at.tolist())
     found_ticks = scale.ticks(to_x.low, to_x.high, 7)
     for number, text in zip(found_ticks, references.even(found_ticks), strict=True):

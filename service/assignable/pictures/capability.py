@@ -179,7 +179,9 @@ def _distribution(paper: Paper, studied: Studied, figures: Figures, top: float) 
     heights = [unit * one.density(grid) for one in curves]
     # Where a distribution begins its density may have no bound: there the curve leaves the paper.
     most = 1.6 * tallest if tallest else math.inf
-    highest = max([tallest, *(min(float(each[np.isfinite(each)].max(initial=0.0)), most) for each in heights)])
+    highest = max(
+        [tallest, *(min(float(each[np.isfinite(each)].max(initial=0.0)), most) for each in heights)]
+    )
     highest = highest or 1.0
     to_y = scale.Linear(0.0, highest * 1.08, bottom, top + 20)
     if counts is not None and edges is not None:
@@ -199,7 +201,9 @@ def _distribution(paper: Paper, studied: Studied, figures: Figures, top: float) 
         flat = tuple(np.column_stack((to_x(grid), y)).ravel().tolist())
         paper.path("M" + ("L%.1f %.1f" * len(grid) % flat)[1:], stroke=INK, width=1.3, more=one.style)
     if curves:
-        _tails(paper, spec, lambda x: np.minimum(unit * curves[0].density(x), highest * 1.08), to_x, to_y, bottom)
+        _tails(
+            paper, spec, lambda x: np.minimum(unit * curves[0].density(x), highest * 1.08), to_x, to_y, bottom
+        )
     paper.line(LEFT, bottom, RIGHT, bottom, stroke=EDGE, width=0.8)
     _marks(paper, studied, figures, to_x, top, bottom)
     _quantiles(paper, studied, to_x, top, bottom)

@@ -10,10 +10,22 @@ Loop = list[tuple[float, float]]
 
 # A cell's corners, counter-clockwise from where its row and column begin, are 1, 2, 4 and 8; its edges are named
 # after where they lie. For the corners that are inside: lines from edge to edge, the inside on their left.
-_LINES = {
-    1: ("SW",), 2: ("ES",), 3: ("EW",), 4: ("NE",), 5: ("SW", "NE"), 6: ("NS",), 7: ("NW",),
-    8: ("WN",), 9: ("SN",), 10: ("ES", "WN"), 11: ("EN",), 12: ("WE",), 13: ("SE",), 14: ("WS",),
-}  # fmt: skip
+_LINES: dict[int, tuple[tuple[str, str], ...]] = {
+    1: (("S", "W"),),
+    2: (("E", "S"),),
+    3: (("E", "W"),),
+    4: (("N", "E"),),
+    5: (("S", "W"), ("N", "E")),
+    6: (("N", "S"),),
+    7: (("N", "W"),),
+    8: (("W", "N"),),
+    9: (("S", "N"),),
+    10: (("E", "S"), ("W", "N")),
+    11: (("E", "N"),),
+    12: (("W", "E"),),
+    13: (("S", "E"),),
+    14: (("W", "S"),),
+}
 
 
 def region(x: Floats, y: Floats, surface: Floats, level: float) -> list[Loop]:

@@ -31,16 +31,16 @@ def draw(found: EconomicDesign, around: Neighbourhood) -> str:
     paper.text(LEFT, 30, title, size=16, bold=True)
     what = _plan_words(best)
     paper.text(LEFT, 50, what, colour=SOFT)
-    verdict = f"{_money(best.cost_per_hour)} an hour; {_money(found.cost_per_hour_without_chart)} without a chart"
+    verdict = (
+        f"{_money(best.cost_per_hour)} an hour; {_money(found.cost_per_hour_without_chart)} without a chart"
+    )
     if found.present is not None:
         verdict += f"; {_money(found.present.cost_per_hour)} with the present plan"
     paper.text(LEFT, 72, cut(verdict, 13, RIGHT - LEFT), size=13, bold=True)
     y = 98.0
     told = [f"{title}: {what}.", f"{verdict}.", found.conclusion]
-    if len(around.multiples) > 1:
-        y = _surface(paper, found, around, y, told)
-    else:
-        y = _along(paper, found, around, y, told)
+    above = _surface if len(around.multiples) > 1 else _along
+    y = above(paper, found, around, y, told)
     y = _sizes(paper, found, y + 34, told)
     moved = [one for one in found.sensitivities if one.elasticity][:3]
     if moved:
@@ -98,7 +98,9 @@ def _surface(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: floa
             labels.append((*place, f"{_money(level)} (+{_percent(rise)})"))
     barred = contours.region(x, heights, -around.shortfall, -_MET)
     if barred:
-        paper.path(contours.path(barred), fill="none", stroke=INK, width=0.8, more=_DOTTED + ' fill-rule="evenodd"')
+        paper.path(
+            contours.path(barred), fill="none", stroke=INK, width=0.8, more=_DOTTED + ' fill-rule="evenodd"'
+        )
         paper.elements[-1] = paper.elements[-1].replace(' fill="none"', _BARRED)
     paper.path(f"M{_LOW:.1f} {top:.1f}V{bottom:.1f}H{_HIGH:.1f}", stroke=EDGE, width=0.8)
     for number in scale.ticks(float(multiples[0]), float(multiples[-1]), 6):
@@ -108,7 +110,11 @@ def _surface(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: floa
     at = to_x(best.interval_hours), to_y(best.multiple)
     marks = [(at, f"least: {_money(least)}", True)]
     now = found.present
-    if now is not None and hours[0] <= now.interval_hours <= hours[-1] and multiples[0] <= now.multiple <= multiples[-1]:
+    if (
+        now is not None
+        and hours[0] <= now.interval_hours <= hours[-1]
+        and multiples[0] <= now.multiple <= multiples[-1]
+    ):
         there = to_x(now.interval_hours), to_y(now.multiple)
         marks.append((there, f"present: {_money(now.cost_per_hour)}, n = {now.size}", False))
     taken: list[tuple[float, float, float]] = []
@@ -122,11 +128,16 @@ def _surface(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: floa
     for place_x, place_y, words in labels:
         wide = width(words, _SMALL)
         left = min(max(place_x - wide / 2, _LOW + 4), _HIGH - wide)
-        if all(abs(place_y - other) > 13 or left > start + one + 4 or left + wide + 4 < start for start, other, one in taken):
+        if all(
+            abs(place_y - other) > 13 or left > start + one + 4 or left + wide + 4 < start
+            for start, other, one in taken
+        ):
             taken.append((left, place_y, wide))
             paper.text(left, place_y, words, size=_SMALL, colour=SOFT, halo=True)
     y = bottom + 36
-    paper.text(_LOW, y, "hours between samples; up the side, limits in sigma of the mean", size=_SMALL, colour=SOFT)
+    paper.text(
+        _LOW, y, "hours between samples; up the side, limits in sigma of the mean", size=_SMALL, colour=SOFT
+    )
     y = _key(paper, y + 20, barred=bool(barred))
     told.append(f"{heading}. {_flat_words(found)}")
     return paper.lines(LEFT, y + 20, wrap(_flat_words(found), 12, RIGHT - LEFT)) - 16
@@ -149,7 +160,11 @@ def _open(drawn: str, loops: list[contours.Loop], top: float, bottom: float) -> 
             if edge(one, other):
                 pen = False
                 continue
-            parts.append(f"L{other[0]:.1f} {other[1]:.1f}" if pen else f"M{one[0]:.1f} {one[1]:.1f}L{other[0]:.1f} {other[1]:.1f}")
+            parts.append(
+                f"L{other[0]:.1f} {other[1]:.1f}"
+                if pen
+                else f"M{one[0]:.1f} {one[1]:.1f}L{other[0]:.1f} {other[1]:.1f}"
+            )
             pen = True
     return "".join(parts) or "M0 0"
 
@@ -157,10 +172,7 @@ def _open(drawn: str, loops: list[contours.Loop], top: float, bottom: float) -> 
 def _label_place(loops: list[contours.Loop], top: float, bottom: float) -> tuple[float, float] | None:
     """Where the lines lie lowest on the paper, or highest, or farthest to a side, within the frame."""
     points = [
-        (x, y)
-        for loop in loops
-        for x, y in loop
-        if _LOW + 40 < x < _HIGH - 40 and top + 14 < y < bottom - 8
+        (x, y) for loop in loops for x, y in loop if _LOW + 40 < x < _HIGH - 40 and top + 14 < y < bottom - 8
     ]
     if not points:
         return None
@@ -228,7 +240,8 @@ def _range(low: float | None, high: float | None, unit: str) -> str:
 def _along(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: float, told: list[str]) -> float:
     """The cost along the interval, where the limits are held."""
     best, hours, cost = found.best, around.interval_hours, around.cost_per_hour[0]
-    heading = f"Cost an hour of samples of {around.size}, limits held at {best.multiple:.3g} sigma: by the hours between samples"
+    held = f"limits held at {best.multiple:.3g} sigma"
+    heading = f"Cost an hour of samples of {around.size}, {held}: by the hours between samples"
     paper.text(LEFT, y, heading, colour=SOFT)
     top, bottom = y + 14, y + 204
     most = min(float(cost.max()), 2 * best.cost_per_hour) or 1.0
@@ -323,7 +336,8 @@ def _sizes(paper: Paper, found: EconomicDesign, y: float, told: list[str]) -> fl
         paper.text(x, bottom + 17, f"{number}", size=_SMALL, anchor="middle", colour=SOFT)
     shown = [(to_x(one.size), to_y(one.cost_per_hour)) for one in sizes if one.cost_per_hour <= most]
     others = [
-        place for place, one in zip(shown, (one for one in sizes if one.cost_per_hour <= most), strict=True)
+        place
+        for place, one in zip(shown, (one for one in sizes if one.cost_per_hour <= most), strict=True)
         if one.size != found.best.size
     ]
     paper.path("M" + "L".join(f"{a:.1f} {b:.1f}" for a, b in shown), stroke=SOFT, width=0.8)
@@ -331,18 +345,37 @@ def _sizes(paper: Paper, found: EconomicDesign, y: float, told: list[str]) -> fl
     at = to_x(found.best.size), to_y(least)
     paper.add(svg.dots([at], 4.4))
     words = f"n = {found.best.size}: {_money(least)}"
-    paper.text(min(max(at[0], _LOW + width(words, 12) / 2), _HIGH - width(words, 12) / 2), at[1] - 12, words, anchor="middle", halo=True)
+    paper.text(
+        min(max(at[0], _LOW + width(words, 12) / 2), _HIGH - width(words, 12) / 2),
+        at[1] - 12,
+        words,
+        anchor="middle",
+        halo=True,
+    )
     if beside is not None:
         there = to_x(beside.size), to_y(beside.cost_per_hour)
         paper.add(svg.open_points([there], 4.4))
         words = f"present: {_money(beside.cost_per_hour)}"
         wide = width(words, 12)
-        paper.text(there[0] + 9 if there[0] + 9 + wide < _HIGH else there[0] - 9 - wide, there[1] - 8, words, halo=True)
+        paper.text(
+            there[0] + 9 if there[0] + 9 + wide < _HIGH else there[0] - 9 - wide,
+            there[1] - 8,
+            words,
+            halo=True,
+        )
     y = bottom + 34
-    paper.text(_LOW, y, "pieces in a sample; up the side, cost an hour; band: at most 5 % more", size=_SMALL, colour=SOFT)
+    paper.text(
+        _LOW,
+        y,
+        "pieces in a sample; up the side, cost an hour; band: at most 5 % more",
+        size=_SMALL,
+        colour=SOFT,
+    )
     if hidden := len(found.by_size) - len(shown):
         y += 16
         words = f"Not drawn: {counted(hidden, 'size')} far off or far dearer."
         paper.text(_LOW, y, words, size=_SMALL, colour=SOFT)
-    told.append(f"{heading}: " + ", ".join(f"{_money(one.cost_per_hour)} for {one.size}" for one in sizes) + ".")
+    told.append(
+        f"{heading}: " + ", ".join(f"{_money(one.cost_per_hour)} for {one.size}" for one in sizes) + "."
+    )
     return y

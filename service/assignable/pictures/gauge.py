@@ -8,8 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..spc.data import Floats
-from ..spc.studies.repeatability import OwnRepeatability
-from ..spc.studies.variance_components import GaugeComponents, GaugeDiscrimination, VarianceComponent
+from ..spc.studies.crossed import CrossedStudy
+from ..spc.studies.nested import NestedStudy
+from ..spc.studies.variance_components import VarianceComponent
 from . import rows, scale, svg, thin
 from .svg import BAND, EDGE, INK, LEFT, RIGHT, SOFT, Paper
 from .text import Figures, clean, counted, cut, minus, width, wrap
@@ -26,23 +27,22 @@ _BAND = 2.0
 class Gauged:
     """What a picture of a gauge study shows.
 
-    measurements: (appraisers, parts, trials). parts: the names of each appraiser's parts in turn; with ``shared``
-    all appraisers measured the same ones, and ``interaction`` tells in words what became of it.
+    measurements: (appraisers, parts, trials). parts: the names of each appraiser's parts in turn, the same ones
+    in a crossed study.
     """
 
     name: str | None
     unit: str | None
-    shared: bool
+    study: CrossedStudy | NestedStudy
     appraisers: Sequence[str]
     parts: Sequence[Sequence[str]]
     measurements: Floats
-    grand_mean: float
-    components: GaugeComponents
-    discrimination: GaugeDiscrimination
-    own: Sequence[OwnRepeatability]
-    confidence: float
-    interaction: str | None
     cautions: Sequence[str] = ()
+
+    @property
+    def shared(self) -> bool:
+        """Whether all appraisers measured the same parts."""
+        return isinstance(self.study, CrossedStudy)
 
 
 def draw(gauged: Gauged) -> str:
@@ -78,7 +78,7 @@ def _percent(number: float) -> str:
 
 def _verdict(gauged: Gauged) -> str:
     """What the gauge costs of the specification, and how finely it sorts."""
-    gauge, found = gauged.components.gauge, gauged.discrimination
+    gauge, found = gauged.study.components.gauge, gauged.study.discrimination
     if (share := gauge.share_of_tolerance_percent) is not None:
         words = f"The gauge takes {_percent(share)} of the specification"
         if gauge.sd > 0:
@@ -92,8 +92,8 @@ def _verdict(gauged: Gauged) -> str:
     if many is None or ratio is None:
         return f"{words}; it shows no variation of its own."
     words += f"; it tells {counted(many, 'category', 'categories')} of such parts apart"
-    low, high = found.distinct_categories_ratio_lower, found.distinct_categories_ratio_upper
-    interval = "" if low is None or high is None else f", {low:.3g} to {high:.3g}"
+    least, most = found.distinct_categories_ratio_lower, found.distinct_categories_ratio_upper
+    interval = "" if least is None or most is None else f", {least:.3g} to {most:.3g}"
     return f"{words} (ratio {ratio:.3g}{interval})."
 
 
@@ -101,7 +101,7 @@ def _verdict(gauged: Gauged) -> str:
 
 
 def _components(paper: Paper, gauged: Gauged, y: float, told: list[str]) -> float:
-    found = gauged.components
+    found = gauged.study.components
     listed: list[tuple[str, VarianceComponent | None, int]] = [
         ("measurement system", found.gauge, 0),
         ("repeatability", found.repeatability, 1),
@@ -112,8 +112,10 @@ def _components(paper: Paper, gauged: Gauged, y: float, told: list[str]) -> floa
     ]
     shown = [(name, one, indent) for name, one, indent in listed if one is not None]
     of = "specification" if found.gauge.share_of_tolerance_percent is not None else None
-    confidence = f"{100 * gauged.confidence:g} %"
-    paper.text(LEFT, y, f"Where the spread comes from: standard deviations with {confidence} intervals", colour=SOFT)
+    confidence = f"{100 * gauged.study.confidence:g} %"
+    paper.text(
+        LEFT, y, f"Where the spread comes from: standard deviations with {confidence} intervals", colour=SOFT
+    )
     if of is not None:
         y += 16
         words = f"last column: share of the {of}"
@@ -128,7 +130,9 @@ def _components(paper: Paper, gauged: Gauged, y: float, told: list[str]) -> floa
         share = one.share_of_tolerance_percent
         last = f" · {_percent(share)}" if of is not None and share is not None else ""
         drawn.append(rows.Row(name, one.sd, one.sd_lower, one.sd_upper, written + last, indent))
-        told.append(f"{name.capitalize()} {written}{f', {_percent(share)} of the {of}' if last and share is not None else ''}.")
+        told.append(
+            f"{name.capitalize()} {written}{f', {_percent(share)} of the {of}' if last and share is not None else ''}."
+        )
     return rows.draw(paper, drawn, y - 4, to_x)
 
 
@@ -149,7 +153,7 @@ def _lanes(paper: Paper, gauged: Gauged, y: float, told: list[str]) -> float:
     x = gauged.measurements
     o, p, _ = x.shape
     by_part = x.mean(axis=2)
-    offsets = by_part.mean(axis=1) - gauged.grand_mean
+    offsets = by_part.mean(axis=1) - gauged.study.grand_mean
     if gauged.shared:
         of_part = by_part.mean(axis=0)
         ranked = np.argsort(of_part, kind="stable")
@@ -161,7 +165,7 @@ def _lanes(paper: Paper, gauged: Gauged, y: float, told: list[str]) -> float:
         heading = "What each appraiser found, part by part"
     chosen = sorted(np.argsort(-np.abs(offsets), kind="stable")[:_MOST_LANES].tolist())
     paper.text(LEFT, y, heading, colour=SOFT)
-    sd = gauged.components.repeatability.sd
+    sd = gauged.study.components.repeatability.sd
     edges = [-_BAND * sd, _BAND * sd]
     if not gauged.shared:
         edges = [float(means.min()) - _BAND * sd, float(means.max()) + _BAND * sd]
@@ -189,12 +193,22 @@ def _lanes(paper: Paper, gauged: Gauged, y: float, told: list[str]) -> float:
         notes.append("Parts in the order of their means.")
     if o > len(chosen):
         notes.append(f"Drawn: the {len(chosen)} of {o} appraisers farthest from the mean of all.")
-    if gauged.interaction:
-        notes.append(gauged.interaction)
+    notes += _interaction(gauged.study)
     if notes:
-        y = paper.lines(LEFT, y + 18, wrap(" ".join(notes), _SMALL, RIGHT - LEFT), size=_SMALL, colour=SOFT) - 15
+        y = (
+            paper.lines(LEFT, y + 18, wrap(" ".join(notes), _SMALL, RIGHT - LEFT), size=_SMALL, colour=SOFT)
+            - 15
+        )
         told.append(" ".join(notes))
     return y
+
+
+def _interaction(study: CrossedStudy | NestedStudy) -> list[str]:
+    """Whether appraisers differ from part to part."""
+    if not isinstance(study, CrossedStudy) or study.interaction_p_value is None:
+        return []
+    words = f"Appraisers differing from part to part (interaction): p = {study.interaction_p_value:.3g}"
+    return [f"{words}{', counted as repeatability' if study.interaction_pooled else ''}."]
 
 
 def _lane(
@@ -210,16 +224,20 @@ def _lane(
 ) -> float:
     """One appraiser's measurements; returns where the lane ends."""
     name = clean(gauged.appraisers[lane.appraiser]) or f"appraiser {lane.appraiser + 1}"
-    facts = f"mean {'+' if offset > 0 else ''}{minus(f'{offset:.3g}')} against all" if len(gauged.appraisers) > 1 else ""
-    if gauged.own:
-        own = gauged.own[lane.appraiser]
+    facts = (
+        f"mean {'+' if offset > 0 else ''}{minus(f'{offset:.3g}')} against all"
+        if len(gauged.appraisers) > 1
+        else ""
+    )
+    if gauged.study.repeatability_by_appraiser:
+        own = gauged.study.repeatability_by_appraiser[lane.appraiser]
         facts += f"{', ' if facts else ''}repeats to {own.sd:.3g} ({own.lower:.3g} to {own.upper:.3g})"
     paper.text(LEFT, y, cut(name, 12, RIGHT - LEFT - width(facts, _SMALL) - 12))
     paper.text(RIGHT, y, facts, size=_SMALL, anchor="end", colour=SOFT)
     told.append(f"{name}: {facts}." if facts else f"{name}.")
     top, bottom = y + 6, y + 6 + _LANE
     to_y = scale.Linear(*ends, bottom, top)
-    sd = gauged.components.repeatability.sd
+    sd = gauged.study.components.repeatability.sd
     heights = to_y(lane.means)
     half = min(0.4 * (places[1] - places[0] if len(places) > 1 else 60.0), 16.0)
     if gauged.shared:
@@ -232,7 +250,8 @@ def _lane(
             high, low = max(b - reach, top), min(b + reach, bottom)
             paper.rect(a - half, high, 2 * half, low - high, fill=BAND)
         dashes = "".join(
-            f"M{a - half:.1f} {b:.1f}h{2 * half:.1f}" for a, b in zip(places.tolist(), heights.tolist(), strict=True)
+            f"M{a - half:.1f} {b:.1f}h{2 * half:.1f}"
+            for a, b in zip(places.tolist(), heights.tolist(), strict=True)
         )
         paper.path(dashes, stroke=INK, width=1.3)
         middle = to_y(float(lane.means.mean()))
@@ -251,7 +270,9 @@ def _band(paper: Paper, to_y: scale.Linear, figures: Figures, sd: float) -> None
     low, high = to_y(-_BAND * sd), to_y(_BAND * sd)
     if sd > 0:
         paper.rect(_LOW, high, _HIGH - _LOW, low - high, fill=BAND)
-        paper.path(f"M{_LOW:.1f} {low:.1f}H{_HIGH:.1f}M{_LOW:.1f} {high:.1f}H{_HIGH:.1f}", stroke=EDGE, width=1)
+        paper.path(
+            f"M{_LOW:.1f} {low:.1f}H{_HIGH:.1f}M{_LOW:.1f} {high:.1f}H{_HIGH:.1f}", stroke=EDGE, width=1
+        )
     zero = to_y(0.0)
     paper.line(_LOW, zero, _HIGH, zero, stroke=SOFT, width=0.8, more=_DASHED)
     paper.text(_HIGH + 6, zero + 4, "0", size=_SMALL, colour=SOFT)

@@ -29,7 +29,13 @@ class Row:
 
 
 def draw(
-    paper: Paper, rows: Sequence[Row], y: float, to_x: scale.Linear, *, tick: str = "", marks: Sequence[float] = ()
+    paper: Paper,
+    rows: Sequence[Row],
+    y: float,
+    to_x: scale.Linear,
+    *,
+    tick: str = "",
+    marks: Sequence[float] = (),
 ) -> float:
     """Rows below ``y``, a scale under them; ends beyond the scale are arrows. Returns where they end.
 

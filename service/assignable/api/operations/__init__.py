@@ -87,6 +87,7 @@ GROUPS = (
             ("POST", "/v1/measurement-studies/nested/picture", "drawNestedStudy"),
             ("POST", "/v1/measurement-studies/attributes/picture", "drawAgreementStudy"),
             ("POST", "/v1/measurement-studies/bias/picture", "drawBiasStudy"),
+            ("POST", "/v1/release-checks/picture", "drawReleaseCheck"),
         ),
     ),
     Group(

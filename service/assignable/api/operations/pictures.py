@@ -8,25 +8,26 @@ from typing import Any
 
 import numpy as np
 
-from ...pictures import agreement, bias, capability, charts, curves, economic, gauge
+from ...documents.seal import Seals
+from ...pictures import agreement, bias, capability, charts, curves, economic, gauge, release
 from ...spc.cautions import Caution
 from ...spc.charts import CHARTS, Chart
-from ...spc.studies.bias import bias as bias_study
-from ...spc.studies.crossed import CrossedStudy
-from ...spc.studies.nested import NestedStudy
 from ...spc.charts.common import PanelLimits
+from ...spc.design.economic import ProcessEconomics, neighbourhood
+from ...spc.release import group_averages
+from ...spc.studies.bias import bias as bias_study
 from .. import answers
 from ..contract import Contract
 from ..schemas.capability import specification_of
 from ..schemas.charts import ChartRequest, request_of
-from ..schemas.common import labels_of
+from ..schemas.common import labels_of, rules_of
+from ..schemas.economic import requirements_of
+from ..schemas.release import below_of
+from ..schemas.studies import levels_of
 from .capability import study_of
 from .charts import fitted, judged
-from ...spc.design.economic import ProcessEconomics, neighbourhood
-from ..schemas.economic import requirements_of
-from ..schemas.studies import levels_of
-from ..schemas.common import rules_of
 from .designs import design_economic, design_subgroups
+from .release import check
 from .run_length import run_length
 from .studies import agreement_of, crossed_of, nested_of
 
@@ -54,6 +55,7 @@ def register(contract: Contract) -> None:
     _bind(contract, "analyseNestedStudy", "drawNestedStudy", draw_nested_study)
     _bind(contract, "analyseAgreementStudy", "drawAgreementStudy", draw_agreement_study)
     _bind(contract, "analyseBiasStudy", "drawBiasStudy", draw_bias_study)
+    _bind(contract, "checkRelease", "drawReleaseCheck", partial(draw_release_check, contract.seals))
 
 
 def _bind(contract: Contract, source_id: str, operation_id: str, drawing: Drawing) -> None:
@@ -137,11 +139,9 @@ def _draw(
 def draw_measurements(loaded: dict[str, Any]) -> str:
     """A capability study."""
     found = study_of(loaded)
-    of = loaded.get("characteristic") or {}
     return capability.draw(
         capability.Studied(
-            name=of.get("name"),
-            unit=of.get("unit"),
+            **_characteristic(loaded),
             values=loaded["data"]["values"] if "data" in loaded else None,
             specification=specification_of(loaded["specification"]).effective,
             status=found.status,
@@ -149,7 +149,7 @@ def draw_measurements(loaded: dict[str, Any]) -> str:
             quantiles=found.quantiles,
             machine=found.machine,
             fitted=found.fitted,
-            cautions=tuple(caution.code for caution in found.cautions),
+            cautions=_codes(found.cautions),
         )
     )
 
@@ -199,19 +199,13 @@ def draw_run_length(loaded: dict[str, Any]) -> str:
 def draw_crossed_study(loaded: dict[str, Any]) -> str:
     """Where the spread of a crossed study comes from, and what each appraiser found."""
     table, found = crossed_of(loaded)
-    interaction = None
-    if found.interaction_p_value is not None:
-        interaction = f"Appraisers differing from part to part (interaction): p = {found.interaction_p_value:.3g}"
-        interaction += ", counted as repeatability." if found.interaction_pooled else "."
     return gauge.draw(
         gauge.Gauged(
             **_characteristic(loaded),
-            shared=True,
+            study=found,
             appraisers=table.appraisers,
             parts=(table.parts,) * len(table.appraisers),
             measurements=table.measurements.swapaxes(0, 1),
-            interaction=interaction,
-            **_gauge_of(found),
             cautions=_codes(found.cautions),
         )
     )
@@ -223,29 +217,17 @@ def draw_nested_study(loaded: dict[str, Any]) -> str:
     return gauge.draw(
         gauge.Gauged(
             **_characteristic(loaded),
-            shared=False,
+            study=found,
             appraisers=table.appraisers,
             parts=table.parts,
             measurements=table.measurements,
-            interaction=None,
-            **_gauge_of(found),
             cautions=_codes((*table.cautions, *found.cautions)),
         )
     )
 
 
-def _gauge_of(found: CrossedStudy | NestedStudy) -> dict[str, Any]:
-    """What both kinds of study say of a gauge."""
-    return {
-        "grand_mean": found.grand_mean,
-        "components": found.components,
-        "discrimination": found.discrimination,
-        "own": found.repeatability_by_appraiser,
-        "confidence": found.confidence,
-    }
-
-
-def _characteristic(loaded: Mapping[str, Any]) -> dict[str, str | None]:
+def _characteristic(loaded: Mapping[str, Any]) -> dict[str, Any]:
+    """Name and unit."""
     of = loaded.get("characteristic") or {}
     return {"name": of.get("name"), "unit": of.get("unit")}
 
@@ -283,3 +265,58 @@ def draw_bias_study(loaded: dict[str, Any]) -> str:
             cautions=_codes(found.cautions),
         )
     )
+
+
+# Release --------------------------------------------------------------------------------------------
+
+
+def draw_release_check(seals: Seals, loaded: dict[str, Any]) -> str:
+    """A batch at a glance, a row for each characteristic."""
+    answer = check(seals, loaded)
+    return release.draw(
+        release.Released(
+            batch=answer["batch"],
+            disposition=answer["disposition"],
+            note=answer["note"],
+            rows=[
+                _release_row(posted, told)
+                for posted, told in zip(loaded["characteristics"], answer["characteristics"], strict=True)
+            ],
+            cautions=tuple(caution["code"] for caution in answer["cautions"]),
+        )
+    )
+
+
+def _release_row(posted: Mapping[str, Any], told: Mapping[str, Any]) -> release.Row:
+    acceptance, trend = told["acceptance"], told["trend"]
+    own = None if trend is None else _own_limits(posted["trend"]["limits"])
+    averages: tuple[float, ...] = ()
+    if own is not None and trend["point"] != "each" and posted["compare"] == "each":
+        found = group_averages(posted["results"], below_of(posted))
+        averages = tuple(one for one in found if one is not None)
+    return release.Row(
+        name=told["name"],
+        unit=told["unit"],
+        disposition=told["disposition"],
+        reasons=tuple(reason["sentence"] for reason in told["reasons"]),
+        present=told["results_present"],
+        least_margin=told["least_margin"],
+        compared=told["compared"],
+        rounded=told["method"] == "rounding",
+        specification=specification_of(posted["specification"]),
+        acceptance=(None, None) if acceptance is None else (acceptance.lower, acceptance.upper),
+        standard=None if acceptance is None else acceptance.standard_uncertainty,
+        own=own,
+        averages=averages,
+    )
+
+
+def _own_limits(document: Mapping[str, Any]) -> tuple[float, float] | None:
+    """The limits of a chart of values or averages, where it has two in the characteristic's own unit."""
+    for name in ("value", "mean"):
+        lines = document["panels"].get(name)
+        if isinstance(lines, Mapping):
+            low, high = lines.get("lower"), lines.get("upper")
+            if isinstance(low, int | float) and isinstance(high, int | float):
+                return float(low), float(high)
+    return None

@@ -178,8 +178,8 @@ def band(study: BiasStudy, references: Floats) -> tuple[Floats, Floats, Floats]:
     sxx = float(sizes @ (at - centre) ** 2)
     x = references - centre
     fitted = study.mean_bias + line.slope.estimate * x
-    reach = _t_quantile(line.degrees_of_freedom, study.confidence) * line.residual_sd
-    reach = reach * np.sqrt(1 / count + x**2 / sxx)
+    error = line.residual_sd * np.sqrt(1 / count + x**2 / sxx)
+    reach = _t_quantile(line.degrees_of_freedom, study.confidence) * error
     return fitted, fitted - reach, fitted + reach
 
 
