@@ -18,7 +18,7 @@ _NEAR = "#c3d2de"
 _BARRED = f' fill="{INK}" fill-opacity="0.08"'
 _DASHED = ' stroke-dasharray="5 4"'
 _DOTTED = ' stroke-dasharray="1.5 3.5"'
-_WITHIN = (0.01, 0.05)
+_FLAT = 0.05
 _RISES = (0.1, 0.2, 0.5, 1.0)
 _MOST_SIZES = 60
 _MET = 1e-6  # a plan on the edge of a requirement meets it, whatever the last digit of the search
@@ -85,15 +85,14 @@ def _surface(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: floa
     to_y = scale.Linear(float(multiples[0]), float(multiples[-1]), bottom, top)
     x, heights = np.array([to_x(each) for each in hours.tolist()]), to_y(multiples)
     cost, least = around.cost_per_hour, best.cost_per_hour
-    for rise, tint in reversed(tuple(zip(_WITHIN, (_NEAR, BAND), strict=True))):
-        loops = contours.region(x, heights, cost, least * (1 + rise))
-        paper.path(contours.path(loops), fill=tint, stroke=EDGE, width=0.9, more=' fill-rule="evenodd"')
     labels = []
-    for rise in (*_WITHIN, *_RISES):
+    for rise, tint in ((0.05, BAND), (0.01, _NEAR), *((rise, None) for rise in _RISES)):
         level = least * (1 + rise)
         loops = contours.region(x, heights, cost, level)
-        if rise not in _WITHIN:
-            paper.path(_open(contours.path(loops), loops, top, bottom), stroke=EDGE, width=0.7)
+        if tint is not None:
+            paper.path(contours.path(loops), fill=tint, stroke=EDGE, width=0.9, more=' fill-rule="evenodd"')
+        elif loops:
+            paper.path(_open(loops, top, bottom), stroke=EDGE, width=0.7)
         if place := _label_place(loops, top, bottom):
             labels.append((*place, f"{_money(level)} (+{_percent(rise)})"))
     barred = contours.region(x, heights, -around.shortfall, -_MET)
@@ -143,7 +142,7 @@ def _surface(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: floa
     return paper.lines(LEFT, y + 20, wrap(_flat_words(found), 12, RIGHT - LEFT)) - 16
 
 
-def _open(drawn: str, loops: list[contours.Loop], top: float, bottom: float) -> str:
+def _open(loops: list[contours.Loop], top: float, bottom: float) -> str:
     """The same lines without the stretches along the edge of the paper's frame."""
 
     def edge(one: tuple[float, float], other: tuple[float, float]) -> bool:
@@ -209,7 +208,7 @@ def _key(paper: Paper, y: float, *, barred: bool) -> float:
 
 def _flat_words(found: EconomicDesign) -> str:
     """How far each choice may move before it costs 5 % more."""
-    flat = next((one for one in found.flatness if one.rise == _WITHIN[-1]), None)
+    flat = next((one for one in found.flatness if one.rise == _FLAT), None)
     if flat is None:
         return ""
     parts = []

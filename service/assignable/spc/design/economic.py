@@ -49,7 +49,7 @@ _ROUNDS = 30
 _WITHIN = (0.01, 0.05)
 _SURFACE = 15
 # A picture is finer, and reaches no farther than this ratio of intervals.
-_FINE = 81
+_FINE = 61
 _FARTHEST = 40.0
 _NO_SHORTFALL = math.exp(-1.0)
 _STEP = 1e-4
