@@ -258,8 +258,8 @@ def _curves(studied: Studied) -> list[_Curve]:
     return [
         _Curve(partial(_normal, found.mean, one.sigma), style, words)
         for one, style, words in (
-            (found.total, "", "normal, overall"),
-            (found.within, ' stroke-dasharray="5 4"', "normal, within"),
+            (found.total, "", "normal, spread of all values"),
+            (found.within, ' stroke-dasharray="5 4"', "normal, spread within subgroups"),
         )
         if one is not None and one.sigma > 0
     ]
