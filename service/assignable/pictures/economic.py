@@ -6,7 +6,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from ..spc.data import Floats
+from ..spc.data import Booleans, Floats
 from ..spc.design.economic import EconomicDesign, Neighbourhood, PricedPlan, SizeOptimum
 from . import contours, scale, svg
 from .svg import BAND, EDGE, INK, LEFT, RIGHT, SOFT, Paper
@@ -15,7 +15,8 @@ from .text import clean, counted, cut, minus, width, wrap
 _SMALL = 11.0
 _LOW, _HIGH = LEFT + 46, RIGHT - 18
 _NEAR = "#c3d2de"
-_BARRED = f' fill="{INK}" fill-opacity="0.08"'
+_BARRED = ' fill-opacity="0.08"'
+_HATCH = 7.0
 _DASHED = ' stroke-dasharray="5 4"'
 _DOTTED = ' stroke-dasharray="1.5 3.5"'
 _FLAT = 0.05
@@ -97,10 +98,9 @@ def _surface(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: floa
             labels.append((*place, f"{_money(level)} (+{_percent(rise)})"))
     barred = contours.region(x, heights, -around.shortfall, -_MET)
     if barred:
-        paper.path(
-            contours.path(barred), fill="none", stroke=INK, width=0.8, more=_DOTTED + ' fill-rule="evenodd"'
-        )
-        paper.elements[-1] = paper.elements[-1].replace(' fill="none"', _BARRED)
+        look = f'{_BARRED}{_DOTTED} fill-rule="evenodd"'
+        paper.path(contours.path(barred), stroke=INK, width=0.8, fill=INK, more=look)
+        paper.path(_hatching(x, heights, around.shortfall), stroke=EDGE, width=0.5)
     paper.path(f"M{_LOW:.1f} {top:.1f}V{bottom:.1f}H{_HIGH:.1f}", stroke=EDGE, width=0.8)
     for number in scale.ticks(float(multiples[0]), float(multiples[-1]), 6):
         paper.line(_LOW - 4, to_y(number), _LOW, to_y(number), stroke=EDGE, width=0.8)
@@ -140,6 +140,32 @@ def _surface(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: floa
     y = _key(paper, y + 20, barred=bool(barred))
     told.append(f"{heading}. {_flat_words(found)}")
     return paper.lines(LEFT, y + 20, wrap(_flat_words(found), 12, RIGHT - LEFT)) - 16
+
+
+def _hatching(x: Floats, heights: Floats, shortfall: Floats) -> str:
+    """Upright hairlines where a requirement is not met: on paper without colour, tints alone are alike."""
+    columns = np.arange(x[0] + _HATCH / 2, x[-1], _HATCH)
+    at = np.clip(np.searchsorted(x, columns) - 1, 0, len(x) - 2)
+    share = (columns - x[at]) / (x[at + 1] - x[at])
+    missed = shortfall[:, at] * (1 - share) + shortfall[:, at + 1] * share > _MET
+    lines = []
+    for column, rows in zip(columns.tolist(), missed.T, strict=True):
+        for start, end in _runs(rows):
+            lines.append(f"M{column:.1f} {heights[start]:.1f}V{heights[end - 1]:.1f}")
+    return "".join(lines) or "M0 0"
+
+
+def _runs(marked: Booleans) -> list[tuple[int, int]]:
+    """First and past-the-last positions of each stretch that is marked."""
+    ends = np.flatnonzero(np.diff(np.r_[False, marked, False].astype(int))).reshape(-1, 2)
+    return [(start, end) for start, end in ends.tolist()]
+
+
+def _swatch(paper: Paper, x: float, y: float, tint: str, *, barred: bool = False) -> None:
+    more = f'{_BARRED if barred else ""} stroke="{EDGE}" stroke-width="0.8"'
+    paper.rect(x, y - 9, 17, 10, fill=tint, more=more)
+    if barred:
+        paper.path(f"M{x + 5:.1f} {y - 9:.1f}v10m6 0v-10", stroke=EDGE, width=0.5)
 
 
 def _open(loops: list[contours.Loop], top: float, bottom: float) -> str:
@@ -196,11 +222,11 @@ def _hours_under(paper: Paper, to_x: scale.Logarithmic, bottom: float) -> None:
 
 def _key(paper: Paper, y: float, *, barred: bool) -> float:
     x = LEFT
-    entries = [(_NEAR, "", "at most 1 % more than the plan"), (BAND, "", "at most 5 % more")]
+    entries = [(_NEAR, "at most 1 % more than the plan"), (BAND, "at most 5 % more")]
     if barred:
-        entries.append((INK, ' fill-opacity="0.08"', "a requirement is not met"))
-    for tint, more, words in entries:
-        paper.rect(x, y - 9, 17, 10, fill=tint, more=f'{more} stroke="{EDGE}" stroke-width="0.8"')
+        entries.append((INK, "a requirement is not met"))
+    for tint, words in entries:
+        _swatch(paper, x, y, tint, barred=tint == INK)
         paper.text(x + 23, y, words, size=_SMALL, colour=SOFT)
         x += 37 + width(words, _SMALL)
     return y
@@ -251,8 +277,7 @@ def _along(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: float,
     x = np.array([to_x(each) for each in hours.tolist()])
     _barred_columns(paper, x, around.shortfall[0] > _MET, top, bottom)
     shown = cost <= most
-    runs = np.flatnonzero(np.diff(np.r_[False, shown, False].astype(int))).reshape(-1, 2)
-    for start, end in runs.tolist():
+    for start, end in _runs(shown):
         places = zip(x[start:end].tolist(), to_y(cost[start:end]).tolist(), strict=True)
         paper.path("M" + "L".join(f"{a:.1f} {b:.1f}" for a, b in places), width=1.3)
     _cost_ticks(paper, to_y, top, bottom)
@@ -269,23 +294,26 @@ def _along(paper: Paper, found: EconomicDesign, around: Neighbourhood, y: float,
     y = bottom + 36
     paper.text(_LOW, y, "hours between samples; up the side, cost an hour", size=_SMALL, colour=SOFT)
     x_key = LEFT
-    entries = [(BAND, "", "at most 5 % more than the plan")]
+    entries = [(BAND, "at most 5 % more than the plan")]
     if bool((around.shortfall > _MET).any()):
-        entries.append((INK, ' fill-opacity="0.08"', "a requirement is not met"))
-    for tint, more, words in entries:
-        paper.rect(x_key, y + 11, 17, 10, fill=tint, more=f'{more} stroke="{EDGE}" stroke-width="0.8"')
+        entries.append((INK, "a requirement is not met"))
+    for tint, words in entries:
+        _swatch(paper, x_key, y + 20, tint, barred=tint == INK)
         paper.text(x_key + 23, y + 20, words, size=_SMALL, colour=SOFT)
         x_key += 37 + width(words, _SMALL)
     told.append(f"{heading}. {_flat_words(found)}")
     return paper.lines(LEFT, y + 40, wrap(_flat_words(found), 12, RIGHT - LEFT)) - 16
 
 
-def _barred_columns(paper: Paper, x: Floats, barred: np.ndarray, top: float, bottom: float) -> None:
+def _barred_columns(paper: Paper, x: Floats, barred: Booleans, top: float, bottom: float) -> None:
     """Where a requirement is not met."""
-    runs = np.flatnonzero(np.diff(np.r_[False, barred, False].astype(int))).reshape(-1, 2)
-    for start, end in runs.tolist():
+    for start, end in _runs(barred):
         left, right = float(x[start]), float(x[end - 1])
-        paper.rect(left, top, right - left, bottom - top, fill=INK, more=' fill-opacity="0.08"')
+        paper.rect(left, top, right - left, bottom - top, fill=INK, more=_BARRED)
+        lines = (
+            f"M{column:.1f} {top:.1f}V{bottom:.1f}" for column in np.arange(left, right, _HATCH).tolist()
+        )
+        paper.path("".join(lines), stroke=EDGE, width=0.5)
 
 
 def _cost_band(paper: Paper, to_y: scale.Linear, least: float) -> None:
@@ -358,7 +386,7 @@ def _sizes(paper: Paper, found: EconomicDesign, y: float, told: list[str]) -> fl
         wide = width(words, 12)
         paper.text(
             there[0] + 9 if there[0] + 9 + wide < _HIGH else there[0] - 9 - wide,
-            there[1] - 8,
+            there[1] + 18,
             words,
             halo=True,
         )
