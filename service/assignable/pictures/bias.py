@@ -129,7 +129,7 @@ def _field(paper: Paper, biased: Biased, top: float) -> float:
     ]
     if len(points) > 1500:
         x_all, y_all = np.array(points).T
-        points = [points[each] for each in thin.apart(x_all, y_all, 1.2).tolist()]
+        points = [points[each] for each in thin.apart(x_all, y_all, 2.0).tolist()]
     paper.add(svg.dots(points, 1.4))
     means, off = [], []
     for level in study.levels:

@@ -246,9 +246,14 @@ def _lane(
         paper.path(f"M{flat}", stroke=INK, width=1.3)
     else:
         reach = abs(to_y(_BAND * sd) - to_y(0.0))
-        for a, b in zip(places.tolist(), heights.tolist(), strict=True):
-            high, low = max(b - reach, top), min(b + reach, bottom)
-            paper.rect(a - half, high, 2 * half, low - high, fill=BAND)
+        bands = (
+            (a - half, max(b - reach, top), min(b + reach, bottom))
+            for a, b in zip(places.tolist(), heights.tolist(), strict=True)
+        )
+        boxes = "".join(
+            f"M{x:.1f} {high:.1f}h{2 * half:.1f}V{low:.1f}h{-2 * half:.1f}z" for x, high, low in bands
+        )
+        paper.path(boxes, fill=BAND, width=0)
         dashes = "".join(
             f"M{a - half:.1f} {b:.1f}h{2 * half:.1f}"
             for a, b in zip(places.tolist(), heights.tolist(), strict=True)
@@ -260,7 +265,7 @@ def _lane(
     trials = lane.values.shape[1]
     spread = np.linspace(-0.5, 0.5, trials) * min(half, 8.0) if trials > 1 else np.zeros(1)
     all_x, all_y = (places[:, None] + spread).ravel(), to_y(lane.values).ravel()
-    kept = thin.apart(all_x, all_y, 1.2) if all_x.size > 1500 else np.arange(all_x.size)
+    kept = thin.apart(all_x, all_y, 2.5) if all_x.size > 1500 else np.arange(all_x.size)
     paper.add(svg.dots(list(zip(all_x[kept].tolist(), all_y[kept].tolist(), strict=True)), 2.0))
     return bottom
 
