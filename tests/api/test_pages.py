@@ -5,8 +5,9 @@ from __future__ import annotations
 import json
 import re
 from collections.abc import Iterator
+from html import unescape
 from html.parser import HTMLParser
-from urllib.parse import urljoin, urlsplit
+from urllib.parse import unquote, urljoin, urlsplit
 
 import pytest
 
@@ -260,3 +261,21 @@ def test_every_script_is_served_and_imports_only_what_is() -> None:
         assert set(re.findall(r'from "\./([a-z]+\.js)"', script)) <= set(documentation._SCRIPTS)
         assert "innerHTML" not in script
         assert not re.search(r"https?://", script)
+
+
+def test_what_draws_shows_its_examples_drawn() -> None:
+    drawing = [found for found in served.operations().values() if found.media_type == "image/svg+xml"]
+    # One of each kind; the charts' own are alike.
+    shown = [found for found in drawing if "/charts/" not in found.path]
+    assert len(shown) >= 9
+    for operation in shown:
+        page = Read(f"/docs/reading/{operation.operation_id}")
+        sources = re.findall(r'<img src="data:image/svg\+xml;charset=utf-8,([^"]*)" alt="([^"]+)"', page.text)
+        assert len(sources) == len(operation.examples)
+        for (source, words), name in zip(sources, operation.examples, strict=True):
+            answered = served.call(operation.operation_id, served.example(name)).get_data(as_text=True)
+            assert unquote(unescape(source)) == answered
+            assert f">{words}</desc>" in answered
+        plain = operation.path.removesuffix("/picture")
+        (of,) = [found for found in served.operations().values() if found.path == plain]
+        assert f'href="{operation.operation_id}"' in Read(f"/docs/reading/{of.operation_id}").text

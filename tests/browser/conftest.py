@@ -95,6 +95,7 @@ def keep(page: chromium.Page) -> Callable[[str], None]:
 def axe() -> str:
     """The rules of accessibility: axe-core of npm, where it is installed."""
     places = [Path(os.environ[AXE])] if AXE in os.environ else []
+    places.append(Path(__file__).parent / "node_modules" / "axe-core" / "axe.min.js")
     if npm := shutil.which("npm"):
         done = subprocess.run([npm, "root", "--global"], capture_output=True, text=True, check=False)
         places.append(Path(done.stdout.strip()) / "axe-core" / "axe.min.js")
@@ -103,5 +104,6 @@ def axe() -> str:
         if place.is_file():
             return place.read_text(encoding="utf-8")
     pytest.skip(
-        f"axe-core is not installed: `npm install --global axe-core`, or let {AXE} name its axe.min.js"
+        "axe-core is not installed: `npm install --prefix tests/browser --ignore-scripts --no-package-lock`, or let "
+        f"{AXE} name its axe.min.js"
     )

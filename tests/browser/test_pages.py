@@ -21,6 +21,7 @@ PAGES = {
     "try": "try",
     "contents": "docs/reading",
     "operation": "docs/reading/fitPLimits",
+    "picture": "docs/reading/drawEconomicDesign",
     "methods": "methods",
     "problems": "problems",
     "problem": "problems/busy",
@@ -89,13 +90,21 @@ def test_the_reference_tries_a_call(page: Page, host: str, keep: Keep) -> None:
     keep("docs-call")
 
 
-def test_the_reference_shows_a_picture_as_one(page: Page, host: str, keep: Keep) -> None:
-    page.open(f"http://{host}/docs#/Pictures/drawXbarRLimits")
+@pytest.mark.parametrize("operation_id", ["drawXbarRLimits", "drawEconomicDesign", "drawReleaseCheck"])
+def test_the_reference_shows_a_picture_as_one(page: Page, host: str, keep: Keep, operation_id: str) -> None:
+    page.open(f"http://{host}/docs#/Pictures/{operation_id}")
     execute(page)
     picture = "document.querySelector('.live-responses-table img')"
     page.wait(f"{picture}?.complete && {picture}.naturalWidth > 300")
     assert page.value(f"{picture}.src.startsWith('data:image/svg+xml')")
-    keep("docs-picture")
+    keep(f"docs-{operation_id}")
+
+
+def test_a_page_to_read_shows_what_its_examples_draw(page: Page, host: str) -> None:
+    page.open(f"http://{host}/docs/reading/drawReleaseCheck")
+    picture = "document.querySelector('figure img')"
+    page.wait(f"{picture}.complete && {picture}.naturalWidth === 640")
+    assert page.value(f"{picture}.alt").startswith("Release check of K-0442.")
 
 
 # The start page ----------------------------------------------------------------------------------------

@@ -338,3 +338,15 @@ def test_transformations_find_what_made_the_values() -> None:
     assert [one.value for one in sb.parameters] == pytest.approx([0.5, 1.0, 3.0, 5.0], abs=0.25)
     sl = fit_law(TRANSFORMS["johnson-sl"], Sample(4.0 - np.exp(0.5 * z), NONE))
     assert {one.name: one.value for one in sl.parameters}["threshold"] == pytest.approx(4.0, abs=0.15)
+
+
+@pytest.mark.parametrize("name", ALL_LAWS)
+def test_the_density_in_the_values_own_unit_is_the_slope_of_the_tail(name: str) -> None:
+    rng = np.random.default_rng(21)
+    values = 10.0 + rng.standard_t(4, 200) if name == "johnson-su" else rng.lognormal(1.0, 0.4, 200)
+    found = fit_law(ALL_LAWS[name], Sample(values, NONE))
+    x = np.linspace(*found.quantile(np.array([0.005, 0.995])), 200)
+    step = 1e-5
+    below, above = (found.tails(x + side)[0] for side in (-step, step))
+    assert found.density(x) == pytest.approx((above - below) / (2 * step), rel=2e-4, abs=1e-7)
+    assert np.isfinite(found.density(np.array([-1e300, -1.0, 0.0, 1e300]))).all()

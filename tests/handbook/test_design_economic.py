@@ -19,6 +19,7 @@ from assignable.spc.design.economic import (
     cost_without_chart,
     design,
     duncan,
+    neighbourhood,
 )
 from assignable.spc.design.subgroups import SamplingPlan
 from assignable.spc.errors import UnusableParameter
@@ -296,6 +297,32 @@ def test_parts_ranges_and_surface() -> None:
     for row in found.surface.rows:
         again = cost_per_hour(STOPS, best.size, np.array(found.surface.interval_hours), row.multiple)
         assert row.cost_per_hour == pytest.approx(again.tolist(), rel=1e-14)
+
+
+def test_the_neighbourhood_is_the_cost_and_knows_what_is_required() -> None:
+    r = Requirements(smallest_in_control_arl=370.0, longest_ats_hours=2.0, longest_interval_hours=3.0)
+    present = SamplingPlan(5, 2.0, 3.0)
+    found = design(CASTING, requirements=r, present=present)
+    around = neighbourhood(CASTING, found, requirements=r)
+    h, k = around.interval_hours[None, :], around.multiples[:, None]
+    assert around.cost_per_hour == pytest.approx(cost_per_hour(CASTING, around.size, h, k), rel=1e-12)
+    power = ndtr(CASTING.shift * math.sqrt(around.size) - k) + ndtr(
+        -CASTING.shift * math.sqrt(around.size) - k
+    )
+    met = (0.5 / ndtr(-k) >= 370.0) & (h / power <= 2.0) & (h <= 3.0)
+    assert met.any()
+    assert not met.all()
+    assert ((around.shortfall <= 0) == met).all()
+    # The plan found is the cheapest there of those that meet what is required, and near one of the grid.
+    assert float(around.cost_per_hour[met].min()) >= found.best.cost_per_hour * (1 - 1e-6)
+    assert around.interval_hours[0] <= 2.0 <= around.interval_hours[-1]
+    free = neighbourhood(CASTING, design(CASTING))
+    assert (free.shortfall < 0).all()
+    held = neighbourhood(CASTING, design(CASTING, rules=[LIMIT]), rules=[LIMIT])
+    assert held.cost_per_hour.shape[0] == 1
+    assert float(held.cost_per_hour.min()) == pytest.approx(
+        design(CASTING, rules=[LIMIT]).best.cost_per_hour, rel=1e-4
+    )
 
 
 def test_sensitivities() -> None:

@@ -9,7 +9,7 @@ import pytest
 import scipy
 
 from assignable.spc.errors import UnusableData, UnusableParameter
-from assignable.spc.studies.bias import ReferenceLevel, bias
+from assignable.spc.studies.bias import ReferenceLevel, band, bias
 
 
 def _levels(references: list[float], values: list[list[float]]) -> tuple[ReferenceLevel, ...]:
@@ -172,3 +172,17 @@ class TestDegenerate:
             bias(())
         with pytest.raises(UnusableParameter):
             bias(_FIFTEEN, confidence=0.0)
+
+
+def test_the_band_between_the_levels_is_that_of_the_line() -> None:
+    study = bias(_LINEARITY, confidence=0.9)
+    line = study.linearity
+    assert line is not None
+    at = np.array([level.reference for level in study.levels])
+    for found, told in zip(band(study, at), (line.fitted, line.fitted_lower, line.fitted_upper), strict=True):
+        assert found == pytest.approx(told, rel=1e-12)
+    # At reference zero it is the intercept with its interval.
+    found = [float(each[0]) for each in band(study, np.zeros(1))]
+    assert found == pytest.approx([line.intercept.estimate, line.intercept.lower, line.intercept.upper])
+    with pytest.raises(ValueError, match="no line"):
+        band(bias(_FIFTEEN), at)

@@ -12,57 +12,12 @@ from xml.etree import ElementTree
 import numpy as np
 import pytest
 
-from assignable.api import answers
-from assignable.api.contract import Operation
 from contract import served
+from pictures.drawn import AMBER, PICTURES, SVG, parsed, picture, places, source_of, words
 
 GOLDEN = Path(__file__).parent / "golden"
-SVG = "{http://www.w3.org/2000/svg}"
-AMBER = "#b86200"
-PICTURES = {name: found for name, found in served.operations().items() if found.media_type == answers.SVG}
 EXAMPLES = [(name, example) for name, found in PICTURES.items() for example in found.examples]
 OF_CHARTS = [(name, example) for name, example in EXAMPLES if "/charts/" in PICTURES[name].path]
-RULES = {"published": "western-electric-1956"}
-
-
-def source_of(operation_id: str) -> Operation:
-    path = PICTURES[operation_id].path.removesuffix("/picture")
-    return next(found for found in served.operations().values() if found.path == path)
-
-
-def picture(operation_id: str, body: Any) -> str:
-    found = served.call(operation_id, body)
-    assert found.status_code == 200, found.get_data(as_text=True)
-    return found.get_data(as_text=True)
-
-
-def parsed(text: str) -> ElementTree.Element:
-    return ElementTree.fromstring(text)
-
-
-def words(root: ElementTree.Element) -> list[str]:
-    return [element.text or "" for element in root.iter(f"{SVG}text")]
-
-
-def places(root: ElementTree.Element, mark: str) -> list[tuple[float, float]]:
-    """Where the marks of a kind stand, the signs beside sentences and in the key included."""
-    found = []
-    for path in root.iter(f"{SVG}path"):
-        d, stroke = path.get("d", ""), path.get("stroke")
-        if mark == "dot" and path.get("stroke-linecap") == "round":
-            found += [(float(x), float(y)) for x, y in re.findall(r"M([\d.-]+) ([\d.-]+)h.01", d)]
-        if mark == "ring" and stroke == AMBER:
-            arcs = re.findall(r"M([\d.-]+) ([\d.-]+)a([\d.]+) ", d)
-            found += [(float(x) + float(r), float(y)) for x, y, r in arcs]
-        if mark == "open" and path.get("fill") == "#ffffff" and "a" in d:
-            arcs = re.findall(r"M([\d.-]+) ([\d.-]+)a([\d.]+) ", d)
-            found += [(float(x) + float(r), float(y)) for x, y, r in arcs]
-        if mark in ("diamond", "open diamond") and (path.get("fill") == "#ffffff") == (mark != "diamond"):
-            found += [
-                (float(x), float(y) + float(r))
-                for x, y, r in re.findall(r"M([\d.-]+) ([\d.-]+)l([\d.]+) \3", d)
-            ]
-    return found
 
 
 def judged_of(operation_id: str, body: Any) -> dict[str, Any]:
@@ -129,6 +84,14 @@ def test_two_pictures_on_a_page_share_no_id() -> None:
         ("drawMeasurements", "capability-measurements"),
         ("drawSubgroupDesign", "designs-subgroups"),
         ("drawRunLength", "designs-run-length"),
+        ("drawMeasurements", "capability-below-limits"),
+        ("drawEconomicDesign", "designs-economic"),
+        ("drawEconomicDesign", "designs-economic-rules"),
+        ("drawCrossedStudy", "measurement-studies-crossed"),
+        ("drawNestedStudy", "measurement-studies-nested"),
+        ("drawAgreementStudy", "measurement-studies-attributes"),
+        ("drawBiasStudy", "measurement-studies-bias"),
+        ("drawReleaseCheck", "release-checks"),
     ],
 )
 def test_a_kind_of_picture_looks_as_it_was_approved(operation_id: str, name: str) -> None:

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 
+from ..spc.capability.distributions import Fitted
 from ..spc.capability.indices import Capability, Index, MachineCapability
 from ..spc.capability.nonnormal import QuantileCapability, QuantileIndex
 from ..spc.capability.specification import Specification
@@ -31,7 +33,8 @@ class Studied:
     """What a picture of a capability study shows.
 
     values: of any shape, ``None`` where a summary was given. specification: without limits that are natural
-    bounds. capability: where the normal distribution was used; else ``quantiles``.
+    bounds. capability: where the normal distribution was used; else ``quantiles``, and ``fitted`` the distribution
+    they are of, ``None`` where they are the values' own.
     """
 
     name: str | None
@@ -42,6 +45,7 @@ class Studied:
     capability: Capability | None
     quantiles: QuantileCapability | None
     machine: MachineCapability | None
+    fitted: Fitted | None = None
     cautions: Sequence[str] = ()
 
     @property
@@ -156,16 +160,10 @@ def _distribution(paper: Paper, studied: Studied, figures: Figures, top: float) 
     middle = studied.centre[1]
     bottom = top + _PLOT
     values = None if studied.values is None else studied.values[~np.isnan(studied.values)].ravel()
-    fitted = [
-        (sigma.sigma, style, words)
-        for sigma, style, words in (
-            (None if found is None else found.total, "", "normal, overall"),
-            (None if found is None else found.within, ' stroke-dasharray="5 4"', "normal, within"),
-        )
-        if sigma is not None and sigma.sigma > 0
-    ]
+    curves = _curves(studied)
+    spreads = (None, None) if found is None else (found.total, found.within)
     low, high = _spread(studied)
-    widest = max((sigma for sigma, _, _ in fitted), default=0.0)
+    widest = max((one.sigma for one in spreads if one is not None), default=0.0)
     ends = [min(low, middle - 3.6 * widest), max(high, middle + 3.6 * widest)]
     ends += [at for at in (spec.lower, spec.upper, spec.target) if at is not None]
     counts, edges = (None, None) if values is None else _bins(values)
@@ -174,9 +172,17 @@ def _distribution(paper: Paper, studied: Studied, figures: Figures, top: float) 
     low, high = scale.around(ends)
     to_x = scale.Linear(low, high, LEFT + 6, RIGHT - 6)
     # The density's unit is values a bin, so that it lies over the bars.
-    unit = 1.0 if counts is None or edges is None else float(counts.sum() * (edges[1] - edges[0]))
-    peak = unit / (min((sigma for sigma, _, _ in fitted), default=1.0) * math.sqrt(2 * math.pi))
-    highest = max(peak if fitted else 0.0, 0.0 if counts is None else float(counts.max()))
+    # Values below a limit of detection are in no bar, and in the distribution.
+    unit = 1.0 if edges is None else float(studied.indices.count * (edges[1] - edges[0]))
+    tallest = 0.0 if counts is None else float(counts.max())
+    grid = np.linspace(low, high, 321)
+    heights = [unit * one.density(grid) for one in curves]
+    # Where a distribution begins its density may have no bound: there the curve leaves the paper.
+    most = 1.6 * tallest if tallest else math.inf
+    highest = max(
+        [tallest, *(min(float(each[np.isfinite(each)].max(initial=0.0)), most) for each in heights)]
+    )
+    highest = highest or 1.0
     to_y = scale.Linear(0.0, highest * 1.08, bottom, top + 20)
     if counts is not None and edges is not None:
         for count, left, right in zip(counts.tolist(), to_x(edges[:-1]), to_x(edges[1:]), strict=True):
@@ -190,25 +196,28 @@ def _distribution(paper: Paper, studied: Studied, figures: Figures, top: float) 
                     fill=BAND,
                     more=f' stroke="{EDGE}" stroke-width="0.8"',
                 )
-    grid = np.linspace(low, high, 161)
-    for sigma, style, _ in fitted:
-        y = to_y(unit / (sigma * math.sqrt(2 * math.pi)) * np.exp(-0.5 * ((grid - middle) / sigma) ** 2))
+    for one, each in zip(curves, heights, strict=True):
+        y = to_y(np.minimum(each, highest * 1.08))
         flat = tuple(np.column_stack((to_x(grid), y)).ravel().tolist())
-        paper.path("M" + ("L%.1f %.1f" * len(grid) % flat)[1:], stroke=INK, width=1.3, more=style)
-    if fitted:
-        _tails(paper, spec, middle, fitted[0][0], unit, to_x, to_y, bottom)
+        paper.path("M" + ("L%.1f %.1f" * len(grid) % flat)[1:], stroke=INK, width=1.3, more=one.style)
+    if curves:
+        _tails(
+            paper, spec, lambda x: np.minimum(unit * curves[0].density(x), highest * 1.08), to_x, to_y, bottom
+        )
     paper.line(LEFT, bottom, RIGHT, bottom, stroke=EDGE, width=0.8)
     _marks(paper, studied, figures, to_x, top, bottom)
     _quantiles(paper, studied, to_x, top, bottom)
     x = LEFT
     y = bottom + 38
     entries = [("bar", "values")] if counts is not None else []
-    entries += [(style, words) for _, style, words in fitted]
-    if fitted:
+    entries += [(one.style, one.words) for one in curves]
+    if curves:
         entries.append(("tail", "expected beyond the specification"))
     if studied.quantiles is not None:
         entries.append(("quantile", "0.135 %, 50 % and 99.865 % of the product, each with its interval"))
     for style, words in entries:
+        if x > LEFT and x + 23 + width(words, _SMALL) > RIGHT:
+            x, y = LEFT, y + 17
         if style == "quantile":
             paper.path(f"M{x + 8:.1f} {y - 11:.1f}v12M{x:.1f} {y - 2:.1f}h16", stroke=SOFT, width=1.2)
         elif style in ("bar", "tail"):
@@ -218,18 +227,70 @@ def _distribution(paper: Paper, studied: Studied, figures: Figures, top: float) 
             paper.line(x, y - 4, x + 18, y - 4, stroke=INK, width=1.3, more=style)
         paper.text(x + 23, y, words, size=_SMALL, colour=SOFT)
         x += 37 + width(words, _SMALL)
+    for line in _not_drawn(studied):
+        y += 17
+        paper.text(LEFT, y, line, size=_SMALL, colour=SOFT)
     if words_of := _expected(studied.indices):
         y += 22
         paper.text(LEFT, y, cut(" ".join(words_of), 12, RIGHT - LEFT))
     return y
 
 
+@dataclass(frozen=True, slots=True)
+class _Curve:
+    """A density drawn over the values: of x (k,) in their unit."""
+
+    density: Callable[[Floats], Floats]
+    style: str
+    words: str
+
+
+def _normal(mean: float, sigma: float, x: Floats) -> Floats:
+    height: Floats = np.exp(-0.5 * ((x - mean) / sigma) ** 2) / (sigma * math.sqrt(2 * math.pi))
+    return height
+
+
+def _curves(studied: Studied) -> list[_Curve]:
+    """The distributions that the figures rest on, the one whose tails count first."""
+    found = studied.capability
+    if found is None:
+        return [] if studied.fitted is None else [_Curve(studied.fitted.density, "", _fitted_words(studied))]
+    return [
+        _Curve(partial(_normal, found.mean, one.sigma), style, words)
+        for one, style, words in (
+            (found.total, "", "normal, spread of all values"),
+            (found.within, ' stroke-dasharray="5 4"', "normal, spread within subgroups"),
+        )
+        if one is not None and one.sigma > 0
+    ]
+
+
+def _fitted_words(studied: Studied) -> str:
+    """The distribution with its parameters."""
+    assert studied.quantiles is not None
+    parts = ", ".join(f"{one.name} {minus(f'{one.value:.4g}')}" for one in studied.quantiles.parameters)
+    return f"{studied.quantiles.distribution} ({parts})" if parts else studied.quantiles.distribution
+
+
+def _not_drawn(studied: Studied) -> list[str]:
+    """What a reader may miss, and why it is not there."""
+    if studied.quantiles is None:
+        return []
+    words = []
+    if studied.fitted is None:
+        words.append("No curve: the quantiles are the values' own, and no distribution was fitted to them.")
+    if below := studied.quantiles.below_limits:
+        words.append(
+            f"{counted(below, 'value')} below a limit of detection "
+            f"{'is' if below == 1 else 'are'} in the curve and in no bar."
+        )
+    return words
+
+
 def _tails(
     paper: Paper,
     spec: Specification,
-    mean: float,
-    sigma: float,
-    unit: float,
+    height: Callable[[Floats], Floats],
     to_x: scale.Linear,
     to_y: scale.Linear,
     bottom: float,
@@ -239,7 +300,7 @@ def _tails(
         if limit is None:
             continue
         grid = np.linspace(limit, end, 61)
-        y = to_y(unit / (sigma * math.sqrt(2 * math.pi)) * np.exp(-0.5 * ((grid - mean) / sigma) ** 2))
+        y = to_y(height(grid))
         if float(bottom - y.min()) < 0.05:
             continue
         flat = tuple(np.column_stack((to_x(grid), y)).ravel().tolist())

@@ -5,8 +5,9 @@ from __future__ import annotations
 import json
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
+from html import unescape
 from typing import Any
-from urllib.parse import urlencode
+from urllib.parse import quote, urlencode
 
 _DEEPEST = 12
 _LINES = 6  # of a table that is shown
@@ -79,11 +80,26 @@ class Table:
 
 
 @dataclass(frozen=True, slots=True)
+class Picture:
+    """A picture as a page without scripts holds it: its address, and what it shows in words."""
+
+    source: str
+    words: str
+
+    @staticmethod
+    def of(svg: str) -> Picture:
+        """From the text of an SVG."""
+        told = svg.partition("<desc")[2].partition(">")[2].partition("</desc>")[0]
+        return Picture(f"data:image/svg+xml;charset=utf-8,{quote(svg)}", unescape(told))
+
+
+@dataclass(frozen=True, slots=True)
 class Reading:
     """An operation as it is read."""
 
     operation_id: str
     draws: str | None
+    drawn_by: str | None
     method: str
     path: str
     group: str
@@ -145,6 +161,9 @@ class Document:
             operation_id=operation_id,
             draws=next(
                 (name for name, (_, other, _) in self._found.items() if f"{other}/picture" == path), None
+            ),
+            drawn_by=next(
+                (name for name, (_, other, _) in self._found.items() if f"{path}/picture" == other), None
             ),
             method=method,
             path=path,

@@ -82,6 +82,12 @@ GROUPS = (
             ("POST", "/v1/capability/measurements/picture", "drawMeasurements"),
             ("POST", "/v1/designs/subgroups/picture", "drawSubgroupDesign"),
             ("POST", "/v1/designs/run-length/picture", "drawRunLength"),
+            ("POST", "/v1/designs/economic/picture", "drawEconomicDesign"),
+            ("POST", "/v1/measurement-studies/crossed/picture", "drawCrossedStudy"),
+            ("POST", "/v1/measurement-studies/nested/picture", "drawNestedStudy"),
+            ("POST", "/v1/measurement-studies/attributes/picture", "drawAgreementStudy"),
+            ("POST", "/v1/measurement-studies/bias/picture", "drawBiasStudy"),
+            ("POST", "/v1/release-checks/picture", "drawReleaseCheck"),
         ),
     ),
     Group(

@@ -11,7 +11,7 @@ import numpy as np
 from ...spc.capability import attributes as counting
 from ...spc.capability import joint, uncertainty
 from ...spc.capability.specification import Specification
-from ...spc.capability.study import study
+from ...spc.capability.study import CapabilityStudy, study
 from ...spc.errors import UnusableData, UnusableParameter
 from ...spc.explain import capability as worked
 from ...spc.explain.steps import Step
@@ -36,9 +36,9 @@ from ..schemas.common import cautions, located
 TAG = "Capability"
 
 
-def measurements(loaded: dict[str, Any]) -> dict[str, Any]:
-    """Indices of measurements against their specification."""
-    found = study(
+def study_of(loaded: dict[str, Any]) -> CapabilityStudy:
+    """The study that a request asks for."""
+    return study(
         measurements_of(loaded),
         specification_of(loaded["specification"]),
         sigma_estimator=loaded.get("sigma_estimator"),
@@ -47,6 +47,11 @@ def measurements(loaded: dict[str, Any]) -> dict[str, Any]:
         confidence=loaded["confidence"],
         short_run=loaded["short_run"],
     )
+
+
+def measurements(loaded: dict[str, Any]) -> dict[str, Any]:
+    """Indices of measurements against their specification."""
+    found = study_of(loaded)
     return {
         "status": found.status,
         "choice": found.choice,

@@ -13,10 +13,10 @@ from flask import Response, request
 
 from ... import web
 from ...web import auditing, trying
-from ...web.reading import Document
-from ..answers import JSON, service_version
+from ...web.reading import Document, Picture
+from ..answers import JSON, SVG, service_version
 from ..bodies import require_acceptable
-from ..contract import Contract, cacheable
+from ..contract import Contract, cacheable, examples_directory
 from ..problems import NOT_FOUND, TYPES, Problem
 
 HTML = "text/html; charset=utf-8"
@@ -77,6 +77,19 @@ def register(contract: Contract) -> None:
         found = {"groups": parsed().groups(), "contract": parsed().version}
         return _page("contents.html", "The contract to read", found, here="reading", policy=QUIET_POLICY)
 
+    @cache
+    def drawn(operation_id: str) -> Mapping[str, Picture]:
+        """The examples of an operation that draws, drawn."""
+        operation = contract.bound(operation_id)
+        if operation.media_type != SVG:
+            return {}
+        requests = ((name, examples_directory() / f"{name}.request.json") for name in operation.examples)
+        return {
+            name: Picture.of(operation.execute(file.read_bytes()).decode())
+            for name, file in requests
+            if file.is_file()
+        }
+
     def reading(operation_id: str) -> Response:
         found = parsed().reading(operation_id)
         if found is None:
@@ -86,6 +99,7 @@ def register(contract: Contract) -> None:
         computed = found.draws or operation_id
         values = {
             "of": found,
+            "pictures": drawn(operation_id),
             "methods": auditing.with_sources(computed),
             "sources": auditing.sources_of_chart(computed),
         }

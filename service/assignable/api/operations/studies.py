@@ -10,9 +10,16 @@ from ...spc.explain import studies as worked
 from ...spc.explain.steps import Step
 from ...spc.studies.agreement import AgreementStudy, agreement
 from ...spc.studies.bias import bias
-from ...spc.studies.columns import RatingTable, crossed_table, nested_table, rating_table
-from ...spc.studies.crossed import crossed
-from ...spc.studies.nested import nested
+from ...spc.studies.columns import (
+    CrossedTable,
+    NestedTable,
+    RatingTable,
+    crossed_table,
+    nested_table,
+    rating_table,
+)
+from ...spc.studies.crossed import CrossedStudy, crossed
+from ...spc.studies.nested import NestedStudy, nested
 from .. import problems
 from ..contract import Contract
 from ..schemas.common import cautions
@@ -38,10 +45,21 @@ def _answer(study: Any, *left_out: str, **instead: Any) -> dict[str, Any]:
     return {**own, **instead}
 
 
+def crossed_of(loaded: dict[str, Any]) -> tuple[CrossedTable, CrossedStudy]:
+    """The measurements of a crossed study, and what they come to."""
+    table = crossed_table(**loaded["data"])
+    return table, crossed(table.measurements, pooling_alpha=loaded["pooling_alpha"], **terms_of(loaded))
+
+
+def nested_of(loaded: dict[str, Any]) -> tuple[NestedTable, NestedStudy]:
+    """The same of a nested study."""
+    table = nested_table(**loaded["data"])
+    return table, nested(table.measurements, **terms_of(loaded))
+
+
 def crossed_study(loaded: dict[str, Any]) -> dict[str, Any]:
     """Components of a crossed study."""
-    table = crossed_table(**loaded["data"])
-    found = crossed(table.measurements, pooling_alpha=loaded["pooling_alpha"], **terms_of(loaded))
+    table, found = crossed_of(loaded)
     return _answer(
         found,
         "cell_means",
@@ -55,8 +73,7 @@ def crossed_study(loaded: dict[str, Any]) -> dict[str, Any]:
 
 def nested_study(loaded: dict[str, Any]) -> dict[str, Any]:
     """Components of a nested study."""
-    table = nested_table(**loaded["data"])
-    found = nested(table.measurements, **terms_of(loaded))
+    table, found = nested_of(loaded)
     return _answer(
         found,
         "part_means",
@@ -67,7 +84,8 @@ def nested_study(loaded: dict[str, Any]) -> dict[str, Any]:
     )
 
 
-def _agreement_of(loaded: dict[str, Any]) -> tuple[RatingTable, AgreementStudy]:
+def agreement_of(loaded: dict[str, Any]) -> tuple[RatingTable, AgreementStudy]:
+    """The ratings of an agreement study, and what they come to."""
     right = loaded.get("reference")
     table = rating_table(
         **loaded["data"],
@@ -87,7 +105,7 @@ def _agreement_of(loaded: dict[str, Any]) -> tuple[RatingTable, AgreementStudy]:
 
 def agreement_study(loaded: dict[str, Any]) -> dict[str, Any]:
     """Agreement of appraisers who sort."""
-    table, found = _agreement_of(loaded)
+    table, found = agreement_of(loaded)
     return _answer(
         found,
         appraisers=table.appraisers,
@@ -117,7 +135,7 @@ def explain_nested(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[S
 
 def explain_agreement(loaded: dict[str, Any], answer: Mapping[str, Any]) -> tuple[Step, ...]:
     """The worked steps of an agreement study."""
-    table, found = _agreement_of(loaded)
+    table, found = agreement_of(loaded)
     return worked.of_agreement(table.ratings, found)
 
 

@@ -596,6 +596,12 @@ class Fitted:
         below, above = np.exp(self.law.log_cdf(u, own)), np.exp(self.law.log_survival(u, own))
         return (above, below) if self.direction < 0 else (below, above)
 
+    def density(self, x: Floats) -> Floats:
+        """Density (k,) at x (k,) in the values' unit; zero where there can be no value."""
+        with np.errstate(all="ignore"):
+            own = np.exp(self.law.log_density(self._own(x), self.theta)) / self.unit
+        return np.nan_to_num(own, nan=0.0)
+
     def scores(self, x: Floats) -> Floats:
         """Normal scores Φ⁻¹(F(x)) of values of any shape, NaN where missing."""
         present = x == x

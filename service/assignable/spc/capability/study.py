@@ -48,7 +48,7 @@ class CapabilityStudy:
     """Indices of a characteristic with what must be known to trust them.
 
     ``capability`` where the normal distribution was used on values none of which is below a limit, else
-    ``quantiles``; the other is ``None``.
+    ``quantiles``; the other is ``None``. fitted: the distribution of those quantiles, ``None`` for their own.
     """
 
     status: Status
@@ -58,6 +58,7 @@ class CapabilityStudy:
     machine: MachineCapability | None
     diagnostics: CapabilityDiagnostics | None
     cautions: tuple[Caution, ...]
+    fitted: Fitted | None = None
 
 
 def study(
@@ -188,6 +189,7 @@ def _by_distribution(
             _normal_asked_too(choice, sigma_estimator, short_run),
             caution.coarse_resolution(resolution),
         ),
+        fitted,
     )
 
 

@@ -48,6 +48,10 @@ _ZOOM = np.linspace(-1.0, 1.0, 7)
 _ROUNDS = 30
 _WITHIN = (0.01, 0.05)
 _SURFACE = 15
+# A picture is finer, and reaches no farther than this ratio of intervals.
+_FINE = 61
+_FARTHEST = 40.0
+_NO_SHORTFALL = math.exp(-1.0)
 _STEP = 1e-4
 _ARL_BEYOND = 1e15
 # States times regions times sizes of the chains that rules need: about a second.
@@ -252,6 +256,22 @@ class EconomicDesign:
     ]
     sensitivities: Annotated[tuple[Sensitivity, ...], "Every parameter, the one that matters most first."]
     method: Annotated[str, "How it was computed."]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Neighbourhood:
+    """The cost an hour of plans around the best one, at its sample size.
+
+    multiples: (k,), a single one where it is held; interval_hours: (m,), equal ratios apart; cost_per_hour:
+    (k, m); shortfall: (k, m), the logarithm of how far the requirement missed most is missed, zero or below where
+    all are met.
+    """
+
+    size: int
+    multiples: Floats
+    interval_hours: Floats
+    cost_per_hour: Floats
+    shortfall: Floats
 
 
 # ---------------------------------------------------------------------------------------------------
@@ -752,6 +772,40 @@ def design(
             else "run lengths of the rules by an exact Markov chain, limit multiple held."
         ),
     )
+
+
+def neighbourhood(
+    economics: ProcessEconomics,
+    found: EconomicDesign,
+    *,
+    requirements: Requirements | None = None,
+    rules: Sequence[Rule] | None = None,
+) -> Neighbourhood:
+    """The cost around the plan of least cost, finely enough to draw.
+
+    found: what ``design`` found for the same economics, requirements and rules. A present plan near enough
+    to be compared lies within; one far away does not stretch the region beyond what can be read.
+    """
+    r = Requirements() if requirements is None else requirements
+    best, now = found.best, found.present
+    held = r.multiple is not None or rules is not None
+    laws = _Laws(economics.shift, None if rules is None else tuple(rules), best.multiple)
+    ratio, reach = 4.0, 1.0
+    if now is not None:
+        apart = now.interval_hours / best.interval_hours
+        ratio = min(max(ratio, 1.3 * max(apart, 1 / apart)), _FARTHEST)
+        reach = min(max(reach, 1.1 * abs(now.multiple - best.multiple)), LARGEST_MULTIPLE)
+    h = best.interval_hours * np.geomspace(1 / ratio, ratio, _FINE)
+    low, high = max(best.multiple - reach, SMALLEST_MULTIPLE), min(best.multiple + reach, LARGEST_MULTIPLE)
+    k = np.array([best.multiple]) if held else np.linspace(low, high, _FINE)
+    n, column = np.array(float(best.size)), k[:, None]
+    shortest, longest, arl0, arl1 = _intervals(r, laws, n, column, (0.0, math.inf))
+    shortest = np.maximum(shortest, r.shortest_interval_hours or 0.0)
+    longest = np.minimum(longest, r.longest_interval_hours or math.inf)
+    shortfall = np.full((len(k), len(h)), -1.0)
+    for missed in (shortest / h, h / longest, (r.smallest_in_control_arl or 0.0) / arl0):
+        shortfall = np.maximum(shortfall, np.log(np.maximum(missed, _NO_SHORTFALL)))
+    return Neighbourhood(best.size, k, h, _cycle(economics, n, h, arl0, arl1).per_hour, shortfall)
 
 
 def _at_bounds(plan: PricedPlan, r: Requirements, found: _Best, held: bool) -> tuple[str, ...]:

@@ -163,6 +163,26 @@ def bias(levels: tuple[ReferenceLevel, ...], *, confidence: float = 0.95) -> Bia
     )
 
 
+def band(study: BiasStudy, references: Floats) -> tuple[Floats, Floats, Floats]:
+    """The line of bias (k,) at references (k,) along the range, and its pointwise confidence bounds.
+
+    Raises ValueError for a study without a line.
+    """
+    line = study.linearity
+    if line is None:
+        raise ValueError("This study has no line of bias.")
+    sizes = np.array([level.size for level in study.levels], dtype=np.float64)
+    at = np.array([level.reference for level in study.levels])
+    count = float(sizes.sum())
+    centre = float(sizes @ at) / count
+    sxx = float(sizes @ (at - centre) ** 2)
+    x = references - centre
+    fitted = study.mean_bias + line.slope.estimate * x
+    error = line.residual_sd * np.sqrt(1 / count + x**2 / sxx)
+    reach = _t_quantile(line.degrees_of_freedom, study.confidence) * error
+    return fitted, fitted - reach, fitted + reach
+
+
 def _check(levels: tuple[ReferenceLevel, ...]) -> None:
     if not levels:
         raise UnusableData.of("empty", "There are no reference values in the data.", "data", "levels")

@@ -10,6 +10,7 @@ import numpy as np
 from ..cautions import Caution
 from ..data import Floats
 from ..errors import UnusableData, UnusableParameter
+from .repeatability import OwnRepeatability, by_appraiser
 from .variance_components import (
     ONE_APPRAISER,
     AnovaRow,
@@ -89,6 +90,10 @@ class CrossedStudy:
     ]
     part_means: Annotated[Floats, "Mean of each part."]
     appraiser_means: Annotated[Floats, "Mean of each appraiser."]
+    repeatability_by_appraiser: Annotated[
+        tuple[OwnRepeatability, ...],
+        "How each appraiser repeats their own measurements, in their order; empty with one trial.",
+    ]
     cell_means: Floats
     cell_ranges: Floats
     cautions: tuple[Caution, ...]
@@ -261,6 +266,7 @@ def crossed(
         made.chart,
         part_means + grand_mean,
         appraiser_means + grand_mean,
+        by_appraiser(measurements.swapaxes(0, 1), confidence),
         cells + grand_mean,
         np.ptp(measurements, axis=2),
         (*notes, *made.cautions),

@@ -10,6 +10,7 @@ import numpy as np
 from ..cautions import Caution
 from ..data import Floats
 from ..errors import UnusableData
+from .repeatability import OwnRepeatability, by_appraiser
 from .variance_components import (
     ONE_APPRAISER,
     AnovaRow,
@@ -52,6 +53,10 @@ class NestedStudy:
         GaugeOnChart | None, "What the gauge does to a chart of means; null where nothing varies at all."
     ]
     appraiser_means: Annotated[Floats, "Mean of each appraiser."]
+    repeatability_by_appraiser: Annotated[
+        tuple[OwnRepeatability, ...],
+        "How each appraiser repeats their own measurements, in their order; empty with one trial.",
+    ]
     part_means: Floats
     part_ranges: Floats
     cautions: tuple[Caution, ...]
@@ -157,6 +162,7 @@ def nested(
         made.capability,
         made.chart,
         appraisers + grand_mean,
+        by_appraiser(measurements, confidence),
         parts + grand_mean,
         np.ptp(measurements, axis=2),
         (*notes, *made.cautions),
