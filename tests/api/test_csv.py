@@ -86,7 +86,8 @@ def same(one: bytes, other: bytes) -> bool:
 
 def test_every_operation_of_one_table_takes_csv() -> None:
     fits = {name for name in served.operations() if name.startswith("fit") and name.endswith("Limits")}
-    pictures = {f"draw{name.removeprefix('fit')}" for name in fits} | {"drawMeasurements"}
+    studies = {f"draw{name}Study" for name in ("Crossed", "Nested", "Agreement", "Bias")}
+    pictures = {f"draw{name.removeprefix('fit')}" for name in fits} | {"drawMeasurements"} | studies
     others = {
         "assessMeasurements",
         "assessAttributes",

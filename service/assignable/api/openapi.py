@@ -185,7 +185,8 @@ def _options(operation: Operation, tabled: tables.Tabled) -> dict[str, Any]:
         "schema": {"$ref": f"#/components/schemas/{tabled.name}"},
     }
     if asked := {name: {"value": given} for name, given, _ in operation.tables()}:
-        described["examples"] = asked
+        # Pages to try calls begin with the first example, and with the JSON body, beside which there are none.
+        described["examples"] = {"json": {"summary": "None, beside a JSON body", "value": {}}, **asked}
     return described
 
 
