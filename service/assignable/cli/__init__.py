@@ -143,6 +143,12 @@ def _parser() -> argparse.ArgumentParser:
     which.add_argument(
         "--release", action="store_true", help="freeze the contract, under its version, in openapi/released/"
     )
+    which.add_argument(
+        "--openapi-3.0",
+        action="store_true",
+        dest="older",
+        help="print the contract for tools that read OpenAPI 3.0 only",
+    )
     contract.set_defaults(run=_contract)
     return parser
 
@@ -202,8 +208,12 @@ def _keys_api(given: argparse.Namespace) -> int:
 def _contract(given: argparse.Namespace) -> int:
     from pathlib import Path
 
-    from .contract_files import against, check, release, write
+    from . import contract_files as files
 
     if given.against:
-        return against(Path(given.against))
-    return release() if given.release else write() if given.write else check()
+        return files.against(Path(given.against))
+    if given.release:
+        return files.release()
+    if given.older:
+        return files.show_older()
+    return files.write() if given.write else files.check()

@@ -27,7 +27,7 @@ def breaking(released: Mapping[str, Json], now: Mapping[str, Json]) -> list[str]
 
 
 def frozen(document: Mapping[str, Json]) -> Json:
-    """A document without what is only read by people: what is compared, and can be replayed."""
+    """A document without what is only read by people: what is compared, and requests to be sent again."""
     return _without_words(document, ())
 
 
@@ -42,6 +42,8 @@ def _without_words(node: Json, path: tuple[str, ...]) -> Json:
     if path[-1:] == ("properties",):  # names of fields, whatever they are called
         return {name: _without_words(one, (*path, name)) for name, one in node.items()}
     kept = {n: _without_words(one, (*path, n)) for n, one in node.items() if n not in _OF_WORDS}
+    if "requestBody" in path and "examples" in node and "schema" in node:
+        kept["examples"] = node["examples"]
     if path == ("info",):
         kept = {"title": node["title"], **kept}
     if path[-2:-1] == ("responses",):

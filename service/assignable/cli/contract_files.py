@@ -26,6 +26,7 @@ from ..api.app import create_app
 from ..api.contract import Contract, examples_directory
 from ..api.settings import Settings
 from .compatibility import breaking, frozen
+from .older import as_3_0
 
 MEND = "assignable contract --write"
 ACCEPTED = "accepted.txt"
@@ -122,6 +123,12 @@ def release() -> int:
     path.parent.mkdir(exist_ok=True)
     path.write_bytes(written)
     print(f"Froze the contract as {path.name} ({len(written)} bytes).")
+    return 0
+
+
+def show_older() -> int:
+    """Prints the document in the words of OpenAPI 3.0."""
+    print(json.dumps(as_3_0(json.loads(_contract().document())), ensure_ascii=False, indent=1))
     return 0
 
 
