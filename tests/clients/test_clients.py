@@ -254,10 +254,8 @@ def classes(folder: Path, pattern: str) -> Iterator[tuple[str, Json, dict[str, s
             yield path.stem, known[path.stem], dict(re.findall(pattern, path.read_text(encoding="utf-8")))
 
 
-CSHARP = r'\[JsonPropertyName\("(\w+)"\)\]\s+public ([^\n]+?) \w+ {'
-JAVA = (
-    r'public static final String JSON_PROPERTY_\w+ = "(\w+)";\s+(?:@[\w.]+\s+)?private ([^\n]+?) \w+(?: =|;)'
-)
+CSHARP = r'\[JsonPropertyName\("([\w.]+)"\)\]\s+public ([^\n]+?) \w+ {'
+JAVA = r'public static final String JSON_PROPERTY_\w+ = "([\w.]+)";\s+(?:@[\w.]+\s+)?private ([^\n]+?) \w+(?: =|;)'
 
 
 @needs_openapi_generator

@@ -126,6 +126,12 @@ def small() -> Json:
     kept["post"]["responses"]["200"]["links"] = {
         "again": {"operationId": "fitXbarRLimits", "requestBody": "$request.body"}
     }
+    kept["post"].pop("parameters", None)
+    kept["post"]["requestBody"]["content"] = {
+        name: one
+        for name, one in kept["post"]["requestBody"]["content"].items()
+        if name == "application/json"
+    }
     names = {"Problem"}
     for content in (kept["post"]["requestBody"]["content"], kept["post"]["responses"]["200"]["content"]):
         for one in content.values():

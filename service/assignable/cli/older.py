@@ -12,6 +12,7 @@ from collections.abc import Mapping
 from typing import Any
 
 Json = Any
+_UNKNOWN = ("contentMediaType", "contentEncoding")
 _ENDS = (("exclusiveMinimum", "minimum"), ("exclusiveMaximum", "maximum"))
 
 
@@ -40,7 +41,7 @@ def _document(node: Json) -> Json:
 
 
 def _schema(schema: Mapping[str, Json]) -> Json:
-    made = dict(schema)
+    made = {name: one for name, one in schema.items() if name not in _UNKNOWN}
     if "properties" in made:
         made["properties"] = {name: _schema(one) for name, one in made["properties"].items()}
     for name in ("items", "additionalProperties", "x-line"):

@@ -12,6 +12,7 @@ import assignable.model.SpecificationRequest;
 import assignable.model.SubgroupData;
 import assignable.model.XbarRCarryDocument;
 import assignable.model.XbarRFit;
+import assignable.model.XbarRFitQuery;
 import assignable.model.XbarRJudge;
 import assignable.model.XbarRLimitsAnswer;
 import assignable.model.XbarRLimitsDocument;
@@ -30,6 +31,9 @@ import java.util.Map;
  * {@code java Main URL MEASUREMENTS} prints what was read, and the answers as the typed objects hold them.
  */
 public final class Main {
+    /** Of an operation that also takes a table as CSV: what goes into its query is in the body of JSON. */
+    private static final XbarRFitQuery NO_OPTIONS_BESIDE_JSON = null;
+
     public static void main(String[] arguments) throws Exception {
         ApiClient client = new ApiClient();
         client.updateBaseUri(arguments[0]);
@@ -39,7 +43,8 @@ public final class Main {
 
         Characteristic wall = new Characteristic().name("wall thickness").unit("mm");
         SubgroupData baseline = mapper.convertValue(measured.get("baseline"), SubgroupData.class);
-        XbarRLimitsAnswer fitted = charts.fitXbarRLimits(new XbarRFit().characteristic(wall).data(baseline));
+        XbarRLimitsAnswer fitted = charts.fitXbarRLimits(
+            new XbarRFit().characteristic(wall).data(baseline), NO_OPTIONS_BESIDE_JSON);
         // Kept beside the characteristic as JSON, and taken from there for every judgement.
         String kept = mapper.writeValueAsString(fitted.getLimits());
 
@@ -57,11 +62,11 @@ public final class Main {
         MeasurementsAnswer capability = new CapabilityApi(client).assessMeasurements(new MeasurementsRequest()
             .characteristic(wall)
             .data(new MeasurementData().values(baseline.getValues()))
-            .specification(mapper.convertValue(measured.get("specification"), SpecificationRequest.class)));
+            .specification(mapper.convertValue(measured.get("specification"), SpecificationRequest.class)), null);
 
         Problem problem;
         try {
-            charts.fitXbarRLimits(new XbarRFit().data(baseline).sigmaMultiple(-3.0));
+            charts.fitXbarRLimits(new XbarRFit().data(baseline).sigmaMultiple(-3.0), NO_OPTIONS_BESIDE_JSON);
             throw new IllegalStateException("a problem was expected");
         } catch (ApiException refused) {
             problem = mapper.readValue(refused.getResponseBody(), Problem.class);
