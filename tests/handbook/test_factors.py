@@ -16,7 +16,7 @@ from assignable.spc.errors import UnusableParameter
 # Textbook appendix table A.22, constants after ASTM STP 15D (checked in print); 3 decimals, c4 4 decimals.
 # Print differs from exact values by one in the last digit in places (D4(3) = 2.574 for 2.57459, d3(19),
 # D3(19), D4(19), D4(18)), so one unit in the last place is allowed throughout.
-COLUMNS = ("A2", "A3", "c4", "B3", "B4", "B5", "B6", "d2", "d3", "D3", "D4")
+COLUMNS = ("A2", "A3", "c4", "B3", "B4", "B5", "B6", "mean_range", "range_sd", "D3", "D4")
 PRINTED_2_21 = """
 2 1.880 2.659 .7979 0 3.267 0 2.606 1.128 .853 0 3.267
 3 1.023 1.954 .8862 0 2.568 0 2.276 1.693 .888 0 2.574
@@ -56,7 +56,7 @@ def test_printed_table_of_sizes_2_to_21(line: str) -> None:
 
 def test_printed_sizes_22_to_25() -> None:
     # Joglekar 2003, appendix G (checked in print); d3(23) is misprinted there as .1759 for .7159.
-    columns = ("d2", "d3", "c4", "A2", "D3", "D4", "A3", "B3", "B4")
+    columns = ("mean_range", "range_sd", "c4", "A2", "D3", "D4", "A3", "B3", "B4")
     table = {
         22: (3.819, 0.7199, 0.9882, 0.167, 0.434, 1.566, 0.647, 0.534, 1.466),
         23: (3.858, 0.7159, 0.9887, 0.162, 0.443, 1.557, 0.633, 0.545, 1.455),
@@ -65,7 +65,7 @@ def test_printed_sizes_22_to_25() -> None:
     }
     for n, row in table.items():
         for name, cell in zip(columns, row, strict=True):
-            fine = name in ("d3", "c4")
+            fine = name in ("range_sd", "c4")
             assert getattr(f.factors(n), name) == pytest.approx(cell, abs=1e-4 if fine else 1.1e-3), (n, name)
 
 

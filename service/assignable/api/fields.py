@@ -89,9 +89,10 @@ def json_schema_of(field: ma.fields.Field[Any], ret: Json) -> Json:
     if field.allow_none:
         if "anyOf" in schema:
             return {"anyOf": [*schema["anyOf"], {"type": "null"}]}
-        schema["type"] = [schema["type"], "null"]
         if "enum" in schema:
-            schema["enum"] = [*schema["enum"], None]
+            # As a list of types with null among the choices, generators of clients make three types of it.
+            return {"anyOf": [schema, {"type": "null"}]}
+        schema["type"] = [schema["type"], "null"]
     return schema
 
 

@@ -130,11 +130,25 @@ def _parser() -> argparse.ArgumentParser:
         "contract",
         help="make or check the committed contract",
         description="Executes every example request and compares the answers, and the contract's document, "
-        "with the files of openapi/.",
+        "with the files of openapi/; tells what breaks callers of the last release.",
     )
     which = contract.add_mutually_exclusive_group()
     which.add_argument("--check", action="store_true", help="compare only (the default)")
     which.add_argument("--write", action="store_true", help="write the files anew")
+    which.add_argument(
+        "--against",
+        metavar="FILE",
+        help="tell what breaks callers of the contract in this file, an openapi.json",
+    )
+    which.add_argument(
+        "--release", action="store_true", help="freeze the contract, under its version, in openapi/released/"
+    )
+    which.add_argument(
+        "--openapi-3.0",
+        action="store_true",
+        dest="older",
+        help="print the contract for tools that read OpenAPI 3.0 only",
+    )
     contract.set_defaults(run=_contract)
     return parser
 
@@ -192,6 +206,14 @@ def _keys_api(given: argparse.Namespace) -> int:
 
 
 def _contract(given: argparse.Namespace) -> int:
-    from .contract_files import check, write
+    from pathlib import Path
 
-    return write() if given.write else check()
+    from . import contract_files as files
+
+    if given.against:
+        return files.against(Path(given.against))
+    if given.release:
+        return files.release()
+    if given.older:
+        return files.show_older()
+    return files.write() if given.write else files.check()

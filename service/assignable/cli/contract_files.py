@@ -25,8 +25,12 @@ from ..api.answers import JSON
 from ..api.app import create_app
 from ..api.contract import Contract, examples_directory
 from ..api.settings import Settings
+from .compatibility import breaking, frozen
+from .older import as_3_0
 
 MEND = "assignable contract --write"
+ACCEPTED = "accepted.txt"
+"""Of the last release: breaking changes that are meant, a sentence of the check a line; # before reasons."""
 
 _REQUEST = ".request.json"
 _RESPONSE = ".response.json"
@@ -109,6 +113,37 @@ def write() -> int:
     return 0
 
 
+def release() -> int:
+    """Freezes the document under its version, as the one that later documents may not break."""
+    document = orjson.loads(_contract().document())
+    path = _released() / f"{document['info']['version']}.json"
+    written = _by_lines(frozen(document))
+    if path.exists() and path.read_bytes() != written:
+        return _failed((f"{path.name} is released, and this contract is another: it needs another version.",))
+    path.parent.mkdir(exist_ok=True)
+    path.write_bytes(written)
+    print(f"Froze the contract as {path.name} ({len(written)} bytes).")
+    return 0
+
+
+def show_older() -> int:
+    """Prints the document in the words of OpenAPI 3.0."""
+    print(json.dumps(as_3_0(json.loads(_contract().document())), ensure_ascii=False, indent=1))
+    return 0
+
+
+def against(path: Path) -> int:
+    """Tells what of the contract now breaks callers of the one in this file; returns 1 where anything does."""
+    try:
+        broken = breaking(json.loads(path.read_bytes()), orjson.loads(_contract().document()))
+    except (OSError, ValueError, KeyError) as error:
+        return _failed((f"{path}: no contract can be read there ({error}).",))
+    if broken:
+        return _failed((f"{len(broken)} changes break callers of {path.name}:", *broken))
+    print(f"Nothing breaks callers of {path.name}.")
+    return 0
+
+
 def check() -> int:
     """Compares; returns 1 and shows the difference where there is one."""
     directory = examples_directory()
@@ -129,6 +164,7 @@ def check() -> int:
             last_digits += 1
         else:
             differences.append(_difference(path.name, committed, now))
+    differences += unannounced(orjson.loads(contract.document()), _released())
     if executed.faults or differences:
         mend = [] if executed.faults else [f"If the change is meant: {MEND}"]
         return _failed((*executed.faults, *differences, *mend))
@@ -140,6 +176,47 @@ def check() -> int:
 
 def _answered(directory: Path) -> set[Path]:
     return {*directory.glob("*" + _RESPONSE), *directory.glob("*" + _RESPONSE_LINES)}
+
+
+def unannounced(document: Any, directory: Path) -> list[str]:
+    """What breaks callers of the last release in the directory and is not in its list of accepted changes."""
+    released = sorted(directory.glob("*.json"), key=lambda path: [int(n) for n in path.stem.split(".")])
+    if not released:
+        return []
+    accepted = directory / ACCEPTED
+    lines = accepted.read_text(encoding="utf-8").splitlines() if accepted.exists() else []
+    known = {line for line in lines if line and not line.startswith("#")}
+    broken = breaking(json.loads(released[-1].read_bytes()), document)
+    return [
+        *(
+            f"Breaks callers of {released[-1].stem}: {sentence}"
+            for sentence in broken
+            if sentence not in known
+        ),
+        *(f"{ACCEPTED} has a line that is no change: {line}" for line in sorted(known - set(broken))),
+    ]
+
+
+def _released() -> Path:
+    return examples_directory().parent / "released"
+
+
+def _by_lines(document: Any) -> bytes:
+    """JSON with an operation and a shape a line: small, and its changes can still be seen."""
+    shapes = document["components"].pop("schemas")
+    paths = document.pop("paths")
+
+    def block(name: str, members: Any) -> bytes:
+        lines = (orjson.dumps(key) + b":" + orjson.dumps(value) for key, value in members.items())
+        return orjson.dumps(name) + b":{\n" + b",\n".join(lines) + b"\n}"
+
+    components = orjson.dumps(document.pop("components")).removesuffix(b"}")
+    return b"%s,\n%s,\n%s,%s}}\n" % (
+        orjson.dumps(document).removesuffix(b"}"),
+        block("paths", paths),
+        b'"components":' + components,
+        block("schemas", shapes),
+    )
 
 
 def _contract() -> Contract:

@@ -33,14 +33,15 @@ _PANEL_NODES = 64
 class Factors:
     """Factors of mean, range and standard deviation charts for subgroups of one size.
 
-    The names are those of ISO 7870-2 and ASTM E2587. A limit nothing can cross is no limit, so a lower factor
-    of a spread chart that is not positive is null.
+    The names are those of ISO 7870-2 and ASTM E2587, but for d2 and d3: in many languages a program could not
+    tell them from D2 and D3. A limit nothing can cross is no limit, so a lower factor of a spread chart that
+    is not positive is null.
     """
 
     size: Annotated[int, "Values in a subgroup, n."]
     multiple: Annotated[float, "Limits lie this many sigma out, k."]
-    d2: Annotated[float, "Mean range of n values over sigma."]
-    d3: Annotated[float, "Standard deviation of the range over sigma."]
+    mean_range: Annotated[float, "d2: mean range of n values over sigma."]
+    range_sd: Annotated[float, "d3: standard deviation of the range over sigma."]
     c4: Annotated[float, "Mean standard deviation of n values over sigma."]
     A: Annotated[float, "Limits of the mean from a known sigma: k/√n."]
     A2: Annotated[float, "Limits of the mean from the mean range: k/(d2√n)."]
@@ -82,8 +83,8 @@ def _factors(n: int, k: float) -> Factors:
     return Factors(
         size=n,
         multiple=k,
-        d2=e,
-        d3=s,
+        mean_range=e,
+        range_sd=s,
         c4=c,
         A=k / root,
         A2=k / (e * root),

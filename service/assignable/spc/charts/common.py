@@ -88,7 +88,7 @@ def normal_multiple(tail: float) -> float:
 
 @dataclass(frozen=True, slots=True)
 class PanelLimits:
-    """The frozen lines of a panel, for the usual size; ``None`` where there is none."""
+    """The frozen lines of a panel, for the usual size; ``null`` where there is none."""
 
     centre: Annotated[float | None, "Centre line."]
     lower: Annotated[
