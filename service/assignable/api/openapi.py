@@ -123,6 +123,12 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: A
     options = {operation.tabled.name: operation.tabled for operation in operations if operation.tabled}
     for name, tabled in options.items():
         spec.components.schema(name, schema=tabled.shape())
+        # Beside a JSON body there are no options at all: none is required here, and a client that writes defaults
+        # out must find none to write. What a table needs is told by the problem that its call without it answers.
+        made = spec.components.schemas[name]
+        made.pop("required", None)
+        for member in made["properties"].values():
+            member.pop("default", None)
     for operation in operations:
         for shape in () if operation.lines is None else (*operation.lines.asked, *operation.lines.answered):
             if shape.__name__ not in spec.components.schemas:

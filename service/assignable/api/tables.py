@@ -629,10 +629,17 @@ def _flat(name: str, option: Any, *, required: bool) -> dict[str, Any]:
         option, f.ObjectList | f.ListOrTable | f.NumberList | f.NumberTable | f.StringList | f.ChoiceList
     ):
         shown = '[{"...": ...}]' if isinstance(option, f.ObjectList) else "[...]"
-        return {name: JsonText(required=required, metadata={"description": f"{text} As JSON text: {shown}."})}
+        needed = " Needed with a table." if required else ""
+        return {
+            name: JsonText(
+                required=required, metadata={"description": f"{text} As JSON text: {shown}.{needed}"}
+            )
+        }
     plain = copy.copy(option)
     plain.data_key = None
     plain.required = required
+    if required:
+        plain.metadata = {**option.metadata, "description": f"{text} Needed with a table."}
     return {name: plain}
 
 

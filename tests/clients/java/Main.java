@@ -6,6 +6,7 @@ import assignable.model.Characteristic;
 import assignable.model.MeasurementData;
 import assignable.model.MeasurementsAnswer;
 import assignable.model.MeasurementsRequest;
+import assignable.model.MeasurementsRequestQuery;
 import assignable.model.Problem;
 import assignable.model.SignalAnswer;
 import assignable.model.SpecificationRequest;
@@ -32,7 +33,7 @@ import java.util.Map;
  */
 public final class Main {
     /** Of an operation that also takes a table as CSV: what goes into its query is in the body of JSON. */
-    private static final XbarRFitQuery NO_OPTIONS_BESIDE_JSON = null;
+    private static final XbarRFitQuery NO_OPTIONS_BESIDE_JSON = new XbarRFitQuery();
 
     public static void main(String[] arguments) throws Exception {
         ApiClient client = new ApiClient();
@@ -62,7 +63,7 @@ public final class Main {
         MeasurementsAnswer capability = new CapabilityApi(client).assessMeasurements(new MeasurementsRequest()
             .characteristic(wall)
             .data(new MeasurementData().values(baseline.getValues()))
-            .specification(mapper.convertValue(measured.get("specification"), SpecificationRequest.class)), null);
+            .specification(mapper.convertValue(measured.get("specification"), SpecificationRequest.class)), new MeasurementsRequestQuery());
 
         Problem problem;
         try {
