@@ -1,15 +1,26 @@
 """A bound on the calculations a worker does at once; more than that is refused at once, not queued.
 
-The wait for a place is the only queue there is, and it is short: under load the accepted requests stay
+The wait for a place is short, and counts from when the request came: under load the accepted requests stay
 quick, the refused ones hear so early, and the health probes need no place at all.
 """
 
 from __future__ import annotations
 
+import threading
 from queue import Empty, SimpleQueue
+from time import monotonic
 from types import TracebackType
 
 from .problems import BUSY, Problem
+
+
+class _Arrival(threading.local):
+    at: float | None = None
+
+
+ARRIVAL = _Arrival()
+"""When the request that this thread answers had come, by the monotonic clock; a server with a queue of its own
+says so, and the time in that queue is then part of the wait."""
 
 
 class Slots:
@@ -27,7 +38,14 @@ class Slots:
 
     def __enter__(self) -> None:
         try:
-            self._places.get(timeout=self._wait_seconds)
+            self._places.get_nowait()
+        except Empty:
+            self._wait()
+
+    def _wait(self) -> None:
+        waited = 0.0 if ARRIVAL.at is None else monotonic() - ARRIVAL.at
+        try:
+            self._places.get(timeout=max(self._wait_seconds - waited, 0.0))
         except Empty:
             raise Problem(BUSY, headers=(("Retry-After", "1"),)) from None
 
