@@ -16,7 +16,6 @@ from pathlib import Path
 import pytest
 
 from assignable.cli import worker
-
 from faults.service import (
     PATIENCE_SECONDS,
     PLAIN,

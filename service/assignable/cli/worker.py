@@ -309,9 +309,7 @@ class Worker(ThreadWorker):  # type: ignore[misc]
     def enqueue_req(self, connection: Connection) -> None:
         probe = bool(connection.pieces) and connection.pieces[0].startswith(_PROBES)
         future = (self._probes if probe else self.tpool).submit(self.handle, connection)
-        future.add_done_callback(
-            lambda done: self.method_queue.defer(self.finish_request, connection, done)
-        )
+        future.add_done_callback(lambda done: self.method_queue.defer(self.finish_request, connection, done))
 
     def handle_request(self, request: Any, connection: Connection) -> Any:
         ARRIVAL.at = connection.heard
