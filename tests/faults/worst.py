@@ -1,14 +1,15 @@
 """The costliest legal request known of every operation: what bounds the work of one request is measured on these.
 
-Where a label says so, the request is refused after as much work as one may take. They were looked for by going through the shapes: the largest arrays, every choice, extremes of every number, data in
-which every point signals, mixtures of sizes, rules of the longest windows. A new operation needs an entry here.
-Bodies are made where they are measured, in a process of their own.
+They were looked for by going through the shapes: the largest arrays, every choice, extremes of every number, data in
+which every point signals, mixtures of sizes, rules of the longest windows. Where a label says so, the request is
+refused after as much work as one may take. A new operation needs an entry here. Bodies are made where they are
+measured, in a process of their own.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from functools import partial
+from functools import cache, partial
 from typing import Any
 
 import numpy as np
@@ -59,6 +60,17 @@ def _wide_rules() -> Json:
 def _wild(rows: int, columns: int = 1) -> np.ndarray:
     """Every point far out, on alternate sides."""
     return np.where(np.arange(rows)[:, None] % 2, 9.0, -9.0) + 0.01 * _normal(rows, columns)
+
+
+@cache
+def labels() -> Json:
+    """Names and times of as many points as are taken; made once, before a process is forked for each request."""
+    return {
+        "ids": [f"K-{at:08d}" for at in range(ROWS)],
+        "times": [
+            f"2026-03-02T{at // 3600 % 24:02d}:{at // 60 % 60:02d}:{at % 60:02d}Z" for at in range(ROWS)
+        ],
+    }
 
 
 def _named(data: Json, points: int) -> Json:

@@ -173,8 +173,9 @@ class MewmaChartRequest(f.RequestShape):
         least=mewma.SMALLEST_SMOOTHING_EXACT,
         most=1,
         metadata={
-            "description": "Weight of the newest point (lambda); with 1 it is the T-squared chart. With `time-varying` "
-            f"limits at least {mewma.SMALLEST_SMOOTHING_EXACT_OF_MANY} for more than {mewma.FEW_VARIABLES} variables."
+            "description": "Weight of the newest point (lambda); with 1 it is the T-squared chart. With "
+            f"`time-varying` limits at least {mewma.SMALLEST_SMOOTHING_EXACT_OF_MANY} for more than "
+            f"{mewma.FEW_VARIABLES} variables."
         },
     )
     limit = f.StrictNumber(
