@@ -130,8 +130,11 @@ def resident(pid: int) -> int:
 
 
 @contextmanager
-def serving(*arguments: str, **variables: str) -> Iterator[Service]:
-    """The server as `assignable serve` starts it; whatever happens, none of its processes is left."""
+def serving(*arguments: str, clean: bool = True, **variables: str) -> Iterator[Service]:
+    """The server as `assignable serve` starts it; whatever happens, none of its processes is left.
+
+    Where ``clean``, its log must show no fault of the service at the end.
+    """
     port = free_port()
     with tempfile.TemporaryFile() as log:
         process = subprocess.Popen(
@@ -153,7 +156,9 @@ def serving(*arguments: str, **variables: str) -> Iterator[Service]:
                 except OSError:
                     time.sleep(0.05)
             yield service
-            assert "Traceback" not in service.written()
+            written = service.written()
+            assert "Traceback" not in written, written
+            assert not clean or '"level":"error"' not in written, written
         finally:
             if process.poll() is None:
                 process.terminate()

@@ -69,10 +69,25 @@ def test_chunked_bodies_are_whole_and_the_connection_is_kept(service: Service) -
         for size in (1, 7, 100_000):
             client.sendall(chunked_head() + chunks(BODY, size))
             is_right(read_answer(client))
-        client.sendall(chunked_head() + chunks(BODY).replace(b"0\r\n\r\n", b"0;ext=1\r\nX-Check: 1\r\n\r\n"))
-        is_right(read_answer(client))
         client.sendall(head_of(XBAR, len(BODY)) + BODY)
         is_right(read_answer(client))
+
+
+def test_trailers_are_read_or_refused_and_are_no_request(service: Service) -> None:
+    for trailer in (
+        b"X-Check: 1\r\n",
+        b"nothing\r\n",
+        b"Content-Length: 5\r\n",
+        b"X: " + b"x" * 9000 + b"\r\n",
+    ):
+        with closing(service.connect()) as client:
+            client.sendall(chunked_head() + chunks(BODY)[:-2] + trailer + b"\r\n" + HEALTH)
+            first, *_ = is_answered_by(client)
+            if first.status != 200:
+                assert first.status == 400
+                first.problem()
+            else:
+                is_right(first)
 
 
 @pytest.mark.parametrize("over", [1, 1000, LIMIT])
