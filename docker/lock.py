@@ -29,6 +29,8 @@ def resolve(source: Path, target: Path, *options: str) -> None:
     """Writes what ``source`` needs; ``--output-file`` also gives the versions that are preferred."""
     subprocess.run(
         [
+            sys.executable,
+            "-m",
             "uv",
             "pip",
             "compile",

@@ -116,8 +116,8 @@ def test_the_body_is_bounded() -> None:
     assert any(character.isdigit() for character in found["detail"])
 
 
-@pytest.mark.parametrize("media_type", ["text/plain", "text/csv", "application/xml", ""])
-def test_the_media_type_is_json(media_type: str) -> None:
+@pytest.mark.parametrize("media_type", ["text/plain", "text/tab-separated-values", "application/xml", ""])
+def test_the_media_type_is_json_or_csv(media_type: str) -> None:
     answer = served.post(XBAR, b"{}", content_type=media_type)
     found = served.problem_of(answer, {}, problems.UNSUPPORTED_MEDIA_TYPE)
     assert "application/json" in found["detail"]

@@ -205,7 +205,7 @@ def test_what_cannot_be_computed(client: FlaskClient) -> None:
 
 def test_a_document_of_another_origin(client: FlaskClient) -> None:
     members = is_problem(post(client, {**GOOD, "multiple": 9}), problems.DOCUMENT_MISMATCH)
-    assert members["detail"] == "These are limits of another chart."
+    assert members["detail"] == "These are limits of another chart. (At #/limits.)"
 
 
 @pytest.mark.parametrize("content_type", ["text/plain", "application/json; charset=latin-1", "", "text/json"])

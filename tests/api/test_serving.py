@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import http.client
 import json
 import os
@@ -84,9 +85,12 @@ def running(*arguments: str, **variables: str) -> Iterator[Running]:
             break
         yield server
     finally:
-        if process.poll() is None:
+        process.terminate()  # so that it clears up; of no effect where it has ended
+        try:
+            process.communicate(timeout=PATIENCE_SECONDS)
+        except subprocess.TimeoutExpired:
             process.kill()
-        process.communicate(timeout=PATIENCE_SECONDS)
+            process.communicate(timeout=PATIENCE_SECONDS)
 
 
 @pytest.fixture(scope="module")
@@ -150,6 +154,23 @@ def test_what_is_no_request_is_answered_with_a_problem(server: Running, request_
     assert response.headers["Content-Type"] == "application/problem+json"
     assert response.headers["X-Request-ID"] == problem["request_id"]
     assert problem["type"].removeprefix("/problems/") in TYPES
+
+
+def test_the_demonstration_shows_a_key_where_one_is_asked_for(tmp_path: Path) -> None:
+    (tmp_path / "key").write_text("wall-thickness-4711\n")
+    digest = hashlib.sha256(b"wall-thickness-4711").hexdigest()
+    (tmp_path / "keys.json").write_text(json.dumps({"demo": digest}))
+    with running("--workers", "1", ASSIGNABLE_API_KEYS=str(tmp_path / "keys.json")) as server:
+        command = [*COMMAND, "demo", "--url", f"http://127.0.0.1:{server.port}"]
+        shown = subprocess.run(
+            [*command, "--api-key-file", str(tmp_path / "key")], capture_output=True, text=True, env=PLAIN
+        )
+        assert shown.returncode == 0, shown.stderr
+        assert "verdict: " in shown.stdout
+        assert "4711" not in shown.stdout
+        refused = subprocess.run(command, capture_output=True, text=True, env=PLAIN)
+        assert refused.returncode == 1
+        assert "--api-key-file FILE" in refused.stderr
 
 
 def test_the_demonstration_shows_real_answers(server: Running) -> None:

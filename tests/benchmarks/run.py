@@ -9,8 +9,10 @@ Ratios of one run are what to quote: absolute times change with the machine. Not
 from __future__ import annotations
 
 import functools
+import http.client as http_client
 import io
 import os
+import random
 import resource
 import shutil
 import socket
@@ -66,13 +68,13 @@ def application() -> Flask:
     return create_app()
 
 
-def post(path: str, body: bytes) -> bytes:
+def post(path: str, body: bytes, media_type: str = "application/json", query: str = "") -> bytes:
     """One request through the application, without a socket."""
     environ = {
         "REQUEST_METHOD": "POST",
         "PATH_INFO": path,
         "SCRIPT_NAME": "",
-        "QUERY_STRING": "",
+        "QUERY_STRING": query,
         "SERVER_NAME": "localhost",
         "SERVER_PORT": "80",
         "SERVER_PROTOCOL": "HTTP/1.1",
@@ -84,7 +86,7 @@ def post(path: str, body: bytes) -> bytes:
         "wsgi.multiprocess": True,
         "wsgi.run_once": False,
         "CONTENT_LENGTH": str(len(body)),
-        "CONTENT_TYPE": "application/json",
+        "CONTENT_TYPE": media_type,
         "HTTP_HOST": "localhost",
     }
     status: list[str] = []
@@ -247,6 +249,59 @@ def http() -> None:
 # In process
 
 
+CHARACTERISTICS = 200
+LINES = 20_000
+
+
+def _lines_a_second(port: int, path: str, head: bytes, lines: list[bytes]) -> float:
+    """Lines a second that as many streams as there are processors carry together."""
+    body = head + b"".join(lines)
+    began = time.monotonic()
+    streams = os.cpu_count() or 1
+
+    def stream() -> None:
+        connection = http_client.HTTPConnection("127.0.0.1", port, timeout=120)
+        connection.request("POST", path, body, {"Content-Type": "application/x-ndjson"})
+        told = connection.getresponse().read()
+        connection.close()
+        assert told.rpartition(b'{"done":true')[2].endswith(b'"problems":0}\n'), told[-300:]
+
+    threads = [threading.Thread(target=stream) for _ in range(streams)]
+    for thread in threads:
+        thread.start()
+    for thread in threads:
+        thread.join()
+    return streams * len(lines) / (time.monotonic() - began)
+
+
+def bulk() -> None:
+    """Single subgroups of many characteristics: a call each, and a line each."""
+    import orjson
+
+    limits = orjson.loads(judge_body())["limits"]
+    chance = random.Random(1)
+    data = [[[round(chance.gauss(2.5, 0.012), 3) for _ in range(5)]] for _ in range(LINES)]
+    head = b"".join(
+        orjson.dumps({"characteristic": f"c{at}", "limits": limits}) + b"\n" for at in range(CHARACTERISTICS)
+    )
+    brought = [
+        orjson.dumps({"characteristic": f"c{at % CHARACTERISTICS}", "data": {"values": values}}) + b"\n"
+        for at, values in enumerate(data)
+    ]
+    whole = b'{"operation":"judgeXbarR","body":' + judge_body() + b"}\n"
+    with tempfile.TemporaryDirectory() as folder, _server(OURS) as port:
+        single = _rate(port, "/v1/charts/xbar-r/signals", judge_body(), Path(folder))
+        series = _lines_a_second(port, "/v1/bulk/signals", head, brought)
+        plain = _lines_a_second(port, "/v1/bulk", b"", [whole] * (LINES // 4))
+    row(
+        f"one subgroup a line, {CHARACTERISTICS} characteristics, against a call each",
+        f"{series:,.0f} lines/s, {single:,.0f} calls/s",
+        series / single,
+        "at least 5",
+    )
+    row("the same as whole requests in lines", f"{plain:,.0f} lines/s", plain / single, "-")
+
+
 def _cpu(action: Callable[[], object], times: int = 3) -> float:
     best = float("inf")
     for _ in range(times):
@@ -263,6 +318,8 @@ def large() -> None:
 
     values = np.random.default_rng(2).normal(2.5, 0.012, (200_000, 5)).round(4).tolist()
     body = orjson.dumps({"data": {"values": values}, "rules": {"published": "western-electric-1956"}})
+    table = "".join(("x1,x2,x3,x4,x5\n", *(",".join(map(str, one)) + "\n" for one in values))).encode()
+    query = "rules.published=western-electric-1956"
     del values
 
     def floor() -> bytes:
@@ -278,6 +335,13 @@ def large() -> None:
         f"{ours * 1e3:.0f} of {bare * 1e3:.0f} ms CPU",
         ours / bare,
         "aim ≤ 2",
+    )
+    as_table = _cpu(lambda: post("/v1/charts/xbar-r/limits", table, "text/csv", query), 5)
+    row(
+        "the same as CSV, to JSON",
+        f"{as_table * 1e3:.0f} of {ours * 1e3:.0f} ms CPU",
+        as_table / ours,
+        "aim ≤ 1.2",
     )
 
 
@@ -677,6 +741,7 @@ def charts() -> None:
 ROWS = {
     "http": http,
     "large": large,
+    "bulk": bulk,
     "memory": memory,
     "charts": charts,
     "runs": runs,

@@ -7,13 +7,14 @@ from collections.abc import Callable
 from flask import Flask, Response, request
 
 from . import problems
-from .contract import Contract
+from .contract import REQUEST_ID, Contract
 from .cors import Cors
-from .observability import REQUEST_ID, Edge, Log
+from .observability import Edge, Log
 from .operations import announce, documentation
 from .sealing import seals_in
 from .security import access_of, guard
 from .settings import Settings
+from .tally import TALLY
 
 Register = Callable[[Contract], None]
 
@@ -32,11 +33,18 @@ def create_app(
     app = Flask("assignable", static_folder=None, template_folder=None)
     app.json.sort_keys = False  # type: ignore[attr-defined]
     access = access_of(settings)
-    contract = Contract(app, settings, seals_in(settings), access)
+    metrics = None
+    if settings.metrics != "off":
+        from .metrics import Metrics
+
+        metrics = Metrics(settings.compute_slots)
+    contract = Contract(app, settings, seals_in(settings), access, log.failure, metrics)
     app.extensions["assignable.contract"] = contract
 
     def failed(error: Exception) -> Response:
         problem = problems.of(error)
+        if (tally := request.environ.get(TALLY)) is not None:
+            tally.problem = problem
         if (unforeseen := problems.unforeseen(error)) is not None:
             log.failure(unforeseen, request.environ)
         return Response(
@@ -51,5 +59,9 @@ def create_app(
         guard(app, access)
     for register in operations:
         register(contract)
-    app.wsgi_app = Edge(app.wsgi_app, log, Cors(settings.cors_origins))  # type: ignore[method-assign]
+    if metrics is not None:
+        from .operations import monitoring
+
+        monitoring.announce(contract, metrics)
+    app.wsgi_app = Edge(app.wsgi_app, log, Cors(settings.cors_origins), metrics)  # type: ignore[method-assign]
     return app

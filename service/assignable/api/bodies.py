@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import zlib
+from collections.abc import Iterable, Iterator
 from typing import Any
 
 from werkzeug.datastructures import MIMEAccept
@@ -16,10 +17,14 @@ from .problems import (
     UNSUPPORTED_CONTENT_ENCODING,
     UNSUPPORTED_MEDIA_TYPE,
     Problem,
+    ProblemType,
 )
 
 JSON = "application/json"
+NDJSON = "application/x-ndjson"
+CSV = "text/csv"
 _CHUNK = 65536
+_NOT_ONE_GZIP = "The gzip body is cut off, or has more after its end."
 
 Environ = dict[str, Any]
 
@@ -29,25 +34,34 @@ def require_acceptable(environ: Environ, media_type: str) -> None:
     accept = environ.get("HTTP_ACCEPT")
     if not accept or accept == "*/*" or accept == media_type:
         return
-    if not parse_accept_header(accept, MIMEAccept).quality(media_type) > 0:
+    ranges = parse_accept_header(accept, MIMEAccept)
+    # A parameter, such as the version that a scraper names, narrows nothing here.
+    if not ranges.quality(media_type) > 0 and not any(
+        range_.partition(";")[0].strip().lower() == media_type and quality > 0 for range_, quality in ranges
+    ):
         raise Problem(
             NOT_ACCEPTABLE, f"This operation answers {media_type}, which the Accept header rules out."
         )
 
 
-def require_json(environ: Environ) -> None:
-    """Raises the problem ``unsupported-media-type`` for a body that does not call itself JSON in UTF-8."""
-    content_type = environ.get("CONTENT_TYPE", "")
-    if content_type == JSON:
-        return
+def require(environ: Environ, *expected: str) -> str:
+    """Which of these media types the body calls itself, in UTF-8, and a table with a header row.
+
+    Raises the problem ``unsupported-media-type`` for anything else.
+    """
+    content_type: str = environ.get("CONTENT_TYPE", "")
+    if content_type == expected[0]:
+        return content_type
     media_type, options = parse_options_header(content_type)
-    if media_type.lower() == JSON and options.get("charset", "utf-8").lower() in ("utf-8", "utf8"):
-        return
+    named = media_type.lower()
+    utf_8 = options.get("charset", "utf-8").lower() in ("utf-8", "utf8")
+    if named in expected and utf_8 and options.get("header", "present") == "present":
+        return named
     shown = "has no Content-Type" if not content_type else "has another Content-Type"
     raise Problem(
         UNSUPPORTED_MEDIA_TYPE,
-        f"The body {shown}; this operation reads {JSON} in UTF-8.",
-        headers=(("Accept-Post", JSON),),
+        f"The body {shown}; this operation reads {' or '.join(expected)} in UTF-8.",
+        headers=(("Accept-Post", ", ".join(expected)),),
     )
 
 
@@ -75,7 +89,7 @@ def read(environ: Environ, limit: int) -> bytes:
                 raise Problem(BAD_REQUEST, "Content-Length is not a whole number.")
             length = int(declared)
             if length > limit:
-                raise _too_large(limit)
+                raise too_large(limit)
             body: bytes = stream.read(length)
             if len(body) < length:
                 body += _rest(stream, length - len(body))
@@ -87,7 +101,7 @@ def read(environ: Environ, limit: int) -> bytes:
         while part := stream.read(_CHUNK):
             total += len(part)
             if total > limit:
-                raise _too_large(limit)
+                raise too_large(limit)
             parts.append(part)
         return b"".join(parts)
     except Problem:
@@ -96,6 +110,57 @@ def read(environ: Environ, limit: int) -> bytes:
         Exception
     ):  # whatever the server's own reader raises: a broken connection, bad chunks, bad trailers
         raise Problem(BAD_REQUEST, "The body could not be read to its end.") from None
+
+
+def pieces(environ: Environ, limit: int) -> Iterator[bytes]:
+    """The body piece by piece as it arrives, for what is never whole in memory. Raises as :func:`read` does."""
+    stream = environ["wsgi.input"]
+    declared = environ.get("CONTENT_LENGTH") or ""
+    if declared and not (declared.isascii() and declared.isdigit()):
+        raise Problem(BAD_REQUEST, "Content-Length is not a whole number.")
+    if not declared and not environ.get("wsgi.input_terminated"):
+        return
+    missing = int(declared) if declared else None
+    total = 0
+    while missing is None or missing:
+        try:
+            piece = stream.read(_CHUNK if missing is None else min(_CHUNK, missing))
+        except (OSError, EOFError):
+            raise Problem(BAD_REQUEST, "The body could not be read to its end.") from None
+        if not piece:
+            if missing:
+                raise Problem(BAD_REQUEST, "The body ends before the length it was announced with.")
+            return
+        total += len(piece)
+        if total > limit:
+            raise too_large(limit)
+        missing = None if missing is None else missing - len(piece)
+        yield piece
+
+
+def inflated(packed: Iterable[bytes], limit: int) -> Iterator[bytes]:
+    """A gzip body undone piece by piece, as far as the limit."""
+    unpacker = zlib.decompressobj(31)
+    total = 0
+    for piece in packed:
+        rest, part = piece, b""
+        # Output may be left inside when all input is taken: as long as parts are full there may be more.
+        while rest or len(part) == _CHUNK:
+            if unpacker.eof:
+                raise Problem(NOT_JSON, _NOT_ONE_GZIP)
+            try:
+                part = unpacker.decompress(rest, _CHUNK)
+            except zlib.error:
+                raise Problem(NOT_JSON, "The body calls itself gzip and is not.") from None
+            total += len(part)
+            if total > limit:
+                raise _inflates_too_far(limit)
+            yield part
+            rest = unpacker.unused_data if unpacker.eof else unpacker.unconsumed_tail
+            if unpacker.eof and not rest:
+                break
+    if not unpacker.eof:
+        raise Problem(NOT_JSON, _NOT_ONE_GZIP)
 
 
 def _rest(stream: Any, missing: int) -> bytes:
@@ -109,21 +174,24 @@ def _rest(stream: Any, missing: int) -> bytes:
     return b"".join(parts)
 
 
-def inflate(body: bytes, limit: int) -> bytes:
-    """A gzip body undone, as far as the limit and not a byte further."""
+def inflate(body: bytes, limit: int, unreadable: ProblemType = NOT_JSON) -> bytes:
+    """A gzip body undone, as far as the limit and not a byte further; ``unreadable`` where it is none."""
     unpacker = zlib.decompressobj(31)
     try:
-        inflated = unpacker.decompress(body, limit + 1)
+        whole = unpacker.decompress(body, limit + 1)
     except zlib.error:
-        raise Problem(NOT_JSON, "The body calls itself gzip and is not.") from None
-    if len(inflated) > limit:
-        raise Problem(
-            CONTENT_TOO_LARGE, f"The body inflates to more than the {limit} bytes this server takes."
-        )
+        raise Problem(unreadable, "The body calls itself gzip and is not.") from None
+    if len(whole) > limit:
+        raise _inflates_too_far(limit)
     if not unpacker.eof or unpacker.unused_data:
-        raise Problem(NOT_JSON, "The gzip body is cut off, or has more after its end.")
-    return inflated
+        raise Problem(unreadable, _NOT_ONE_GZIP)
+    return whole
 
 
-def _too_large(limit: int) -> Problem:
+def _inflates_too_far(limit: int) -> Problem:
+    return Problem(CONTENT_TOO_LARGE, f"The body inflates to more than the {limit} bytes this server takes.")
+
+
+def too_large(limit: int) -> Problem:
+    """The problem of a body beyond this limit."""
     return Problem(CONTENT_TOO_LARGE, f"The body is larger than the {limit} bytes this server takes.")

@@ -9,11 +9,12 @@ from __future__ import annotations
 
 import re
 import threading
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
+from uuid import uuid4
 
 import orjson
 from flask import Flask, Response, request
@@ -21,21 +22,34 @@ from marshmallow import Schema, ValidationError
 
 from ..documents.seal import UNSEALED, Seals
 from ..spc.errors import SpcError
-from . import answers, bodies, explaining, problems, strict_json
-from .fields import AnswerShape, ObjectList, StrictInteger, StrictString, known_names
+from . import answers, bodies, explaining, problems, streams, strict_json, tables
+from .fields import (
+    AnswerShape,
+    ObjectList,
+    StrictInteger,
+    StrictString,
+    from_text,
+    known_names,
+    reads_json,
+)
 from .problems import Entry, Problem, ProblemType
 from .settings import Settings
 from .shedding import Slots
+from .tally import TALLY, Tally
 
 if TYPE_CHECKING:
+    from .metrics import Metrics
     from .security import Access
 
 View = Callable[..., Any]
 Link = Mapping[str, Any]
+Failed = Callable[[Exception, dict[str, Any]], None]
+"""Is told of what no layer expected, with the request's environ."""
 Route = tuple[str, str, str]
 """Method, path and operation id."""
 
 OPERATION = "assignable.operation"  # the environ's key for the id of the operation that answers
+REQUEST_ID = "assignable.request_id"  # and for the id of the request
 
 _OF_A_PICTURE = (("Content-Security-Policy", "default-src 'none'; style-src 'unsafe-inline'"),)
 
@@ -50,6 +64,10 @@ class ProblemEntry(AnswerShape):
         metadata={"description": "Where in the body, as a JSON Pointer (RFC 6901): #/data/values/3/1."}
     )
     parameter = StrictString(metadata={"description": "Which parameter of the query."})
+    row = StrictInteger(metadata={"description": "Of a CSV body: which row; the header is row 1."})
+    column = StrictString(
+        metadata={"description": "Of a CSV body: which column, by its name; by its number where it has none."}
+    )
     code = StrictString(required=True, metadata={"description": "Stable; for programs."})
     detail = StrictString(required=True, metadata={"description": "A sentence; for people."})
 
@@ -80,11 +98,23 @@ class Provenance(AnswerShape):
     method = StrictString(required=True, metadata={"description": "The method's name in this service."})
     request_digest = StrictString(
         required=True,
-        metadata={"description": "Of the request's body, gzip undone: sha-256: and hexadecimal digits."},
+        metadata={
+            "description": "Of the request's body, gzip undone: sha-256: and hexadecimal digits. Of a CSV request: of "
+            "its query as it was sent, a line feed, and the body."
+        },
     )
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True)
+class Lines:
+    """What an operation reads and answers where both are streams of JSON, a value a line."""
+
+    asked: tuple[type[Schema], ...]
+    answered: tuple[type[Schema], ...]
+    example: str
+
+
+@dataclass(frozen=True, kw_only=True)
 class Operation:
     """One operation as it was bound; :meth:`execute` walks its road without HTTP."""
 
@@ -98,6 +128,7 @@ class Operation:
     request: Schema | None = None
     query: Schema | None = None
     response: Schema | None = None
+    lines: Lines | None = None
     media_type: str = answers.JSON
     problems: tuple[ProblemType, ...] = ()
     examples: tuple[str, ...] = ()
@@ -107,20 +138,58 @@ class Operation:
     cache_seconds: int | None = 300
 
     def execute(self, body: bytes) -> bytes:
-        """The answer to a JSON body; raises what :func:`assignable.api.problems.of` understands."""
+        """The answer to a body; raises what :func:`assignable.api.problems.of` understands."""
+        if self.lines is not None:
+            return b"".join(streams.stream(self.view, streams.Call(str(uuid4())), (body,), _ALONE, len(body)))
         return self.answer_to(strict_json.loads(body), body)
 
-    def answer_to(self, document: Any, body: bytes) -> bytes:
+    def answer_to(self, document: Any, body: bytes, tally: Tally | None = None) -> bytes:
         """The answer to a body that is parsed already; ``body`` is what the provenance's digest is of."""
-        return self.write(self.computed(document), body)
+        return self.write(self.computed(document, tally), body)
 
-    def computed(self, document: Any, **path: str) -> Any:
-        """What the view makes of a body that is parsed already; faults are told where the body has them."""
-        assert self.request is not None
+    def computed(self, document: Any, tally: Tally | None = None, /, **path: str) -> Any:
+        """What the view makes of a body that is parsed already; faults are told where the body has them.
+
+        Of an operation without a body it is the parameters of the query, or nothing.
+        """
+        shape = self.request or self.query
         try:
-            return self.view(self.request.load(document), **path)
+            loaded = None if shape is None else shape.load(document)
+            result = self.view(**path) if shape is None else self.view(loaded, **path)
         except SpcError as error:
             raise problems.placed(error, document) from error
+        if tally is not None and loaded is not None:
+            tally.computed(loaded, result)
+        return result
+
+    @cached_property
+    def tabled(self) -> tables.Tabled | None:
+        """The request as a CSV table with options in the query, where its data is one rectangular table."""
+        return tables.of(self.request)
+
+    def answer_to_table(
+        self, body: bytes, query: bytes = b"", tally: Tally | None = None, /, **path: str
+    ) -> bytes:
+        """The answer to a CSV body; its digest is of the query, a line feed and the body."""
+        assert self.tabled is not None
+        assert self.request is not None
+        document, read = self.tabled.loaded(body, query)
+        try:
+            loaded = self.request.load(document)
+            result = self.view(loaded, **path)
+            if tally is not None:
+                tally.computed(loaded, result)
+            return self.write(result, query + b"\n" + body)
+        except (ValidationError, SpcError) as error:
+            raise self.tabled.placed(error, document, read) from error
+
+    def tables(self) -> Iterator[tuple[str, dict[str, Any], bytes]]:
+        """The examples that are tables: the name, the parameters and the body of each."""
+        directory = examples_directory()
+        for name in self.examples if self.tabled is not None else ():
+            if (file := directory / f"{name}.request.csv").exists():
+                query = directory / f"{name}.query.json"
+                yield name, orjson.loads(query.read_bytes()) if query.exists() else {}, file.read_bytes()
 
     def write(self, result: Any, body: bytes = b"") -> bytes:
         """A view's result as the bytes of the answer."""
@@ -131,17 +200,30 @@ class Operation:
         return answers.dumps(result)
 
 
+_ALONE = Slots(1, 0.0)
+
+
 class Contract:
     """All operations of an application, in the order in which they were bound."""
 
     def __init__(
-        self, app: Flask, settings: Settings, seals: Seals = UNSEALED, access: Access | None = None
+        self,
+        app: Flask,
+        settings: Settings,
+        seals: Seals = UNSEALED,
+        access: Access | None = None,
+        failed: Failed = lambda error, environ: None,
+        metrics: Metrics | None = None,
     ) -> None:
         self.seals = seals
+        self.metrics = metrics
+        self._failed = failed
         self._access = access
         self._app = app
         self._settings = settings
-        self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds)
+        self._slots = Slots(settings.compute_slots, settings.slot_wait_seconds, metrics)
+        # Each occupies a thread for as long as it lasts; the others are for everybody else.
+        self._streams = Slots(max(1, settings.threads // 2), 0.0)
         self._tags: dict[str, str] = {}
         self._constant: dict[str, tuple[bytes, str]] = {}
         self._bound: dict[str, Operation] = {}
@@ -164,6 +246,12 @@ class Contract:
         """An operation by its id, bound now where it was only announced."""
         self._bind_announced(operation_id)
         return self._bound[operation_id]
+
+    def find(self, operation_id: str) -> Operation | None:
+        """An operation by its id, if there is such."""
+        if operation_id in self._announced:
+            self._bind_announced(operation_id)
+        return self._bound.get(operation_id)
 
     def announce(self, routes: Iterable[Route], register: Callable[[Contract], None]) -> None:
         """Takes up routes now whose operations ``register`` binds when one of them is first needed.
@@ -209,6 +297,7 @@ class Contract:
         response: Schema | None,
         request: Schema | None = None,
         query: Schema | None = None,
+        lines: Lines | None = None,
         media_type: str = answers.JSON,
         problems: tuple[ProblemType, ...] = (),
         example: str | tuple[str, ...] = (),
@@ -222,9 +311,10 @@ class Contract:
 
         ``request``, ``query`` and ``response`` are instances of shapes. A view is called with what its
         request's or its query's shape loads (or nothing), and with the path's parameters by name; it
-        returns plain values, arrays or dataclasses, or text for another ``media_type``. ``problems`` are
-        those beyond the ones every such operation can answer. ``example`` names files of
-        ``openapi/examples``. ``provenance`` is the method's name; with it the answer gets that member.
+        returns plain values, arrays or dataclasses, or text for another ``media_type``. With ``lines`` it is
+        a :data:`assignable.api.streams.Converse` instead. ``problems`` are those beyond the ones every such
+        operation can answer. ``example`` names files of ``openapi/examples``. ``provenance`` is the method's
+        name; with it the answer gets that member.
         ``explain`` gives the worked steps; with it a request may ask for them, and the answer then has them.
         ``computes`` takes a compute slot. ``cache_seconds`` is how long a GET may be kept, None not at all.
         """
@@ -247,6 +337,7 @@ class Contract:
                 request=request,
                 query=query,
                 response=response,
+                lines=lines,
                 media_type=media_type,
                 problems=problems,
                 examples=(example,) if isinstance(example, str) else example,
@@ -269,26 +360,63 @@ class Contract:
         return bind
 
     def _endpoint(self, operation: Operation) -> Callable[..., Response]:
+        if operation.lines is not None:
+            return self._taking_lines(operation)
         if operation.request is not None:
             return self._taking_body(operation)
         return self._taking_none(operation)
 
+    def _taking_lines(self, operation: Operation) -> Callable[..., Response]:
+        settings = self._settings
+
+        def answer() -> Response:
+            environ = request.environ
+            environ[OPERATION] = operation.operation_id
+            bodies.require_acceptable(environ, bodies.NDJSON)
+            bodies.require(environ, bodies.NDJSON)
+            packed = bodies.encoding_of(environ)
+            declared = environ.get("CONTENT_LENGTH") or ""
+            if declared.isascii() and declared.isdigit() and int(declared) > settings.max_stream_bytes:
+                raise bodies.too_large(settings.max_stream_bytes)
+            pieces = bodies.pieces(environ, settings.max_stream_bytes)
+            if packed:
+                pieces = bodies.inflated(pieces, settings.max_stream_bytes)
+            counted = streams.uncounted if self.metrics is None else self.metrics.line
+            call = streams.Call(environ[REQUEST_ID], lambda error: self._failed(error, environ), counted)
+            parts = streams.stream(operation.view, call, pieces, self._slots, settings.max_body_bytes)
+            told = self._streams.occupied_by(parts)
+            answered = Response(told, headers=[("Cache-Control", "no-store")], content_type=bodies.NDJSON)
+            answered.call_on_close(told.close)
+            return answered
+
+        return answer
+
     def _taking_body(self, operation: Operation) -> Callable[..., Response]:
         content_type = operation.media_type
         operation_id = operation.operation_id
+        tabled = operation.tabled
+        taken = (bodies.JSON,) if tabled is None else (bodies.JSON, bodies.CSV)
 
         def answer(**path: str) -> Response:
             environ = request.environ
             environ[OPERATION] = operation_id
             bodies.require_acceptable(environ, content_type)
-            bodies.require_json(environ)
+            as_table = bodies.require(environ, *taken) == bodies.CSV
             packed = bodies.encoding_of(environ)
             body = bodies.read(environ, self._settings.max_body_bytes)
+            tally = environ.get(TALLY)
             # The place is taken before parsing: objects weigh many times what the text does.
             with self._slots:
                 if packed:
-                    body = bodies.inflate(body, self._settings.max_inflated_bytes)
-                written = operation.write(operation.computed(strict_json.loads(body), **path), body)
+                    kind = problems.NOT_CSV if as_table else problems.NOT_JSON
+                    body = bodies.inflate(body, self._settings.max_inflated_bytes, kind)
+                if as_table:
+                    written = operation.answer_to_table(body, request.query_string, tally, **path)
+                else:
+                    if tabled is not None and environ.get("QUERY_STRING"):
+                        tables.refuse_parameters(request.args)
+                    result = operation.computed(strict_json.loads(body), tally, **path)
+                    written = operation.write(result, body)
             return _response(written, content_type, (("Cache-Control", "no-store"),))
 
         return answer
@@ -364,7 +492,7 @@ def _load_query(shape: Schema) -> Any:
     for name, texts in request.args.lists():
         if len(texts) > 1:
             faults.append(Entry("repeated-parameter", "This parameter is given twice.", parameter=name))
-        given[name] = _from_text(texts[0]) if name in known and _reads_json(known[name]) else texts[0]
+        given[name] = from_text(texts[0]) if name in known and reads_json(known[name]) else texts[0]
     try:
         loaded = shape.load(given)
     except ValidationError as error:
@@ -376,17 +504,6 @@ def _load_query(shape: Schema) -> Any:
         detail = faults[0].detail if len(faults) == 1 else f"{len(faults)} parameters are at fault."
         raise Problem(problems.CONTRACT_VIOLATION, detail, errors=faults[: problems.MAX_ERRORS])
     return loaded
-
-
-def _reads_json(parameter: Any) -> bool:
-    return parameter.json_schema().get("type") in ("number", "integer", "boolean")
-
-
-def _from_text(text: str) -> Any:
-    try:
-        return orjson.loads(text)
-    except orjson.JSONDecodeError:
-        return text
 
 
 def _check(

@@ -15,6 +15,7 @@ from typing import Any, ClassVar
 
 import marshmallow as ma
 import numpy as np
+import orjson
 from marshmallow import ValidationError
 
 from .problems import HERE, MAX_ERRORS, Coded, More
@@ -794,6 +795,19 @@ def known_names(shape: ma.Schema) -> Mapping[str, ma.fields.Field[Any]]:
     return {field.data_key or name: field for name, field in shape.load_fields.items()}
 
 
+def reads_json(field: ma.fields.Field[Any]) -> bool:
+    """Whether the text of a query is read as JSON for this field: a number, or true or false."""
+    return isinstance(field, StrictNumber | StrictInteger | StrictBoolean)
+
+
+def from_text(text: str) -> Any:
+    """A number, true, false or null as JSON writes it; any other text as it is."""
+    try:
+        return orjson.loads(text)
+    except orjson.JSONDecodeError:
+        return text
+
+
 class OneOrMany(_Array):
     """A number for all points, or a list with one for each; an array (1,) or (n,)."""
 
@@ -809,6 +823,13 @@ class OneOrMany(_Array):
         if fault := self._many._number_fault(value):
             raise ValidationError(fault)
         return np.array([value], dtype=np.int64 if self._many._integral else np.float64)
+
+    def one(self, **kwargs: Any) -> StrictInteger | StrictNumber:
+        """A field for the one number alone."""
+        field: StrictInteger | StrictNumber
+        field = StrictInteger(**kwargs) if self._many._integral else StrictNumber(**kwargs)
+        field._bounds = self._many._bounds
+        return field
 
     def json_schema(self) -> Json:
         one = self._many._number_schema()

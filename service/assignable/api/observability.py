@@ -13,17 +13,21 @@ from collections.abc import Callable, Iterable, Iterator
 from datetime import UTC, datetime
 from time import perf_counter_ns
 from traceback import extract_tb
-from typing import Any, BinaryIO
+from typing import TYPE_CHECKING, Any, BinaryIO
 from uuid import UUID
 
 import orjson
 
 from .answers import service_version
-from .contract import OPERATION
+from .contract import OPERATION, REQUEST_ID
 from .cors import Cors
 from .problems import INTERNAL, MEDIA_TYPE, Problem
+from .tally import OTHER, TALLY, Tally
 
-REQUEST_ID = "assignable.request_id"
+if TYPE_CHECKING:
+    from .metrics import Metrics
+
+TRACE_ID = "assignable.trace_id"  # of the span of this request, where spans are made
 
 _GOOD_ID = re.compile(r"[A-Za-z0-9._-]{1,128}")
 _TRACEPARENT = re.compile(
@@ -79,7 +83,9 @@ def request_id(environ: Environ) -> str:
 
 
 def trace_id(environ: Environ) -> str | None:
-    """The trace a W3C ``traceparent`` header names."""
+    """The trace of this request's span, or else the one a W3C ``traceparent`` header names."""
+    if (own := environ.get(TRACE_ID)) is not None:
+        return str(own)
     given = environ.get("HTTP_TRACEPARENT")
     if given is None:
         return None
@@ -87,19 +93,34 @@ def trace_id(environ: Environ) -> str | None:
     return found[1] if found else None
 
 
+_METHODS = frozenset(("GET", "HEAD", "POST", "OPTIONS", "PUT", "PATCH", "DELETE"))
+
+
+def method_of(environ: Environ) -> str:
+    """The request's method; any text can stand there."""
+    method: str = environ["REQUEST_METHOD"]
+    return method if method in _METHODS else "other"
+
+
 class Edge:
     """The WSGI application around Flask's."""
 
     def __init__(
-        self, inner: Callable[[Environ, StartResponse], Iterable[bytes]], log: Log, cors: Cors
+        self,
+        inner: Callable[[Environ, StartResponse], Iterable[bytes]],
+        log: Log,
+        cors: Cors,
+        metrics: Metrics | None = None,
     ) -> None:
         self._inner = inner
         self._log = log
         self._cors = cors
+        self._metrics = metrics
 
     def __call__(self, environ: Environ, start_response: StartResponse) -> Iterable[bytes]:
         began = perf_counter_ns()
         own_id = environ[REQUEST_ID] = request_id(environ)
+        tally = environ[TALLY] = Tally()
         more = [("X-Request-ID", own_id), ("X-Content-Type-Options", "nosniff"), *self._cors.headers(environ)]
         seen: list[Any] = ["", None]  # status, bytes out
 
@@ -116,41 +137,49 @@ class Edge:
                 answer = self._inner(environ, start)
             except Exception as error:
                 self._log.failure(error, environ)
-                body = Problem(INTERNAL).body(own_id)
+                tally.problem = Problem(INTERNAL)
+                body = tally.problem.body(own_id)
                 start(
                     "500 Internal Server Error",
                     [("Content-Type", MEDIA_TYPE), ("Content-Length", str(len(body)))],
                     sys.exc_info(),
                 )
                 answer = (body,)
-        if not self._log.requests:
+        if not self._log.requests and self._metrics is None:
             return answer
         if seen[1] is None and seen[0][:3] not in ("204", "304"):
-            return _Streamed(answer, lambda sent: self._line(environ, seen[0], sent, began))
-        self._line(environ, seen[0], int(seen[1] or 0), began)
+            return Streamed(answer, lambda sent: self._over(environ, tally, seen[0], sent, began))
+        self._over(environ, tally, seen[0], int(seen[1] or 0), began)
         return answer
 
-    def _line(self, environ: Environ, status: str, sent: int, began: int) -> None:
+    def _over(self, environ: Environ, tally: Tally, status: str, sent: int, began: int) -> None:
+        taken = perf_counter_ns() - began
+        if self._metrics is not None:
+            self._metrics.request(environ.get(OPERATION, OTHER), status[:3], taken / 1e9, tally)
+        if self._log.requests:
+            self._line(environ, tally, status, sent, taken)
+
+    def _line(self, environ: Environ, tally: Tally, status: str, sent: int, taken: int) -> None:
         declared = environ.get("CONTENT_LENGTH") or ""
         self._log.write(
             level="info",
             event="request",
             request_id=environ[REQUEST_ID],
             trace_id=trace_id(environ),
-            method=environ["REQUEST_METHOD"] if environ["REQUEST_METHOD"] in _METHODS else "other",
+            method=method_of(environ),
             operation_id=environ.get(OPERATION),
             status=int(status[:3]) if status else 0,
-            ms=(perf_counter_ns() - began) / 1e6,
+            problem=None if tally.problem is None else tally.problem.kind.code,
+            ms=taken / 1e6,
             bytes_in=int(declared) if declared.isascii() and declared.isdigit() else None,
             bytes_out=sent,
+            values=tally.values,
+            version=service_version(),
         )
 
 
-_METHODS = frozenset(("GET", "HEAD", "POST", "OPTIONS", "PUT", "PATCH", "DELETE"))
-
-
-class _Streamed:
-    """An answer of unknown length; its line is written when it is over."""
+class Streamed:
+    """An answer of unknown length; what is to be told of it is told when it is over."""
 
     def __init__(self, inner: Iterable[bytes], over: Callable[[int], None]) -> None:
         self._inner = inner

@@ -13,13 +13,14 @@ from apispec import APISpec
 from apispec.ext.marshmallow import MarshmallowPlugin
 from apispec.ext.marshmallow.common import resolve_schema_instance
 from apispec.ext.marshmallow.openapi import OpenAPIConverter
-from marshmallow import INCLUDE
+from marshmallow import INCLUDE, Schema
 
-from . import answers, problems
+from . import answers, problems, tables
+from .bodies import CSV, NDJSON
 from .contract import _PARAMETER, Operation, ProblemDetails, examples_directory
 from .fields import json_schema_of, list_bounds_of
 from .problems import ProblemType
-from .security import OPEN, Access
+from .security import Access
 
 _HEADERS = {
     "X-Request-ID": "The request's id: the one that was sent, or one made for it.",
@@ -40,6 +41,9 @@ _OF_A_BODY = (
     problems.UNSUPPORTED_MEDIA_TYPE,
     problems.UNSUPPORTED_CONTENT_ENCODING,
     problems.CONTRACT_VIOLATION,
+)
+_OF_A_STREAM = tuple(
+    kind for kind in _OF_A_BODY if kind not in (problems.NOT_JSON, problems.CONTRACT_VIOLATION)
 )
 
 _INTRODUCTION = (
@@ -71,10 +75,14 @@ def _text_of(shape: Any) -> str:
 def problems_of(operation: Operation, access: Access | None = None) -> tuple[ProblemType, ...]:
     """Every problem an operation can answer, by status and in the order of the table."""
     possible = set(operation.problems) | set(_OF_EVERY_OPERATION)
-    if access is not None and operation.operation_id not in OPEN:
+    if access is not None and operation.operation_id not in access.open:
         possible |= set(access.problems())
     if operation.request is not None:
         possible |= set(_OF_A_BODY)
+        if operation.tabled is not None:
+            possible.add(problems.NOT_CSV)
+    if operation.lines is not None:
+        possible |= set(_OF_A_STREAM)
     if operation.query is not None:
         possible.add(problems.CONTRACT_VIOLATION)
     if "{" in operation.path:
@@ -112,7 +120,13 @@ def describe(operations: Iterable[Operation], tags: Mapping[str, str], access: A
         for name, scheme in access.schemes().items():
             spec.components.security_scheme(name, scheme)
     spec.components.schema("Problem", schema=ProblemDetails)
+    options = {operation.tabled.name: operation.tabled for operation in operations if operation.tabled}
+    for name, tabled in options.items():
+        spec.components.schema(name, schema=tabled.shape())
     for operation in operations:
+        for shape in () if operation.lines is None else (*operation.lines.asked, *operation.lines.answered):
+            if shape.__name__ not in spec.components.schemas:
+                spec.components.schema(shape.__name__, schema=shape)
         described = _operation(operation, access)
         spec.path(path=operation.path, operations={operation.method.lower(): described})
     return orjson.dumps(spec.to_dict(), option=orjson.OPT_NON_STR_KEYS)
@@ -136,17 +150,50 @@ def _operation(operation: Operation, access: Access | None) -> dict[str, Any]:
     ]
     if operation.query is not None:
         parameters.append({"in": "query", "schema": operation.query})
+    if operation.tabled is not None:
+        parameters.append(_options(operation, operation.tabled))
     if parameters:
         described["parameters"] = parameters
     if operation.request is not None:
         content: dict[str, Any] = {"schema": operation.request}
         if examples := _examples(operation, "request", required=True):
             content["examples"] = examples
-        described["requestBody"] = {"required": True, "content": {answers.JSON: content}}
+        bodies: dict[str, Any] = {answers.JSON: content}
+        if operation.tabled is not None:
+            bodies[CSV] = _table(operation, operation.tabled)
+        described["requestBody"] = {"required": True, "content": bodies}
+    if operation.lines is not None:
+        described["requestBody"] = {
+            "required": True,
+            "content": {NDJSON: _of_lines(operation.lines.asked, operation.lines.example, "request")},
+        }
     described["responses"] = {"200": _success(operation), **_failures(operation, access)}
-    if access is not None and operation.operation_id not in OPEN:
+    if access is not None and operation.operation_id not in access.open:
         described["security"] = [{name: []} for name in access.schemes()]
     return described
+
+
+def _options(operation: Operation, tabled: tables.Tabled) -> dict[str, Any]:
+    """The options beside a table: one parameter for generated clients, whose members are those of the query."""
+    described: dict[str, Any] = {
+        "in": "query",
+        "name": "options",
+        "required": False,
+        "style": "form",
+        "explode": True,
+        "description": tables.PARAMETER_TEXT,
+        "schema": {"$ref": f"#/components/schemas/{tabled.name}"},
+    }
+    if asked := {name: {"value": given} for name, given, _ in operation.tables()}:
+        described["examples"] = asked
+    return described
+
+
+def _table(operation: Operation, tabled: tables.Tabled) -> dict[str, Any]:
+    content: dict[str, Any] = {"schema": {"type": "string", "description": tabled.described()}}
+    if found := {name: {"value": body.decode()} for name, _, body in operation.tables()}:
+        content["examples"] = found
+    return content
 
 
 def _success(operation: Operation) -> dict[str, Any]:
@@ -158,6 +205,9 @@ def _success(operation: Operation) -> dict[str, Any]:
     ):
         content["examples"] = examples
     headers = ["X-Request-ID", "Content-Digest", "Cache-Control"]
+    if operation.lines is not None:
+        content = _of_lines(operation.lines.answered, operation.lines.example, "response")
+        headers.remove("Content-Digest")
     if operation.cache_seconds is not None:
         headers.append("ETag")
     success: dict[str, Any] = {
@@ -168,6 +218,22 @@ def _success(operation: Operation) -> dict[str, Any]:
     if operation.links:
         success["links"] = {name: dict(link) for name, link in operation.links.items()}
     return success
+
+
+def _of_lines(shapes: Iterable[type[Schema]], example: str, part: str) -> dict[str, Any]:
+    """A stream as the document knows it: a text, beside the shapes of its lines, which OpenAPI cannot state."""
+    file = examples_directory() / f"{example}.{part}.ndjson"
+    lines = [{"$ref": f"#/components/schemas/{shape.__name__}"} for shape in shapes]
+    content: dict[str, Any] = {
+        "schema": {
+            "type": "string",
+            "description": "Newline-delimited JSON. Each line is one of the shapes of `x-line`.",
+            "x-line": lines[0] if len(lines) == 1 else {"anyOf": lines},
+        }
+    }
+    if file.exists():
+        content["examples"] = {example: {"value": file.read_text(encoding="utf-8")}}
+    return content
 
 
 def _failures(operation: Operation, access: Access | None) -> dict[str, Any]:

@@ -8,7 +8,7 @@ table of types titles the answers, describes them in the OpenAPI document, and i
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from urllib.parse import quote
 
 import orjson
@@ -48,6 +48,14 @@ NOT_JSON = ProblemType(
     "The body cannot be read as JSON.",
     "Mend the text at the line and column given. NaN, Infinity, keys given twice and byte order marks are "
     "not JSON here; a missing value is null.",
+)
+NOT_CSV = ProblemType(
+    "not-csv",
+    400,
+    "Not CSV",
+    "The body cannot be read as CSV.",
+    "Mend the text at the row given; row 1 is the header. It is UTF-8, each row on a line of its own, a quote that is "
+    "opened is closed on its line.",
 )
 BAD_REQUEST = ProblemType(
     "bad-request",
@@ -104,7 +112,8 @@ UNSUPPORTED_MEDIA_TYPE = ProblemType(
     415,
     "Unsupported media type",
     "The operation does not read this media type.",
-    "Send the body as JSON with Content-Type: application/json.",
+    "Send the body as JSON with Content-Type: application/json; where the answer's Accept-Post names it, a table may "
+    "come as text/csv.",
 )
 UNSUPPORTED_CONTENT_ENCODING = ProblemType(
     "unsupported-content-encoding",
@@ -160,6 +169,7 @@ TYPES: dict[str, ProblemType] = {
     kind.code: kind
     for kind in (
         NOT_JSON,
+        NOT_CSV,
         BAD_REQUEST,
         NOT_AUTHENTICATED,
         NOT_ADMITTED,
@@ -236,12 +246,25 @@ class More(Coded):
 
 @dataclass(frozen=True, slots=True)
 class Entry:
-    """One fault of a request: in its body (``pointer``) or in its query (``parameter``)."""
+    """One fault of a request: in its body (``pointer``, or ``row`` and ``column``) or in its query (``parameter``)."""
 
     code: str
     detail: str
     pointer: str | None = None
     parameter: str | None = None
+    row: int | None = None
+    column: str | None = None
+
+    @property
+    def place(self) -> str:
+        """Where it is, in words; empty where it is of the body as a whole."""
+        if self.parameter is not None:
+            return f"Parameter {self.parameter}"
+        if self.row is not None:
+            return f"Row {self.row}" + ("" if self.column is None else f", column {self.column}")
+        if self.column is not None:
+            return f"Column {self.column}"
+        return "" if self.pointer in (None, "#") else f"At {self.pointer}"
 
 
 class Problem(Exception):
@@ -269,13 +292,28 @@ class Problem(Exception):
             "type": self.kind.uri,
             "title": self.kind.title,
             "status": self.kind.status,
-            "detail": _encodable(self.detail),
+            "detail": _encodable(self.detail + self._place()),
             "instance": _instance(request_id),
             "request_id": request_id,
         }
         if self.errors:
             members["errors"] = [_members(entry) for entry in self.errors]
         return members
+
+    def _place(self) -> str:
+        """Where the one fault is that the detail tells: not everybody looks at the entry beside it."""
+        if len(self.errors) != 1 or self.errors[0].detail != self.detail:
+            return ""
+        place = self.errors[0].place
+        return f" ({place}.)" if place else ""
+
+    def below(self, root: str) -> Problem:
+        """The same problem of a body that stands in a larger one, at this pointer."""
+        moved = (
+            replace(entry, pointer=root + entry.pointer[1:] if entry.pointer else root)
+            for entry in self.errors
+        )
+        return Problem(self.kind, self.detail, errors=moved, more=self.more, headers=self.headers)
 
     def body(self, request_id: str) -> bytes:
         return orjson.dumps(self.members(request_id))
@@ -293,12 +331,10 @@ def of(error: Exception) -> Problem:
         )
     if isinstance(error, ValidationError):
         entries = tuple(pointers(error.messages))
-        return _listed(_kind_of(entries), entries)
+        return listed(_kind_of(entries), entries)
     if isinstance(error, SpcError):
         kind = next((OF_CLASS[cls] for cls in type(error).__mro__ if cls in OF_CLASS), NOT_COMPUTABLE)
-        return _listed(
-            kind, (Entry(fault.code, fault.detail, pointer(fault.where)) for fault in error.faults)
-        )
+        return listed(kind, (Entry(fault.code, fault.detail, pointer(fault.where)) for fault in error.faults))
     if isinstance(error, NotFinite):
         return Problem(NOT_COMPUTABLE, _OUT_OF_SCALE, errors=(Entry("out-of-scale", _OUT_OF_SCALE, "#"),))
     if isinstance(error, HTTPException):
@@ -378,7 +414,8 @@ def pointers(messages: object) -> Iterator[Entry | int]:
             yield Entry(getattr(here, "code", "invalid"), str(here), pointer(path))
 
 
-def _listed(kind: ProblemType, found: Iterable[Entry | int]) -> Problem:
+def listed(kind: ProblemType, found: Iterable[Entry | int]) -> Problem:
+    """A problem of these faults: the first are listed, those beyond counted; so are those given as a number."""
     entries: list[Entry] = []
     more = 0
     for entry in found:
@@ -413,11 +450,15 @@ def _of_http(error: HTTPException) -> Problem:
     return Problem(kind, detail, headers=headers)
 
 
-def _members(entry: Entry) -> dict[str, str]:
-    where = (
-        {"pointer": entry.pointer} if entry.parameter is None else {"parameter": _encodable(entry.parameter)}
-    )
-    return {**where, "code": entry.code, "detail": _encodable(entry.detail)}  # type: ignore[dict-item]
+def _members(entry: Entry) -> dict[str, str | int]:
+    where = {
+        "pointer": entry.pointer,
+        "parameter": entry.parameter and _encodable(entry.parameter),
+        "row": entry.row,
+        "column": entry.column and _encodable(entry.column),
+    }
+    given = {name: value for name, value in where.items() if value is not None}
+    return {**given, "code": entry.code, "detail": _encodable(entry.detail)}
 
 
 def _encodable(text: str) -> str:

@@ -40,7 +40,7 @@ OPEN = frozenset(
         "pages.problem",
     )
 )
-"""The endpoints that ask nobody: probes, public keys, and the documentation."""
+"""The endpoints that ask nobody: probes, public keys, and the documentation; metrics too, where a setting says so."""
 
 LEEWAY_SECONDS = 30
 LEAST_RSA_BITS = 2048
@@ -54,10 +54,12 @@ Headers = tuple[tuple[str, str], ...]
 
 @dataclass(frozen=True, slots=True)
 class Access:
-    """The credentials an installation takes: API keys by their digests, tokens by their keys; or both."""
+    """The credentials an installation takes, API keys by their digests, tokens by their keys, or both; and where
+    it asks for none."""
 
     keys: tuple[bytes, ...] = ()
     tokens: Tokens | None = None
+    open: frozenset[str] = OPEN
 
     def challenges(self, error: str = "") -> Headers:
         """The WWW-Authenticate headers (RFC 9110, 11.6.1; RFC 6750, section 3)."""
@@ -214,7 +216,7 @@ def guard(app: Flask, access: Access) -> None:
 
     def ask() -> None:
         endpoint = request.endpoint
-        if endpoint is None or endpoint in OPEN:  # None: no such path or method, and told so
+        if endpoint is None or endpoint in access.open:  # None: no such path or method, and told so
             return
         environ = request.environ
         try:
@@ -226,7 +228,7 @@ def guard(app: Flask, access: Access) -> None:
 
     def private(answer: Response) -> Response:
         # What was asked for with a credential is not for a cache that others share.
-        if request.endpoint not in OPEN:
+        if request.endpoint not in access.open:
             kept = answer.headers.get("Cache-Control", "")
             if kept.startswith("public"):
                 answer.headers["Cache-Control"] = "private" + kept.removeprefix("public")
@@ -240,7 +242,9 @@ def access_of(settings: Settings) -> Access | None:
     """What the settings ask of a caller; None where they ask nothing. Raises BadSettings."""
     keys = _digests(settings.api_keys) if settings.api_keys else ()
     tokens = _tokens(settings)
-    return Access(keys, tokens) if settings.asks_who else None
+    if not settings.asks_who:
+        return None
+    return Access(keys, tokens, OPEN | {"getMetrics"} if settings.metrics == "open" else OPEN)
 
 
 def _digests(path: str) -> tuple[bytes, ...]:

@@ -138,10 +138,21 @@ class Settings:
     max_inflated_bytes: int = _setting(
         32 * MIB, "Largest request body after gzip is undone, in bytes.", _whole(1024, 1024 * MIB)
     )
+    max_stream_bytes: int = _setting(
+        4096 * MIB,
+        "Largest body of lines (/v1/bulk), in bytes, gzip undone; a line of it is bounded as a body is.",
+        _whole(1024, 1024 * 1024 * MIB),
+    )
     log: str = _setting(
         "requests",
         "What is logged, one JSON object a line on standard error: requests, errors or off.",
         _one_of("requests", "errors", "off"),
+    )
+    metrics: str = _setting(
+        "on",
+        "Whether GET /metrics tells what was counted: on (to callers with a credential, where callers need one), open "
+        "(to anyone) or off.",
+        _one_of("on", "open", "off"),
     )
     cors_origins: tuple[str, ...] = _setting(
         (), "Origins whose pages may call the service from a browser, separated by commas.", _origins

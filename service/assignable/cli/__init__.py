@@ -61,6 +61,9 @@ def _parser() -> argparse.ArgumentParser:
         description="Walks a running service through the main job and prints requests and answers.",
     )
     demo.add_argument("--url", default="http://127.0.0.1:8000", help="the service (default: %(default)s)")
+    demo.add_argument(
+        "--api-key-file", metavar="FILE", help="a file with the API key that the service asks for, if it does"
+    )
     demo.set_defaults(run=_demo)
 
     compute = commands.add_parser(
@@ -155,7 +158,7 @@ def _serve(given: argparse.Namespace) -> int:
 def _demo(given: argparse.Namespace) -> int:
     from .demonstration import demonstrate
 
-    return demonstrate(given.url.rstrip("/"))
+    return demonstrate(given.url.rstrip("/"), given.api_key_file)
 
 
 def _compute(given: argparse.Namespace) -> int:

@@ -13,6 +13,7 @@ import urllib.error
 import urllib.request
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 Answer = dict[str, Any]
@@ -36,11 +37,29 @@ class Step:
     frozen: bool = False
 
 
-def demonstrate(url: str) -> int:
+@dataclass(frozen=True, slots=True)
+class Service:
+    """A running service, and the API key it admits this caller by, if it asks for one."""
+
+    url: str
+    key: str | None = None
+
+    def answer(self, path: str, body: Answer | None = None) -> Answer:
+        """The answer to a request. Raises Unreachable."""
+        return _answer_of(self.url + path, body, {} if self.key is None else {"X-API-Key": self.key})
+
+
+def demonstrate(url: str, key_file: str | None = None) -> int:
     """Prints requests and answers, then where the documentation is; returns the status to exit with."""
     try:
-        ready = _when_ready(url)
-        document = _answer_of(f"{url}/openapi.json")
+        key = None if key_file is None else Path(key_file).read_text(encoding="latin-1").strip()
+    except OSError as error:
+        print(f"{key_file} cannot be read ({error.strerror}).", file=sys.stderr)
+        return 2
+    service = Service(url, key)
+    try:
+        ready = _when_ready(service)
+        document = service.answer("/openapi.json")
         print(f"\nAssignable {ready['version']} answers at {url}. The plant below is invented.")
         limits: Any = None
         for number, step in enumerate(STEPS, 1):
@@ -50,10 +69,10 @@ def demonstrate(url: str) -> int:
                 print(f"   This version of the service does not offer {step.path}.")
                 continue
             name, body = found
-            _print_request(url, step, name)
+            _print_request(service, step, name)
             if step.frozen and limits is not None:
                 body = {**body, "limits": limits}
-            answer = _answer_of(url + step.path, body)
+            answer = service.answer(step.path, body)
             limits = answer.get("limits", limits)
             for line in step.tell(answer):
                 print(f"   {line}")
@@ -145,31 +164,32 @@ def _example_of(document: Answer, path: str) -> tuple[str, Answer] | None:
     return name, examples[name]["value"]
 
 
-def _print_request(url: str, step: Step, name: str) -> None:
+def _print_request(service: Service, step: Step, name: str) -> None:
+    key = "" if service.key is None else ' -H "X-API-Key: $KEY"'
     print(
-        f"   curl -s {url}{step.path} -H 'Content-Type: application/json' \\\n"
+        f"   curl -s {service.url}{step.path}{key} -H 'Content-Type: application/json' \\\n"
         f"     -d @{_EXAMPLES}/{name}.request.json"
     )
 
 
-def _when_ready(url: str) -> Answer:
+def _when_ready(service: Service) -> Answer:
     """What the service says of itself once it takes work."""
     until = time.monotonic() + _PATIENCE_SECONDS
     parent = os.getppid()
     while True:
         try:
-            return _answer_of(f"{url}/health/ready")
+            return service.answer("/health/ready")
         except Unreachable:
             if time.monotonic() > until or os.getppid() != parent:  # the server that started this is gone
                 raise
         time.sleep(0.05)
 
 
-def _answer_of(url: str, body: Answer | None = None) -> Answer:
+def _answer_of(url: str, body: Answer | None, credential: dict[str, str]) -> Answer:
     request = urllib.request.Request(  # noqa: S310 - the address is the one the user gave
         url,
         None if body is None else json.dumps(body).encode(),
-        {"Accept": "application/json", "Content-Type": "application/json"},
+        {"Accept": "application/json", "Content-Type": "application/json", **credential},
     )
     try:
         with urllib.request.urlopen(request, timeout=_TIMEOUT_SECONDS) as response:  # noqa: S310
@@ -177,6 +197,10 @@ def _answer_of(url: str, body: Answer | None = None) -> Answer:
     except urllib.error.HTTPError as error:
         with error:
             said = error.read(2000).decode(errors="replace")
+        if error.code == 401:
+            raise Unreachable(
+                f"{url} asks who is calling: give a file that holds an API key it admits, as --api-key-file FILE."
+            ) from None
         raise Unreachable(f"{url} answers {error.code}: {said}") from None
     except (OSError, ValueError) as error:
         raise Unreachable(f"No answer from {url} ({error}).") from None

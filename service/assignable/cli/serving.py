@@ -15,7 +15,6 @@ import sys
 from collections.abc import Mapping
 from datetime import UTC, datetime
 from importlib import import_module
-from pathlib import Path
 from traceback import extract_tb
 from typing import Any
 
@@ -27,6 +26,7 @@ from gunicorn.glogging import Logger
 from ..api.app import create_app
 from ..api.contract import Contract, examples_directory
 from ..api.settings import BadSettings, Settings
+from . import watching
 from .worker import Worker
 
 # Seconds a stopping server waits for the requests it has; whoever kills it must wait longer.
@@ -47,12 +47,14 @@ def serve(environment: Mapping[str, str], *, demonstrate: bool = False) -> int:
     try:
         settings = settings_from(environment)
         _require_free(settings)
-        app = create_app(settings)
+        traced = watching.require_tracing(environment)
+        with watching.counts(settings):
+            app = create_app(settings)
+            warm_up(app)
+            Server(app, settings, demonstrate=demonstrate, traced=traced).run()
     except (BadSettings, CannotServe) as error:
         print(error, file=sys.stderr)
         return 2
-    warm_up(app)
-    Server(app, settings, demonstrate=demonstrate).run()
     return 0
 
 
@@ -99,12 +101,17 @@ def warm_up(app: Flask) -> None:
     """Loads what is loaded late, and computes once; raises what these raise."""
     for module in _LOADED_BEFORE_FORK:
         import_module(module)
-    contract: Contract = app.extensions["assignable.contract"]
+    contract = _contract_of(app)
     contract.operations["getReadiness"].view()
     operation_id, example = _FIRST_CALCULATION
     body = (examples_directory() / f"{example}.request.json").read_bytes()
     contract.operations[operation_id].execute(body)
     contract.document()
+
+
+def _contract_of(app: Flask) -> Contract:
+    contract: Contract = app.extensions["assignable.contract"]
+    return contract
 
 
 def url_of(settings: Settings) -> str:
@@ -135,22 +142,26 @@ def options(settings: Settings) -> dict[str, Any]:
         "loglevel": _LOG_LEVEL[settings.log],
         "proc_name": "assignable",
     }
-    memory = Path("/dev/shm")  # noqa: S108 - a heartbeat's file on a disk can stall a worker
-    if memory.is_dir() and os.access(memory, os.W_OK):
-        chosen["worker_tmp_dir"] = str(memory)
+    if (memory := watching.memory()) is not None:
+        chosen["worker_tmp_dir"] = memory  # a heartbeat's file on a disk can stall a worker
+    if settings.metrics != "off":
+        chosen["child_exit"] = lambda server, worker: watching.worker_is_gone(server.log, worker.pid)
     return chosen
 
 
 class Server(BaseApplication):  # type: ignore[misc]
     """Gunicorn around an application that is loaded already."""
 
-    def __init__(self, app: Flask, settings: Settings, *, demonstrate: bool = False) -> None:
+    def __init__(
+        self, app: Flask, settings: Settings, *, demonstrate: bool = False, traced: bool = False
+    ) -> None:
         # Threads that wait for the interpreter ask for it at this interval. At Python's own, 5 ms, a worker
         # under load can spend more than half of its time on handing it over.
         sys.setswitchinterval(SWITCH_SECONDS)
         self._app = app
         self.settings = settings
         self._demonstrate = demonstrate
+        self._traced = traced
         super().__init__()
 
     def load_config(self) -> None:
@@ -158,9 +169,24 @@ class Server(BaseApplication):  # type: ignore[misc]
             self.cfg.set(name, value)
         if self._demonstrate:
             self.cfg.set("when_ready", lambda _: _demonstrate(url_of(self.settings)))
+        self.cfg.set("post_worker_init", self._begin)
+        self.cfg.set("worker_exit", lambda _, worker: _end(worker))
+
+    def _begin(self, worker: Any) -> None:
+        """What a worker needs of its own, once it is forked."""
+        if (metrics := _contract_of(self._app).metrics) is not None:
+            metrics.begin()
+        if self._traced:
+            worker.traced = watching.trace(self._app, worker.log.error_log.handlers[0])
 
     def load(self) -> Flask:
         return self._app
+
+
+def _end(worker: Any) -> None:
+    """What a worker does last, in its own process."""
+    if (traced := getattr(worker, "traced", None)) is not None:
+        traced.close()
 
 
 def _demonstrate(url: str) -> None:

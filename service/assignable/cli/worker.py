@@ -28,6 +28,7 @@ from gunicorn.workers.gthread import TConn, ThreadWorker
 
 from ..api import problems
 from ..api.shedding import ARRIVAL
+from ..api.tally import OTHER, Tally
 
 HEAD_SECONDS = 10.0  # for the request line and the headers, from the first byte
 BODY_SECONDS = 60.0  # for the body, which must not be silent for longer than:
@@ -411,6 +412,10 @@ class Worker(ThreadWorker):  # type: ignore[misc]
         else:
             problem = problems.Problem(problems.INTERNAL)
             self.log.exception("A request could not be handled")
+        if (metrics := self.wsgi.extensions["assignable.contract"].metrics) is not None:
+            tally = Tally()
+            tally.problem = problem
+            metrics.request(OTHER, str(problem.kind.status), 0.0, tally)
         with suppress(OSError):
             client.settimeout(1)
             socket.socket.sendall(client, _raw(problem))

@@ -6,8 +6,10 @@ import json
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
+from urllib.parse import urlencode
 
 _DEEPEST = 12
+_LINES = 6  # of a table that is shown
 _NO_BOUND = 1e15
 """A bound as large is one of arithmetic: it tells a reader nothing."""
 _BOUNDS = (
@@ -67,6 +69,16 @@ class Example:
 
 
 @dataclass(frozen=True, slots=True)
+class Table:
+    """A body that may be a table instead: what it holds, the options beside it, and the beginning of one."""
+
+    text: str
+    options: tuple[Field, ...]
+    asked: str
+    shown: str
+
+
+@dataclass(frozen=True, slots=True)
 class Reading:
     """An operation as it is read."""
 
@@ -80,8 +92,10 @@ class Reading:
     deprecated: bool
     asks: tuple[Field, ...]
     sends: tuple[Field, ...] | None
+    table: Table | None
     examples: tuple[Example, ...]
     media_type: str
+    by_line: bool
     answers: tuple[Field, ...]
     failures: tuple[Failure, ...]
     leads_to: tuple[tuple[str, str], ...]
@@ -124,7 +138,9 @@ class Document:
             return None
         method, path, entry = self._found[operation_id]
         (media_type, content), *_ = entry["responses"]["200"]["content"].items()
-        body = entry.get("requestBody", {}).get("content", {}).get("application/json")
+        bodies = entry.get("requestBody", {}).get("content", {})
+        body = next(iter(bodies.values()), None)
+        table = bodies.get("text/csv")
         return Reading(
             operation_id=operation_id,
             draws=next(
@@ -138,12 +154,14 @@ class Document:
             deprecated=entry.get("deprecated", False),
             asks=tuple(
                 Field("", one["name"], self._kind(one["schema"]), one["required"], one.get("description", ""))
-                for one in entry.get("parameters", ())
+                for one in (entry.get("parameters", ()) if table is None else ())
             ),
-            sends=None if body is None else tuple(self._fields(body["schema"], "", ())),
+            sends=None if body is None else tuple(self._fields(_each(body["schema"]), "", ())),
+            table=None if table is None else self._table(path, table, entry["parameters"][0]),
             examples=() if body is None else self._examples(body, content),
             media_type=media_type,
-            answers=tuple(self._fields(content["schema"], "", ())),
+            by_line="x-line" in content["schema"],
+            answers=tuple(self._fields(_each(content["schema"]), "", ())),
             failures=tuple(self._failures(entry["responses"])),
             leads_to=tuple(
                 (name, link["operationId"])
@@ -152,13 +170,26 @@ class Document:
             ),
         )
 
+    def _table(self, path: str, body: Mapping[str, Any], options: Mapping[str, Any]) -> Table:
+        name, given = next(iter(body["examples"].items()))
+        asked = options.get("examples", {}).get(name, {}).get("value", {})
+        query = urlencode({key: one if isinstance(one, str) else _written(one) for key, one in asked.items()})
+        lines = given["value"].splitlines()
+        more = [f"... and {len(lines) - _LINES} rows more"] if len(lines) > _LINES + 1 else []
+        return Table(
+            body["schema"]["description"],
+            tuple(self._fields(options["schema"], "", ())),
+            f"{path}?{query}" if query else path,
+            "\n".join([*lines[: _LINES if more else None], *more]),
+        )
+
     def _examples(self, body: Mapping[str, Any], content: Mapping[str, Any]) -> tuple[Example, ...]:
         answers = content.get("examples", {})
         return tuple(
             Example(
                 name,
-                laid_out(given["value"]),
-                laid_out(answers[name]["value"]) if name in answers else None,
+                shown(given["value"]),
+                shown(answers[name]["value"]) if name in answers else None,
             )
             for name, given in body.get("examples", {}).items()
         )
@@ -245,6 +276,11 @@ class Document:
         return " ".join(part for part in (found, more[:1].upper() + more[1:]) if part)
 
 
+def shown(value: Any) -> str:
+    """An example for people: a stream of lines as it is, anything else laid out."""
+    return value if isinstance(value, str) else laid_out(value)
+
+
 def laid_out(value: Any, indent: str = "") -> str:
     """JSON for people: a member a line, a row of numbers a line."""
     inner = indent + "  "
@@ -258,6 +294,12 @@ def laid_out(value: Any, indent: str = "") -> str:
 
 def _written(value: Any) -> str:
     return json.dumps(value, ensure_ascii=False)
+
+
+def _each(schema: Mapping[str, Any]) -> Mapping[str, Any]:
+    """The shape of a whole body, or of each line of one."""
+    found: Mapping[str, Any] = schema.get("x-line", schema)
+    return found
 
 
 def _main(schema: Mapping[str, Any]) -> str:

@@ -85,6 +85,10 @@ GROUPS = (
         ),
     ),
     Group(
+        "bulk",
+        (("POST", "/v1/bulk", "answerLines"), ("POST", "/v1/bulk/signals", "judgeLines")),
+    ),
+    Group(
         "reference",
         (
             ("GET", "/v1/charts", "listCharts"),

@@ -23,7 +23,7 @@ from .. import problems
 from ..contract import Contract, Provenance, examples_directory
 from ..schemas import derive, quick
 from ..schemas.charts import ChartRequest, request_of
-from ..schemas.common import CAUTIONS, CautionAnswer, Characteristic, cautions, labels_of
+from ..schemas.common import CAUTIONS, CautionAnswer, Characteristic, SignalAnswer, cautions, labels_of
 
 TAG = "Charts"
 PROVENANCE = f.Object(
@@ -210,17 +210,6 @@ def documents_of(name: str, seals: Seals) -> Documents:
 # Shapes
 
 
-class SignalAnswer(derive.answer(Signal)):  # type: ignore[misc]
-    """A rule that is met: at which point, and what it says."""
-
-    id = f.StrictString(
-        allow_none=True, required=True, metadata={"description": "Your name for the point, if any."}
-    )
-    time = f.StrictString(
-        allow_none=True, required=True, metadata={"description": "Its time, if you gave one."}
-    )
-
-
 def _judged(chart: Chart, panels: type) -> dict[str, Any]:
     members = {
         "verdict": f.Choice(
@@ -331,7 +320,7 @@ def _shapes(chart: Chart, takes: ChartRequest, seals: Seals) -> tuple[Any, Any, 
 # Views
 
 
-def _labelled(found: Sequence[Signal], labels: Mapping[str, Sequence[str]]) -> list[dict[str, Any]]:
+def labelled(found: Sequence[Signal], labels: Mapping[str, Sequence[str]]) -> list[dict[str, Any]]:
     """Signals with the caller's own name and time of their point."""
     ids, times = labels.get("ids"), labels.get("times")
     return [
@@ -351,7 +340,7 @@ def _labelled(found: Sequence[Signal], labels: Mapping[str, Sequence[str]]) -> l
     ]
 
 
-def _besides(chart: Chart, judged: Any) -> dict[str, Any]:
+def besides(chart: Chart, judged: Any) -> dict[str, Any]:
     """What this chart alone tells."""
     return {} if chart.details is None else {"details": judged.details}
 
@@ -362,14 +351,23 @@ def fitted(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> Any:
     return chart.fit(None if posted is None else takes.read(posted), takes.options(loaded))
 
 
+def carried(chart: Chart, loaded: dict[str, Any]) -> Any:
+    """The carry that came with the limits it belongs to, if any. Raises DocumentMismatch."""
+    if loaded["carry"] is None:
+        return None
+    document, carry = loaded["carry"]
+    check_carry(chart.name, loaded["limits"][0], document)
+    return carry
+
+
 def judged(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> Any:
     """The chart's own judgement of new data."""
-    digest, limits = loaded["limits"]
-    carry = None
-    if loaded["carry"] is not None:
-        document, carry = loaded["carry"]
-        check_carry(chart.name, digest, document)
-    data = takes.read(loaded["data"])
+    carry = carried(chart, loaded)
+    return judgement(chart, loaded["limits"][1], takes.read(loaded["data"]), carry)
+
+
+def judgement(chart: Chart, limits: Any, data: Any, carry: Any) -> Any:
+    """The same, of what is read already."""
     try:
         return chart.judge(limits, data, carry)
     except _ARITHMETIC as error:
@@ -397,10 +395,10 @@ def fit(chart: Chart, takes: ChartRequest, seals: Seals, loaded: dict[str, Any])
         else {
             "verdict": baseline.verdict,
             "panels": baseline.panels,
-            "signals": _labelled(baseline.signals, labels),
+            "signals": labelled(baseline.signals, labels),
             "signals_found": baseline.signals_found,
             **labels,
-            **_besides(chart, baseline),
+            **besides(chart, baseline),
         },
         "diagnostics": result.diagnostics,
         "performance": result.performance,
@@ -416,10 +414,10 @@ def judge(chart: Chart, takes: ChartRequest, loaded: dict[str, Any]) -> dict[str
     return {
         "verdict": result.verdict,
         "panels": result.panels,
-        "signals": _labelled(result.signals, labels),
+        "signals": labelled(result.signals, labels),
         "signals_found": result.signals_found,
         **labels,
-        **_besides(chart, result),
+        **besides(chart, result),
         "carry": written(carry_document(chart.name, digest, result.carry)),
         "cautions": cautions(result.cautions),
     }

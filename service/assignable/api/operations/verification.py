@@ -7,7 +7,6 @@ from collections.abc import Callable
 from typing import Any
 
 from ...verification import runner
-from .. import strict_json
 from ..contract import Contract
 from ..schemas import derive
 from ..schemas.common import PROVENANCE
@@ -26,14 +25,7 @@ VerificationAnswer = derive.answer(
 def executor(contract: Contract) -> runner.Execute:
     """The road of a request from bytes to bytes; for an operation by GET, the body has its parameters."""
     operations = contract.operations
-
-    def execute(operation_id: str, body: bytes) -> bytes:
-        operation = operations[operation_id]
-        if operation.query is None:
-            return operation.execute(body)
-        return operation.write(operation.view(operation.query.load(strict_json.loads(body))), body)
-
-    return execute
+    return lambda operation_id, body: operations[operation_id].execute(body)
 
 
 def verified(contract: Contract) -> Callable[[], runner.Verification]:

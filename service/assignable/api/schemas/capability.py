@@ -32,6 +32,7 @@ from ...spc.diagnostics import Dispersion
 from ...spc.errors import UnusableData, UnusableParameter
 from ...spc.sigma import WITHIN, SigmaEstimate
 from .. import fields as f
+from ..tables import Columns
 from . import derive
 from .common import CAUTIONS, PROVENANCE, CautionAnswer, Characteristic
 
@@ -63,6 +64,7 @@ class SpecificationRequest(f.RequestShape):
 class MeasurementData(f.RequestShape):
     """Measurements in time order."""
 
+    table = Columns({"value": "values", "below": "below"}, rows_of="values")
     values = f.ListOrTable(
         f.NumberList(nullable=True),
         f.NumberTable(nullable=True, ragged=True, min_columns=0),
@@ -233,6 +235,7 @@ class MeasurementsAnswer(f.AnswerShape):
 class CountedData(f.RequestShape):
     """Counts in time order, and what was inspected for each."""
 
+    table = Columns({"count": "counts", "inspected": "inspected"})
     counts = f.CountList(
         nullable=True,
         most=10**12,

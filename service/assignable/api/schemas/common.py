@@ -7,11 +7,14 @@ from contextlib import contextmanager
 from typing import Any
 from urllib.parse import quote
 
+import marshmallow as ma
+
 from ...spc.cautions import Caution
 from ...spc.errors import Fault, SpcError, UnusableParameter, Where
-from ...spc.rules import FARTHEST_DISTANCE, LONGEST_WINDOW, MOST_RULES, PUBLISHED, Rule
+from ...spc.rules import FARTHEST_DISTANCE, LONGEST_WINDOW, MOST_RULES, PUBLISHED, Rule, Signal
 from .. import fields as f
 from ..contract import Provenance
+from . import derive
 
 
 class Characteristic(f.RequestShape):
@@ -19,6 +22,18 @@ class Characteristic(f.RequestShape):
 
     name = f.StrictString(metadata={"description": "Name of the characteristic."})
     unit = f.StrictString(max_length=40, metadata={"description": "Unit of the values, as it is written."})
+
+
+class AsItIs(f.RequestShape):
+    """An object that is not closed here and loads as it came: its frame is checked now, all of it later."""
+
+    class Meta:
+        unknown = ma.INCLUDE
+
+    def load(self, data: Any, **kwargs: Any) -> Any:
+        known = self.load_fields
+        super().load({name: data[name] for name in known if name in data} if type(data) is dict else data)
+        return data
 
 
 class CautionAnswer(f.AnswerShape):
@@ -33,6 +48,17 @@ class CautionAnswer(f.AnswerShape):
     reference = f.StrictString(
         required=True,
         metadata={"description": "Key of the source in `GET /v1/methods`, or `common practice`."},
+    )
+
+
+class SignalAnswer(derive.answer(Signal)):  # type: ignore[misc]
+    """A rule that is met: at which point, and what it says."""
+
+    id = f.StrictString(
+        allow_none=True, required=True, metadata={"description": "Your name for the point, if any."}
+    )
+    time = f.StrictString(
+        allow_none=True, required=True, metadata={"description": "Its time, if you gave one."}
     )
 
 

@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-import marshmallow as ma
 import numpy as np
 
 from ...spc import release
@@ -18,7 +17,7 @@ from ...spc.rules import Signal
 from .. import fields as f
 from . import derive
 from .capability import SpecificationRequest, specification_of
-from .common import CAUTIONS, PROVENANCE, CautionAnswer
+from .common import CAUTIONS, PROVENANCE, AsItIs, CautionAnswer
 
 MOST_CHARACTERISTICS = 200
 MOST_SINGLE = 500  # results of a characteristic in one list
@@ -95,19 +94,7 @@ class UncertaintyRequest(f.RequestShape):
     )
 
 
-class _Kept(f.RequestShape):
-    """A document of any chart: its frame is checked here, and all of it by the shape of its chart later."""
-
-    class Meta:
-        unknown = ma.INCLUDE
-
-    def load(self, data: Any, **kwargs: Any) -> Any:
-        known = self.load_fields
-        super().load({name: data[name] for name in known if name in data} if type(data) is dict else data)
-        return data
-
-
-class AnyLimitsDocument(_Kept):
+class AnyLimitsDocument(AsItIs):
     """A limits document exactly as it was received, of any chart of one characteristic.
 
     Its other members are those of that chart's own limits document, by which it is checked.
@@ -119,7 +106,7 @@ class AnyLimitsDocument(_Kept):
     )
 
 
-class AnyCarryDocument(_Kept):
+class AnyCarryDocument(AsItIs):
     """A carry exactly as it was received, of any chart.
 
     Its other members are those of that chart's own carry, by which it is checked.

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
+
+from marshmallow import Schema
 
 from ...spc.capability.specification import Specification
 from ...spc.errors import Fault, UnusableData
@@ -14,6 +17,8 @@ from ...spc.studies.nested import NestedStudy
 from ...spc.studies.variance_components import OneSidedTolerance
 from .. import fields as f
 from ..contract import Provenance
+from ..problems import Entry
+from ..tables import Columns, Read, Table
 from . import derive
 from .capability import SpecificationRequest
 from .common import CAUTIONS, CautionAnswer, Characteristic
@@ -35,6 +40,7 @@ def _names(text: str, **bounds: Any) -> f.StringList:
 class StudyData(f.RequestShape):
     """Measurements in columns, a row for each. Trials are told by part and appraiser coming again."""
 
+    table = Columns({"part": "parts", "appraiser": "appraisers", "value": "values"})
     parts = _names("The part of each row.")
     appraisers = _names("Who measured it.")
     values = f.NumberList(
@@ -123,9 +129,41 @@ class NestedRequest(GaugeRequest):
     """
 
 
+class _RatingColumns(Columns):
+    """The right rating, where it is known, in a column of its own: the same in each row of an item, or empty."""
+
+    def read(self, table: Table, shape: Schema, options: Mapping[str, Any]) -> Read:
+        right = table.texts("reference") if "reference" in table else None
+        made = super().read(table, shape, options)
+        made.columns["reference"] = ("reference",)
+        if right is None or "items" not in made.data:
+            return made
+        found: dict[str, tuple[str, int]] = {}
+        for row, (item, rating) in enumerate(zip(made.data["items"], right, strict=True), 2):
+            if rating and found.setdefault(item, (rating, row))[0] != rating:
+                known, first = found[item]
+                detail = f"Item {item} is {rating} here and {known} in row {first}; it has one right rating."
+                table.faults.append(Entry("two-references", detail, row=row, column="reference"))
+        made.besides["reference"] = {
+            "items": list(found),
+            "ratings": [rating for rating, _ in found.values()],
+        }
+        rows = [row for _, row in found.values()]
+        made.places["reference", "items"] = [(row, "item") for row in rows]
+        made.places["reference", "ratings"] = [(row, "reference") for row in rows]
+        made.places["reference",] = {"items": (None, "reference"), "ratings": (None, "reference")}
+        return made
+
+
 class RatingData(f.RequestShape):
     """Ratings in columns, a row for each. Trials are told by item and appraiser coming again."""
 
+    table = _RatingColumns(
+        {"item": "items", "appraiser": "appraisers", "rating": "ratings"},
+        text="Columns: `item` becomes `data.items`; `appraiser` `data.appraisers`; `rating` `data.ratings`; "
+        "`reference`, where it is known, the right rating of the row's item, the same in all its rows or empty.",
+        takes=("reference",),
+    )
     items = _names("The item of each row.")
     appraisers = _names("Who rated it.")
     ratings = _names("The category it was put into.")
@@ -184,9 +222,44 @@ class LevelRequest(f.RequestShape):
     )
 
 
+class _LevelColumns(Columns):
+    """A row a measurement: those of one part and reference value are a level, in the order in which they come."""
+
+    def read(self, table: Table, shape: Schema, options: Mapping[str, Any]) -> Read:
+        made = Read({}, {})
+        lacking = [name for name in ("reference", "value") if name not in table]
+        table.faults += [
+            Entry("required", f"The table needs a column {name}.", row=1, column=name) for name in lacking
+        ]
+        self.others(table)
+        if table.faults:
+            return made
+        parts = table.texts("part") if "part" in table else [None] * table.rows
+        rows: dict[tuple[Any, Any], list[int]] = {}
+        references, values = table.numbers("reference"), table.numbers("value")
+        for at, key in enumerate(zip(parts, references, strict=True)):
+            rows.setdefault(key, []).append(at)
+        levels = made.data["levels"] = []
+        for level, ((part, reference), own) in enumerate(rows.items()):
+            named = {} if part is None else {"part": part}
+            levels.append({**named, "reference": reference, "values": [values[at] for at in own]})
+            here, first = ("data", "levels", level), own[0] + 2
+            made.places[here] = {name: (first, name.removesuffix("s")) for name in levels[-1]}
+            made.places[(*here, "values")] = [(at + 2, "value") for at in own]
+        made.places["data", "levels"] = [(own[0] + 2, None) for own in rows.values()]
+        return made
+
+
 class BiasData(f.RequestShape):
     """Measurements of parts whose true values are known."""
 
+    table = _LevelColumns(
+        {"part": "part", "reference": "reference", "value": "values"},
+        rows_of=None,
+        names="levels",
+        text="Columns: `reference`, the part's reference value, and `value`, one measurement of it; `part`, its name, "
+        "may be left out. The rows of one part and reference become one of `data.levels`.",
+    )
     levels = f.ObjectList(
         LevelRequest,
         min_items=1,

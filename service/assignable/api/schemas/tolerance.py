@@ -13,6 +13,7 @@ from ...spc.capability.tolerance import (
 )
 from ...spc.diagnostics import Normality
 from .. import fields as f
+from ..tables import Columns
 from . import derive
 from .common import CAUTIONS, PROVENANCE, CautionAnswer, Characteristic
 
@@ -20,6 +21,7 @@ from .common import CAUTIONS, PROVENANCE, CautionAnswer, Characteristic
 class ToleranceData(f.RequestShape):
     """Measured values of a process in control."""
 
+    table = Columns({"value": "values"})
     values = f.NumberList(
         nullable=True, required=True, metadata={"description": "Single values; null is a missing value."}
     )

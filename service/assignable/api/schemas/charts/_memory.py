@@ -21,6 +21,7 @@ from .subgroups import SubgroupData, subgroups
 class PointData(SubgroupData):
     """Points in time order: subgroups by their values or by a summary of each, or single values."""
 
+    table = SubgroupData.table.and_of(value="individuals")
     individuals = f.NumberList(
         nullable=True,
         max_items=f.MAX_ROWS,

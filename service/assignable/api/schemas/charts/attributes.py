@@ -10,6 +10,7 @@ from ....spc.charts.attributes import AttributeOptions
 from ....spc.data import Counts
 from ....spc.errors import Fault, UnusableData
 from ... import fields as f
+from ...tables import Columns
 from ..common import IDS, TIMES, check_labels, rules_of
 from .common import ChartRequest, FitRequest, exclusions, limit_basis
 
@@ -29,6 +30,7 @@ def _counts_field(text: str) -> f.CountList:
 class UnitsData(f.RequestShape):
     """Nonconforming units among those inspected, sample by sample in time order."""
 
+    table = Columns({"count": "counts", "inspected": "inspected", "id": "ids", "time": "times"})
     counts = _counts_field("Nonconforming units")
     inspected = f.OneOrMany(
         f.CountList(least=1, nullable=True, max_items=f.MAX_ROWS),
@@ -42,6 +44,7 @@ class UnitsData(f.RequestShape):
 class EventsData(f.RequestShape):
     """Nonconformities over an area of opportunity, sample by sample in time order."""
 
+    table = UnitsData.table
     counts = _counts_field("Nonconformities")
     inspected = f.OneOrMany(
         f.NumberList(least=SMALLEST, most=1e15, nullable=True, max_items=f.MAX_ROWS),

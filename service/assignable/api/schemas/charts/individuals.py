@@ -11,6 +11,7 @@ from ....spc.data import Individuals
 from ....spc.errors import UnusableData
 from ....spc.sigma import LARGEST_SPAN
 from ... import fields as f
+from ...tables import Columns
 from ..common import IDS, TIMES, check_labels, rules_of
 from .common import (
     ChartRequest,
@@ -26,6 +27,7 @@ from .common import (
 class IndividualsData(f.RequestShape):
     """Single values in time order."""
 
+    table = Columns({"value": "values", "id": "ids", "time": "times"})
     values = f.NumberList(
         required=True,
         nullable=True,

@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
+from marshmallow import Schema
 
 from ....spc.charts.multivariate import USUAL_FALSE_ALARM, TSquaredOptions
 from ....spc.charts.vectors import MOST_VARIABLES, VectorStandards
 from ....spc.data import Vectors
 from ....spc.errors import Fault, UnusableData
 from ... import fields as f
+from ...tables import Columns, Read, Table
 from ..common import IDS, TIMES, check_labels
 from .common import AnyFitRequest, ChartRequest, exclusions
 
@@ -26,9 +29,26 @@ _NAMES: dict[str, Any] = {
 }
 
 
+class _VectorColumns(Columns):
+    """Variables in columns. A subgroup's id and time stand in each of its rows, for it has but one."""
+
+    def read(self, table: Table, shape: Schema, options: Mapping[str, Any]) -> Read:
+        made = super().read(table, shape, options)
+        size = options.get("data.subgroup_size")
+        if type(size) is int and 1 < size <= LARGEST_SUBGROUP:
+            for member in ("ids", "times"):
+                labels = made.data.get(member, [])
+                own = labels[::size]
+                if labels and labels == [label for label in own for _ in range(size)]:
+                    made.data[member] = own
+                    made.places["data", member] = [(2 + at * size, member[:-1]) for at in range(len(own))]
+        return made
+
+
 class VectorData(f.RequestShape):
     """Several variables of each piece, in time order."""
 
+    table = _VectorColumns({"id": "ids", "time": "times"}, rows_of="values", names="variables")
     variables = f.StringList(**_NAMES)
     values = f.NumberTable(
         required=True,

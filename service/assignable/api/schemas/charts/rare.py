@@ -13,6 +13,7 @@ from ....spc.charts.rare import (
 from ....spc.data import Intervals
 from ....spc.errors import UnusableData
 from ... import fields as f
+from ...tables import Columns
 from ..common import IDS, TIMES, check_labels, rules_of
 from .common import USUAL_FALSE_ALARM, BaselineRequest, ChartRequest, FitRequest, exclusions, limit_basis
 
@@ -20,6 +21,7 @@ from .common import USUAL_FALSE_ALARM, BaselineRequest, ChartRequest, FitRequest
 class OpportunitiesData(f.RequestShape):
     """Opportunities between successive events, in the order of the events."""
 
+    table = Columns({"interval": "intervals", "id": "ids", "time": "times"})
     intervals = f.CountList(
         required=True,
         nullable=True,
@@ -36,6 +38,7 @@ class OpportunitiesData(f.RequestShape):
 class TimesData(f.RequestShape):
     """Times between successive events, in the order of the events."""
 
+    table = OpportunitiesData.table
     intervals = f.NumberList(
         required=True,
         least=0,

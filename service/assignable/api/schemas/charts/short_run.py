@@ -18,6 +18,7 @@ MOST_PARTS = 500
 class PartPointData(PointData):
     """Points of several parts in the order made: subgroups, or single values."""
 
+    table = PointData.table.and_of(part="part_names")
     part_names = f.StringList(
         required=True, metadata={"description": "Which part each point is of, by its name among `parts`."}
     )

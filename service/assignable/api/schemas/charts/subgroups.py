@@ -13,6 +13,7 @@ from ....spc.errors import Fault, UnusableData
 from ....spc.factors import LARGEST_SIZE
 from ....spc.sigma import WITHIN
 from ... import fields as f
+from ...tables import Columns
 from ..common import IDS, TIMES, check_labels, rules_of
 from .common import (
     ChartRequest,
@@ -28,6 +29,10 @@ from .common import (
 class SubgroupData(f.RequestShape):
     """Subgroups in time order: their values, or a summary of each."""
 
+    table = Columns(
+        {"mean": "means", "range": "ranges", "sd": "sds", "size": "sizes", "id": "ids", "time": "times"},
+        rows_of="values",
+    )
     values = f.NumberTable(
         nullable=True,
         ragged=True,

@@ -14,6 +14,7 @@ from .common import ChartRequest, FitRequest, exclusions, limit_basis
 class TrendBaselineData(PointData):
     """Points in time order, subgroups or single values, with their positions where they do not come evenly."""
 
+    table = PointData.table.and_of(position="positions")
     positions = f.NumberList(
         most=1e15,
         least=-1e15,
