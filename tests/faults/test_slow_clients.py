@@ -1,29 +1,21 @@
-"""Clients that stall, trickle, or do not read: what the service does by itself, and behind the shipped proxy."""
+"""Clients that stall, trickle, or do not read: what the service does by itself; behind the proxy, tests/docker."""
 
 from __future__ import annotations
 
-import os
-import re
-import shutil
 import socket
 import statistics
-import subprocess
 import time
 from collections.abc import Iterator
-from contextlib import ExitStack, closing, contextmanager
-from pathlib import Path
+from contextlib import ExitStack, closing
 
 import pytest
 
 from assignable.cli import worker
 from faults.service import (
     PATIENCE_SECONDS,
-    PLAIN,
     XBAR,
     Service,
-    ask,
     expected,
-    free_port,
     head_of,
     large_body,
     read_answer,
@@ -33,7 +25,6 @@ from faults.service import (
 
 WORKERS = 2
 STALLS = 40
-PROXY = Path(__file__).resolve().parents[2] / "docker" / "nginx.conf"
 BODY = request_of("xbar-r-limits")
 
 
@@ -186,67 +177,3 @@ def test_too_much_that_is_half_there_is_refused_as_busy() -> None:
         assert refused >= 3
         assert service.memory() - before < 64 * mib
         assert answers_quickly(service) < 0.5
-
-
-# Behind the shipped proxy ---------------------------------------------------------------------------
-
-
-@contextmanager
-def proxied(service: Service, folder: Path) -> Iterator[int]:
-    """The shipped proxy in front, with its own addresses in the place of the image's."""
-    nginx = shutil.which("nginx") or "/usr/sbin/nginx"
-    if not os.access(nginx, os.X_OK):
-        pytest.skip("nginx is not installed")
-    port = free_port()
-    text = PROXY.read_text()
-    for old, new in (
-        ("server service:8000;", f"server 127.0.0.1:{service.port};"),
-        ("listen 8080;", f"listen 127.0.0.1:{port};"),
-        ("pid /tmp/nginx.pid;", f"pid {folder}/nginx.pid;"),
-        ("worker_processes auto;", "worker_processes 1; daemon off;"),
-    ):
-        assert old in text, old
-        text = text.replace(old, new)
-    text = re.sub(r"(\w+_temp_path) /tmp/", rf"\1 {folder}/", text)
-    settings = folder / "nginx.conf"
-    settings.write_text(text)
-    process = subprocess.Popen(
-        [nginx, "-p", str(folder), "-c", str(settings), "-e", str(folder / "errors")],
-        env=PLAIN,
-        stdout=subprocess.DEVNULL,
-        stderr=subprocess.DEVNULL,
-    )
-    try:
-        until = time.monotonic() + PATIENCE_SECONDS
-        while True:
-            assert process.poll() is None, (folder / "errors").read_text()
-            try:
-                socket.create_connection(("127.0.0.1", port), 1).close()
-                break
-            except OSError:
-                assert time.monotonic() < until
-                time.sleep(0.05)
-        yield port
-    finally:
-        process.terminate()
-        process.wait(PATIENCE_SECONDS)
-
-
-def test_behind_the_proxy_stalls_and_slow_readers_do_no_harm(service: Service, tmp_path: Path) -> None:
-    body = large_body(20_000)
-    with proxied(service, tmp_path) as port, ExitStack() as stack:
-        front = Service(service.process, port, service.log)
-        quiet = answers_quickly(front)
-        stalled(front, b"POST " + XBAR.encode() + b" HTTP/1.1\r\nHost: he", STALLS, stack)
-        stalled(front, head_of(XBAR, len(BODY)) + BODY[:100], STALLS, stack)
-        for _ in range(4):  # who does not read: the proxy takes the answer off the service's hands
-            client = stack.enter_context(closing(front.connect()))
-            client.sendall(head_of(XBAR, len(body)) + body)
-        time.sleep(2)
-        during = answers_quickly(front)
-        print(f"behind the proxy: median {quiet * 1e3:.1f} ms quiet, {during * 1e3:.1f} ms with stalls")
-        assert during < max(10 * quiet, 0.25)
-        with closing(front.connection()) as connection:
-            for _ in range(5):
-                answer = ask(connection, "POST", XBAR, BODY)
-                assert (answer.status, answer.body) == (200, expected("xbar-r-limits"))

@@ -71,7 +71,7 @@ def test_every_operation_has_its_costliest_request_stated() -> None:
         if operation.method == "GET":
             assert operation.operation_id in worst.QUERIES
         else:
-            assert list(worst.requests_of(operation))
+            assert list(worst.requests_of(operation)) or operation.operation_id in worst.OF_LINES
 
 
 @pytest.mark.parametrize(

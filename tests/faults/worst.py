@@ -588,6 +588,11 @@ OTHERS: dict[str, list[tuple[str, Make]]] = {
 }
 
 
+# A stream of lines is as long as its sender likes; a line takes a turn as its own operation would, and is bounded there.
+OF_LINES = frozenset(("answerLines",))
+OTHERS.update({name: [] for name in OF_LINES})
+
+
 def requests_of(operation: Operation) -> Iterator[tuple[str, Make]]:
     """The costliest requests of an operation. Raises KeyError for one that nobody has thought about."""
     name = operation.operation_id
@@ -622,5 +627,6 @@ QUERIES: dict[str, dict[str, Any]] = {
     "getSealingKeys": {},
     "getLiveness": {},
     "getReadiness": {},
+    "getMetrics": {},
 }
 """The costliest queries of the operations that take no body."""
