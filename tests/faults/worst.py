@@ -588,8 +588,8 @@ OTHERS: dict[str, list[tuple[str, Make]]] = {
 }
 
 
-# A stream of lines is as long as its sender likes; a line takes a turn as its own operation would, and is bounded there.
-OF_LINES = frozenset(("answerLines",))
+# A stream of lines is as long as its sender likes; a line takes a turn as its own operation does, bounded there.
+OF_LINES = frozenset(("answerLines", "judgeLines"))
 OTHERS.update({name: [] for name in OF_LINES})
 
 
