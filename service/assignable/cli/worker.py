@@ -40,7 +40,7 @@ _MOST_HEAD = 65_536
 _MOST_LINE = 1024  # of a chunk's size
 _MOST_READ = 262_144
 _PROBES = (b"GET /health/", b"HEAD /health/", b"GET /metrics")
-_STREAMED = (b"POST /v1/bulk ", b"POST /v1/bulk?")
+_STREAMED = (b"POST /v1/bulk",)
 
 _LENGTH = re.compile(rb"(?i)\r\ncontent-length:[ \t]*([0-9]{1,18})[ \t]*\r\n")
 _CODING = re.compile(rb"(?i)\r\ntransfer-encoding:")
