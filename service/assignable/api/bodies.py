@@ -104,7 +104,11 @@ def read(environ: Environ, limit: int) -> bytes:
                 raise too_large(limit)
             parts.append(part)
         return b"".join(parts)
-    except (OSError, EOFError):
+    except Problem:
+        raise
+    except (
+        Exception
+    ):  # whatever the server's own reader raises: a broken connection, bad chunks, bad trailers
         raise Problem(BAD_REQUEST, "The body could not be read to its end.") from None
 
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Iterable, Iterator, Mapping
+from heapq import nsmallest
 from itertools import chain, islice
 from typing import Any, ClassVar
 
@@ -28,6 +29,7 @@ MAX_VALUES = 1_000_000  # values of a table or a list of numbers
 MAX_TEXTS = 200_000  # ids or times of a list
 MAX_TEXT = 200  # characters of a text
 MAX_OBJECTS = 10_000  # objects of a list
+_MOST_HINTS = 10  # unknown names of one object for which a known one is looked for
 MAX_KEPT = 1_000  # items of a list in a document that a caller sends back
 
 # Control characters and what XML 1.0 cannot hold; halves of surrogate pairs cannot be written as UTF-8.
@@ -671,7 +673,19 @@ class ObjectList(_Messages, ma.fields.List):
             raise ValidationError(_wrong_type("not-a-list", "a list of objects", value))
         if fault := _length_fault(len(value), self.min_items, self.max_items):
             raise ValidationError(fault)
-        return super()._deserialize(value, attr, data, **kwargs)
+        shape: Any = self.inner
+        loaded: list[Any] = []
+        faults: dict[int, Any] = {}
+        for at, one in enumerate(value):
+            try:
+                loaded.append(shape.deserialize(one, **kwargs))
+            except ValidationError as error:
+                faults[at] = error.messages
+                if len(faults) >= MAX_ERRORS:  # as many as are told; the rest is not looked at
+                    break
+        if faults:
+            raise ValidationError(faults)
+        return loaded
 
 
 def list_bounds_of(field: ma.fields.Field[Any], ret: Json) -> Json:
@@ -732,8 +746,11 @@ class RequestShape(_Shape):
             except ValidationError as error:
                 faults[key] = error.messages
         if not data.keys() <= self._keys:
-            for key in data.keys() - self._keys:
+            unknown = data.keys() - self._keys
+            for key in nsmallest(MAX_ERRORS, unknown):
                 faults[key] = [self.error_messages["unknown"]]
+            if len(unknown) > MAX_ERRORS:
+                faults[HERE] = [More.of(len(unknown) - MAX_ERRORS)]
         if faults:
             failed = ValidationError(faults, data=data, valid_data=loaded)
             self.handle_error(failed, data, many=False)
@@ -755,8 +772,8 @@ class RequestShape(_Shape):
         from difflib import get_close_matches
 
         known = [field.data_key or name for name, field in self.load_fields.items()]
-        for key in unknown:
-            near = get_close_matches(key[:MAX_TEXT], known, n=1)
+        for at, key in enumerate(unknown):
+            near = get_close_matches(key[:MAX_TEXT], known, n=1) if at < _MOST_HINTS else []
             hint = f" Did you mean {near[0]}?" if near else ""
             shown = key if len(key) <= 80 else key[:80] + "..."
             del messages[key]

@@ -17,7 +17,7 @@ from werkzeug.exceptions import HTTPException
 
 from ..documents.canonical import NotFinite
 from ..spc.errors import DocumentMismatch, Fault, SpcError, UnusableData, UnusableParameter, Where
-from .strict_json import BadJson
+from .strict_json import BadJson, TooManyValues
 
 MEDIA_TYPE = "application/problem+json"
 MAX_ERRORS = 100
@@ -190,6 +190,7 @@ TYPES: dict[str, ProblemType] = {
 
 OF_CLASS: dict[type[Exception], ProblemType] = {
     BadJson: NOT_JSON,
+    TooManyValues: CONTENT_TOO_LARGE,
     ValidationError: CONTRACT_VIOLATION,
     UnusableData: NOT_COMPUTABLE,
     UnusableParameter: NOT_COMPUTABLE,
@@ -324,6 +325,10 @@ def of(error: Exception) -> Problem:
         return error
     if isinstance(error, BadJson):
         return Problem(NOT_JSON, error.detail, errors=(Entry(error.code, error.detail, "#"),))
+    if isinstance(error, TooManyValues):
+        return Problem(
+            CONTENT_TOO_LARGE, "The body holds more values, lists or objects than any operation takes."
+        )
     if isinstance(error, ValidationError):
         entries = tuple(pointers(error.messages))
         return listed(_kind_of(entries), entries)

@@ -1,15 +1,16 @@
 """A bound on the calculations a worker does at once; more than that is refused at once, not queued.
 
-The wait for a place is the only queue there is, and it is short: under load the accepted requests stay
+The wait for a place is short, and counts from when the request came: under load the accepted requests stay
 quick, the refused ones hear so early, and the health probes need no place at all.
 """
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from queue import Empty, SimpleQueue
-from time import sleep
+from time import monotonic, sleep
 from types import TracebackType
 from typing import Protocol
 
@@ -24,6 +25,15 @@ class Watch(Protocol):
     def place_taken(self) -> None: ...
 
     def place_freed(self) -> None: ...
+
+
+class _Arrival(threading.local):
+    at: float | None = None
+
+
+ARRIVAL = _Arrival()
+"""When the request that this thread answers had come, by the monotonic clock; a server with a queue of its own
+says so, and the time in that queue is then part of the wait."""
 
 
 class Slots:
@@ -50,9 +60,10 @@ class Slots:
             self._watch.place_taken()
 
     def _wait(self) -> None:
+        waited = 0.0 if ARRIVAL.at is None else monotonic() - ARRIVAL.at
         self._waiting.put(None)
         try:
-            self._places.get(timeout=self._wait_seconds)
+            self._places.get(timeout=max(self._wait_seconds - waited, 0.0))
         except Empty:
             raise Problem(BUSY, headers=(("Retry-After", "1"),)) from None
         finally:

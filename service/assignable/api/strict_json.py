@@ -16,6 +16,10 @@ from typing import Any, NoReturn
 import orjson
 
 MAX_DEPTH = 1024  # what orjson itself goes to
+MAX_COMMAS = 3_000_000  # no operation takes as many values
+MAX_BRACKETS = 500_000  # nor as many lists and objects
+MAX_KEYS = 100_000  # nor as many members of objects
+_LARGE = 1_000_000  # bytes; of more, the slow decoder would keep a place for seconds
 
 _BOM = b"\xef\xbb\xbf"
 _KEY = re.compile(rb'"[ \t\n\r]*:')
@@ -39,22 +43,63 @@ class BadJson(Exception):
         self.column = column
 
 
+class TooManyValues(Exception):
+    """A body with more values than any operation takes, found before objects are made of them."""
+
+
 def loads(body: bytes) -> Any:
     """The object a JSON body holds.
 
     Raises :class:`BadJson` for what is not JSON: NaN, Infinity, numbers beyond a double, a key given
     twice in one object, a byte order mark, bytes that are not UTF-8, nesting beyond :data:`MAX_DEPTH`.
-    Integers beyond 64 bits may arrive as floats.
+    Integers beyond 64 bits may arrive as floats. Raises :class:`TooManyValues` beyond :data:`MAX_COMMAS`,
+    :data:`MAX_BRACKETS` or :data:`MAX_KEYS`: an object weighs up to fifty times what its text does.
     """
+    large = len(body) > _LARGE
+    if large and (body.count(b",") > MAX_COMMAS or body.count(b"[") + body.count(b"{") > MAX_BRACKETS):
+        raise TooManyValues
     try:
         document = orjson.loads(body)
-    except orjson.JSONDecodeError:
+    except orjson.JSONDecodeError as error:
+        if large:
+            _refuse_large(body, error)
         return _read_slowly(body)
     # Neither count can be too low for the text, nor too high for the object: equal means no key twice.
     keys = _keys_of(document)
+    if keys > MAX_KEYS:
+        raise TooManyValues
     if body.count(b":") == keys or len(_KEY.findall(body)) == keys:
         return document
+    if large:
+        text = body.decode("utf-8")
+        if (repeated := _find_repeated(text)) is not None:
+            raise _repeated(text, *repeated)
+        return document
     return _read_slowly(body)
+
+
+def _refuse_large(body: bytes, error: orjson.JSONDecodeError) -> NoReturn:
+    """What is wrong with a large body, by what orjson says of it, which is less than the slow decoder does."""
+    if body.startswith(_BOM):
+        raise _byte_order_mark()
+    text = body.decode("utf-8", "replace")
+    if "recursion" in error.msg:
+        raise BadJson("nested-too-deeply", "Lists or objects are nested too deeply.")
+    position = min(error.pos, len(text))
+    if not text[position:].strip():
+        raise _at("not-json", "The JSON ends here before it is complete.", text, len(text))
+    raise _at("not-json", "This is not JSON here.", text, position)
+
+
+def _byte_order_mark() -> BadJson:
+    return BadJson(
+        "byte-order-mark",
+        "The body begins with a byte order mark; JSON is sent as plain UTF-8 without one.",
+    )
+
+
+def _repeated(text: str, key: str, position: int) -> BadJson:
+    return _at("repeated-key", f"The key {key} is given twice in the same object.", text, position)
 
 
 def _keys_of(document: object) -> int:
@@ -130,10 +175,7 @@ def _read_slowly(body: bytes) -> Any:
     if not body.strip():
         raise BadJson("empty-body", "The body is empty; a JSON object is expected.")
     if body.startswith(_BOM):
-        raise BadJson(
-            "byte-order-mark",
-            "The body begins with a byte order mark; JSON is sent as plain UTF-8 without one.",
-        )
+        raise _byte_order_mark()
     try:
         text = body.decode("utf-8")
     except UnicodeDecodeError as error:
@@ -145,10 +187,9 @@ def _read_slowly(body: bytes) -> Any:
     try:
         return _DECODER.decode(text)
     except _Repeated:
-        key, position = _find_repeated(text)
-        raise _at(
-            "repeated-key", f"The key {key} is given twice in the same object.", text, position
-        ) from None
+        repeated = _find_repeated(text)
+        assert repeated is not None, "the decoder saw a repeated key"
+        raise _repeated(text, *repeated) from None
     except _Literal as error:
         position = next(found.start(1) for found in _LITERAL.finditer(text) if found[1])
         raise _at(
@@ -190,8 +231,8 @@ def _too_deep(text: str, position: int) -> BadJson:
     return _at("nested-too-deeply", "Lists or objects are nested too deeply here.", text, position)
 
 
-def _find_repeated(text: str) -> tuple[str, int]:
-    """The first key given twice in its object, as it is written, and where."""
+def _find_repeated(text: str) -> tuple[str, int] | None:
+    """The first key given twice in its object, as it is written, and where; None where there is none."""
     open_objects: list[set[str]] = []
     for found in _STRUCTURE.finditer(text):
         mark = found[0]
@@ -205,7 +246,7 @@ def _find_repeated(text: str) -> tuple[str, int]:
                 shown = found[1] if len(found[1]) <= 80 else found[1][:80] + '..."'
                 return shown, found.start()
             open_objects[-1].add(key)
-    raise AssertionError("the decoder saw a repeated key")  # pragma: no cover
+    return None
 
 
 _PLAIN = {

@@ -13,26 +13,21 @@ import os
 import socket
 import sys
 from collections.abc import Mapping
-from contextlib import suppress
 from datetime import UTC, datetime
 from importlib import import_module
 from traceback import extract_tb
 from typing import Any
-from uuid import uuid4
 
 import orjson
 from flask import Flask
 from gunicorn.app.base import BaseApplication
 from gunicorn.glogging import Logger
-from gunicorn.http.errors import ParseException
-from gunicorn.workers.gthread import ThreadWorker
 
-from ..api import problems
 from ..api.app import create_app
 from ..api.contract import Contract, examples_directory
 from ..api.settings import BadSettings, Settings
-from ..api.tally import OTHER, Tally
 from . import watching
+from .worker import Worker
 
 # Seconds a stopping server waits for the requests it has; whoever kills it must wait longer.
 GRACE_SECONDS = 30
@@ -164,16 +159,16 @@ class Server(BaseApplication):  # type: ignore[misc]
         # under load can spend more than half of its time on handing it over.
         sys.setswitchinterval(SWITCH_SECONDS)
         self._app = app
-        self._settings = settings
+        self.settings = settings
         self._demonstrate = demonstrate
         self._traced = traced
         super().__init__()
 
     def load_config(self) -> None:
-        for name, value in options(self._settings).items():
+        for name, value in options(self.settings).items():
             self.cfg.set(name, value)
         if self._demonstrate:
-            self.cfg.set("when_ready", lambda _: _demonstrate(url_of(self._settings)))
+            self.cfg.set("when_ready", lambda _: _demonstrate(url_of(self.settings)))
         self.cfg.set("post_worker_init", self._begin)
         self.cfg.set("worker_exit", lambda _, worker: _end(worker))
 
@@ -198,42 +193,6 @@ def _demonstrate(url: str) -> None:
     """Shows the main job from a process of its own, which gunicorn reaps: no thread may run where workers fork."""
     command = (sys.executable, "-m", "assignable.cli", "demo", "--url", url)
     os.posix_spawn(sys.executable, command, os.environ)
-
-
-class Worker(ThreadWorker):  # type: ignore[misc]
-    """Stops at once for new callers, and answers what never becomes a request as the service answers all."""
-
-    def set_accept_enabled(self, enabled: bool) -> None:
-        super().set_accept_enabled(enabled)
-        if not self.alive:
-            # Left open, it would hold new connections, which nobody takes, until the last request is done.
-            for listener in self.sockets:
-                listener.close()
-
-    def handle_error(self, _request: Any, client: socket.socket, _address: Any, error: Exception) -> None:
-        if isinstance(error, ParseException):
-            problem = problems.Problem(
-                problems.BAD_REQUEST, "The request line, a header or the body's framing cannot be read."
-            )
-            self.log.warning("A request could not be read: %s", type(error).__name__)
-        else:
-            problem = problems.Problem(problems.INTERNAL)
-            self.log.exception("A request could not be handled")
-        if (metrics := _contract_of(self.wsgi).metrics) is not None:
-            tally = Tally()
-            tally.problem = problem
-            metrics.request(OTHER, str(problem.kind.status), 0.0, tally)
-        request_id = str(uuid4())
-        body = problem.body(request_id)
-        reason = "Bad Request" if problem.kind.status == 400 else "Internal Server Error"
-        head = (
-            f"HTTP/1.1 {problem.kind.status} {reason}\r\nConnection: close\r\nCache-Control: no-store\r\n"
-            f"X-Request-ID: {request_id}\r\nX-Content-Type-Options: nosniff\r\n"
-            f"Content-Type: {problems.MEDIA_TYPE}\r\nContent-Length: {len(body)}\r\n\r\n"
-        )
-        with suppress(OSError):
-            client.settimeout(1)
-            client.sendall(head.encode() + body)
 
 
 class ServerLog(Logger):  # type: ignore[misc]

@@ -25,6 +25,7 @@ LARGEST_SIZE = 1000
 # Beyond a tail area of this much over n, an integrand no longer shows in double precision.
 _NEGLIGIBLE = 1e-19
 _ALMOST_ONE = 1.0 - 2.0**-53
+_USUAL_SIZE = 25
 _NODES = 128
 _PANEL_NODES = 64
 
@@ -341,7 +342,15 @@ def _range_quantile(p: float, n: int, *, upper: bool) -> float:
         else:
             low = w
         slope = _range_pdf(w, n)
-        new = w - excess / slope if slope > 0.0 else math.nan
+        tail = p - excess if upper else p + excess
+        if slope <= 0.0:
+            new = math.nan
+        elif n > _USUAL_SIZE and tail > 0.0:
+            # Far out the logarithm of a tail is nearly a parabola, and takes few steps; a usual size is soon there.
+            step = math.log(tail / p) * tail / slope
+            new = w + step if upper else w - step
+        else:
+            new = w - excess / slope
         if not low < new < high:
             new = 0.5 * (low + high)
         if abs(new - w) <= 1e-13 * w:

@@ -191,7 +191,7 @@ def _mewma(loaded: dict[str, Any], chart: dict[str, Any], within: tuple[int, ...
         )
 
     def check(limit: float) -> float:
-        kernel = (350.0 + 6.0 * p) * mewma.work(smoothing, limit, exact=exact)
+        kernel = (350.0 + 6.0 * p + 30.0 * max(p - 10, 0)) * mewma.work(smoothing, limit, exact=exact)
         kernel += _MOST_POINTS / smoothing * mewma.step_work(smoothing, limit)
         if kernel > MOST_OPERATIONS:
             raise UnusableParameter.of(

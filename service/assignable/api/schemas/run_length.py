@@ -172,7 +172,11 @@ class MewmaChartRequest(f.RequestShape):
         required=True,
         least=mewma.SMALLEST_SMOOTHING_EXACT,
         most=1,
-        metadata={"description": "Weight of the newest point (lambda); with 1 it is the T-squared chart."},
+        metadata={
+            "description": "Weight of the newest point (lambda); with 1 it is the T-squared chart. With "
+            f"`time-varying` limits at least {mewma.SMALLEST_SMOOTHING_EXACT_OF_MANY} for more than "
+            f"{mewma.FEW_VARIABLES} variables."
+        },
     )
     limit = f.StrictNumber(
         above=0,

@@ -41,6 +41,9 @@ from .counts import count_lines
 from .price import count_performance
 from .registry import Chart
 
+MOST_SIZES = 10_000
+"""Different sizes of sample whose exact limits one request takes: each is searched for by itself."""
+
 T = TypeVar("T")
 P = TypeVar("P")
 Q = TypeVar("Q")
@@ -182,6 +185,14 @@ def plot_counts(chart: CountChart, counts: Floats, sizes: Floats, mean: float, b
             ceiling=top / unit,
         )
     distinct, at = np.unique(sizes, return_inverse=True)
+    if basis.sigma_multiple is None and len(distinct) > MOST_SIZES:
+        raise UnusableData.of(
+            "too-many-sizes",
+            f"The samples have {len(distinct)} different sizes, and probability limits are computed for at most "
+            f"{MOST_SIZES}, each by itself. Take limits by sigma, or round areas to fewer digits.",
+            "data",
+            "inspected",
+        )
     lines = count_lines(binomial, mean, distinct, basis)
     return Plot(
         counts / sizes,

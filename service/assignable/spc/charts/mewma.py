@@ -143,7 +143,9 @@ def mewma_performance(p: int, smoothing: float, limit: float, size: int, exact: 
     method = f"{run_length.METHOD}, {run_length.ACCURACY}, for a mean and a covariance known exactly"
     shifts: tuple[ShiftPerformance, ...] = ()
     if in_control < _LONGEST_TOLD:
-        if run_length.work(smoothing, limit, exact=exact) > _MOST_WORK:
+        # The kernel is a Bessel function, which takes longer the higher its order is.
+        slow = 1.0 + max(p - 10, 0) / 10
+        if slow * run_length.work(smoothing, limit, exact=exact) > _MOST_WORK:
             method += "; those after shifts are not computed for so many variables with so little smoothing"
         else:
             scaled = tuple(shift * math.sqrt(size) for shift in SHIFTS)

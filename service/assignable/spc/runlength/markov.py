@@ -5,6 +5,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from functools import lru_cache
 
 import numpy as np
@@ -13,6 +14,7 @@ from ..data import Floats
 from .automaton import Automaton
 from .survival import Decay, follow, settle
 
+_NEAR, _FAR = 16_384, 4
 METHOD = "Markov chain (Brook & Evans 1972; Champ & Woodall 1987)"
 
 
@@ -63,7 +65,16 @@ def chain_law(automaton: Automaton, probability: Floats, beyond: float, *, memor
     longest window.
     """
     walk = _Walk(automaton, probability, beyond, _fresh(automaton))
-    return follow(walk, memory=memory, work=_work(automaton, len(probability)), method=METHOD)
+    return _charged(
+        follow(walk, memory=memory, work=_work(automaton, len(probability)), method=METHOD), automaton
+    )
+
+
+def _charged(found: Decay, automaton: Automaton) -> Decay:
+    """The law with its operations as they are felt: a table that no near memory holds is slow to walk."""
+    if automaton.follow.size <= _NEAR:
+        return found
+    return replace(found, operations=_FAR * found.operations)
 
 
 def steady_chain_law(
@@ -77,4 +88,6 @@ def steady_chain_law(
     if start is None:
         return None
     walk = _Walk(automaton, probability, beyond, start)
-    return follow(walk, memory=memory, work=_work(automaton, len(probability)), method=METHOD)
+    return _charged(
+        follow(walk, memory=memory, work=_work(automaton, len(probability)), method=METHOD), automaton
+    )

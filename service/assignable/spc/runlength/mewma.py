@@ -30,6 +30,8 @@ ACCURACY = "relative 1e-6"
 
 SMALLEST_SMOOTHING = 0.01
 SMALLEST_SMOOTHING_EXACT = 0.03
+FEW_VARIABLES = 10
+SMALLEST_SMOOTHING_EXACT_OF_MANY = 0.1  # by exact limits every point has its own kernel, a dear one with many
 """Below it the limits of the first points settle too slowly to be followed one by one."""
 SHORTEST_ARL = 5.0
 LONGEST_ARL = 1e7
@@ -106,7 +108,9 @@ def _chain(p: int, smoothing: float, limit: float) -> tuple[StoppedChain, Floats
 
 
 def _check(p: int, smoothing: float, limit: float, exact: bool) -> None:
-    least = SMALLEST_SMOOTHING_EXACT if exact else SMALLEST_SMOOTHING
+    least = SMALLEST_SMOOTHING
+    if exact:
+        least = SMALLEST_SMOOTHING_EXACT if p <= FEW_VARIABLES else SMALLEST_SMOOTHING_EXACT_OF_MANY
     if not least <= smoothing <= 1.0:
         raise UnusableParameter.of(
             "smoothing-out-of-range",
@@ -175,8 +179,15 @@ def limit_for(p: int, smoothing: float, arl: float, *, exact: bool = False) -> f
     below = above
     if exact:
         # Early limits are tighter than the settled ones, so the settled chart's own h lies below.
-        below = limit_for(p, smoothing, arl)
-        return float(scipy.optimize.brentq(surplus, below * (1.0 - 1e-9), above * (1.0 + 1e-9), rtol=1e-8))
+        below, above = limit_for(p, smoothing, arl) * (1.0 - 1e-9), above * (1.0 + 1e-9)
+        # An average by the exact limits takes long; by how much it grows with h, the settled ones tell at once.
+        slope = math.log(in_control_arl(p, smoothing, 1.01 * below) / in_control_arl(p, smoothing, below)) / (
+            0.01 * below
+        )
+        near = below - 1.1 * surplus(below) / slope if slope > 0.0 else above
+        if below < near < above and surplus(near) >= 0.0:
+            above = near
+        return float(scipy.optimize.brentq(surplus, below, above, rtol=1e-8))
     while surplus(below) >= 0.0:
         below *= 0.7
     return float(scipy.optimize.brentq(surplus, below, above * (1.0 + 1e-9), rtol=1e-10))

@@ -6,10 +6,12 @@ from typing import Any
 
 from ....spc.charts.mewma import LARGEST_LIMIT, USUAL_ARL, USUAL_SMOOTHING, MewmaOptions
 from ....spc.runlength.mewma import (
+    FEW_VARIABLES,
     LONGEST_ARL,
     SHORTEST_ARL,
     SMALLEST_SMOOTHING,
     SMALLEST_SMOOTHING_EXACT,
+    SMALLEST_SMOOTHING_EXACT_OF_MANY,
 )
 from ... import fields as f
 from .common import ChartRequest, exclusions
@@ -25,7 +27,8 @@ class MewmaFit(VectorFit):
         load_default=USUAL_SMOOTHING,
         metadata={
             "description": f"Weight of the newest point, λ; {USUAL_SMOOTHING} unless given. Smaller finds smaller "
-            f"shifts; with `time-varying` at least {SMALLEST_SMOOTHING_EXACT}."
+            f"shifts; with `time-varying` at least {SMALLEST_SMOOTHING_EXACT}, and "
+            f"{SMALLEST_SMOOTHING_EXACT_OF_MANY} for more than {FEW_VARIABLES} variables."
         },
     )
     limit_covariance = f.Choice(
