@@ -111,31 +111,28 @@ def judge_body() -> bytes:
 BARE = """
 import sys
 from pathlib import Path
+from types import SimpleNamespace
 from flask import Flask, Response, request
 from assignable.api.settings import Settings
 from assignable.cli.serving import Server
 
 answers = [Path(name).read_text() for name in sys.argv[2:]]
 application = Flask("bare")
+application.extensions["assignable.contract"] = SimpleNamespace(metrics=None)
 
 @application.post("/<int:which>")
 def answer(which):
     request.get_json()
     return Response(answers[which], content_type="application/json")
 
-Server(application, Settings(port=int(sys.argv[1]), log="off")).run()
+Server(application, Settings(port=int(sys.argv[1]), log="off", metrics="off")).run()
 """
 
 OURS = """
 import sys
-from assignable.api.app import create_app
-from assignable.api.settings import Settings
-from assignable.cli.serving import Server, warm_up
+from assignable.cli.serving import serve
 
-settings = Settings(port=int(sys.argv[1]), log="off")
-application = create_app(settings)
-warm_up(application)
-Server(application, settings).run()
+serve({"ASSIGNABLE_PORT": sys.argv[1], "ASSIGNABLE_LOG": "off"})
 """
 
 
