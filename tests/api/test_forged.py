@@ -11,6 +11,7 @@ from assignable.api.contract import examples_directory
 from assignable.api.settings import Settings
 from assignable.documents.canonical import digest
 from assignable.spc.charts import CHARTS
+from contract import served
 
 NASTY = (0, -1, 1, 5e-324, 1e-300, 1e300, -1e300, 1e15, 0.5, 3.7, None, "x", [], [0.0], [1e300, -1e300], True)
 UNTOUCHED = ("digest", "seal", "chart", "format", "limits")
@@ -57,3 +58,17 @@ def test_forged_documents_never_break_the_service(name):
             assert answer.status_code in (200, 422), (answer.json, body)
             refused += answer.status_code == 422
     assert refused
+
+
+@pytest.mark.parametrize("operation_id", ["judgeXbarR", "checkRelease"])
+def test_a_document_nested_deeper_than_any_is_not_as_it_was_issued(operation_id):
+    deep = []
+    for _ in range(400):
+        deep = [deep]
+    limits = {**served.example("xbar-r-signals")["limits"], "more": deep}
+    body = served.example("xbar-r-signals" if operation_id == "judgeXbarR" else "release-checks")
+    if operation_id == "judgeXbarR":
+        body["limits"] = limits
+    else:
+        body["characteristics"][0]["trend"] = {"limits": limits}
+    served.problem_of(served.call(operation_id, body), body)

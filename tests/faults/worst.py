@@ -607,7 +607,9 @@ def requests_of(operation: Operation) -> Iterator[tuple[str, Make]]:
         else:
             continue
         return
-    yield from OTHERS[name]
+    drawn = operation.path.removesuffix("/picture")
+    source = next(one.operation_id for one in served.operations().values() if one.path == drawn)
+    yield from OTHERS[name if name in OTHERS else source]
 
 
 def _picture_of(chart: str) -> Json:

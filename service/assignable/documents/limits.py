@@ -64,7 +64,8 @@ def check_limits(chart: str, document: Mapping[str, Any]) -> None:
 def _is_as_issued(document: Mapping[str, Any]) -> bool:
     try:
         return bool(document.get("digest") == digest(document))
-    except (ValueError, OverflowError):  # it holds what has no canonical form, as no document of ours does
+    except (ValueError, OverflowError, TypeError, RecursionError):
+        # It holds what has no canonical form, or is nested deeper than the writer goes, as no document of ours is.
         return False
 
 
