@@ -23,6 +23,7 @@ from .errors import Fault, SpcError, UnusableData, UnusableParameter, Where
 from .exact import Rounding, average, less, plus, rounded, written
 from .exact import shown as told
 from .rules import Signal
+from .words import ordinal
 
 DecisionRule: TypeAlias = Literal["simple-acceptance", "guarded-acceptance"]
 Compare: TypeAlias = Literal["each", "averages"]
@@ -555,13 +556,16 @@ def _named(one: Characteristic, values: Sequence[_Value], entries: Sequence[int]
     """Which values, by their positions."""
     if one.compare == "averages" and one.results.ndim == 1:
         return "the average of the list"
-    word = "row" if one.compare == "averages" else "position"
-    return f"{word}{'s' if len(entries) > 1 else ''} {_listed([values[entry].index for entry in entries])} from 0"
+    counted = _listed([values[entry].index for entry in entries])
+    return f"{counted} row{'s' if len(entries) > 1 else ''}" if one.compare == "averages" else counted
 
 
 def _listed(positions: Sequence[int]) -> str:
-    more = f" and {len(positions) - TOLD} more" if len(positions) > TOLD else ""
-    return ", ".join(map(str, positions[:TOLD])) + more
+    """``the 1st, 3rd and 4th``, of positions from 0."""
+    told = [ordinal(position + 1) for position in positions[:TOLD]]
+    if len(positions) > TOLD:
+        told.append(f"{len(positions) - TOLD} more")
+    return "the " + " and ".join(part for part in (", ".join(told[:-1]), told[-1]) if part)
 
 
 def _out_of_specification(
@@ -642,8 +646,8 @@ def _out_of_trend(one: Characteristic) -> list[Reason]:
         found.append(
             Reason(
                 code,
-                f"{word} against its own limits ({judged.chart} chart, {first.panel.replace('_', ' ')} panel, point "
-                f"{first.index} from 0): {first.sentence}{further}",
+                f"{word} against its own limits ({judged.chart} chart, {first.panel.replace('_', ' ')} panel, "
+                f"{ordinal(first.index + 1)} point): {first.sentence}{further}",
                 severity,
                 ("trend",),
                 (),
@@ -683,8 +687,7 @@ def _insufficient(
         flat = one.results.reshape(-1)
         below = frozenset(one.below)
         gaps = [at for at in np.flatnonzero(flat != flat).tolist() if at not in below]
-        where = f"{'position' if missing == 1 else 'positions'} {_listed(gaps)} from 0"
-        sentence = f"{_things(missing, 'result is', 'results are')} missing: {where}."
+        sentence = f"{_things(missing, 'result is', 'results are')} missing: {_listed(gaps)}."
         if one.compare == "averages":
             sentence += " Averages are of the replicates there are."
         review("missing-results", sentence, place(one.results, gaps[0]))

@@ -21,6 +21,7 @@ from ...spc.data import Floats
 from ...spc.errors import DocumentMismatch, Fault, SpcError, UnusableData, UnusableParameter, Where
 from ...spc.explain import release as worked
 from ...spc.explain.steps import Step
+from ...spc.words import ordinal
 from .. import fields as f
 from .. import problems
 from ..contract import Contract
@@ -87,8 +88,8 @@ def _repeated(posted: list[dict[str, Any]]) -> Iterator[Caution]:
         if first.setdefault(name, position) != position:
             yield Caution(
                 "repeated-name",
-                f"There are two characteristics named {name}, at {first[name]} and {position} from 0: make sure that "
-                "both are meant.",
+                f"There are two characteristics named {name}, the {ordinal(first[name] + 1)} and the "
+                f"{ordinal(position + 1)}: make sure that both are meant.",
                 ("characteristics", position, "name"),
                 COMMON_PRACTICE,
             )

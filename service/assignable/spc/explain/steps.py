@@ -12,6 +12,8 @@ from typing import Annotated, Any, TypeAlias
 
 import numpy as np
 
+from ..words import ordinal
+
 MOST_LISTED = 30
 """Values of a sum that are written out; of more, the sum is stated."""
 
@@ -190,14 +192,9 @@ class Pad:
             what,
             "(low + high) / 2",
             where,
-            low=(ordered[(m - 1) // 2], place.format(_ordinal((m - 1) // 2 + 1))),
-            high=(ordered[m // 2], place.format(_ordinal(m // 2 + 1))),
+            low=(ordered[(m - 1) // 2], place.format(ordinal((m - 1) // 2 + 1))),
+            high=(ordered[m // 2], place.format(ordinal(m // 2 + 1))),
         )
-
-
-def _ordinal(number: int) -> str:
-    ending = "th" if 10 <= number % 100 <= 20 else {1: "st", 2: "nd", 3: "rd"}.get(number % 10, "th")
-    return f"{number}{ending}"
 
 
 def present(values: Iterable[float]) -> list[float]:
