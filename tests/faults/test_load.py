@@ -185,8 +185,8 @@ def test_sigterm_does_not_wait_for_the_idle_and_the_stalled() -> None:
 
 
 def test_memory_is_flat_under_mixed_load() -> None:
-    """SOAK_SECONDS in the environment of the tests makes it longer than its 45 seconds."""
-    seconds = float(os.environ.get("SOAK_SECONDS", "45"))
+    """SOAK_SECONDS in the environment of the tests makes it longer than its 30 seconds."""
+    seconds = float(os.environ.get("SOAK_SECONDS", "30"))
     mixed = [
         ("xbar-r-limits", "/v1/charts/xbar-r/limits"),
         ("individuals-limits", "/v1/charts/individuals/limits"),
