@@ -92,7 +92,7 @@ def test_operations_by_get_take_their_parameters() -> None:
         {"operation": "getLiveness", "body": None},
     ]
     (five, text, charts, alive), _ = told("/v1/bulk", lines_of(asked))
-    assert five["answer"]["d2"] == pytest.approx(2.3259289, abs=1e-7)
+    assert five["answer"]["mean_range"] == pytest.approx(2.3259289, abs=1e-7)
     assert text["status"] == 422
     assert text["problem"]["errors"][0]["pointer"] == "#/body/size"
     assert {chart["name"] for chart in charts["answer"]["charts"]} == set(CHARTS)

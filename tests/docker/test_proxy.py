@@ -468,11 +468,3 @@ def test_clients_that_stall_do_no_harm(port: int, text: bytes) -> None:
     )
     assert statistics.median(taken) < 5 * quiet + 0.02
     assert max(taken) < 3
-
-
-def test_without_it_they_would(server: Replica) -> None:
-    with ExitStack() as stack:
-        stall(stack, server.port, STALLS[1], Settings().threads)
-        time.sleep(0.3)
-        with pytest.raises(TimeoutError):
-            call(server.port, "POST", LIMITS, EXAMPLE, patience=1)
