@@ -411,7 +411,7 @@ def sized(text: str) -> int:
 def needed(settings: Settings) -> int:
     """The most that a server takes, in bytes, by the formula of docker/README.md."""
     most = max(settings.max_body_bytes, settings.max_inflated_bytes)
-    of_a_worker = settings.threads * settings.max_body_bytes + settings.compute_slots * 50 * most
+    of_a_worker = settings.threads * settings.max_body_bytes + settings.compute_slots * 15 * most
     return 256 * MIB + settings.workers * of_a_worker
 
 
