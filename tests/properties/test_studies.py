@@ -41,6 +41,7 @@ _APART = {
     "cautions",
     "cell_ranges",
     "part_ranges",
+    "repeatability_by_appraiser",  # looked at by itself: in the unit of the measurements, and in their order
 }
 
 
@@ -74,6 +75,12 @@ def _alike(one: Any, other: Any, unit: float = 1.0) -> None:
         assert second[name] == (value if value is None else pytest.approx(value, rel=1e-6, abs=near)), name
 
 
+def _own(study: Any) -> np.ndarray:
+    """How each appraiser repeats, with its bounds: a row an appraiser."""
+    own = [(one.sd, one.lower, one.upper) for one in study.repeatability_by_appraiser]
+    return np.array(own).reshape(-1, 3)
+
+
 @_FEW
 @given(
     _measurements(least=(2, 1, 2)),
@@ -84,6 +91,7 @@ def test_crossed_knows_no_zero_and_no_unit(x: np.ndarray, shift: float, scale: f
     plain = crossed(x, tolerance=2.0)
     moved = crossed(shift + scale * x, tolerance=2.0 * scale)
     _alike(plain, moved, scale)
+    assert _own(moved) / scale == pytest.approx(_own(plain), rel=1e-6, abs=1e-6)
     assert moved.grand_mean == pytest.approx(shift + scale * plain.grand_mean, abs=1e-9)
     assert moved.part_means == pytest.approx(shift + scale * plain.part_means, abs=1e-9)
 
@@ -91,14 +99,19 @@ def test_crossed_knows_no_zero_and_no_unit(x: np.ndarray, shift: float, scale: f
 @_FEW
 @given(_measurements(least=(2, 1, 2)), st.sampled_from([-40.0, 7.5, 900.0]), st.sampled_from([0.01, 25.4]))
 def test_nested_knows_no_zero_and_no_unit(x: np.ndarray, shift: float, scale: float) -> None:
-    _alike(nested(np.moveaxis(x, 0, 1)), nested(shift + scale * np.moveaxis(x, 0, 1)), scale)
+    plain, moved = nested(np.moveaxis(x, 0, 1)), nested(shift + scale * np.moveaxis(x, 0, 1))
+    _alike(plain, moved, scale)
+    assert _own(moved) / scale == pytest.approx(_own(plain), rel=1e-6, abs=1e-6)
 
 
 @_FEW
 @given(_measurements(least=(2, 2, 1)), st.randoms(use_true_random=False))
 def test_crossed_knows_no_order(x: np.ndarray, chance: Any) -> None:
     part, appraiser, trial = (chance.sample(range(n), n) for n in x.shape)
-    _alike(crossed(x), crossed(x[np.ix_(part, appraiser, trial)]))
+    plain, mixed = crossed(x), crossed(x[np.ix_(part, appraiser, trial)])
+    _alike(plain, mixed)
+    if x.shape[2] > 1:
+        assert _own(mixed) == pytest.approx(_own(plain)[appraiser], rel=1e-6, abs=1e-6)
 
 
 @_FEW
