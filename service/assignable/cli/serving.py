@@ -35,7 +35,8 @@ from .worker import Worker
 GRACE_SECONDS = 30
 SWITCH_SECONDS = 0.02
 
-_ARENAS_AT_MOST = -8  # M_ARENA_MAX of malloc.h
+_ARENAS_AT_MOST, _MAPPED_FROM = -8, -3  # M_ARENA_MAX and M_MMAP_THRESHOLD of malloc.h
+_MAPPED_BYTES = 4 * 1024 * 1024
 _LOADED_BEFORE_FORK = ("scipy.special", "scipy.linalg", "scipy.sparse")
 _FIRST_CALCULATION = ("fitXbarRLimits", "xbar-r-limits")
 _LOG_LEVEL = {"requests": "info", "errors": "warning", "off": "critical"}
@@ -192,9 +193,12 @@ def _keep_memory_together() -> None:
 
     Each thread that computes would else fill one of its own, which is seldom given back: a worker under mixed load
     held half as much again, and went on growing. Threads compute one at a time, so that they do not wait here.
+    What is as large as a body goes back at once: the library would else learn to keep that much for the next.
     """
-    with suppress(OSError, AttributeError):  # another C library has no such option, and no such habit
-        ctypes.CDLL(None).mallopt(_ARENAS_AT_MOST, 1)
+    with suppress(OSError, AttributeError):  # another C library has no such options, and no such habits
+        library = ctypes.CDLL(None)
+        library.mallopt(_ARENAS_AT_MOST, 1)
+        library.mallopt(_MAPPED_FROM, _MAPPED_BYTES)
 
 
 def _end(worker: Any) -> None:
