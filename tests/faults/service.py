@@ -21,18 +21,11 @@ from typing import IO, Any
 
 from assignable.api.contract import examples_directory
 from assignable.api.problems import MEDIA_TYPE, TYPES
+from machines import PLAIN, free_port
 
 PATIENCE_SECONDS = 40
 COMMAND = (sys.executable, "-W", "error", "-m", "assignable.cli")
-PLAIN = {name: value for name, value in os.environ.items() if not name.startswith("ASSIGNABLE_")}
 XBAR = "/v1/charts/xbar-r/limits"
-
-
-def free_port() -> int:
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        port: int = probe.getsockname()[1]
-        return port
 
 
 @dataclass
